@@ -1,0 +1,49 @@
+"""latticedip: dipolar lattice sums, local fields, energies and rankings for magnetic materials.
+
+Names are resolved on first use, so that importing the package costs nothing.
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import Any
+
+__version__ = "0.1.0"
+
+_HOMES = {
+    "Contact": "latticedip.probe",
+    "Coupling": "latticedip.physics.coupling",
+    "Crystal": "latticedip.crystal.model",
+    "Energy": "latticedip.physics.energy",
+    "LatticedipError": "latticedip.errors",
+    "LocalField": "latticedip.physics.field",
+    "Ordering": "latticedip.ordering.model",
+    "Probe": "latticedip.probe",
+    "Ranking": "latticedip.analysis.rank",
+    "Sample": "latticedip.sample",
+    "Study": "latticedip.study.schema",
+    "dipolar_energy": "latticedip.physics.energy",
+    "dipole_tensor": "latticedip.sums",
+    "local_field": "latticedip.physics.field",
+    "rank": "latticedip.analysis.rank",
+    "read_crystal": "latticedip.files.read",
+    "read_ordering": "latticedip.files.read",
+    "read_study": "latticedip.study.schema",
+    "write_ordering": "latticedip.files.write",
+}
+
+__all__ = ["__version__", *sorted(_HOMES)]
+
+
+def __getattr__(name: str) -> Any:
+    try:
+        home = _HOMES[name]
+    except KeyError:
+        raise AttributeError(f"module 'latticedip' has no attribute {name!r}") from None
+    value = getattr(importlib.import_module(home), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    return __all__

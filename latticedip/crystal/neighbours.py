@@ -1,0 +1,68 @@
+"""Distances between sites of a periodic crystal."""
+
+from __future__ import annotations
+
+import itertools
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy.spatial import cKDTree
+
+from latticedip.checks import FloatArray
+
+if TYPE_CHECKING:
+    from latticedip.crystal.model import Crystal
+
+
+def image_shifts(crystal: Crystal, radius: float) -> FloatArray:
+    """Shape (n, 3) int-valued float. Cell shifts that can hold a point within ``radius`` Å of the home cell.
+
+    The home cell is that of wrapped coordinates in [0, 1); only periodic directions are shifted.
+    """
+    reciprocal = np.linalg.pinv(crystal.cell).T
+    reach = np.ceil(radius * np.linalg.norm(reciprocal, axis=1) + 1e-9).astype(int)
+    ranges = [range(-n, n + 1) if periodic else (0,) for n, periodic in zip(reach, crystal.pbc, strict=True)]
+    return np.array(list(itertools.product(*ranges)), dtype=float)
+
+
+def close_pairs(crystal: Crystal, radius: float) -> list[tuple[int, int, float]]:
+    """Pairs of sites (i ≤ j) closer than ``radius`` Å, i = j meaning a site and its own image, with the distance."""
+    if crystal.n_sites == 0:
+        return []
+    home = crystal.positions.copy()
+    periodic = np.asarray(crystal.pbc)
+    home[:, periodic] %= 1.0
+    shifts = image_shifts(crystal, radius)
+    images = (home[None, :, :] + shifts[:, None, :]).reshape(-1, 3) @ crystal.cell
+    tree = cKDTree(images)
+    found = []
+    for i, hits in enumerate(tree.query_ball_point(home @ crystal.cell, radius)):
+        for hit in sorted(hits):
+            j = hit % crystal.n_sites
+            shift = shifts[hit // crystal.n_sites]
+            if j < i or (j == i and not np.any(shift)):
+                continue
+            found.append((i, j, float(np.linalg.norm(images[hit] - home[i] @ crystal.cell))))
+    return found
+
+
+def neighbours_of(
+    crystal: Crystal, point: FloatArray, radius: float, sites: tuple[int, ...] | None = None
+) -> tuple[np.ndarray, np.ndarray, FloatArray]:
+    """Atoms within ``radius`` Å of a fractional point, sorted by distance.
+
+    Returns site indices (n,), the cells they lie in (n, 3) int and the Cartesian vectors from atom to point (n, 3).
+    """
+    chosen = np.arange(crystal.n_sites) if sites is None else np.asarray(sites, dtype=int)
+    base = np.where(crystal.pbc, np.floor(point), 0.0)
+    local = np.asarray(point, dtype=float) - base
+    cells = np.where(crystal.pbc, np.floor(crystal.positions[chosen]), 0.0)
+    home = crystal.positions[chosen] - cells
+    shifts = image_shifts(crystal, radius)
+    vectors = (local - home[None] - shifts[:, None]) @ crystal.cell
+    distance = np.linalg.norm(vectors, axis=-1)
+    shift_index, atom_index = np.nonzero(distance <= radius)
+    order = np.argsort(distance[shift_index, atom_index], kind="stable")
+    shift_index, atom_index = shift_index[order], atom_index[order]
+    lattice = shifts[shift_index] + base - cells[atom_index]
+    return chosen[atom_index], lattice.astype(int), vectors[shift_index, atom_index]

@@ -1,0 +1,81 @@
+"""Space-group operations of the non-magnetic structure, found by spglib where a file does not state them."""
+
+from __future__ import annotations
+
+import warnings
+from typing import TYPE_CHECKING
+
+import numpy as np
+import spglib
+
+from latticedip.checks import FloatArray
+from latticedip.errors import LatticedipError
+
+if TYPE_CHECKING:
+    from latticedip.crystal.model import Crystal, Operations
+
+#: Distance (Å) within which atoms count as symmetry-equivalent.
+SYMMETRY_TOLERANCE_A = 1e-3
+
+
+def find_operations(crystal: Crystal, tolerance: float = SYMMETRY_TOLERANCE_A) -> tuple[Operations | None, list[int]]:
+    """Operations of a crystal and, for each atom, the index of the first atom equivalent to it.
+
+    Atoms are alike when element, label-independent occupancy and surroundings are. For crystals that are not
+    periodic in three directions the operations are None and every atom stands for itself; so they do where
+    the search fails (atoms closer than the tolerance).
+    """
+    from latticedip.crystal.model import Operations
+
+    alone = list(range(crystal.n_sites))
+    if not all(crystal.pbc) or crystal.n_sites == 0:
+        return None, alone
+    kinds: dict[tuple[str, float], int] = {}
+    numbers = [kinds.setdefault((s, round(float(p), 6)), len(kinds) + 1) for s, p in zip(crystal.symbols, crystal.occupancies, strict=True)]
+    cell = (crystal.cell, crystal.positions, numbers)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", DeprecationWarning)
+        try:
+            data = spglib.get_symmetry_dataset(cell, symprec=tolerance)
+        except spglib.SpglibError:
+            return None, alone
+    if data is None:
+        return None, alone
+    return Operations(data.rotations, data.translations), [int(i) for i in data.equivalent_atoms]
+
+
+def operations_of(crystal: Crystal) -> Operations:
+    """Operations stated by the file, else those spglib finds, else the identity alone."""
+    from latticedip.crystal.model import Operations
+
+    if crystal.operations is not None:
+        return crystal.operations
+    found, _ = find_operations(crystal)
+    return found if found is not None else Operations(np.eye(3, dtype=int)[None], np.zeros((1, 3)))
+
+
+def centrings_of(crystal: Crystal) -> FloatArray:
+    """Shape (n, 3) float. Centring translations of the non-magnetic lattice, zero first."""
+    return operations_of(crystal).centrings()
+
+
+def equivalent_sites(crystal: Crystal, tolerance_A: float = 0.02) -> list[int]:
+    """For each atom the index of the first atom that an operation of the crystal maps onto it.
+
+    Raises LatticedipError where an operation maps an atom onto no atom: the operations are not of this crystal.
+    """
+    operations = operations_of(crystal)
+    first = list(range(crystal.n_sites))
+    for i in range(crystal.n_sites):
+        if first[i] != i:
+            continue
+        images = operations.rotations @ crystal.positions[i] + operations.translations
+        for image in images:
+            difference = crystal.positions - image
+            difference -= np.round(difference)
+            distance = np.linalg.norm(difference @ crystal.cell, axis=1)
+            j = int(np.argmin(distance))
+            if distance[j] > tolerance_A:
+                raise LatticedipError(f"an operation of the crystal maps atom {i + 1} onto no atom.")
+            first[j] = min(first[j], i)
+    return first

@@ -1,0 +1,193 @@
+"""The Ordering: moments over the sites of one Crystal, as Fourier components.
+
+Words used here and nowhere renamed:
+
+k            propagation vector, in reduced coordinates of the crystal's own reciprocal cell
+component    S_kj, complex Cartesian vector in µB of site j at k
+moment       m_j(R) = Σ_k Re[S_kj exp(−2πi k·R)] of site j in the cell at lattice vector R: the phase counts cells
+ion          a site whose component is not zero at some k; counted with its occupancy
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from latticedip.checks import ComplexArray, FloatArray, as_complex, as_floats, frozen
+from latticedip.crystal.model import Crystal
+from latticedip.errors import InputError
+
+if TYPE_CHECKING:
+    from ase import Atoms
+
+#: A coordinate of k this close to an integer or a half is taken as it.
+K_SNAP = 1e-9
+#: Below this size (µB) a component counts as zero.
+ZERO_MOMENT_MUB = 1e-12
+
+
+@dataclass(frozen=True, eq=False)
+class ParentTransform:
+    """How the cell of an ordering derives from a parent cell: (a, b, c) = (a, b, c)_parent P, origin shift p.
+
+    P: Shape (3, 3) float; columns give the child vectors in terms of the parent vectors (IUCr convention).
+    p: Shape (3,) float; the child origin in parent fractional coordinates. x_parent = P x_child + p.
+    """
+
+    P: FloatArray
+    p: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class Ordering:
+    """A named arrangement of moments over the sites of one Crystal; frozen, arrays read-only.
+
+    crystal: the Crystal whose sites carry the moments.
+    components: Shape (n, 3) or (n_k, n, 3), real or complex, Cartesian µB; stored as (n_k, n, 3).
+    k: Shape (3,) or (n_k, 3) float. Stored as (n_k, 3).
+    name: what tables call it.
+    moment_su: Shape (n, 3) float in µB. Standard uncertainties of the crystal-axis components, NaN where unknown.
+    parent: how the cell derives from a parent cell, where a file states it.
+    notes: sentences a report must repeat.
+
+    Components at k equal or opposite modulo 1 are merged (S_k + conj S_−k). Where k and −k are the same vector
+    only the real part has a meaning.
+
+    Raises InputError for wrong shapes, values that are not finite, or an imaginary part at such a k.
+    """
+
+    crystal: Crystal
+    components: Any
+    k: Any = (0.0, 0.0, 0.0)
+    name: str = ""
+    moment_su: Any = None
+    parent: ParentTransform | None = None
+    notes: tuple[str, ...] = field(default=(), repr=False)
+
+    if TYPE_CHECKING:
+        components: ComplexArray
+        k: FloatArray
+        moment_su: FloatArray
+
+    def __post_init__(self) -> None:
+        if not isinstance(self.crystal, Crystal):
+            raise InputError(f"an Ordering needs a Crystal, got {type(self.crystal).__name__}.")
+        n = self.crystal.n_sites
+        k = as_floats("k", np.asarray(self.k), (None,) * np.ndim(self.k))
+        single = k.ndim == 1
+        k = as_floats("k", k[None] if single else k, (None, 3))
+        raw = np.asarray(self.components)
+        if raw.ndim == 2:
+            raw = raw[None]
+        components = as_complex("components", raw, (len(k), n, 3))
+        if len(k) == 0:
+            raise InputError("an Ordering needs at least one propagation vector.")
+        for axis, periodic in enumerate(self.crystal.pbc):
+            if not periodic and np.any(np.abs(k[:, axis]) > K_SNAP):
+                raise InputError(f"k has a component along direction {axis + 1}, in which the crystal is not periodic.")
+        k, components = merge_components(snap_k(k), components)
+        own_opposite = is_self_conjugate(k)
+        scale = max(1.0, float(np.abs(components).max(initial=0.0)))
+        for i in np.flatnonzero(own_opposite):
+            imaginary = np.abs(components[i].imag)
+            if imaginary.max(initial=0.0) > 1e-9 * scale:
+                site = int(np.argmax(imaginary.max(axis=1)))
+                raise InputError(
+                    f"at k = {k[i].tolist()} (k and −k are the same vector) the component of site {site + 1} "
+                    f"({self.crystal.labels[site]}) has an imaginary part of {imaginary[site].max():.6g} µB, which "
+                    "has no meaning there. Give real components."
+                )
+            components[i].imag = 0.0
+        su = np.full((n, 3), np.nan) if self.moment_su is None else np.asarray(self.moment_su, dtype=float)
+        if su.shape != (n, 3):
+            raise InputError(f"moment_su must have shape ({n}, 3), got {su.shape}.")
+        for key, value in (("components", components), ("k", k), ("moment_su", su)):
+            object.__setattr__(self, key, frozen(value))
+
+    def moments(self, cells: Sequence[Sequence[int]] | Any = ((0, 0, 0),)) -> FloatArray:
+        """Shape (n_cells, n_sites, 3) float in µB. Cartesian moments in the cells at lattice vectors ``cells``."""
+        lattice = as_floats("cells", np.asarray(cells, dtype=float), (None, 3))
+        if np.any(lattice != np.round(lattice)):
+            raise InputError("cells must be whole numbers: they count lattice vectors.")
+        turns = (lattice @ self.k.T) % 1.0
+        phases = np.exp(-2j * np.pi * turns)
+        return np.asarray(np.einsum("ck,kja->cja", phases, self.components).real)
+
+    @cached_property
+    def is_magnetic(self) -> np.ndarray:
+        """Shape (n_sites,) bool. True for sites that carry a component at some k."""
+        return frozen(np.abs(self.components).max(axis=(0, 2)) > ZERO_MOMENT_MUB)
+
+    @cached_property
+    def n_ions(self) -> float:
+        """Magnetic ions per cell, counted with their occupancy."""
+        return float(self.crystal.occupancies[self.is_magnetic].sum())
+
+    @cached_property
+    def mean_components(self) -> ComplexArray:
+        """Shape (n_k, n_sites, 3) complex in µB. Components times occupancy, which is what every sum takes."""
+        return frozen(self.components * self.crystal.occupancies[None, :, None])
+
+    @cached_property
+    def net_moment(self) -> FloatArray:
+        """Shape (3,) float in µB per cell. Σ p m over the cell, averaged over cells (the k = 0 part)."""
+        uniform = np.all(self.k == np.round(self.k), axis=1)
+        return frozen(self.mean_components[uniform].real.sum(axis=(0, 1)))
+
+    def rotated(self, rotation: Any, name: str | None = None) -> Ordering:
+        """The same pattern with every moment turned by a (3, 3) rotation matrix; sites stay."""
+        matrix = as_floats("rotation", rotation, (3, 3))
+        return Ordering(
+            self.crystal, self.components @ matrix.T, self.k, self.name if name is None else name, notes=self.notes, parent=self.parent
+        )
+
+    @classmethod
+    def from_ase(cls, atoms: Atoms, name: str = "") -> Ordering:
+        """Build an Ordering (k = 0) from the magnetic moments of ASE atoms; scalar moments lie along z."""
+        from latticedip.ordering.convert import ordering_from_ase
+
+        return ordering_from_ase(atoms, name)
+
+    def to_ase(self, repeat: Sequence[int] = (1, 1, 1)) -> Atoms:
+        """Return ASE atoms of ``repeat`` cells with vector initial magnetic moments (of the ions, µB)."""
+        from latticedip.ordering.convert import ordering_to_ase
+
+        return ordering_to_ase(self, repeat)
+
+
+def snap_k(k: FloatArray) -> FloatArray:
+    """Return k with every coordinate within 1e-9 of an integer or a half set to it."""
+    halves = np.round(2 * k) / 2
+    return np.where(np.abs(k - halves) <= K_SNAP, halves, k)
+
+
+def is_self_conjugate(k: FloatArray) -> np.ndarray:
+    """Shape (n_k,) bool. True where k and −k are the same vector modulo 1 (k snapped before)."""
+    return np.all(2 * k == np.round(2 * k), axis=1)
+
+
+def merge_components(k: FloatArray, components: ComplexArray) -> tuple[FloatArray, ComplexArray]:
+    """Merge components whose k are equal (added) or opposite (conjugate added) modulo 1."""
+    kept_k: list[FloatArray] = []
+    kept: list[ComplexArray] = []
+    for vector, part in zip(k, components, strict=True):
+        for i, other in enumerate(kept_k):
+            if _same_modulo_one(vector, other):
+                kept[i] = kept[i] + part
+                break
+            if _same_modulo_one(vector, -other):
+                kept[i] = kept[i] + part.conj()
+                break
+        else:
+            kept_k.append(vector)
+            kept.append(np.array(part))
+    return np.array(kept_k), np.array(kept)
+
+
+def _same_modulo_one(first: FloatArray, second: FloatArray) -> bool:
+    difference = first - second
+    return bool(np.all(np.abs(difference - np.round(difference)) <= K_SNAP))
