@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, as_complex, as_floats, frozen
-from latticedip.crystal.model import Crystal
+from latticedip.crystal.model import Crystal, site_order, wrap
 from latticedip.errors import InputError
 
 if TYPE_CHECKING:
@@ -43,6 +43,37 @@ class ParentTransform:
 
 
 @dataclass(frozen=True, eq=False)
+class Reference:
+    """The crystal in whose cell probe positions are given, where an ordering lives in another cell.
+
+    crystal: the reference Crystal; the ordering's own cell is already turned into its Cartesian frame.
+    transform: from the reference cell (parent) to the ordering's own cell (child).
+    how: one sentence on where the transform comes from, for reports.
+    """
+
+    crystal: Crystal
+    transform: ParentTransform
+    how: str = ""
+
+    def carry(self, position: Any) -> FloatArray:
+        """Shape (n, 3) float. All points of the ordering's own cell that one reference position stands for.
+
+        The reference lattice may be finer than the lattice of the ordering: one position then becomes several,
+        in [0, 1), ordered by x, y, z.
+        """
+        inverse = np.linalg.inv(self.transform.P)
+        # Whole reference cells that fit into the child cell: images of a box that covers it, made distinct.
+        reach = int(np.ceil(np.abs(self.transform.P).sum(axis=1).max())) + 1
+        steps = np.arange(-reach, reach + 1)
+        shifts = np.stack(np.meshgrid(steps, steps, steps, indexing="ij"), axis=-1).reshape(-1, 3)
+        points = wrap((np.asarray(position, dtype=float) + shifts - self.transform.p) @ inverse.T)
+        keys = np.round(points, 6) % 1.0
+        _, first = np.unique(keys, axis=0, return_index=True)
+        distinct = points[first]
+        return np.asarray(distinct[site_order(distinct)])
+
+
+@dataclass(frozen=True, eq=False)
 class Ordering:
     """A named arrangement of moments over the sites of one Crystal; frozen, arrays read-only.
 
@@ -52,6 +83,7 @@ class Ordering:
     name: what tables call it.
     moment_su: Shape (n, 3) float in µB. Standard uncertainties of the crystal-axis components, NaN where unknown.
     parent: how the cell derives from a parent cell, where a file states it.
+    reference: the crystal in whose cell probes are given, where it is not ``crystal`` (set when a study is read).
     notes: sentences a report must repeat.
 
     Components at k equal or opposite modulo 1 are merged (S_k + conj S_−k). Where k and −k are the same vector
@@ -66,6 +98,7 @@ class Ordering:
     name: str = ""
     moment_su: Any = None
     parent: ParentTransform | None = None
+    reference: Reference | None = field(default=None, repr=False)
     notes: tuple[str, ...] = field(default=(), repr=False)
 
     if TYPE_CHECKING:
@@ -142,7 +175,13 @@ class Ordering:
         """The same pattern with every moment turned by a (3, 3) rotation matrix; sites stay."""
         matrix = as_floats("rotation", rotation, (3, 3))
         return Ordering(
-            self.crystal, self.components @ matrix.T, self.k, self.name if name is None else name, notes=self.notes, parent=self.parent
+            self.crystal,
+            self.components @ matrix.T,
+            self.k,
+            self.name if name is None else name,
+            parent=self.parent,
+            reference=self.reference,
+            notes=self.notes,
         )
 
     @classmethod
