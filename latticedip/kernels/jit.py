@@ -1,0 +1,91 @@
+"""One decorator for every compiled loop, and the one place that reads the thread count.
+
+Kernels release the interpreter lock and are spread over targets by a small pool of ordinary threads. No numba
+thread layer is started: beside a threaded BLAS on two cores such a layer spins, and both run at half speed.
+"""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+from functools import cache
+from typing import Any
+
+import numba
+
+#: Fast-math flags that keep the order of operations: rounding tricks such as the one in `exp_negative` survive.
+ORDERED = {"nnan", "ninf", "nsz", "contract", "arcp"}
+
+
+def kernel(*, fastmath: Any = False, inline: bool = False) -> Callable[[Callable[..., Any]], Any]:
+    """Compile a function with numba: no interpreter lock, cached on disk where a directory can be written.
+
+    fastmath: what numba takes. inline: for small functions that only other kernels call.
+    """
+
+    def decorate(function: Callable[..., Any]) -> Any:
+        options = {"nogil": True, "fastmath": fastmath}
+        if inline:
+            # Called from other kernels only: compiled and cached with them.
+            return numba.njit(**options)(function)
+        try:
+            return numba.njit(cache=_cache_is_usable(), **options)(function)
+        except RuntimeError:
+            # numba found no directory it may write to; compiling anew each time is slower but right.
+            return numba.njit(**options)(function)
+
+    return decorate
+
+
+@cache
+def _cache_is_usable() -> bool:
+    directory = numba.config.CACHE_DIR
+    if not directory:
+        return True
+    try:
+        os.makedirs(directory, exist_ok=True)
+        tempfile.TemporaryFile(dir=directory).close()
+    except OSError:
+        return False
+    return True
+
+
+def thread_count() -> int:
+    """Threads to use: what the user set (numba.set_num_threads, NUMBA_NUM_THREADS, OMP_NUM_THREADS), else all cores."""
+    try:
+        numba.threading_layer()
+    except ValueError:
+        count = int(numba.config.NUMBA_NUM_THREADS)
+    else:
+        count = int(numba.get_num_threads())
+    stated = os.environ.get("OMP_NUM_THREADS", "")
+    if stated.isdigit() and int(stated) > 0:
+        count = min(count, int(stated))
+    return max(1, count)
+
+
+@cache
+def _pool(threads: int, process: int) -> ThreadPoolExecutor:
+    # The process id is part of the key: a forked child must not use its parent's threads.
+    return ThreadPoolExecutor(threads, thread_name_prefix="latticedip")
+
+
+def over_rows(function: Callable[..., Any], n_rows: int, *arguments: Any, at_least: int = 16) -> None:
+    """Call ``function(first, last, *arguments)`` for blocks of rows, on all threads.
+
+    Every row is written by one call only, so the result does not depend on the number of threads.
+    at_least: with fewer rows than this the call is made directly.
+    """
+    threads = min(thread_count(), max(1, n_rows // max(1, at_least)))
+    if threads == 1:
+        function(0, n_rows, *arguments)
+        return
+    # Several blocks per thread even out rows of unequal cost.
+    blocks = min(n_rows, 4 * threads)
+    edges = [n_rows * i // blocks for i in range(blocks + 1)]
+    pool = _pool(threads, os.getpid())
+    calls = [pool.submit(function, a, b, *arguments) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+    for call in calls:
+        call.result()

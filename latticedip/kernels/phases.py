@@ -1,0 +1,113 @@
+"""Exact reduction of offsets by lattice vectors, and tables of plane-wave phases."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from latticedip.kernels.jit import ORDERED, kernel
+
+#: 2²⁷ + 1: splits a double into two halves whose products are exact (Dekker, Numer. Math. 18, 224 (1971)).
+SPLITTER = 134217729.0
+
+
+@kernel(inline=True)
+def two_sum(a, b):  # type: ignore[no-untyped-def]
+    """Return the rounded sum and its exact rounding error (Knuth)."""
+    total = a + b
+    part = total - a
+    return total, (a - (total - part)) + (b - part)
+
+
+@kernel(inline=True)
+def two_product(a, b):  # type: ignore[no-untyped-def]
+    """Return the rounded product and its exact rounding error (Dekker)."""
+    product = a * b
+    t = SPLITTER * a
+    a_high = t - (t - a)
+    a_low = a - a_high
+    t = SPLITTER * b
+    b_high = t - (t - b)
+    b_low = b - b_high
+    return product, ((a_high * b_high - product) + a_high * b_low + a_low * b_high) + a_low * b_low
+
+
+@kernel()
+def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, k, out, out_cells, out_turns):  # type: ignore[no-untyped-def]
+    """Take whole lattice vectors from rows first..last of ``offsets``, in compensated arithmetic.
+
+    cell, inverse (3, 3): the cell as given. steps (3, 3): whole numbers, the reduced cell is steps @ cell, and
+    reduced_inverse its inverse. k (3,): in the cell as given.
+    out (n, 3): the rest, within half a reduced cell vector; out_cells (n, 3): the lattice vector taken away, in
+    the cell as given; out_turns (n,): k·cells modulo 1. Every rest is exact to its own last place.
+    """
+    rough = np.empty(3)
+    total = np.empty(3)
+    extra = np.empty(3)
+    for row in range(first, last):
+        for axis in range(3):
+            f = offsets[row, 0] * inverse[0, axis] + offsets[row, 1] * inverse[1, axis] + offsets[row, 2] * inverse[2, axis]
+            total[axis] = np.rint(f)
+        # Twice: the first pass lands in the given cell, the second in the reduced one.
+        for _ in range(2):
+            for c in range(3):
+                high = offsets[row, c]
+                low = 0.0
+                for axis in range(3):
+                    product, error = two_product(-total[axis], cell[axis, c])
+                    high, carry = two_sum(high, product)
+                    low += carry + error
+                rough[c] = high + low
+            for axis in range(3):
+                f = rough[0] * reduced_inverse[0, axis] + rough[1] * reduced_inverse[1, axis] + rough[2] * reduced_inverse[2, axis]
+                extra[axis] = np.rint(f)
+            for axis in range(3):
+                for step in range(3):
+                    total[axis] += extra[step] * steps[step, axis]
+        turns = 0.0
+        for c in range(3):
+            high = offsets[row, c]
+            low = 0.0
+            for axis in range(3):
+                product, error = two_product(-total[axis], cell[axis, c])
+                high, carry = two_sum(high, product)
+                low += carry + error
+            out[row, c] = high + low
+            out_cells[row, c] = total[c]
+            product, error = two_product(total[c], k[c])
+            turns += (product - np.rint(product)) + error
+        out_turns[row] = turns - np.rint(turns)
+
+
+@kernel(fastmath=ORDERED)
+def phase_table(first, last, points, waves, indices, k, limits, out):  # type: ignore[no-untyped-def]
+    """Fill rows first..last of ``out`` (n, 2 n_q) with cos(q·x) and then sin(q·x).
+
+    points (n, 3): Cartesian Å. waves (3, 3): rows are the reciprocal vectors including 2π. indices (n_q, 3): whole
+    numbers m; q = (m − k)·waves. limits (3,): largest |m| per axis.
+    Powers of the three unit phases are built by doubling, so that rounding grows with log m only.
+    """
+    n_q = indices.shape[0]
+    widest = max(limits[0], limits[1], limits[2]) + 1
+    powers = np.empty((3, widest), np.complex128)
+    for row in range(first, last):
+        lead = 0.0
+        for axis in range(3):
+            angle = points[row, 0] * waves[axis, 0] + points[row, 1] * waves[axis, 1] + points[row, 2] * waves[axis, 2]
+            lead += k[axis] * angle
+            powers[axis, 0] = 1.0
+            if limits[axis] > 0:
+                powers[axis, 1] = complex(np.cos(angle), np.sin(angle))
+            for m in range(2, limits[axis] + 1):
+                half = m // 2
+                powers[axis, m] = powers[axis, half] * powers[axis, m - half]
+        start = complex(np.cos(lead), -np.sin(lead))
+        for q in range(n_q):
+            a = indices[q, 0]
+            b = indices[q, 1]
+            c = indices[q, 2]
+            pa = powers[0, a] if a >= 0 else powers[0, -a].conjugate()
+            pb = powers[1, b] if b >= 0 else powers[1, -b].conjugate()
+            pc = powers[2, c] if c >= 0 else powers[2, -c].conjugate()
+            value = start * pa * pb * pc
+            out[row, q] = value.real
+            out[row, n_q + q] = value.imag

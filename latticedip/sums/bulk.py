@@ -1,0 +1,297 @@
+"""Lattice sum of dipole tensors, periodic in three directions (Ewald 1921; Born and Huang 1954, §30).
+
+T_ab(x; k) = Σ_R T_ab(x − R) exp(−2πi k·R) = C Σ_R ∂_a∂_b (1/|x − R|) exp(−2πi k·R),   C = µ0 µB/4π.
+
+With 1/r = erfc(αr)/r + erf(αr)/r the sum splits into
+
+    real part          C Σ_R [B₂(r) r_a r_b − B₁(r) δ_ab] exp(−2πi k·R),   r = x − R
+    reciprocal part    −(4πC/V) Σ_q (q_a q_b/q²) exp(−q²/4α²) exp(iq·x),   q = G − K
+    self term          +C (4α³/3√π) δ_ab, for the source left out when x is on it
+    boundary           at k = 0 the term q = 0 is dropped: no macroscopic demagnetizing field, N = 0
+
+with B₁, B₂ as in `latticedip.kernels.radial`. The trace of the whole is known, (4πC/V) at k = 0 and 0 otherwise
+(Laplace's equation, with the uniform background that the dropped term stands for), so five elements are summed.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Any
+
+import numpy as np
+
+from latticedip.checks import ComplexArray, FloatArray, as_floats, check_cell, check_tol, frozen
+from latticedip.errors import InputError, LimitError
+from latticedip.kernels.jit import over_rows
+from latticedip.kernels.phases import phase_table, reduce_offsets
+from latticedip.kernels.real import real_gradients, real_tensors
+from latticedip.sums.accuracy import choose_splitting, real_cutoffs, reciprocal_cutoffs
+from latticedip.sums.lattice import ReducedLattice, reduce_cell, reduce_k, stable_inverse
+from latticedip.units import DIPOLE_T_A3_PER_MUB
+
+#: A target closer to a source than this (Å) is on it: that source is left out of its own sum.
+ON_SITE_A = 1e-6
+#: Share of ``tol`` given to each of the two tails. An element of the diagonal found from the trace collects the
+#: tails of two others, two tails each; the rest is left for rounding.
+TAIL_SHARE = 0.2
+#: Largest number of lattice or reciprocal vectors one sum may hold.
+MAX_VECTORS = 20_000_000
+#: Whole numbers above this cannot be taken from an offset exactly.
+MAX_CELLS = 2**26
+#: Size in bytes of the phase tables held at one time.
+TABLE_BYTES = 64 * 2**20
+
+
+@dataclass(frozen=True, eq=False)
+class Points:
+    """Positions reduced into the cell, ready to be targets or sources of a `LatticeSum`.
+
+    reduced: Shape (n, 3) float in Å. Cartesian, within half a vector of the reduced cell.
+    turns: Shape (n,) float. k·R modulo 1 for the lattice vector R that was taken away.
+    """
+
+    reduced: FloatArray
+    turns: FloatArray
+
+    def __len__(self) -> int:
+        return len(self.reduced)
+
+
+@dataclass(frozen=True, eq=False)
+class LatticeSum:
+    """What is common to all sums over one lattice at one k: vectors, weights, splitting. See `lattice_sum`.
+
+    alpha 1/Å; cutoff Å; images (n, 3) Å with lengths (n,) and phase (n, 2); indices (n_q, 3) whole numbers with
+    q = (m − k)·waves; weights (n_q, 5) in 1/Å³ for xx, yy, xy, xz, yz; q (n_q, 3) in 1/Å.
+    """
+
+    given_cell: FloatArray
+    given_k: FloatArray
+    lattice: ReducedLattice
+    k: FloatArray
+    tol: float
+    alpha: float
+    cutoff: float
+    is_real: bool
+    is_uniform: bool
+    images: FloatArray
+    lengths: FloatArray
+    phase: FloatArray
+    indices: np.ndarray
+    limits: np.ndarray
+    q: FloatArray
+    weights: FloatArray
+
+    def place(self, positions_cart: Any) -> Points:
+        """Reduce Cartesian positions (n, 3) in Å by lattice vectors, exactly for the doubles as given."""
+        positions = np.ascontiguousarray(positions_cart, dtype=float)
+        inverse = stable_inverse(self.given_cell)
+        if len(positions) and np.abs(positions @ inverse).max() > MAX_CELLS:
+            raise InputError(f"an offset lies more than {MAX_CELLS} cells away; reduce it by lattice vectors.")
+        reduced, cells, turns = np.empty((len(positions), 3)), np.empty((len(positions), 3)), np.empty(len(positions))
+        over_rows(
+            reduce_offsets, len(positions), positions, self.given_cell, inverse, self.lattice.steps,
+            self.lattice.inverse, self.given_k, reduced, cells, turns, at_least=4096,
+        )  # fmt: skip
+        return Points(reduced, turns)
+
+    def tensors(self, targets: Points, sources: Points) -> FloatArray | ComplexArray:
+        """Shape (n_targets, n_sources, 3, 3) in T/µB. Σ_R T(x_t − x_s − R) exp(−2πi k·R), real where the sum is.
+
+        A source on its target (within 1e-6 Å) is left out.
+        """
+        n_t, n_s = len(targets), len(sources)
+        parts = 1 if self.is_real else 2
+        flat = np.empty((parts, n_t, n_s, 5))
+        if n_t and n_s:
+            reciprocal_part(self, targets.reduced, sources.reduced, flat)
+            real_part(self, targets.reduced, sources.reduced, flat)
+        flat *= DIPOLE_T_A3_PER_MUB
+        trace = boundary_trace(self)
+        turns = targets.turns[:, None] - sources.turns[None, :]
+        if self.is_real:
+            # Turns are multiples of one half here, so that the phase is a sign.
+            return unpack(flat[0], trace) * np.cos(2 * np.pi * turns)[:, :, None, None] if np.any(turns) else unpack(flat[0], trace)
+        both = unpack(flat[0], trace) + 1j * unpack(flat[1], 0.0)
+        both *= np.exp(-2j * np.pi * turns)[:, :, None, None]
+        return both
+
+    def field_gradient(self, targets: Points, sources: Points, components: ComplexArray) -> ComplexArray:
+        """Shape (n_targets, 3, 3) complex in T/Å. ∂B_a/∂x_c of the field of components (n_sources, 3) in µB.
+
+        The field of the source on a target is left out. Meant for few targets: every wave costs one product.
+        """
+        moments = np.ascontiguousarray(components * np.exp(2j * np.pi * sources.turns)[:, None])
+        out = np.zeros((len(targets), 3, 3), dtype=complex)
+        table = wave_table(self, sources.reduced)
+        n_q = len(self.indices)
+        structure = (table[:, :n_q] - 1j * table[:, n_q:]).T @ moments
+        square = np.einsum("qa,qa->q", self.q, self.q)
+        gauss = np.exp(-square / (4 * self.alpha**2)) * (-4 * np.pi / self.lattice.volume)
+        scalar = 1j * gauss / square * np.einsum("qa,qa->q", self.q, structure)
+        own = wave_table(self, targets.reduced)
+        waves = own[:, :n_q] + 1j * own[:, n_q:]
+        if self.is_real:
+            # Only one of ±q is kept: the other contributes the term with both conjugated phases.
+            reverse = (table[:, :n_q] + 1j * table[:, n_q:]).T @ moments
+            other = -1j * gauss / square * np.einsum("qa,qa->q", self.q, reverse)
+            out += np.einsum("tq,q,qa,qc->tac", waves.conj(), other, self.q, self.q, optimize=True)
+        out += np.einsum("tq,q,qa,qc->tac", waves, scalar, self.q, self.q, optimize=True)
+        over_rows(
+            real_gradients, len(targets), targets.reduced, sources.reduced, moments, self.lattice.cell,
+            self.lattice.inverse, self.images, self.phase, self.k, self.alpha, self.cutoff, ON_SITE_A, out, at_least=4,
+        )  # fmt: skip
+        return out * DIPOLE_T_A3_PER_MUB * np.exp(-2j * np.pi * targets.turns)[:, None, None]
+
+
+def real_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
+    """Add the real part and the self term, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³."""
+    imaginary = flat[1] if len(flat) == 2 else np.empty((0, 0, 5))
+    over_rows(
+        real_tensors, len(targets), targets, sources, plan.lattice.cell, plan.lattice.inverse, plan.images,
+        plan.lengths, plan.phase, plan.k, plan.alpha, plan.cutoff, ON_SITE_A, self_term(plan.alpha), flat[0], imaginary,
+        at_least=max(1, 400 // max(1, len(sources))),
+    )  # fmt: skip
+
+
+def self_term(alpha: float) -> float:
+    """4α³/(3√π) in 1/Å³: what the reciprocal part holds of the source itself, −∂_a∂_b erf(αr)/r at r = 0."""
+    return 4 * alpha**3 / (3 * np.sqrt(np.pi))
+
+
+def boundary_trace(plan: LatticeSum) -> float:
+    """Trace of the whole sum in T/µB: 4πC/V at k = 0, where the term q = 0 is dropped (N = 0), else 0."""
+    return 4 * np.pi * DIPOLE_T_A3_PER_MUB / plan.lattice.volume if plan.is_uniform else 0.0
+
+
+def wave_table(plan: LatticeSum, points: FloatArray) -> FloatArray:
+    """Shape (n, 2 n_q) float. cos(q·x), then sin(q·x), of reduced positions."""
+    table = np.empty((len(points), 2 * len(plan.indices)))
+    over_rows(phase_table, len(points), points, plan.lattice.waves, plan.indices, plan.k, plan.limits, table)
+    return table
+
+
+def reciprocal_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
+    """Write the reciprocal part, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³.
+
+    cos q·(x_t − x_s) = cos cos + sin sin (and the like for the sine) makes of it a product of a table of phases of
+    the targets with one of weighted phases of the sources: n_t × 2n_q times 2n_q × 5n_s.
+    """
+    n_q, n_s = len(plan.indices), len(sources)
+    table = wave_table(plan, sources).reshape(n_s, 2, n_q)
+    cosine, sine = table[:, 0].T, table[:, 1].T
+    weighted = np.empty((2, n_q, len(flat), n_s, 5))
+    weighted[0, :, 0] = cosine[:, :, None] * plan.weights[:, None, :]
+    weighted[1, :, 0] = sine[:, :, None] * plan.weights[:, None, :]
+    if len(flat) == 2:
+        weighted[0, :, 1] = -weighted[1, :, 0]
+        weighted[1, :, 1] = weighted[0, :, 0]
+    right = weighted.reshape(2 * n_q, len(flat) * n_s * 5)
+    block = max(64, TABLE_BYTES // (16 * max(1, n_q)))
+    for start in range(0, len(targets), block):
+        left = wave_table(plan, targets[start : start + block])
+        product = (left @ right).reshape(len(left), len(flat), n_s, 5)
+        flat[:, start : start + block] = np.moveaxis(product, 1, 0)
+
+
+def unpack(flat: FloatArray, trace: float) -> FloatArray:
+    """Shape (..., 3, 3). Symmetric tensors from xx, yy, xy, xz, yz and the trace."""
+    out = np.empty((*flat.shape[:-1], 3, 3))
+    out[..., 0, 0] = flat[..., 0]
+    out[..., 1, 1] = flat[..., 1]
+    out[..., 2, 2] = trace - flat[..., 0] - flat[..., 1]
+    out[..., 0, 1] = out[..., 1, 0] = flat[..., 2]
+    out[..., 0, 2] = out[..., 2, 0] = flat[..., 3]
+    out[..., 1, 2] = out[..., 2, 1] = flat[..., 4]
+    return out
+
+
+def lattice_sum(cell: Any, k: Any = (0.0, 0.0, 0.0), tol: float = 1e-10, alpha: float | None = None) -> LatticeSum:
+    """Prepare sums over a three-dimensional lattice; the result is kept, so that a second call costs nothing.
+
+    cell: Shape (3, 3), rows in Å. k: Shape (3,), reduced coordinates. tol: bound of the error of every tensor,
+    max |error| ≤ tol · max(1 T/µB, largest |element|). alpha: splitting in 1/Å, chosen by cost when None.
+
+    Raises InputError for a singular cell or a tol out of range, AccuracyError where the bound cannot be kept,
+    LimitError where the cell would need more vectors than fit in memory.
+    """
+    matrix = check_cell("cell", cell)
+    vector = as_floats("k", k, (3,))
+    if alpha is not None and not alpha > 0:
+        raise InputError(f"alpha must be above zero, got {alpha!r}.")
+    return _lattice_sum(matrix.tobytes(), vector.tobytes(), check_tol(tol), alpha)
+
+
+@lru_cache(maxsize=64)
+def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | None) -> LatticeSum:
+    given = frozen(np.frombuffer(cell_bytes).reshape(3, 3))
+    given_k = frozen(np.frombuffer(k_bytes))
+    lattice = reduce_cell(given)
+    k = reduce_k(lattice.steps, given_k)
+    is_real = bool(np.all(2 * k == np.round(2 * k)))
+    is_uniform = bool(np.all(k == np.round(k)))
+    distances = lattice.layer_distances
+    wanted = TAIL_SHARE * tol / DIPOLE_T_A3_PER_MUB
+    if alpha is None:
+        alpha, r_c, q_c = choose_splitting(distances, lattice.volume, wanted)
+    else:
+        one = np.array([alpha])
+        r_c, q_c = float(real_cutoffs(one, distances, wanted)[0]), float(reciprocal_cutoffs(one, distances, wanted)[0])
+    images, cells = image_vectors(lattice, r_c)
+    turns = (cells @ k) % 1.0
+    indices, q = wave_vectors(lattice, k, q_c, is_real)
+    square = np.einsum("qa,qa->q", q, q)
+    scale = (2.0 if is_real else 1.0) * -4 * np.pi / lattice.volume * np.exp(-square / (4 * alpha**2)) / square
+    pairs = q[:, [0, 1, 0, 0, 1]] * q[:, [0, 1, 1, 2, 2]]
+    return LatticeSum(
+        given_cell=given, given_k=given_k, lattice=lattice, k=frozen(k), tol=tol, alpha=alpha, cutoff=r_c,
+        is_real=is_real, is_uniform=is_uniform, images=frozen(images), lengths=frozen(np.linalg.norm(images, axis=1)),
+        phase=frozen(np.stack([np.cos(2 * np.pi * turns), -np.sin(2 * np.pi * turns)], axis=1)),
+        indices=frozen(indices), limits=frozen(np.abs(indices).max(axis=0, initial=0)), q=frozen(q),
+        weights=frozen(pairs * scale[:, None]),
+    )  # fmt: skip
+
+
+def image_vectors(lattice: ReducedLattice, cutoff: float) -> tuple[FloatArray, FloatArray]:
+    """Lattice vectors (Å) by increasing length that can lie within ``cutoff`` of a separation in the home cell.
+
+    The separation is within half a vector along each axis. Returns Cartesian vectors (n, 3) and whole numbers (n, 3).
+    """
+    spacing = 1 / np.linalg.norm(lattice.inverse, axis=0)
+    reach = np.floor(cutoff / spacing + 0.5 + 1e-9).astype(int)
+    cells = _grid(reach)
+    vectors = cells @ lattice.cell
+    farthest = 0.5 * max(
+        float(np.linalg.norm(np.array(signs) @ lattice.cell)) for signs in ((1, 1, 1), (1, 1, -1), (1, -1, 1), (-1, 1, 1))
+    )
+    length = np.linalg.norm(vectors, axis=1)
+    keep = length <= (cutoff + farthest) * (1 + 1e-12)
+    order = np.argsort(length[keep], kind="stable")
+    return vectors[keep][order], cells[keep][order]
+
+
+def wave_vectors(lattice: ReducedLattice, k: FloatArray, cutoff: float, half: bool) -> tuple[np.ndarray, FloatArray]:
+    """Whole numbers m (n, 3) and q = (m − k)·waves (n, 3) with 0 < |q| ≤ cutoff; one of each pair ±q if ``half``."""
+    waves = lattice.waves
+    spacing = 2 * np.pi / np.linalg.norm(lattice.cell, axis=1)
+    reach = np.floor(cutoff / spacing + np.abs(k) + 1e-9).astype(int)
+    indices = _grid(reach)
+    fractional = indices - k
+    q = fractional @ waves
+    keep = (np.einsum("qa,qa->q", q, q) <= cutoff**2 * (1 + 1e-12)) & np.any(fractional != 0, axis=1)
+    if half:
+        f = fractional
+        keep &= (f[:, 2] > 0) | ((f[:, 2] == 0) & ((f[:, 1] > 0) | ((f[:, 1] == 0) & (f[:, 0] > 0))))
+    return indices[keep].astype(np.int64), q[keep]
+
+
+def _grid(reach: np.ndarray) -> FloatArray:
+    count = int(np.prod(2 * reach.astype(float) + 1))
+    if count > MAX_VECTORS:
+        raise LimitError(
+            f"the lattice sum would need {count:.3g} vectors for this cell and tolerance, more than {MAX_VECTORS}. "
+            "Use a larger tol or a less extreme cell."
+        )
+    axes = [np.arange(-n, n + 1, dtype=float) for n in reach]
+    return np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
