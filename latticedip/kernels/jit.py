@@ -26,7 +26,8 @@ def kernel(*, fastmath: Any = False, inline: bool = False) -> Callable[[Callable
     """
 
     def decorate(function: Callable[..., Any]) -> Any:
-        options = {"nogil": True, "fastmath": fastmath}
+        # numpy division: without the check for zero that keeps a loop from being vectorised.
+        options = {"nogil": True, "fastmath": fastmath, "error_model": "numpy"}
         if inline:
             # Called from other kernels only: compiled and cached with them.
             return numba.njit(**options)(function)

@@ -26,34 +26,75 @@ def nearest_image(dx, dy, dz, cell, inverse, shift):  # type: ignore[no-untyped-
     return dx, dy, dz
 
 
+@kernel(fastmath=ORDERED, inline=True)
+def gather(dx, dy, dz, begin, n_images, images, cutoff2, square, chosen, x, y, z, count):  # type: ignore[no-untyped-def]
+    """Append the separations from images begin..n_images that lie inside the cut-off; return the new count."""
+    for i in range(n_images):
+        px = dx - images[0, i]
+        py = dy - images[1, i]
+        pz = dz - images[2, i]
+        square[i] = px * px + py * py + pz * pz
+    start = count
+    # Every index is written, and kept only by moving on: no branch to mispredict.
+    for i in range(begin, n_images):
+        chosen[count] = i
+        count += square[i] <= cutoff2
+    for j in range(start, count):
+        i = chosen[j]
+        x[j] = dx - images[0, i]
+        y[j] = dy - images[1, i]
+        z[j] = dz - images[2, i]
+    return count
+
+
+@kernel(fastmath=True, inline=True)
+def weighted_sums(start, stop, weight, chosen, x, y, z, b1, b2):  # type: ignore[no-untyped-def]
+    """Σ w (B₂ r_a r_b − B₁ δ_ab) over gathered images: xx, yy, xy, xz, yz."""
+    xx = 0.0
+    yy = 0.0
+    xy = 0.0
+    xz = 0.0
+    yz = 0.0
+    for j in range(start, stop):
+        w = weight[chosen[j]]
+        w1 = w * b1[j]
+        bx = w * b2[j] * x[j]
+        by = w * b2[j] * y[j]
+        xx += bx * x[j] - w1
+        yy += by * y[j] - w1
+        xy += bx * y[j]
+        xz += bx * z[j]
+        yz += by * z[j]
+    return xx, yy, xy, xz, yz
+
+
 @kernel(fastmath=ORDERED)
 def real_tensors(first, last, targets, sources, cell, inverse, images, lengths, phase, k, alpha, cutoff, on_site, self_term, out_re, out_im):  # type: ignore[no-untyped-def]
     """Add the real part and the self term of T/C to rows first..last of ``out``.
 
     targets (n_t, 3), sources (n_s, 3): Cartesian Å, reduced into the cell. cell, inverse (3, 3).
-    images (n, 3): lattice vectors by increasing length, zero first; lengths (n,); phase (n, 2): cos and −sin of
+    images (3, n): lattice vectors by increasing length, zero first; lengths (n,); phase (2, n): cos and −sin of
     2π k·n for each. k (3,). alpha 1/Å, cutoff Å; a source closer than on_site Å is left out and self_term (1/Å³)
     added to the diagonal instead.
     out_re, out_im (n_t, n_s, 5): xx, yy, xy, xz, yz; out_im is left alone when its first axis is empty.
     """
     n_sources = sources.shape[0]
-    n_images = images.shape[0]
+    n_all = images.shape[1]
     is_complex = out_im.shape[0] > 0
-    capacity = CHUNK + n_images
+    capacity = CHUNK + n_all
     x = np.empty(capacity)
     y = np.empty(capacity)
     z = np.empty(capacity)
-    square = np.empty(capacity)
-    weight_re = np.empty(capacity)
-    weight_im = np.empty(capacity)
+    distance2 = np.empty(capacity)
     b1 = np.empty(capacity)
     b2 = np.empty(capacity)
+    chosen = np.empty(capacity + 1, np.int64)
+    square = np.empty(n_all)
     starts = np.empty(n_sources + 1, np.int64)
     skipped = np.empty(n_sources, np.bool_)
     turns = np.empty(n_sources)
     shift = np.empty(3)
     cutoff2 = cutoff * cutoff
-    site2 = on_site * on_site
     for t in range(first, last):
         s = 0
         while s < n_sources:
@@ -67,89 +108,29 @@ def real_tensors(first, last, targets, sources, cell, inverse, images, lengths, 
                 turns[s] = shift[0] * k[0] + shift[1] * k[1] + shift[2] * k[2]
                 starts[s] = count
                 d2 = dx * dx + dy * dy + dz * dz
-                skipped[s] = d2 < site2
-                reach = cutoff + np.sqrt(d2)
-                # The home image is always first; it is dropped by overwriting when it is the site itself.
-                i = 0
-                while i < n_images and lengths[i] <= reach:
-                    px = dx - images[i, 0]
-                    py = dy - images[i, 1]
-                    pz = dz - images[i, 2]
-                    r2 = px * px + py * py + pz * pz
-                    x[count] = px
-                    y[count] = py
-                    z[count] = pz
-                    square[count] = r2
-                    weight_re[count] = phase[i, 0]
-                    weight_im[count] = phase[i, 1]
-                    count += (r2 <= cutoff2) & ((i > 0) | (d2 >= site2))
-                    i += 1
+                # Image 0 is the nearest: it is the site itself where the target lies on it.
+                skipped[s] = d2 < on_site * on_site
+                n_images = np.searchsorted(lengths, cutoff + np.sqrt(d2), "right")
+                count = gather(dx, dy, dz, 1 if skipped[s] else 0, n_images, images, cutoff2, square, chosen, x, y, z, count)
                 s += 1
             starts[s] = count
-            radial_functions(count, alpha, square, b1, b2)
+            for j in range(count):
+                distance2[j] = x[j] * x[j] + y[j] * y[j] + z[j] * z[j]
+            radial_functions(count, alpha, distance2, b1, b2)
             for p in range(begin, s):
-                c = np.cos(2.0 * np.pi * turns[p])
+                sums = weighted_sums(starts[p], starts[p + 1], phase[0], chosen, x, y, z, b1, b2)
+                own = self_term if skipped[p] else 0.0
+                c = np.cos(2.0 * np.pi * turns[p]) if turns[p] != 0.0 else 1.0
+                if not is_complex:
+                    for e in range(5):
+                        out_re[t, p, e] += c * (sums[e] + (own if e < 2 else 0.0))
+                    continue
                 g = -np.sin(2.0 * np.pi * turns[p])
-                xx = 0.0
-                yy = 0.0
-                xy = 0.0
-                xz = 0.0
-                yz = 0.0
-                if is_complex:
-                    ixx = 0.0
-                    iyy = 0.0
-                    ixy = 0.0
-                    ixz = 0.0
-                    iyz = 0.0
-                    for i in range(starts[p], starts[p + 1]):
-                        wr = weight_re[i]
-                        wi = weight_im[i]
-                        txx = b2[i] * x[i] * x[i] - b1[i]
-                        tyy = b2[i] * y[i] * y[i] - b1[i]
-                        txy = b2[i] * x[i] * y[i]
-                        txz = b2[i] * x[i] * z[i]
-                        tyz = b2[i] * y[i] * z[i]
-                        xx += wr * txx
-                        yy += wr * tyy
-                        xy += wr * txy
-                        xz += wr * txz
-                        yz += wr * tyz
-                        ixx += wi * txx
-                        iyy += wi * tyy
-                        ixy += wi * txy
-                        ixz += wi * txz
-                        iyz += wi * tyz
-                    if skipped[p]:
-                        xx += self_term
-                        yy += self_term
-                    out_re[t, p, 0] += c * xx - g * ixx
-                    out_re[t, p, 1] += c * yy - g * iyy
-                    out_re[t, p, 2] += c * xy - g * ixy
-                    out_re[t, p, 3] += c * xz - g * ixz
-                    out_re[t, p, 4] += c * yz - g * iyz
-                    out_im[t, p, 0] += c * ixx + g * xx
-                    out_im[t, p, 1] += c * iyy + g * yy
-                    out_im[t, p, 2] += c * ixy + g * xy
-                    out_im[t, p, 3] += c * ixz + g * xz
-                    out_im[t, p, 4] += c * iyz + g * yz
-                else:
-                    for i in range(starts[p], starts[p + 1]):
-                        bx = weight_re[i] * b2[i] * x[i]
-                        by = weight_re[i] * b2[i] * y[i]
-                        w1 = weight_re[i] * b1[i]
-                        xx += bx * x[i] - w1
-                        yy += by * y[i] - w1
-                        xy += bx * y[i]
-                        xz += bx * z[i]
-                        yz += by * z[i]
-                    if skipped[p]:
-                        xx += self_term
-                        yy += self_term
-                    out_re[t, p, 0] += c * xx
-                    out_re[t, p, 1] += c * yy
-                    out_re[t, p, 2] += c * xy
-                    out_re[t, p, 3] += c * xz
-                    out_re[t, p, 4] += c * yz
+                imaginary = weighted_sums(starts[p], starts[p + 1], phase[1], chosen, x, y, z, b1, b2)
+                for e in range(5):
+                    real = sums[e] + (own if e < 2 else 0.0)
+                    out_re[t, p, e] += c * real - g * imaginary[e]
+                    out_im[t, p, e] += c * imaginary[e] + g * real
 
 
 @kernel(fastmath=ORDERED)
@@ -176,10 +157,10 @@ def real_gradients(first, last, targets, sources, moments, cell, inverse, images
             )  # fmt: skip
             turn = 2.0 * np.pi * (shift[0] * k[0] + shift[1] * k[1] + shift[2] * k[2])
             carried = complex(np.cos(turn), -np.sin(turn))
-            for i in range(images.shape[0]):
-                r[0] = dx - images[i, 0]
-                r[1] = dy - images[i, 1]
-                r[2] = dz - images[i, 2]
+            for i in range(images.shape[1]):
+                r[0] = dx - images[0, i]
+                r[1] = dy - images[1, i]
+                r[2] = dz - images[2, i]
                 r2 = r[0] * r[0] + r[1] * r[1] + r[2] * r[2]
                 if r2 > cutoff2 or r2 < on_site * on_site:
                     continue
@@ -188,7 +169,7 @@ def real_gradients(first, last, targets, sources, moments, cell, inverse, images
                 gauss = np.exp(-alpha * alpha * r2)
                 b2 = two[0]
                 b3 = (5.0 * b2 + a3 * gauss) / r2
-                weight = carried * complex(phase[i, 0], phase[i, 1])
+                weight = carried * complex(phase[0, i], phase[1, i])
                 along = moments[s, 0] * r[0] + moments[s, 1] * r[1] + moments[s, 2] * r[2]
                 for a in range(3):
                     for c in range(3):

@@ -62,7 +62,7 @@ class Points:
 class LatticeSum:
     """What is common to all sums over one lattice at one k: vectors, weights, splitting. See `lattice_sum`.
 
-    alpha 1/Å; cutoff Å; images (n, 3) Å with lengths (n,) and phase (n, 2); indices (n_q, 3) whole numbers with
+    alpha 1/Å; cutoff Å; images (3, n) Å with lengths (n,) and phase (2, n); indices (n_q, 3) whole numbers with
     q = (m − k)·waves; weights (n_q, 5) in 1/Å³ for xx, yy, xy, xz, yz; q (n_q, 3) in 1/Å.
     """
 
@@ -246,8 +246,8 @@ def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | N
     pairs = q[:, [0, 1, 0, 0, 1]] * q[:, [0, 1, 1, 2, 2]]
     return LatticeSum(
         given_cell=given, given_k=given_k, lattice=lattice, k=frozen(k), tol=tol, alpha=alpha, cutoff=r_c,
-        is_real=is_real, is_uniform=is_uniform, images=frozen(images), lengths=frozen(np.linalg.norm(images, axis=1)),
-        phase=frozen(np.stack([np.cos(2 * np.pi * turns), -np.sin(2 * np.pi * turns)], axis=1)),
+        is_real=is_real, is_uniform=is_uniform, images=frozen(images.T), lengths=frozen(np.linalg.norm(images, axis=1)),
+        phase=frozen(np.stack([np.cos(2 * np.pi * turns), -np.sin(2 * np.pi * turns)])),
         indices=frozen(indices), limits=frozen(np.abs(indices).max(axis=0, initial=0)), q=frozen(q),
         weights=frozen(pairs * scale[:, None]),
     )  # fmt: skip
