@@ -44,7 +44,9 @@ def _as_numbers(name: str, value: ArrayLike, shape: Sequence[int | None], dtype:
         raise InputError(f"{name} is not a rectangular array of numbers ({error}).") from None
     if raw.dtype.kind not in "biufc" or (raw.dtype.kind == "c" and dtype.kind == "f"):
         raise InputError(f"{name} must hold {'real ' if dtype.kind == 'f' else ''}numbers, got {_brief(value)}.")
-    if raw.ndim != len(shape) or any(want is not None and want != got for want, got in zip(shape, raw.shape, strict=True)):
+    if raw.ndim != len(shape) or any(
+        want is not None and want != got for want, got in zip(shape, raw.shape, strict=True)
+    ):
         wanted = "(" + ", ".join("n" if want is None else str(want) for want in shape) + ")"
         raise InputError(f"{name} must have shape {wanted}, got {raw.shape}.")
     array = np.array(raw, dtype=dtype, order="C")

@@ -44,13 +44,19 @@ class Contact:
         density: FloatArray | None = None
         if moment_density_muB_per_A3 is not None:
             if coupling_T_per_muB is not None or shell is not None or within is not None:
-                raise InputError("a Contact takes either moment_density_muB_per_A3 or a coupling with shell or within, not both.")
+                raise InputError(
+                    "a Contact takes either moment_density_muB_per_A3 or a coupling with shell or within, not both."
+                )
             density = frozen(as_floats("moment_density_muB_per_A3", moment_density_muB_per_A3, (3,)))
         else:
             if coupling_T_per_muB is None:
-                raise InputError("a Contact needs coupling_T_per_muB (a number or a 3×3 tensor) or moment_density_muB_per_A3.")
+                raise InputError(
+                    "a Contact needs coupling_T_per_muB (a number or a 3×3 tensor) or moment_density_muB_per_A3."
+                )
             if (shell is None) == (within is None):
-                raise InputError("a contact coupling needs exactly one of shell (1 is the nearest) and within (a radius in Å).")
+                raise InputError(
+                    "a contact coupling needs exactly one of shell (1 is the nearest) and within (a radius in Å)."
+                )
             if shell is not None and (isinstance(shell, bool) or not isinstance(shell, (int, np.integer)) or shell < 1):
                 raise InputError(f"shell must be a whole number of at least 1, got {shell!r}.")
             if within is not None:

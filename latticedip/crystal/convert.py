@@ -31,16 +31,18 @@ def crystal_from_ase(atoms: Atoms) -> Crystal:
                 "means. Set an array 'occupancies' on the atoms, or read the CIF with read_crystal."
             )
     symbols = tuple(atoms.get_chemical_symbols())
-    pbc = tuple(bool(p) for p in atoms.pbc)
+    pbc = (bool(atoms.pbc[0]), bool(atoms.pbc[1]), bool(atoms.pbc[2]))
     cell = np.array(atoms.cell.array)
     if not all(pbc):
         # A molecule or a slab may lack cell vectors; unit vectors complete the frame without being periodic.
         cell = np.array(atoms.cell.complete())
     positions = np.linalg.solve(cell.T, atoms.positions.T).T if len(atoms) else np.zeros((0, 3))
     occupancies = atoms.arrays.get("occupancies")
-    plain = Crystal(cell, positions, symbols, occupancies=occupancies, pbc=pbc, name=atoms.get_chemical_formula())  # type: ignore[arg-type]
+    plain = Crystal(cell, positions, symbols, occupancies=occupancies, pbc=pbc, name=atoms.get_chemical_formula())
     operations, classes = find_operations(plain)
-    labels = tuple(str(x) for x in atoms.arrays["labels"]) if "labels" in atoms.arrays else distinct_labels(symbols, classes)
+    labels = (
+        tuple(str(x) for x in atoms.arrays["labels"]) if "labels" in atoms.arrays else distinct_labels(symbols, classes)
+    )
     return Crystal(cell, positions, symbols, labels, plain.occupancies, plain.pbc, operations, plain.name)
 
 

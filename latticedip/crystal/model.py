@@ -72,14 +72,11 @@ class Crystal:
     positions: FloatArray
     symbols: tuple[str, ...]
     labels: tuple[str, ...] = ()
-    occupancies: FloatArray | None = None  # type: ignore[assignment]
+    occupancies: FloatArray = None  # type: ignore[assignment]
     pbc: tuple[bool, bool, bool] = (True, True, True)
     operations: Operations | None = field(default=None, repr=False)
     name: str = ""
     notes: tuple[str, ...] = field(default=(), repr=False)
-
-    if TYPE_CHECKING:
-        occupancies: FloatArray
 
     def __post_init__(self) -> None:
         pbc = tuple(bool(p) for p in self.pbc)
@@ -98,7 +95,11 @@ class Crystal:
         if np.any(occupancies <= 0) or np.any(occupancies > 1 + 1e-9):
             bad = int(np.argmax((occupancies <= 0) | (occupancies > 1 + 1e-9)))
             raise InputError(f"occupancy of {labels[bad]} must lie in (0, 1], got {occupancies[bad]}.")
-        for key, value in (("cell", cell), ("positions", positions), ("occupancies", np.minimum(occupancies, 1.0))):
+        for key, value in (
+            ("cell", cell),
+            ("positions", positions),
+            ("occupancies", np.minimum(occupancies, 1.0)),
+        ):
             object.__setattr__(self, key, frozen(value))
         object.__setattr__(self, "symbols", symbols)
         object.__setattr__(self, "labels", labels)
@@ -155,8 +156,7 @@ class Crystal:
         if not chosen:
             known = list(dict.fromkeys([*self.labels, *self.symbols]))
             raise InputError(
-                f"no site has the label or element {name!r}. Known are: {', '.join(known)}."
-                + near_match(name, known)
+                f"no site has the label or element {name!r}. Known are: {', '.join(known)}." + near_match(name, known)
             )
         return tuple(chosen[i] for i in site_order(self.positions[chosen]))
 

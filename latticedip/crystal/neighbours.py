@@ -37,7 +37,7 @@ def close_pairs(crystal: Crystal, radius: float) -> list[tuple[int, int, float]]
     tree = cKDTree(images)
     found = []
     for i, hits in enumerate(tree.query_ball_point(home @ crystal.cell, radius)):
-        for hit in sorted(hits):
+        for hit in sorted(int(h) for h in hits):
             j = hit % crystal.n_sites
             shift = shifts[hit // crystal.n_sites]
             if j < i or (j == i and not np.any(shift)):

@@ -31,7 +31,10 @@ def find_operations(crystal: Crystal, tolerance: float = SYMMETRY_TOLERANCE_A) -
     if not all(crystal.pbc) or crystal.n_sites == 0:
         return None, alone
     kinds: dict[tuple[str, float], int] = {}
-    numbers = [kinds.setdefault((s, round(float(p), 6)), len(kinds) + 1) for s, p in zip(crystal.symbols, crystal.occupancies, strict=True)]
+    numbers = [
+        kinds.setdefault((s, round(float(p), 6)), len(kinds) + 1)
+        for s, p in zip(crystal.symbols, crystal.occupancies, strict=True)
+    ]
     cell = (crystal.cell, crystal.positions, numbers)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", DeprecationWarning)

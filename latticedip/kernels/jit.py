@@ -11,6 +11,7 @@ import tempfile
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from functools import cache
+from itertools import pairwise
 from typing import Any
 
 import numba
@@ -87,6 +88,6 @@ def over_rows(function: Callable[..., Any], n_rows: int, *arguments: Any, at_lea
     blocks = min(n_rows, 4 * threads)
     edges = [n_rows * i // blocks for i in range(blocks + 1)]
     pool = _pool(threads, os.getpid())
-    calls = [pool.submit(function, a, b, *arguments) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+    calls = [pool.submit(function, a, b, *arguments) for a, b in pairwise(edges)]
     for call in calls:
         call.result()

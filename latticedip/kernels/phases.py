@@ -11,7 +11,7 @@ SPLITTER = 134217729.0
 
 
 @kernel(inline=True)
-def two_sum(a, b):  # type: ignore[no-untyped-def]
+def two_sum(a, b):
     """Return the rounded sum and its exact rounding error (Knuth)."""
     total = a + b
     part = total - a
@@ -19,7 +19,7 @@ def two_sum(a, b):  # type: ignore[no-untyped-def]
 
 
 @kernel(inline=True)
-def two_product(a, b):  # type: ignore[no-untyped-def]
+def two_product(a, b):
     """Return the rounded product and its exact rounding error (Dekker)."""
     product = a * b
     t = SPLITTER * a
@@ -32,7 +32,7 @@ def two_product(a, b):  # type: ignore[no-untyped-def]
 
 
 @kernel()
-def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, k, out, out_cells, out_turns):  # type: ignore[no-untyped-def]
+def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, k, out, out_cells, out_turns):
     """Take whole lattice vectors from rows first..last of ``offsets``, in compensated arithmetic.
 
     cell, inverse (3, 3): the cell as given. steps (3, 3): whole numbers, the reduced cell is steps @ cell, and
@@ -45,7 +45,11 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
     extra = np.empty(3)
     for row in range(first, last):
         for axis in range(3):
-            f = offsets[row, 0] * inverse[0, axis] + offsets[row, 1] * inverse[1, axis] + offsets[row, 2] * inverse[2, axis]
+            f = (
+                offsets[row, 0] * inverse[0, axis]
+                + offsets[row, 1] * inverse[1, axis]
+                + offsets[row, 2] * inverse[2, axis]
+            )
             total[axis] = np.rint(f)
         # Twice: the first pass lands in the given cell, the second in the reduced one.
         for _ in range(2):
@@ -58,7 +62,11 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
                     low += carry + error
                 rough[c] = high + low
             for axis in range(3):
-                f = rough[0] * reduced_inverse[0, axis] + rough[1] * reduced_inverse[1, axis] + rough[2] * reduced_inverse[2, axis]
+                f = (
+                    rough[0] * reduced_inverse[0, axis]
+                    + rough[1] * reduced_inverse[1, axis]
+                    + rough[2] * reduced_inverse[2, axis]
+                )
                 extra[axis] = np.rint(f)
             for axis in range(3):
                 for step in range(3):
@@ -79,7 +87,7 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
 
 
 @kernel(fastmath=ORDERED)
-def phase_table(first, last, points, waves, indices, k, limits, out):  # type: ignore[no-untyped-def]
+def phase_table(first, last, points, waves, indices, k, limits, out):
     """Fill rows first..last of ``out`` (n, 2 n_q) with cos(q·x) and then sin(q·x).
 
     points (n, 3): Cartesian Å. waves (3, 3): rows are the reciprocal vectors including 2π. indices (n_q, 3): whole

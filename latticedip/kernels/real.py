@@ -15,7 +15,7 @@ CHUNK = 1024
 
 
 @kernel(fastmath=ORDERED, inline=True)
-def nearest_image(dx, dy, dz, cell, inverse, shift):  # type: ignore[no-untyped-def]
+def nearest_image(dx, dy, dz, cell, inverse, shift):
     """Bring a separation to within half a cell vector along each axis; ``shift`` receives the cells taken away."""
     for axis in range(3):
         f = dx * inverse[0, axis] + dy * inverse[1, axis] + dz * inverse[2, axis]
@@ -27,7 +27,7 @@ def nearest_image(dx, dy, dz, cell, inverse, shift):  # type: ignore[no-untyped-
 
 
 @kernel(fastmath=ORDERED, inline=True)
-def gather(dx, dy, dz, begin, n_images, images, cutoff2, square, chosen, x, y, z, count):  # type: ignore[no-untyped-def]
+def gather(dx, dy, dz, begin, n_images, images, cutoff2, square, chosen, x, y, z, count):
     """Append the separations from images begin..n_images that lie inside the cut-off; return the new count."""
     for i in range(n_images):
         px = dx - images[0, i]
@@ -48,7 +48,7 @@ def gather(dx, dy, dz, begin, n_images, images, cutoff2, square, chosen, x, y, z
 
 
 @kernel(fastmath=True, inline=True)
-def weighted_sums(start, stop, weight, chosen, x, y, z, b1, b2):  # type: ignore[no-untyped-def]
+def weighted_sums(start, stop, weight, chosen, x, y, z, b1, b2):
     """Σ w (B₂ r_a r_b − B₁ δ_ab) over gathered images: xx, yy, xy, xz, yz."""
     xx = 0.0
     yy = 0.0
@@ -69,7 +69,24 @@ def weighted_sums(start, stop, weight, chosen, x, y, z, b1, b2):  # type: ignore
 
 
 @kernel(fastmath=ORDERED)
-def real_tensors(first, last, targets, sources, cell, inverse, images, lengths, phase, k, alpha, cutoff, on_site, self_term, out_re, out_im):  # type: ignore[no-untyped-def]
+def real_tensors(
+    first,
+    last,
+    targets,
+    sources,
+    cell,
+    inverse,
+    images,
+    lengths,
+    phase,
+    k,
+    alpha,
+    cutoff,
+    on_site,
+    self_term,
+    out_re,
+    out_im,
+):
     """Add the real part and the self term of T/C to rows first..last of ``out``.
 
     targets (n_t, 3), sources (n_s, 3): Cartesian Å, reduced into the cell. cell, inverse (3, 3).
@@ -111,7 +128,21 @@ def real_tensors(first, last, targets, sources, cell, inverse, images, lengths, 
                 # Image 0 is the nearest: it is the site itself where the target lies on it.
                 skipped[s] = d2 < on_site * on_site
                 n_images = np.searchsorted(lengths, cutoff + np.sqrt(d2), "right")
-                count = gather(dx, dy, dz, 1 if skipped[s] else 0, n_images, images, cutoff2, square, chosen, x, y, z, count)
+                count = gather(
+                    dx,
+                    dy,
+                    dz,
+                    1 if skipped[s] else 0,
+                    n_images,
+                    images,
+                    cutoff2,
+                    square,
+                    chosen,
+                    x,
+                    y,
+                    z,
+                    count,
+                )
                 s += 1
             starts[s] = count
             for j in range(count):
@@ -134,7 +165,9 @@ def real_tensors(first, last, targets, sources, cell, inverse, images, lengths, 
 
 
 @kernel(fastmath=ORDERED)
-def real_gradients(first, last, targets, sources, moments, cell, inverse, images, phase, k, alpha, cutoff, on_site, out):  # type: ignore[no-untyped-def]
+def real_gradients(
+    first, last, targets, sources, moments, cell, inverse, images, phase, k, alpha, cutoff, on_site, out
+):
     """Add the real part of ∂B_a/∂x_c (divided by C) to rows first..last of ``out`` (n_t, 3, 3) complex.
 
     moments (n_s, 3) complex: sources' components. Other arguments as in `real_tensors`. The self term has no

@@ -101,11 +101,6 @@ class Ordering:
     reference: Reference | None = field(default=None, repr=False)
     notes: tuple[str, ...] = field(default=(), repr=False)
 
-    if TYPE_CHECKING:
-        components: ComplexArray
-        k: FloatArray
-        moment_su: FloatArray
-
     def __post_init__(self) -> None:
         if not isinstance(self.crystal, Crystal):
             raise InputError(f"an Ordering needs a Crystal, got {type(self.crystal).__name__}.")

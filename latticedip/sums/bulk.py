@@ -89,7 +89,11 @@ class LatticeSum:
         inverse = stable_inverse(self.given_cell)
         if len(positions) and np.abs(positions @ inverse).max() > MAX_CELLS:
             raise InputError(f"an offset lies more than {MAX_CELLS} cells away; reduce it by lattice vectors.")
-        reduced, cells, turns = np.empty((len(positions), 3)), np.empty((len(positions), 3)), np.empty(len(positions))
+        reduced, cells, turns = (
+            np.empty((len(positions), 3)),
+            np.empty((len(positions), 3)),
+            np.empty(len(positions)),
+        )
         over_rows(
             reduce_offsets, len(positions), positions, self.given_cell, inverse, self.lattice.steps,
             self.lattice.inverse, self.given_k, reduced, cells, turns, at_least=4096,
@@ -112,7 +116,11 @@ class LatticeSum:
         turns = targets.turns[:, None] - sources.turns[None, :]
         if self.is_real:
             # Turns are multiples of one half here, so that the phase is a sign.
-            return unpack(flat[0], trace) * np.cos(2 * np.pi * turns)[:, :, None, None] if np.any(turns) else unpack(flat[0], trace)
+            return (
+                unpack(flat[0], trace) * np.cos(2 * np.pi * turns)[:, :, None, None]
+                if np.any(turns)
+                else unpack(flat[0], trace)
+            )
         both = unpack(flat[0], trace) + 1j * unpack(flat[1], 0.0)
         both *= np.exp(-2j * np.pi * turns)[:, :, None, None]
         return both
@@ -123,21 +131,18 @@ class LatticeSum:
         The field of the source on a target is left out. Meant for few targets: every wave costs one product.
         """
         moments = np.ascontiguousarray(components * np.exp(2j * np.pi * sources.turns)[:, None])
-        out = np.zeros((len(targets), 3, 3), dtype=complex)
-        table = wave_table(self, sources.reduced)
         n_q = len(self.indices)
-        structure = (table[:, :n_q] - 1j * table[:, n_q:]).T @ moments
+        table, own = wave_table(self, sources.reduced), wave_table(self, targets.reduced)
+        source_waves, target_waves = table[:, :n_q] + 1j * table[:, n_q:], own[:, :n_q] + 1j * own[:, n_q:]
         square = np.einsum("qa,qa->q", self.q, self.q)
-        gauss = np.exp(-square / (4 * self.alpha**2)) * (-4 * np.pi / self.lattice.volume)
-        scalar = 1j * gauss / square * np.einsum("qa,qa->q", self.q, structure)
-        own = wave_table(self, targets.reduced)
-        waves = own[:, :n_q] + 1j * own[:, n_q:]
+        weight = -4j * np.pi / self.lattice.volume * np.exp(-square / (4 * self.alpha**2)) / square
+        pairs = (self.q[:, :, None] * self.q[:, None, :]).reshape(n_q, 9)
+        scalar = weight * np.einsum("qa,qa->q", self.q, source_waves.conj().T @ moments)
+        out = ((target_waves * scalar) @ pairs).reshape(-1, 3, 3)
         if self.is_real:
-            # Only one of ±q is kept: the other contributes the term with both conjugated phases.
-            reverse = (table[:, :n_q] + 1j * table[:, n_q:]).T @ moments
-            other = -1j * gauss / square * np.einsum("qa,qa->q", self.q, reverse)
-            out += np.einsum("tq,q,qa,qc->tac", waves.conj(), other, self.q, self.q, optimize=True)
-        out += np.einsum("tq,q,qa,qc->tac", waves, scalar, self.q, self.q, optimize=True)
+            # Only one of each pair ±q is kept: −q brings q·F with both phases conjugated and the sign of q turned.
+            reverse = -weight * np.einsum("qa,qa->q", self.q, source_waves.T @ moments)
+            out += ((target_waves.conj() * reverse) @ pairs).reshape(-1, 3, 3)
         over_rows(
             real_gradients, len(targets), targets.reduced, sources.reduced, moments, self.lattice.cell,
             self.lattice.inverse, self.images, self.phase, self.k, self.alpha, self.cutoff, ON_SITE_A, out, at_least=4,
@@ -237,7 +242,10 @@ def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | N
         alpha, r_c, q_c = choose_splitting(distances, lattice.volume, wanted)
     else:
         one = np.array([alpha])
-        r_c, q_c = float(real_cutoffs(one, distances, wanted)[0]), float(reciprocal_cutoffs(one, distances, wanted)[0])
+        r_c, q_c = (
+            float(real_cutoffs(one, distances, wanted)[0]),
+            float(reciprocal_cutoffs(one, distances, wanted)[0]),
+        )
     images, cells = image_vectors(lattice, r_c)
     turns = (cells @ k) % 1.0
     indices, q = wave_vectors(lattice, k, q_c, is_real)
@@ -263,7 +271,8 @@ def image_vectors(lattice: ReducedLattice, cutoff: float) -> tuple[FloatArray, F
     cells = _grid(reach)
     vectors = cells @ lattice.cell
     farthest = 0.5 * max(
-        float(np.linalg.norm(np.array(signs) @ lattice.cell)) for signs in ((1, 1, 1), (1, 1, -1), (1, -1, 1), (-1, 1, 1))
+        float(np.linalg.norm(np.array(signs) @ lattice.cell))
+        for signs in ((1, 1, 1), (1, 1, -1), (1, -1, 1), (-1, 1, 1))
     )
     length = np.linalg.norm(vectors, axis=1)
     keep = length <= (cutoff + farthest) * (1 + 1e-12)

@@ -1,0 +1,297 @@
+"""Turning a whole pattern rigidly: the direction in which its dipolar energy is lowest and highest.
+
+Exchange usually fixes the pattern, the dipolar interaction its direction. For a collinear pattern m_j = a_j û the
+energy is a quadratic form of û, with a net moment in an applied field a linear term beside it:
+
+    E(û) = û·Q·û − g·û,   Q_ab = −Σ_k w_k Re Σ_ij a*_i T_ij,ab a_j + (µ0/2V) |M|² N_ab,   g = |M| B_applied
+
+so its stationary points on the sphere solve (Q − λ) û = g/2. For other patterns E is a quadratic form of the nine
+elements of the rotation matrix, searched over all rotations from several starts.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numpy as np
+from scipy.optimize import brentq, minimize
+from scipy.spatial.transform import Rotation
+
+from latticedip.checks import FloatArray
+from latticedip.ordering.model import Ordering
+from latticedip.physics.energy import dipolar_energy, weighted_couplings
+from latticedip.sample import Sample
+from latticedip.units import EV_PER_MUB_T, MU0_T_A3_PER_MUB
+
+#: Singular values of the moments below this part of the largest count as zero: collinear, coplanar.
+SHAPE_TOLERANCE = 1e-9
+#: Energies closer than this part of their scale count as equal when directions are degenerate.
+DEGENERATE = 1e-9
+
+
+@dataclass(frozen=True, eq=False)
+class Orientation:
+    """Best and worst orientation of one pattern under a rigid turn of all its moments.
+
+    easy_rotation, hard_rotation: Shape (3, 3) float. They turn the given pattern to lowest and highest energy.
+    easy_axis_cart, hard_axis_cart: Shape (3,) unit vectors: the direction of the moments of a collinear pattern, the
+        normal of the plane of a coplanar one, None for other patterns (then the rotations alone say it).
+    axis_meaning: "moment", "plane normal" or "none".
+    easy_eV, hard_eV: energy per cell there, all parts that depend on direction.
+    stationary: for a collinear pattern all stationary directions with their energies (eV per cell), lowest first.
+    notes: degeneracies.
+    """
+
+    easy_rotation: FloatArray
+    hard_rotation: FloatArray
+    easy_axis_cart: FloatArray | None
+    hard_axis_cart: FloatArray | None
+    axis_meaning: str
+    easy_eV: float
+    hard_eV: float
+    stationary: tuple[tuple[FloatArray, float], ...] = ()
+    notes: tuple[str, ...] = ()
+
+
+def best_orientation(ordering: Ordering, *, sample: Sample | None = None, tol: float = 1e-10) -> Orientation:
+    """Turn a pattern rigidly to its lowest and highest energy (dipolar, shape and applied field).
+
+    Raises InputError where the ordering carries no moments (through the couplings).
+    """
+    specimen = Sample() if sample is None else sample
+    stacked = np.concatenate([ordering.components.real, ordering.components.imag]).reshape(-1, 3)
+    _, values, axes = np.linalg.svd(stacked, full_matrices=True)
+    rank = int(np.sum(values > SHAPE_TOLERANCE * values[0]))
+    if rank == 1:
+        return _collinear(ordering, specimen, tol, _canonical(ordering, axes[0]))
+    return _general(ordering, specimen, tol, axes[2] if rank == 2 else None)
+
+
+def _canonical(ordering: Ordering, axis: FloatArray) -> FloatArray:
+    """The sign of the axis that the first moment (or the net moment) points along."""
+    along = ordering.net_moment @ axis
+    if abs(along) < 1e-9:
+        flat = (ordering.components.real @ axis).ravel()
+        flat = flat if np.abs(flat).max() > 1e-9 else (ordering.components.imag @ axis).ravel()
+        along = flat[np.argmax(np.abs(flat) > 1e-9 * np.abs(flat).max())]
+    return axis if along >= 0 else -axis
+
+
+def quadratic_form(ordering: Ordering, sample: Sample, tol: float, axis: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Q (3, 3) and g (3,) in eV per cell of a collinear pattern along ``axis``: E(û) = û·Q·û − g·û."""
+    form = np.zeros((3, 3))
+    for weight, mean, tensors in weighted_couplings(ordering, tol):
+        amplitude = mean @ axis
+        form -= weight * np.einsum("i,ijab,j->ab", amplitude.conj(), tensors, amplitude, optimize=True).real
+    moment = float(ordering.net_moment @ axis)
+    form += 0.5 * MU0_T_A3_PER_MUB / ordering.crystal.volume_A3 * moment**2 * sample.demagnetizing_tensor
+    return 0.5 * (form + form.T) * EV_PER_MUB_T, moment * sample.applied_T * EV_PER_MUB_T
+
+
+def stationary_directions(form: FloatArray, linear: FloatArray) -> list[tuple[FloatArray, float]]:
+    """All stationary unit vectors of û·Q·û − g·û with their energies, lowest first.
+
+    (Q − λ)û = g/2 with |û| = 1 gives Σ_i (g_i/2)²/(q_i − λ)² = 1 in the eigenframe of Q. Where g has no part along an
+    eigenvector, λ may equal its eigenvalue (the hard case of trust-region methods: Moré and Sorensen 1983).
+    """
+    values, vectors = np.linalg.eigh(form)
+    half = 0.5 * (vectors.T @ linear)
+    scale = max(float(np.abs(values).max()), float(np.abs(half).max()), 1e-300)
+    if np.abs(half).max() <= 1e-14 * scale:
+        # No linear term: eigenvectors, each with its opposite.
+        return [(vectors[:, i], float(values[i])) for i in range(3)]
+    found: list[float] = []
+    active = np.abs(half) > 1e-13 * scale
+
+    def excess(lam: float) -> float:
+        gaps = values[active] - lam
+        return float(np.sum((half[active] / gaps) ** 2)) - 1.0 if np.all(gaps != 0) else np.inf
+
+    reach = float(np.linalg.norm(half)) + 1e-6 * scale
+    poles = np.unique(values[active])
+    edges = np.concatenate([[poles[0] - 2 * reach], poles, [poles[-1] + 2 * reach]])
+    for low, high in pairwise(edges):
+        found += _roots_between(excess, float(low), float(high), low in poles, high in poles)
+    candidates = [np.where(active, half / np.where(active, values - lam, 1.0), 0.0) for lam in found]
+    for i in np.flatnonzero(~active):
+        # λ = q_i: the part along the eigenvectors of this eigenvalue is free and takes up the missing length.
+        same = np.abs(values - values[i]) <= DEGENERATE * scale
+        if np.any(active & same):
+            continue
+        rest = np.where(active, half / np.where(active, values - values[i], 1.0), 0.0)
+        missing = 1.0 - float(rest @ rest)
+        if missing >= 0:
+            for sign in (1.0, -1.0):
+                full = rest.copy()
+                full[i] = sign * np.sqrt(missing)
+                candidates.append(full)
+    directions = [vectors @ (c / np.linalg.norm(c)) for c in candidates]
+    energies = [float(u @ form @ u - linear @ u) for u in directions]
+    order = np.argsort(energies, kind="stable")
+    return [(directions[i], energies[i]) for i in order]
+
+
+def _roots_between(
+    f: Callable[[float], float], low: float, high: float, pole_low: bool, pole_high: bool
+) -> list[float]:
+    """Roots of Σ h²/(q − λ)² − 1 between two poles (it falls, then rises: none, one or two) or beside one."""
+    span = high - low
+    if span <= 0:
+        return []
+    a = float(np.nextafter(low, high)) if pole_low else low
+    b = float(np.nextafter(high, low)) if pole_high else high
+    if pole_low != pole_high:
+        return [brentq(f, a, b, xtol=1e-300, rtol=1e-15)] if f(a) * f(b) < 0 else []
+    # Between poles the function is convex: find its minimum by bisecting the slope, then one root on each side.
+    left, right = a, b
+    for _ in range(200):
+        third = (right - left) / 3
+        if third <= 1e-16 * span:
+            break
+        if f(left + third) < f(right - third):
+            right -= third
+        else:
+            left += third
+    bottom = 0.5 * (left + right)
+    if f(bottom) >= 0:
+        return []
+    return [brentq(f, x, y, xtol=1e-300, rtol=1e-15) for x, y in ((a, bottom), (bottom, b)) if f(x) * f(y) < 0]
+
+
+def _collinear(ordering: Ordering, sample: Sample, tol: float, axis: FloatArray) -> Orientation:
+    form, linear = quadratic_form(ordering, sample, tol, axis)
+    points = stationary_directions(form, linear)
+    free = np.abs(linear).max() <= 1e-14 * max(float(np.abs(form).max()), 1e-300)
+    notes = []
+    easy, hard = points[0][0], points[-1][0]
+    if free:
+        values = np.array([energy for _, energy in points])
+        # What the sums cannot resolve, and what rounding leaves of a symmetry, is no anisotropy.
+        same = DEGENERATE * float(np.abs(form).max()) + 2 * dipolar_energy(ordering, tol=tol).error_bound_eV
+        easy, easy_note = _nearest_in(axis, points, values, values[0], same, "easy")
+        hard, hard_note = _nearest_in(axis, points, values, values[-1], same, "hard")
+        notes = [note for note in (easy_note, hard_note) if note]
+    return Orientation(
+        turn(axis, easy),
+        turn(axis, hard),
+        easy,
+        hard,
+        "moment",
+        points[0][1],
+        points[-1][1],
+        tuple(points),
+        tuple(dict.fromkeys(notes)),
+    )
+
+
+def _nearest_in(
+    axis: FloatArray,
+    points: list[tuple[FloatArray, float]],
+    values: FloatArray,
+    wanted: float,
+    same: float,
+    word: str,
+) -> tuple[FloatArray, str]:
+    """The unit vector of one (perhaps degenerate) level that needs the least turn from ``axis``."""
+    level = [direction for (direction, _), value in zip(points, values, strict=True) if abs(value - wanted) <= same]
+    if len(level) == 3:
+        return axis, "the energy does not depend on the direction of the moments"
+    basis = np.array(level)
+    inside = basis.T @ (basis @ axis)
+    length = float(np.linalg.norm(inside))
+    direction = inside / length if length > 1e-9 else basis[0]
+    note = (
+        f"the {word} direction is free in a plane; the one nearest to the given direction is taken"
+        if len(level) == 2
+        else ""
+    )
+    return direction, note
+
+
+def turn(start: FloatArray, end: FloatArray) -> FloatArray:
+    """Shape (3, 3). The smallest rotation that takes unit vector ``start`` to ``end``."""
+    cross, cosine = np.cross(start, end), float(start @ end)
+    if cosine < -1 + 1e-14:
+        # Half a turn about any axis across; the smallest component of start picks one that is never degenerate.
+        across = np.cross(start, np.eye(3)[int(np.argmin(np.abs(start)))])
+        across /= np.linalg.norm(across)
+        return np.asarray(2 * np.outer(across, across) - np.eye(3))
+    skew = np.array([[0, -cross[2], cross[1]], [cross[2], 0, -cross[0]], [-cross[1], cross[0], 0]])
+    return np.asarray(np.eye(3) + skew + skew @ skew / (1 + cosine))
+
+
+def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray | None) -> Orientation:
+    kernel = np.zeros((9, 9))
+    for weight, mean, tensors in weighted_couplings(ordering, tol):
+        # E = Σ R_ac R_bd K[ac, bd] with K = −w Re Σ_ij S*_ic T_ij,ab S_jd.
+        part = np.einsum("ic,ijab,jd->acbd", mean.conj(), tensors, mean, optimize=True).real
+        kernel -= weight * part.reshape(9, 9)
+    net = ordering.net_moment
+    stray = 0.5 * MU0_T_A3_PER_MUB / ordering.crystal.volume_A3 * sample.demagnetizing_tensor
+    kernel += np.einsum("ab,c,d->acbd", stray, net, net).reshape(9, 9)
+    kernel = 0.5 * (kernel + kernel.T) * EV_PER_MUB_T
+    linear = np.outer(sample.applied_T, net).ravel() * EV_PER_MUB_T
+    scale = max(float(np.abs(kernel).max()), float(np.abs(linear).max()), 1e-300)
+
+    def search(sign: float) -> tuple[FloatArray, float]:
+        best: tuple[float, FloatArray] | None = None
+        for start in _starts():
+            energy, rotation = _descend(sign * kernel / scale, sign * linear / scale, start)
+            # Only a real gain replaces an earlier start, so that the least turn wins a tie.
+            if best is None or energy < best[0] - 1e-9:
+                best = energy, rotation
+        assert best is not None
+        return best[1], sign * best[0] * scale
+
+    easy, easy_energy = search(1.0)
+    hard, hard_energy = search(-1.0)
+    if normal is None:
+        return Orientation(easy, hard, None, None, "none", easy_energy, hard_energy)
+    return Orientation(easy, hard, easy @ normal, hard @ normal, "plane normal", easy_energy, hard_energy)
+
+
+def _starts() -> list[FloatArray]:
+    """The 24 rotations of a cube, identity first, and 24 between them: denser than any basin met in tests."""
+    cube = Rotation.create_group("O").as_matrix()
+    order = np.argsort([-np.trace(r) for r in cube], kind="stable")
+    between = Rotation.from_rotvec([0.31, 0.47, 0.59]).as_matrix()
+    return [cube[i] for i in order] + [between @ cube[i] for i in order]
+
+
+def _descend(kernel: FloatArray, linear: FloatArray, start: FloatArray) -> tuple[float, FloatArray]:
+    """Minimise vec(R)·K·vec(R) − g·vec(R) over rotations near ``start`` with the exact gradient."""
+    rotation = start
+    energy = np.inf
+    for _ in range(5):
+        # A rotation vector is a good chart only near its origin: restart it where the last descent ended.
+        base = rotation
+
+        def value(w: FloatArray, base: FloatArray = base) -> tuple[float, FloatArray]:
+            turned = Rotation.from_rotvec(w).as_matrix() @ base
+            flat = turned.ravel()
+            slope = (2 * kernel @ flat - linear).reshape(3, 3)
+            # dR = [δ]× R for a small extra turn δ, and δ = J(w) dw with the left Jacobian of the rotation vector.
+            torque = slope @ turned.T
+            left = np.array([torque[2, 1] - torque[1, 2], torque[0, 2] - torque[2, 0], torque[1, 0] - torque[0, 1]])
+            return float(flat @ kernel @ flat - linear @ flat), left_jacobian(w).T @ left
+
+        result = minimize(value, np.zeros(3), jac=True, method="BFGS", options={"gtol": 1e-12, "maxiter": 200})
+        rotation = Rotation.from_rotvec(result.x).as_matrix() @ base
+        done = energy - result.fun < 1e-14
+        energy = float(result.fun)
+        if done:
+            break
+    left, _, right = np.linalg.svd(rotation)
+    return energy, left @ right
+
+
+def left_jacobian(w: FloatArray) -> FloatArray:
+    """Shape (3, 3). Left Jacobian of the rotation vector: exp([w + dw]×) ≈ exp([J dw]×) exp([w]×)."""
+    angle = float(np.linalg.norm(w))
+    skew = np.array([[0, -w[2], w[1]], [w[2], 0, -w[0]], [-w[1], w[0], 0]])
+    if angle < 1e-6:
+        return np.asarray(np.eye(3) + skew / 2 + skew @ skew / 6)
+    a, b = (1 - np.cos(angle)) / angle**2, (angle - np.sin(angle)) / angle**3
+    return np.asarray(np.eye(3) + a * skew + b * skew @ skew)
