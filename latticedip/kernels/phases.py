@@ -87,20 +87,25 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
 
 
 @kernel(fastmath=ORDERED)
-def phase_table(first, last, points, waves, indices, k, limits, out):
+def phase_table(first, last, points, waves, runs, k, limits, out):
     """Fill rows first..last of ``out`` (n, 2 n_q) with cos(q·x) and then sin(q·x).
 
-    points (n, 3): Cartesian Å. waves (3, 3): rows are the reciprocal vectors including 2π. indices (n_q, 3): whole
-    numbers m; q = (m − k)·waves. limits (3,): largest |m| per axis.
+    points (n, 3): Cartesian Å. waves (3, 3): rows are the reciprocal vectors including 2π; q = (m − k)·waves.
+    runs (n_runs, 5): first q, number of q, m₁, m₂ and the first m₃ of each stretch of consecutive m₃.
+    limits (3,): largest |m| per axis.
     Powers of the three unit phases are built by doubling, so that rounding grows with log m only.
     """
-    n_q = indices.shape[0]
+    n_q = out.shape[1] // 2
     widest = max(limits[0], limits[1], limits[2]) + 1
     powers = np.empty((3, widest), np.complex128)
+    third_re = np.empty(2 * limits[2] + 1)
+    third_im = np.empty(2 * limits[2] + 1)
     for row in range(first, last):
         lead = 0.0
         for axis in range(3):
-            angle = points[row, 0] * waves[axis, 0] + points[row, 1] * waves[axis, 1] + points[row, 2] * waves[axis, 2]
+            angle = (
+                points[row, 0] * waves[axis, 0] + points[row, 1] * waves[axis, 1] + points[row, 2] * waves[axis, 2]
+            )
             lead += k[axis] * angle
             powers[axis, 0] = 1.0
             if limits[axis] > 0:
@@ -108,14 +113,23 @@ def phase_table(first, last, points, waves, indices, k, limits, out):
             for m in range(2, limits[axis] + 1):
                 half = m // 2
                 powers[axis, m] = powers[axis, half] * powers[axis, m - half]
+        for m in range(limits[2] + 1):
+            value = powers[2, m]
+            third_re[limits[2] + m] = value.real
+            third_im[limits[2] + m] = value.imag
+            third_re[limits[2] - m] = value.real
+            third_im[limits[2] - m] = -value.imag
         start = complex(np.cos(lead), -np.sin(lead))
-        for q in range(n_q):
-            a = indices[q, 0]
-            b = indices[q, 1]
-            c = indices[q, 2]
+        for r in range(runs.shape[0]):
+            q = runs[r, 0]
+            a = runs[r, 2]
+            b = runs[r, 3]
+            c = runs[r, 4] + limits[2]
             pa = powers[0, a] if a >= 0 else powers[0, -a].conjugate()
             pb = powers[1, b] if b >= 0 else powers[1, -b].conjugate()
-            pc = powers[2, c] if c >= 0 else powers[2, -c].conjugate()
-            value = start * pa * pb * pc
-            out[row, q] = value.real
-            out[row, n_q + q] = value.imag
+            base = start * pa * pb
+            x = base.real
+            y = base.imag
+            for i in range(runs[r, 1]):
+                out[row, q + i] = x * third_re[c + i] - y * third_im[c + i]
+                out[row, n_q + q + i] = x * third_im[c + i] + y * third_re[c + i]

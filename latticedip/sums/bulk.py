@@ -62,8 +62,9 @@ class Points:
 class LatticeSum:
     """What is common to all sums over one lattice at one k: vectors, weights, splitting. See `lattice_sum`.
 
-    alpha 1/Å; cutoff Å; images (3, n) Å with lengths (n,) and phase (2, n); indices (n_q, 3) whole numbers with
-    q = (m − k)·waves; weights (n_q, 5) in 1/Å³ for xx, yy, xy, xz, yz; q (n_q, 3) in 1/Å.
+    alpha 1/Å; cutoff Å; images (3, n) Å with lengths (n,) and phase (2, n); q (n_q, 3) in 1/Å, q = (m − k)·waves;
+    runs (n_runs, 5) and limits (3,): the whole numbers m as `phase_table` takes them; weights (n_q, 5) in 1/Å³ for
+    xx, yy, xy, xz, yz.
     """
 
     given_cell: FloatArray
@@ -78,7 +79,7 @@ class LatticeSum:
     images: FloatArray
     lengths: FloatArray
     phase: FloatArray
-    indices: np.ndarray
+    runs: np.ndarray
     limits: np.ndarray
     q: FloatArray
     weights: FloatArray
@@ -131,7 +132,7 @@ class LatticeSum:
         The field of the source on a target is left out. Meant for few targets: every wave costs one product.
         """
         moments = np.ascontiguousarray(components * np.exp(2j * np.pi * sources.turns)[:, None])
-        n_q = len(self.indices)
+        n_q = len(self.q)
         table, own = wave_table(self, sources.reduced), wave_table(self, targets.reduced)
         source_waves, target_waves = table[:, :n_q] + 1j * table[:, n_q:], own[:, :n_q] + 1j * own[:, n_q:]
         square = np.einsum("qa,qa->q", self.q, self.q)
@@ -172,8 +173,8 @@ def boundary_trace(plan: LatticeSum) -> float:
 
 def wave_table(plan: LatticeSum, points: FloatArray) -> FloatArray:
     """Shape (n, 2 n_q) float. cos(q·x), then sin(q·x), of reduced positions."""
-    table = np.empty((len(points), 2 * len(plan.indices)))
-    over_rows(phase_table, len(points), points, plan.lattice.waves, plan.indices, plan.k, plan.limits, table)
+    table = np.empty((len(points), 2 * len(plan.q)))
+    over_rows(phase_table, len(points), points, plan.lattice.waves, plan.runs, plan.k, plan.limits, table)
     return table
 
 
@@ -183,7 +184,7 @@ def reciprocal_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, 
     cos q·(x_t − x_s) = cos cos + sin sin (and the like for the sine) makes of it a product of a table of phases of
     the targets with one of weighted phases of the sources: n_t × 2n_q times 2n_q × 5n_s.
     """
-    n_q, n_s = len(plan.indices), len(sources)
+    n_q, n_s = len(plan.q), len(sources)
     table = wave_table(plan, sources).reshape(n_s, 2, n_q)
     cosine, sine = table[:, 0].T, table[:, 1].T
     weighted = np.empty((2, n_q, len(flat), n_s, 5))
@@ -256,7 +257,7 @@ def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | N
         given_cell=given, given_k=given_k, lattice=lattice, k=frozen(k), tol=tol, alpha=alpha, cutoff=r_c,
         is_real=is_real, is_uniform=is_uniform, images=frozen(images.T), lengths=frozen(np.linalg.norm(images, axis=1)),
         phase=frozen(np.stack([np.cos(2 * np.pi * turns), -np.sin(2 * np.pi * turns)])),
-        indices=frozen(indices), limits=frozen(np.abs(indices).max(axis=0, initial=0)), q=frozen(q),
+        runs=frozen(consecutive_runs(indices)), limits=frozen(np.abs(indices).max(axis=0, initial=0)), q=frozen(q),
         weights=frozen(pairs * scale[:, None]),
     )  # fmt: skip
 
@@ -293,6 +294,18 @@ def wave_vectors(lattice: ReducedLattice, k: FloatArray, cutoff: float, half: bo
         f = fractional
         keep &= (f[:, 2] > 0) | ((f[:, 2] == 0) & ((f[:, 1] > 0) | ((f[:, 1] == 0) & (f[:, 0] > 0))))
     return indices[keep].astype(np.int64), q[keep]
+
+
+def consecutive_runs(indices: np.ndarray) -> np.ndarray:
+    """Shape (n_runs, 5) int. Stretches of whole numbers with m₁, m₂ fixed and m₃ going up by one.
+
+    Each row holds the first index, the length, m₁, m₂ and the first m₃.
+    """
+    steps = np.diff(indices, axis=0)
+    breaks = np.flatnonzero(np.any(steps != (0, 0, 1), axis=1)) + 1
+    starts = np.concatenate([[0], breaks]) if len(indices) else np.zeros(0, dtype=np.int64)
+    lengths = np.diff(np.concatenate([starts, [len(indices)]]))
+    return np.ascontiguousarray(np.column_stack([starts, lengths, indices[starts]]).astype(np.int64))
 
 
 def _grid(reach: np.ndarray) -> FloatArray:
