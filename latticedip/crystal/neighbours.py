@@ -36,8 +36,9 @@ def close_pairs(crystal: Crystal, radius: float) -> list[tuple[int, int, float]]
     images = (home[None, :, :] + shifts[:, None, :]).reshape(-1, 3) @ crystal.cell
     tree = cKDTree(images)
     found = []
-    for i, hits in enumerate(tree.query_ball_point(home @ crystal.cell, radius)):
-        for hit in sorted(int(h) for h in hits):
+    hits_of_all: list[list[int]] = list(tree.query_ball_point(home @ crystal.cell, radius))  # type: ignore[arg-type]
+    for i, hits in enumerate(hits_of_all):
+        for hit in sorted(hits):
             j = hit % crystal.n_sites
             shift = shifts[hit // crystal.n_sites]
             if j < i or (j == i and not np.any(shift)):

@@ -103,9 +103,7 @@ def phase_table(first, last, points, waves, runs, k, limits, out):
     for row in range(first, last):
         lead = 0.0
         for axis in range(3):
-            angle = (
-                points[row, 0] * waves[axis, 0] + points[row, 1] * waves[axis, 1] + points[row, 2] * waves[axis, 2]
-            )
+            angle = points[row, 0] * waves[axis, 0] + points[row, 1] * waves[axis, 1] + points[row, 2] * waves[axis, 2]
             lead += k[axis] * angle
             powers[axis, 0] = 1.0
             if limits[axis] > 0:
@@ -130,6 +128,12 @@ def phase_table(first, last, points, waves, runs, k, limits, out):
             base = start * pa * pb
             x = base.real
             y = base.imag
-            for i in range(runs[r, 1]):
-                out[row, q + i] = x * third_re[c + i] - y * third_im[c + i]
-                out[row, n_q + q + i] = x * third_im[c + i] + y * third_re[c + i]
+            # Slices, because an index that might be negative would keep the loop from being vectorised.
+            n = runs[r, 1]
+            re = third_re[c : c + n]
+            im = third_im[c : c + n]
+            cosine = out[row, q : q + n]
+            sine = out[row, n_q + q : n_q + q + n]
+            for i in range(n):
+                cosine[i] = x * re[i] - y * im[i]
+                sine[i] = x * im[i] + y * re[i]

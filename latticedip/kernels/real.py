@@ -39,11 +39,12 @@ def gather(dx, dy, dz, begin, n_images, images, cutoff2, square, chosen, x, y, z
     for i in range(begin, n_images):
         chosen[count] = i
         count += square[i] <= cutoff2
-    for j in range(start, count):
-        i = chosen[j]
-        x[j] = dx - images[0, i]
-        y[j] = dy - images[1, i]
-        z[j] = dz - images[2, i]
+    which, px, py, pz = chosen[start:count], x[start:count], y[start:count], z[start:count]
+    for j in range(count - start):
+        i = np.uint64(which[j])
+        px[j] = dx - images[0, i]
+        py[j] = dy - images[1, i]
+        pz[j] = dz - images[2, i]
     return count
 
 
@@ -55,16 +56,19 @@ def weighted_sums(start, stop, weight, chosen, x, y, z, b1, b2):
     xy = 0.0
     xz = 0.0
     yz = 0.0
-    for j in range(start, stop):
-        w = weight[chosen[j]]
-        w1 = w * b1[j]
-        bx = w * b2[j] * x[j]
-        by = w * b2[j] * y[j]
-        xx += bx * x[j] - w1
-        yy += by * y[j] - w1
-        xy += bx * y[j]
-        xz += bx * z[j]
-        yz += by * z[j]
+    # Slices, because an index that might be negative would keep the loop from being vectorised.
+    px, py, pz = x[start:stop], y[start:stop], z[start:stop]
+    first, second, which = b1[start:stop], b2[start:stop], chosen[start:stop]
+    for j in range(stop - start):
+        w = weight[np.uint64(which[j])]
+        w1 = w * first[j]
+        bx = w * second[j] * px[j]
+        by = w * second[j] * py[j]
+        xx += bx * px[j] - w1
+        yy += by * py[j] - w1
+        xy += bx * py[j]
+        xz += bx * pz[j]
+        yz += by * pz[j]
     return xx, yy, xy, xz, yz
 
 

@@ -32,7 +32,7 @@ ZERO_FIELD_T = 1e-12
 class LocalField:
     """Fields at points of one ordering; all arrays have one row per point, Cartesian, in tesla.
 
-    points: Shape (n, 3) float, fractional in the ordering's own cell. reference_points: in the cell probes are given in.
+    points: Shape (n, 3) float, fractional in the ordering's own cell. reference_points: in the cell probes come in.
     dipolar: Lorentz-sphere sum. lorentz: µ0 M/3. demagnetizing: −µ0 N·M. contact, applied: as stated. total: their sum.
     sites: Shape (n,) int. The site a point sits on (left out of its own field), −1 elsewhere.
     probe_names, particles: per row; empty particle for bare points. multiplicity: rows that share the row's probe.

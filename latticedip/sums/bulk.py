@@ -26,6 +26,7 @@ from latticedip.errors import InputError, LimitError
 from latticedip.kernels.jit import over_rows
 from latticedip.kernels.phases import phase_table, reduce_offsets
 from latticedip.kernels.real import real_gradients, real_tensors
+from latticedip.kernels.reciprocal import reciprocal_tensors
 from latticedip.sums.accuracy import choose_splitting, real_cutoffs, reciprocal_cutoffs
 from latticedip.sums.lattice import ReducedLattice, reduce_cell, reduce_k, stable_inverse
 from latticedip.units import DIPOLE_T_A3_PER_MUB
@@ -39,8 +40,6 @@ TAIL_SHARE = 0.2
 MAX_VECTORS = 20_000_000
 #: Whole numbers above this cannot be taken from an offset exactly.
 MAX_CELLS = 2**26
-#: Size in bytes of the phase tables held at one time.
-TABLE_BYTES = 64 * 2**20
 
 
 @dataclass(frozen=True, eq=False)
@@ -184,21 +183,20 @@ def reciprocal_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, 
     cos q·(x_t − x_s) = cos cos + sin sin (and the like for the sine) makes of it a product of a table of phases of
     the targets with one of weighted phases of the sources: n_t × 2n_q times 2n_q × 5n_s.
     """
-    n_q, n_s = len(plan.q), len(sources)
-    table = wave_table(plan, sources).reshape(n_s, 2, n_q)
-    cosine, sine = table[:, 0].T, table[:, 1].T
-    weighted = np.empty((2, n_q, len(flat), n_s, 5))
-    weighted[0, :, 0] = cosine[:, :, None] * plan.weights[:, None, :]
-    weighted[1, :, 0] = sine[:, :, None] * plan.weights[:, None, :]
-    if len(flat) == 2:
-        weighted[0, :, 1] = -weighted[1, :, 0]
-        weighted[1, :, 1] = weighted[0, :, 0]
-    right = weighted.reshape(2 * n_q, len(flat) * n_s * 5)
-    block = max(64, TABLE_BYTES // (16 * max(1, n_q)))
-    for start in range(0, len(targets), block):
-        left = wave_table(plan, targets[start : start + block])
-        product = (left @ right).reshape(len(left), len(flat), n_s, 5)
-        flat[:, start : start + block] = np.moveaxis(product, 1, 0)
+    n_q, n_s, parts = len(plan.q), len(sources), len(flat)
+    table = wave_table(plan, sources).reshape(n_s, 1, 2, n_q)
+    weights = plan.weights.T[None, :, None, :]
+    columns = parts * n_s * 5
+    right = np.zeros(((columns + 3) // 4 * 4, 2 * n_q))
+    shaped = right[:columns].reshape(parts, n_s, 5, 2, n_q)
+    np.multiply(table, weights, out=shaped[0])
+    if parts == 2:
+        shaped[1, :, :, 0] = -shaped[0, :, :, 1]
+        shaped[1, :, :, 1] = shaped[0, :, :, 0]
+    over_rows(
+        reciprocal_tensors, len(targets), targets, plan.lattice.waves, plan.runs, plan.k, plan.limits, right, flat,
+        at_least=max(4, 50_000 // right.size * 4),
+    )  # fmt: skip
 
 
 def unpack(flat: FloatArray, trace: float) -> FloatArray:
