@@ -138,7 +138,7 @@ def rank(
 
     orderings: in one Cartesian frame, each on its own crystal. sample: one for all; None means N = 0.
     rotate: also turn each pattern rigidly as a whole to its best orientation, and rank those.
-    probes: fields are worked out at each, under every ordering as ranked.
+    probes: fields are worked out at each, under every ordering as ranked. tol: as `dipole_tensor`.
 
     Raises InputError for an empty list, an ordering without moments, or two probes of one name.
     """

@@ -21,7 +21,7 @@ from scipy.spatial.transform import Rotation
 
 from latticedip.checks import FloatArray
 from latticedip.ordering.model import Ordering
-from latticedip.physics.energy import dipolar_energy, weighted_couplings
+from latticedip.physics.energy import dipolar_energy, require_ions, weighted_couplings
 from latticedip.sample import Sample
 from latticedip.units import EV_PER_MUB_T, MU0_T_A3_PER_MUB
 
@@ -58,8 +58,9 @@ class Orientation:
 def best_orientation(ordering: Ordering, *, sample: Sample | None = None, tol: float = 1e-10) -> Orientation:
     """Turn a pattern rigidly to its lowest and highest energy (dipolar, shape and applied field).
 
-    Raises InputError where the ordering carries no moments (through the couplings).
+    Raises InputError where the ordering carries no moments or the crystal is not periodic in three directions.
     """
+    require_ions(ordering)
     specimen = Sample() if sample is None else sample
     stacked = np.concatenate([ordering.components.real, ordering.components.imag]).reshape(-1, 3)
     _, values, axes = np.linalg.svd(stacked, full_matrices=True)
@@ -200,8 +201,10 @@ def _nearest_in(
         return axis, "the energy does not depend on the direction of the moments"
     basis = np.array(level)
     inside = basis.T @ (basis @ axis)
-    length = float(np.linalg.norm(inside))
-    direction = inside / length if length > 1e-9 else basis[0]
+    if np.linalg.norm(inside) <= 1e-6:
+        # The given direction is across the plane: take the first Cartesian axis that has a part in it.
+        inside = max((basis.T @ basis[:, i] for i in range(3)), key=lambda part: round(float(np.linalg.norm(part)), 6))
+    direction = inside / np.linalg.norm(inside)
     note = (
         f"the {word} direction is free in a plane; the one nearest to the given direction is taken"
         if len(level) == 2
@@ -212,14 +215,18 @@ def _nearest_in(
 
 def turn(start: FloatArray, end: FloatArray) -> FloatArray:
     """Shape (3, 3). The smallest rotation that takes unit vector ``start`` to ``end``."""
-    cross, cosine = np.cross(start, end), float(start @ end)
-    if cosine < -1 + 1e-14:
-        # Half a turn about any axis across; the smallest component of start picks one that is never degenerate.
-        across = np.cross(start, np.eye(3)[int(np.argmin(np.abs(start)))])
-        across /= np.linalg.norm(across)
-        return np.asarray(2 * np.outer(across, across) - np.eye(3))
-    skew = np.array([[0, -cross[2], cross[1]], [cross[2], 0, -cross[0]], [-cross[1], cross[0], 0]])
-    return np.asarray(np.eye(3) + skew + skew @ skew / (1 + cosine))
+    across = end - (end @ start) * start
+    if np.linalg.norm(across) < 1e-14:
+        # No turn or half a turn, in any plane; the smallest component of start picks one that is never degenerate.
+        across = np.eye(3)[int(np.argmin(np.abs(start)))]
+    # A short rest is mostly rounding along start: what is left of it after a second pass is exactly across.
+    across = across / np.linalg.norm(across)
+    across -= (across @ start) * start
+    across /= np.linalg.norm(across)
+    cosine, sine = end @ start, end @ across
+    plane = np.outer(start, start) + np.outer(across, across)
+    swap = np.outer(across, start) - np.outer(start, across)
+    return np.asarray(np.eye(3) + (cosine - 1) * plane + sine * swap)
 
 
 def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray | None) -> Orientation:
