@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -110,7 +111,7 @@ class Probe:
             position = frozen(as_floats("position", position, (3,)))
         if site is not None and not isinstance(site, str):
             raise InputError(f"site must be a label or an element, got {site!r}.")
-        terms = (contact,) if isinstance(contact, Contact) else tuple(contact)
+        terms = tuple(contact) if isinstance(contact, Iterable) else (contact,)
         for term in terms:
             if not isinstance(term, Contact):
                 raise InputError(f"contact must hold Contact objects, got {term!r}.")

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from latticedip.checks import check_cell
 from latticedip.crystal.model import Crystal, distinct_labels
 from latticedip.crystal.symmetry import find_operations
 from latticedip.errors import InputError
@@ -32,7 +33,7 @@ def crystal_from_ase(atoms: Atoms) -> Crystal:
             )
     symbols = tuple(atoms.get_chemical_symbols())
     pbc = (bool(atoms.pbc[0]), bool(atoms.pbc[1]), bool(atoms.pbc[2]))
-    cell = np.array(atoms.cell.array)
+    cell = check_cell("cell of the atoms", atoms.cell.array, pbc)
     if not all(pbc):
         # A molecule or a slab may lack cell vectors; unit vectors complete the frame without being periodic.
         cell = np.array(atoms.cell.complete())

@@ -28,6 +28,8 @@ if TYPE_CHECKING:
 ORDER_TOLERANCE = 1e-4
 #: Atoms closer than this (Å) cannot both be there.
 OVERLAP_A = 0.1
+#: Atoms, or a point and an atom, closer than this (Å) are at one place.
+SAME_PLACE_A = 1e-3
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,7 +60,7 @@ class Crystal:
 
     cell: Shape (3, 3) float in Å. Rows are the cell vectors.
     positions: Shape (n_sites, 3) float, fractional. As given, not wrapped.
-    symbols, labels: n_sites names each. Labels default to element plus a running number per distinct site.
+    symbols, labels: n_sites names each. Labels default to the symbols.
     occupancies: Shape (n_sites,) float in (0, 1].
     pbc: three bools, the periodic directions.
     operations: of the non-magnetic structure, or None where they are not known.
@@ -79,11 +81,15 @@ class Crystal:
     notes: tuple[str, ...] = field(default=(), repr=False)
 
     def __post_init__(self) -> None:
-        pbc = tuple(bool(p) for p in self.pbc)
-        if len(pbc) != 3:
+        if np.shape(self.pbc) != (3,):
             raise InputError(f"pbc must be three bools, got {self.pbc!r}.")
+        pbc = tuple(bool(p) for p in self.pbc)
         cell = check_cell("cell", self.cell, pbc)
-        positions = as_floats("positions", np.asarray(self.positions, dtype=float).reshape(-1, 3), (None, 3))
+        positions = self.positions if len(self.positions) else np.zeros((0, 3))
+        positions = as_floats("positions", positions, (None, 3))
+        for key, names in (("symbols", self.symbols), ("labels", self.labels)):
+            if isinstance(names, str):
+                raise InputError(f"{key} must be a list with one name per site, got the one text {names!r}.")
         symbols = tuple(str(s) for s in self.symbols)
         if len(symbols) != len(positions):
             raise InputError(f"{len(positions)} positions but {len(symbols)} symbols.")
@@ -109,8 +115,10 @@ class Crystal:
     def _refuse_overlaps(self) -> None:
         from latticedip.crystal.neighbours import close_pairs
 
+        on_place = np.array(self.occupancies)
         for i, j, distance in close_pairs(self, OVERLAP_A):
-            if i == j or self.occupancies[i] + self.occupancies[j] > 1 + 1e-6:
+            on_place[[i, j]] += self.occupancies[[j, i]]
+            if i == j or on_place[[i, j]].max() > 1 + 1e-6:
                 raise InputError(
                     f"atoms {self.labels[i]} (number {i + 1}) and {self.labels[j]} (number {j + 1}) are "
                     f"{distance:.4f} Å apart. Two atoms cannot share a place: remove one, or give occupancies "
@@ -131,6 +139,22 @@ class Crystal:
     def positions_cart(self) -> FloatArray:
         """Shape (n_sites, 3) float in Å. Cartesian positions."""
         return frozen(self.positions @ self.cell)
+
+    @cached_property
+    def places_cart(self) -> FloatArray:
+        """Shape (n_sites, 3) float in Å. Cartesian positions, atoms that share a place (within 1e-3 Å) put on one.
+
+        Such atoms are never there together, so that no sum may hold the field of one at the other.
+        """
+        from latticedip.crystal.neighbours import close_pairs
+
+        places = np.array(self.positions_cart)
+        if np.any(self.occupancies < 1):
+            # Pairs come with the earlier site first, and an earlier site is final before it is used.
+            for i, j, _ in close_pairs(self, SAME_PLACE_A):
+                cells = np.where(self.pbc, np.round(self.positions[j] - self.positions[i]), 0.0)
+                places[j] = places[i] + cells @ self.cell
+        return frozen(places)
 
     @cached_property
     def axes_unit(self) -> FloatArray:

@@ -2,27 +2,37 @@
 
 from __future__ import annotations
 
-import itertools
 from typing import TYPE_CHECKING
 
 import numpy as np
 from scipy.spatial import cKDTree
 
 from latticedip.checks import FloatArray
+from latticedip.errors import LimitError
 
 if TYPE_CHECKING:
     from latticedip.crystal.model import Crystal
+
+#: Images of the cell held at one time.
+MAX_SHIFTS = 10_000_000
 
 
 def image_shifts(crystal: Crystal, radius: float) -> FloatArray:
     """Shape (n, 3) int-valued float. Cell shifts that can hold a point within ``radius`` Å of the home cell.
 
-    The home cell is that of wrapped coordinates in [0, 1); only periodic directions are shifted.
+    The home cell is that of wrapped coordinates in [0, 1); only periodic directions are shifted. Raises LimitError
+    beyond 10 million shifts.
     """
     reciprocal = np.linalg.pinv(crystal.cell).T
-    reach = np.ceil(radius * np.linalg.norm(reciprocal, axis=1) + 1e-9).astype(int)
-    ranges = [range(-n, n + 1) if periodic else (0,) for n, periodic in zip(reach, crystal.pbc, strict=True)]
-    return np.array(list(itertools.product(*ranges)), dtype=float)
+    reach = np.where(crystal.pbc, np.ceil(radius * np.linalg.norm(reciprocal, axis=1) + 1e-9), 0.0)
+    count = float(np.prod(2 * reach + 1))
+    if count > MAX_SHIFTS:
+        raise LimitError(
+            f"neighbours within {radius:g} Å would need {count:.3g} images of the cell {crystal.cell.tolist()}, more "
+            f"than {MAX_SHIFTS}. Use a less skewed cell or a smaller radius."
+        )
+    axes = [np.arange(-n, n + 1) for n in reach]
+    return np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
 
 
 def close_pairs(crystal: Crystal, radius: float) -> list[tuple[int, int, float]]:

@@ -68,6 +68,7 @@ def equivalent_sites(crystal: Crystal, tolerance_A: float = 0.02) -> list[int]:
     Raises LatticedipError where an operation maps an atom onto no atom: the operations are not of this crystal.
     """
     operations = operations_of(crystal)
+    kinds = [(symbol, round(float(p), 6)) for symbol, p in zip(crystal.symbols, crystal.occupancies, strict=True)]
     first = list(range(crystal.n_sites))
     for i in range(crystal.n_sites):
         if first[i] != i:
@@ -77,6 +78,8 @@ def equivalent_sites(crystal: Crystal, tolerance_A: float = 0.02) -> list[int]:
             difference = crystal.positions - image
             difference -= np.round(difference)
             distance = np.linalg.norm(difference @ crystal.cell, axis=1)
+            # Where two elements share a place, an atom is carried onto its own kind.
+            distance[[kind != kinds[i] for kind in kinds]] = np.inf
             j = int(np.argmin(distance))
             if distance[j] > tolerance_A:
                 raise LatticedipError(f"an operation of the crystal maps atom {i + 1} onto no atom.")

@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, as_complex, as_floats, frozen
-from latticedip.crystal.model import Crystal, site_order, wrap
+from latticedip.crystal.model import Crystal, site_order
 from latticedip.errors import InputError
 
 if TYPE_CHECKING:
@@ -26,6 +26,8 @@ if TYPE_CHECKING:
 
 #: A coordinate of k this close to an integer or a half is taken as it.
 K_SNAP = 1e-9
+#: Carried points closer than this in every fractional coordinate are one.
+SAME_POINT = 1e-6
 #: Below this size (µB) a component counts as zero.
 ZERO_MOMENT_MUB = 1e-12
 
@@ -66,10 +68,15 @@ class Reference:
         reach = int(np.ceil(np.abs(self.transform.P).sum(axis=1).max())) + 1
         steps = np.arange(-reach, reach + 1)
         shifts = np.stack(np.meshgrid(steps, steps, steps, indexing="ij"), axis=-1).reshape(-1, 3)
-        points = wrap((np.asarray(position, dtype=float) + shifts - self.transform.p) @ inverse.T)
-        keys = np.round(points, 6) % 1.0
-        _, first = np.unique(keys, axis=0, return_index=True)
-        distinct = points[first]
+        points = ((np.asarray(position, dtype=float) + shifts - self.transform.p) @ inverse.T) % 1.0
+        # The remainder of a tiny negative number rounds to 1.
+        points[points == 1.0] = 0.0
+        kept: list[FloatArray] = []
+        while len(points):
+            kept.append(points[0])
+            gap = points - points[0]
+            points = points[np.abs(gap - np.round(gap)).max(axis=1) > SAME_POINT]
+        distinct = np.array(kept)
         return np.asarray(distinct[site_order(distinct)])
 
 
@@ -105,15 +112,11 @@ class Ordering:
         if not isinstance(self.crystal, Crystal):
             raise InputError(f"an Ordering needs a Crystal, got {type(self.crystal).__name__}.")
         n = self.crystal.n_sites
-        k = as_floats("k", np.asarray(self.k), (None,) * np.ndim(self.k))
-        single = k.ndim == 1
-        k = as_floats("k", k[None] if single else k, (None, 3))
-        raw = np.asarray(self.components)
-        if raw.ndim == 2:
-            raw = raw[None]
-        components = as_complex("components", raw, (len(k), n, 3))
+        k = as_floats("k", self.k, (3,) if _depth(self.k) == 1 else (None, 3)).reshape(-1, 3)
         if len(k) == 0:
             raise InputError("an Ordering needs at least one propagation vector.")
+        flat = _depth(self.components) == 2 and len(k) == 1
+        components = as_complex("components", self.components, (n, 3) if flat else (len(k), n, 3)).reshape(-1, n, 3)
         for axis, periodic in enumerate(self.crystal.pbc):
             if not periodic and np.any(np.abs(k[:, axis]) > K_SNAP):
                 raise InputError(f"k has a component along direction {axis + 1}, in which the crystal is not periodic.")
@@ -130,15 +133,18 @@ class Ordering:
                     "has no meaning there. Give real components."
                 )
             components[i].imag = 0.0
-        su = np.full((n, 3), np.nan) if self.moment_su is None else np.asarray(self.moment_su, dtype=float)
-        if su.shape != (n, 3):
-            raise InputError(f"moment_su must have shape ({n}, 3), got {su.shape}.")
+        su = np.full((n, 3), np.nan)
+        if self.moment_su is not None:
+            su = np.asarray(self.moment_su)
+            if su.dtype.kind not in "iuf" or su.shape != (n, 3) or np.any(su < 0):
+                raise InputError(f"moment_su must hold numbers of at least 0 or NaN in shape ({n}, 3).")
+            su = su.astype(float)
         for key, value in (("components", components), ("k", k), ("moment_su", su)):
             object.__setattr__(self, key, frozen(value))
 
     def moments(self, cells: Sequence[Sequence[int]] | Any = ((0, 0, 0),)) -> FloatArray:
         """Shape (n_cells, n_sites, 3) float in µB. Cartesian moments in the cells at lattice vectors ``cells``."""
-        lattice = as_floats("cells", np.asarray(cells, dtype=float), (None, 3))
+        lattice = as_floats("cells", cells, (None, 3))
         if np.any(lattice != np.round(lattice)):
             raise InputError("cells must be whole numbers: they count lattice vectors.")
         turns = (lattice @ self.k.T) % 1.0
@@ -167,8 +173,13 @@ class Ordering:
         return frozen(self.mean_components[uniform].real.sum(axis=(0, 1)))
 
     def rotated(self, rotation: Any, name: str | None = None) -> Ordering:
-        """The same pattern with every moment turned by a (3, 3) rotation matrix; sites stay."""
+        """The same pattern with every moment turned by a (3, 3) rotation matrix; sites stay.
+
+        Raises InputError where the matrix is not a rotation (to 1e-6).
+        """
         matrix = as_floats("rotation", rotation, (3, 3))
+        if np.abs(matrix @ matrix.T - np.eye(3)).max() > 1e-6 or np.linalg.det(matrix) < 0:
+            raise InputError(f"rotation must be a proper rotation matrix, got {matrix.tolist()}.")
         return Ordering(
             self.crystal,
             self.components @ matrix.T,
@@ -191,6 +202,14 @@ class Ordering:
         from latticedip.ordering.convert import ordering_to_ase
 
         return ordering_to_ase(self, repeat)
+
+
+def _depth(value: Any) -> int:
+    try:
+        return np.ndim(value)
+    except ValueError:
+        # Rows of unequal length; the gate for arrays says so.
+        return -1
 
 
 def snap_k(k: FloatArray) -> FloatArray:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from latticedip.checks import FloatArray
+from latticedip.crystal.model import SAME_PLACE_A
 from latticedip.crystal.neighbours import neighbours_of
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
@@ -13,8 +14,6 @@ from latticedip.units import MU0_T_A3_PER_MUB
 
 #: Neighbours are looked for up to this distance (Å).
 MAX_RADIUS_A = 200.0
-#: A neighbour closer than this (Å) is the site the probe sits on.
-SELF_A = 1e-3
 
 
 def contact_field(ordering: Ordering, point: FloatArray, terms: tuple[Contact, ...]) -> FloatArray:
@@ -46,7 +45,7 @@ def shell_neighbours(ordering: Ordering, point: FloatArray, term: Contact) -> tu
     while True:
         sites, cells, vectors = neighbours_of(ordering.crystal, point, radius, ions)
         distance = np.linalg.norm(vectors, axis=1)
-        away = distance > SELF_A
+        away = distance > SAME_PLACE_A
         sites, cells, distance = sites[away], cells[away], distance[away]
         shell = np.cumsum(np.diff(distance, prepend=distance[:1]) > SHELL_TOLERANCE_A) + 1
         # The outermost shell seen may go on beyond the radius: only shells with a gap behind them are whole.
@@ -63,5 +62,10 @@ def shell_neighbours(ordering: Ordering, point: FloatArray, term: Contact) -> tu
                 break
         radius *= 1.5
         if radius > MAX_RADIUS_A:
+            if term.shell is None:
+                raise InputError(
+                    f"contact: beyond {term.within:g} Å the neighbours follow each other so closely that no shell ends "
+                    f"within {MAX_RADIUS_A:g} Å. Use a smaller radius."
+                )
             raise InputError(f"contact: shell {term.shell} lies farther than {MAX_RADIUS_A:g} Å from the probe.")
     return sites[chosen], cells[chosen], distance[chosen]

@@ -2,21 +2,25 @@
 
 from __future__ import annotations
 
+from collections import OrderedDict
 from dataclasses import dataclass
-from functools import lru_cache
+from threading import Lock
 from typing import Any
 
 import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, as_complex, as_floats, check_tol, frozen
-from latticedip.crystal.model import Crystal
+from latticedip.crystal.model import OVERLAP_A, SAME_PLACE_A, Crystal
+from latticedip.crystal.neighbours import close_pairs
 from latticedip.errors import InputError, LimitError
 from latticedip.ordering.model import is_self_conjugate, snap_k
 from latticedip.sums.bulk import lattice_sum
 from latticedip.units import EV_PER_MUB_T
 
-#: Largest table of tensors held, in bytes.
+#: Largest table of tensors made, in bytes.
 MAX_TABLE_BYTES = 4 * 2**30
+#: Tables kept for the next call hold together at most this many bytes, or are a single one.
+MAX_KEPT_BYTES = 2**29
 
 
 @dataclass(frozen=True, eq=False)
@@ -25,6 +29,8 @@ class Coupling:
 
     crystal: the Crystal, periodic in three directions. k: Shape (3,), reduced coordinates. tol: as `dipole_tensor`.
     A site does not feel itself. Positions are those of the crystal as given, in the home cell.
+
+    Atoms that share a place (within 1e-3 Å) do not feel each other.
 
     Raises InputError as `dipole_tensor` does, LimitError for a table beyond 4 GiB.
     """
@@ -49,12 +55,14 @@ class Coupling:
         moments: Shape (n_candidates, n_sites, 3), µB, Cartesian, of the ions (occupancy is applied here); complex
         components at a general k, real ones where k and −k are the same vector.
 
-        Raises InputError for other shapes, values that are not finite, or imaginary parts where they mean nothing.
+        Raises InputError for other shapes, values that are not finite, imaginary parts where they mean nothing, or
+        two magnetic sites between 1e-3 and 0.1 Å apart.
         """
         parts = as_complex("moments", moments, (None, self.crystal.n_sites, 3))
         own_opposite = bool(is_self_conjugate(self.k[None])[0])
         if own_opposite and np.abs(parts.imag).max(initial=0.0) > 1e-9 * max(1.0, np.abs(parts).max(initial=0.0)):
             raise InputError(f"moments must be real at k = {self.k.tolist()}, where k and −k are the same vector.")
+        refuse_split_ions(self.crystal, np.flatnonzero(np.any(parts != 0, axis=(0, 2))))
         mean = (parts * self.crystal.occupancies[:, None]).reshape(len(parts), -1)
         n = self.crystal.n_sites
         matrix = self.tensors.transpose(0, 2, 1, 3).reshape(3 * n, 3 * n)
@@ -79,12 +87,35 @@ def coupling_tensors(crystal: Crystal, k: FloatArray, tol: float, sites: tuple[i
         raise LimitError(
             f"{len(sites)} magnetic sites need a table of tensors larger than {MAX_TABLE_BYTES // 2**30} GiB."
         )
-    positions = np.ascontiguousarray(crystal.positions_cart[list(sites)])
-    return _tensors(crystal.cell.tobytes(), positions.tobytes(), np.asarray(k, dtype=float).tobytes(), tol)
+    places = crystal.places_cart[list(sites)]
+    vector = np.asarray(k, dtype=float)
+    key = crystal.cell.tobytes(), places.tobytes(), vector.tobytes(), tol
+    with _lock:
+        if key in _kept:
+            _kept.move_to_end(key)
+            return _kept[key]
+    plan = lattice_sum(crystal.cell, vector, tol)
+    points = plan.place(places)
+    table = frozen(plan.tensors(points, points))
+    with _lock:
+        _kept[key] = table
+        while len(_kept) > 1 and sum(kept.nbytes for kept in _kept.values()) > MAX_KEPT_BYTES:
+            _kept.popitem(last=False)
+    return table
 
 
-@lru_cache(maxsize=32)
-def _tensors(cell: bytes, positions: bytes, k: bytes, tol: float) -> FloatArray | ComplexArray:
-    plan = lattice_sum(np.frombuffer(cell).reshape(3, 3), np.frombuffer(k), tol)
-    points = plan.place(np.frombuffer(positions).reshape(-1, 3))
-    return frozen(plan.tensors(points, points))
+_kept: OrderedDict[tuple[bytes, bytes, bytes, float], FloatArray | ComplexArray] = OrderedDict()
+_lock = Lock()
+
+
+def refuse_split_ions(crystal: Crystal, ions: np.ndarray) -> None:
+    """Raise InputError where two magnetic sites are apart but too close to be there together."""
+    if np.all(crystal.occupancies[ions] == 1):
+        return
+    wanted = {int(i) for i in ions}
+    for i, j, distance in close_pairs(crystal, OVERLAP_A):
+        if distance > SAME_PLACE_A and i in wanted and j in wanted:
+            raise InputError(
+                f"the magnetic atoms {crystal.labels[i]} (number {i + 1}) and {crystal.labels[j]} (number {j + 1}) are "
+                f"{distance:.4f} Å apart, so that only one is there at a time. Give both the same position."
+            )

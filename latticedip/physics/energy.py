@@ -11,7 +11,7 @@ from latticedip.checks import ComplexArray, FloatArray, check_tol
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering, is_self_conjugate
 from latticedip.physics.boundary import boundary_words
-from latticedip.physics.coupling import coupling_tensors
+from latticedip.physics.coupling import coupling_tensors, refuse_split_ions
 from latticedip.sample import Sample
 from latticedip.units import EV_PER_MUB_T, K_PER_EV, MU0_T_A3_PER_MUB
 
@@ -73,7 +73,8 @@ def dipolar_energy(ordering: Ordering, *, sample: Sample | None = None, tol: flo
     ordering: periodic in three directions. sample: None means N = 0 and no applied field. tol: as `dipole_tensor`.
     A Fourier pair weighs ¼ Re S*·T·S, a real component ½; terms of different k average to zero over cells.
 
-    Raises InputError where no site carries a moment or the crystal is not periodic in three directions.
+    Raises InputError where no site carries a moment, the crystal is not periodic in three directions, or two magnetic
+    sites lie between 1e-3 and 0.1 Å apart.
     """
     require_ions(ordering)
     specimen = Sample() if sample is None else sample
@@ -105,6 +106,7 @@ def weighted_couplings(ordering: Ordering, tol: float) -> list[tuple[float, Comp
     Only sites that carry a moment take part.
     """
     sites = np.flatnonzero(ordering.is_magnetic)
+    refuse_split_ions(ordering.crystal, sites)
     parts = []
     for k, mean, single in zip(ordering.k, ordering.mean_components, is_self_conjugate(ordering.k), strict=True):
         tensors = coupling_tensors(ordering.crystal, k, tol, tuple(int(i) for i in sites))

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, as_floats, check_tol, frozen
-from latticedip.crystal.model import OVERLAP_A, Crystal
+from latticedip.crystal.model import OVERLAP_A, SAME_PLACE_A, Crystal
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.physics.boundary import boundary_words, magnetization_T
@@ -19,9 +19,10 @@ from latticedip.physics.coupling import require_bulk
 from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
 from latticedip.sums.bulk import lattice_sum
+from latticedip.sums.lattice import reduce_cell
 
-#: A point this close (Å) to an atom is taken to be that site.
-SNAP_A = 1e-3
+#: A site carried over from another crystal is the atom of its element this close (Å): as far as matching lets it lie.
+CARRIED_SITE_A = 0.2
 #: Points evaluated together.
 BLOCK = 4096
 #: Below this field (T) the direction of B, and so the gradient of |B|, has no meaning.
@@ -141,7 +142,10 @@ class LocalField:
 
 @dataclass(frozen=True, eq=False)
 class _Row:
-    """One point to evaluate: where it is, what it was called and which contact terms act there."""
+    """One point to evaluate: where it is, what it was called and which contact terms act there.
+
+    site: the site it sits on, where that is known. element: of the site it stands for, carried from another crystal.
+    """
 
     point: FloatArray
     reference: FloatArray
@@ -150,6 +154,8 @@ class _Row:
     MHz_per_T: float
     contact: tuple[Contact, ...]
     multiplicity: int
+    site: int = -1
+    element: str = ""
 
 
 def local_field(ordering: Ordering, points: Any, *, sample: Sample | None = None, tol: float = 1e-10) -> LocalField:
@@ -158,18 +164,18 @@ def local_field(ordering: Ordering, points: Any, *, sample: Sample | None = None
     ordering: periodic in three directions. points: Shape (n, 3) fractional in the ordering's own cell, or one Probe or
     several. A Probe on a site gives one row per atom; its position or site is that of ``ordering.reference`` where
     there is one, and one position may then become several rows. sample: None means N = 0 and no applied field.
+    tol: as `dipole_tensor`.
     A point within 1e-3 Å of an atom is that site, and leaves that atom out.
 
-    Raises InputError for a point between 1e-3 and 0.1 Å from an atom, an unknown site, or a crystal that is not
-    periodic in three directions.
+    Raises InputError for a point between 1e-3 and 0.1 Å from an atom (on a site: from another magnetic one), an unknown
+    site, or a crystal that is not periodic in three directions.
     """
     require_bulk(ordering.crystal)
     check_tol(tol)
     specimen = Sample() if sample is None else sample
     rows = _rows(ordering, points)
     crystal = ordering.crystal
-    raw = np.array([row.point for row in rows]).reshape(-1, 3)
-    placed, sites = _snap(crystal, raw, [row.name for row in rows])
+    placed, sites = _snap(ordering, rows)
     whole = _whole_sum(ordering, _targets_cart(crystal, placed, sites), tol)
     magnetization = magnetization_T(ordering)
     n = len(rows)
@@ -211,36 +217,72 @@ def _rows(ordering: Ordering, points: Any) -> list[_Row]:
 
 def _probe_rows(ordering: Ordering, probe: Probe) -> Iterator[_Row]:
     home = ordering.crystal if ordering.reference is None else ordering.reference.crystal
-    given = [probe.position] if probe.site is None else [home.positions[i] for i in home.find(probe.site)]
+    sites = [-1] if probe.site is None else list(home.find(probe.site))
     found = []
-    for position in given:
-        carried = [position] if ordering.reference is None else list(ordering.reference.carry(position))
-        found += [(point, position) for point in carried]
-    for point, position in found:
-        yield _Row(point, position, probe.name, probe.particle, probe.MHz_per_T, probe.contact, len(found))
+    for site in sites:
+        position = probe.position if site < 0 else home.positions[site]
+        if ordering.reference is None:
+            found.append((position, position, site, ""))
+        else:
+            element = "" if site < 0 else home.symbols[site]
+            found += [(point, position, -1, element) for point in ordering.reference.carry(position)]
+    for point, position, site, element in found:
+        yield _Row(
+            point, position, probe.name, probe.particle, probe.MHz_per_T, probe.contact, len(found), site, element
+        )
 
 
-def _snap(crystal: Crystal, points: FloatArray, names: list[str]) -> tuple[FloatArray, np.ndarray]:
+def _snap(ordering: Ordering, rows: list[_Row]) -> tuple[FloatArray, np.ndarray]:
     """Put points within 1e-3 Å of an atom onto it; returns points and the site of each (−1: none)."""
-    placed, sites = points.copy(), np.full(len(points), -1)
-    for rows in _blocks(len(points), max(1, 2**20 // max(1, crystal.n_sites))):
-        # Rounding each coordinate finds the image whenever it is as near as matters here (spacings above 0.2 Å).
-        shift = points[rows, None, :] - crystal.positions[None]
-        cells = np.round(shift)
-        distance = np.linalg.norm((shift - cells) @ crystal.cell, axis=2)
-        for i, j in np.argwhere(distance < OVERLAP_A):
-            row = int(np.arange(len(points))[rows][i])
-            if distance[i, j] > SNAP_A:
-                if sites[row] >= 0:
-                    continue
+    crystal = ordering.crystal
+    placed = np.array([row.point for row in rows], dtype=float).reshape(-1, 3)
+    sites = np.array([row.site for row in rows], dtype=int)
+    carried = np.array([bool(row.element) for row in rows], dtype=bool)
+    if crystal.n_sites == 0:
+        return placed, sites
+    lattice = reduce_cell(crystal.cell)
+    for block in _blocks(len(rows), max(1, 2**20 // crystal.n_sites)):
+        # In a reduced cell rounding each coordinate finds the nearest image, wherever that is as near as matters here.
+        gap = (placed[block, None, :] - crystal.positions[None]) @ crystal.cell @ lattice.inverse
+        whole = np.round(gap)
+        distance = np.linalg.norm((gap - whole) @ lattice.cell, axis=2)
+        close = (distance.min(axis=1) < OVERLAP_A) | carried[block]
+        for i in np.flatnonzero(close):
+            row = block.start + int(i)
+            site = sites[row] if sites[row] >= 0 else _site_at(ordering, rows[row], distance[i])
+            sites[row] = site
+            placed[row] = crystal.positions[site] + whole[i, site] @ lattice.steps
+            apart = np.linalg.norm((gap[i] - whole[i] - (gap[i, site] - whole[i, site])) @ lattice.cell, axis=1)
+            split = np.flatnonzero(ordering.is_magnetic & (apart > SAME_PLACE_A) & (apart < OVERLAP_A))
+            if len(split):
                 raise InputError(
-                    f"{names[row]} at {_text(points[row])} lies {distance[i, j]:.4f} Å from atom {crystal.labels[j]} "
-                    f"at {_text(crystal.positions[j])}. A point must be at least {OVERLAP_A} Å from every atom, "
-                    f"or on a site (within {SNAP_A} Å)."
+                    f"{rows[row].name} sits on atom {crystal.labels[site]} at {_text(placed[row])}, {apart[split[0]]:.4f} "
+                    f"Å from the magnetic atom {crystal.labels[split[0]]}: only one of them is there at a time. Give "
+                    "both the same position."
                 )
-            placed[row] = crystal.positions[j] + cells[i, j]
-            sites[row] = j
     return placed, sites
+
+
+def _site_at(ordering: Ordering, row: _Row, distance: FloatArray) -> int:
+    """The site a row near an atom sits on; InputError where it is too close to an atom without being on it."""
+    crystal = ordering.crystal
+    if row.element:
+        alike = np.where([symbol == row.element for symbol in crystal.symbols], distance, np.inf)
+        site = int(np.argmin(alike))
+        if alike[site] > CARRIED_SITE_A:
+            raise InputError(
+                f"{row.name}: the ordering {ordering.name!r} has no {row.element} within {CARRIED_SITE_A} Å of "
+                f"{_text(row.point)}, where the site comes to lie in its cell."
+            )
+        return site
+    site = int(np.argmin(distance))
+    if distance[site] > SAME_PLACE_A:
+        raise InputError(
+            f"{row.name} at {_text(row.point)} lies {distance[site]:.4f} Å from atom {crystal.labels[site]} at "
+            f"{_text(crystal.positions[site])}. A point must be at least {OVERLAP_A} Å from every atom, or on a site "
+            f"(within {SAME_PLACE_A} Å)."
+        )
+    return site
 
 
 def _targets_cart(crystal: Crystal, points: FloatArray, sites: np.ndarray) -> FloatArray:
@@ -249,7 +291,7 @@ def _targets_cart(crystal: Crystal, points: FloatArray, sites: np.ndarray) -> Fl
     if np.any(on):
         # On a site the same rounding as the site itself, so that the source is recognised as its own.
         cells = np.round(points[on] - crystal.positions[sites[on]])
-        targets[on] = crystal.positions_cart[sites[on]] + cells @ crystal.cell
+        targets[on] = crystal.places_cart[sites[on]] + cells @ crystal.cell
     return np.asarray(targets)
 
 
@@ -273,7 +315,7 @@ def _components(ordering: Ordering) -> Iterator[tuple[FloatArray, ComplexArray, 
     if not len(ions):
         return
     for k, mean in zip(ordering.k, ordering.mean_components, strict=True):
-        yield k, mean[ions], ordering.crystal.positions_cart[ions]
+        yield k, mean[ions], ordering.crystal.places_cart[ions]
 
 
 def _blocks(n: int, size: int = BLOCK) -> Iterator[slice]:

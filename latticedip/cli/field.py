@@ -1,0 +1,47 @@
+"""``latticedip field``: the local field at every probe under every ordering."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from latticedip.cli.options import deliver, output_options, study_argument, tol_option
+
+if TYPE_CHECKING:
+    from latticedip.study.tasks import Axes, Unit
+
+
+@click.command(short_help="Local fields at the probes, in five parts.")
+@study_argument
+@click.option(
+    "--axes",
+    type=click.Choice(["cartesian", "crystal", "polar"]),
+    default="cartesian",
+    show_default=True,
+    help="Give vectors along Cartesian x, y, z; along unit vectors parallel to a, b, c of the study's crystal; or as "
+    "size and angles (theta from z, phi from x in the xy plane).",
+)
+@click.option("--unit", type=click.Choice(["T", "G"]), default="T", show_default=True, help="Tesla or gauss.")
+@tol_option
+@output_options
+def field(study: Path, axes: Axes, unit: Unit, tol: float, as_json: bool, csv_path: Path | None) -> None:
+    """Print the local field at every probe under every ordering, in its five parts.
+
+    \b
+    Example:
+      latticedip field study.toml --axes crystal --csv fields.csv
+    """
+    from latticedip.report.field import field_text
+    from latticedip.study import tasks
+
+    opened = tasks.open_study(study)
+    document = tasks.field_document(opened, tasks.field(opened, tol=tol), axes=axes, unit=unit, tol=tol)
+    deliver(
+        document,
+        rows=lambda: tasks.field_table(document),
+        text=lambda: field_text(document),
+        as_json=as_json,
+        csv_path=csv_path,
+    )

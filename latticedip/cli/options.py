@@ -1,0 +1,93 @@
+"""Options and arguments that several commands share, and how a command hands its result over."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import Any, TypeVar
+
+import click
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+
+class Tolerance(click.ParamType):
+    """A number that bounds the error of every tensor."""
+
+    name = "number"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float:
+        try:
+            number = float(value)
+        except ValueError:
+            self.fail(f"{value!r} is not a number.", param, ctx)
+        if not math.isfinite(number) or not 1e-12 <= number <= 1e-2:
+            self.fail(f"{value} is not between 1e-12 and 1e-2.", param, ctx)
+        return number
+
+
+def study_argument(function: F) -> F:
+    """The study file, by position."""
+    return click.argument("study", type=click.Path(path_type=Path), metavar="STUDY")(function)
+
+
+def tol_option(function: F) -> F:
+    """The error bound of the lattice sums."""
+    return click.option(
+        "--tol",
+        type=Tolerance(),
+        default=1e-10,
+        show_default=True,
+        help="Largest error of every lattice sum, relative to the larger of 1 T/µB and its largest element.",
+    )(function)
+
+
+def block_option(function: F) -> F:
+    """The data block of a file that holds several structures."""
+    return click.option(
+        "--block",
+        metavar="NAME",
+        help="The data block of a CIF, or the number of the structure, where the file holds several.",
+    )(function)
+
+
+def output_options(function: F) -> F:
+    """--json and --csv FILE."""
+    function = click.option(
+        "--csv",
+        "csv_path",
+        type=click.Path(path_type=Path, allow_dash=True),
+        metavar="FILE",
+        help="Also write the rows to a CSV file with every digit; - writes them to stdout instead of the table.",
+    )(function)
+    return click.option("--json", "as_json", is_flag=True, help="Print a JSON document instead of the table.")(function)
+
+
+def deliver(
+    document: Mapping[str, Any],
+    *,
+    rows: Callable[[], Sequence[Mapping[str, Any]]],
+    text: Callable[[], str],
+    as_json: bool,
+    csv_path: Path | None,
+) -> None:
+    """Print the text or the document, and write the rows where a CSV file was asked for.
+
+    Raises click.UsageError where two documents would have to share stdout.
+    """
+    from latticedip.encode import to_csv, to_json, write_csv
+    from latticedip.study.documents import flat_rows
+
+    csv_to_stdout = csv_path is not None and str(csv_path) == "-"
+    if csv_to_stdout and as_json:
+        raise click.UsageError("--json and --csv - cannot both go to stdout: name a file for the CSV.")
+    if csv_path is not None and not csv_to_stdout:
+        write_csv(flat_rows(rows()), csv_path)
+        click.echo(f"Wrote {csv_path}.", err=True)
+    if csv_to_stdout:
+        click.echo(to_csv(flat_rows(rows())), nl=False)
+    elif as_json:
+        click.echo(to_json(document), nl=False)
+    else:
+        click.echo(text())

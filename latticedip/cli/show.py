@@ -1,0 +1,39 @@
+"""``latticedip show``: what was understood of a structure or a study."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from latticedip.cli.options import block_option, deliver, output_options
+
+
+@click.command(short_help="Say what was understood of a structure or a study.")
+@click.argument("file", type=click.Path(path_type=Path), metavar="FILE|STUDY")
+@block_option
+@output_options
+def show(file: Path, block: str | None, as_json: bool, csv_path: Path | None) -> None:
+    """Say what was understood of a structure file or a study (a name that ends in .toml).
+
+    Cell, sites, moments in every cell of a period, nearest magnetic neighbours with the dipolar scale, probes,
+    sample, warnings. Atoms are listed in the order in which signs and amplitudes of a study count. The CSV file
+    holds the moments or, where there are none, the atoms.
+
+    \b
+    Example:
+      latticedip show study.toml
+    """
+    from latticedip.report.show import show_text
+    from latticedip.study import tasks
+
+    if block is not None and tasks.is_study(file):
+        raise click.UsageError("--block goes with a structure file; in a study, write block = ... beside the file.")
+    document = tasks.show(file, block=block)
+    deliver(
+        document,
+        rows=lambda: tasks.show_table(document),
+        text=lambda: show_text(document),
+        as_json=as_json,
+        csv_path=csv_path,
+    )

@@ -1,0 +1,287 @@
+"""Orderings out: magCIF in P 1 and extended XYZ, with 17 digits, so that what was written can be read again."""
+
+from __future__ import annotations
+
+import itertools
+import os
+import re
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass
+from fractions import Fraction
+from pathlib import Path
+
+import numpy as np
+
+from latticedip.checks import FloatArray
+from latticedip.errors import FileError
+from latticedip.ordering.model import K_SNAP, Ordering, ParentTransform, is_self_conjugate
+
+#: An ordering whose k repeats only beyond this many cells along an axis counts as incommensurate.
+MAX_PERIOD = 64
+#: Larger magnetic cells (atoms) are not written.
+MAX_ATOMS = 20_000
+
+MCIF_SUFFIXES = (".mcif", ".cif")
+XYZ_SUFFIXES = (".xyz", ".extxyz")
+
+
+@dataclass(frozen=True, eq=False)
+class _MagneticCell:
+    """An ordering in a cell that holds whole waves: every array runs over its atoms.
+
+    cell: Shape (3, 3) Å. positions: Shape (n, 3) fractional. moments_cart, moment_su: Shape (n, 3) µB.
+    """
+
+    cell: FloatArray
+    positions: FloatArray
+    symbols: tuple[str, ...]
+    labels: tuple[str, ...]
+    occupancies: FloatArray
+    moments_cart: FloatArray
+    moment_su: FloatArray
+    magnetic: np.ndarray
+    parent: ParentTransform | None
+
+
+def write_ordering(ordering: Ordering, path: str | os.PathLike[str], *, overwrite: bool = False) -> None:
+    """Write an ordering as magCIF (.mcif, .cif) or extended XYZ (.xyz, .extxyz).
+
+    A commensurate k other than 0 is written in the supercell that holds whole waves. The magCIF lists all atoms
+    in P 1 with crystal-axis components in µB, standard uncertainties and the change of cell from the parent where
+    they are known; it fixes lengths and angles, so that a turned cell comes back in the standard orientation.
+    The extended XYZ keeps the cell vectors, labels, occupancies and Cartesian moments, but no uncertainties.
+
+    path: its suffix chooses the format. The file appears whole or not at all. Raises FileError where the suffix is unknown, the file exists (unless
+    overwrite), k is incommensurate, the supercell is too large, or the format cannot hold the ordering.
+    """
+    name = os.fspath(path)
+    suffix = Path(name).suffix.lower()
+    if suffix in MCIF_SUFFIXES:
+        text = _as_mcif(ordering, name)
+    elif suffix in XYZ_SUFFIXES:
+        text = _as_xyz(ordering, name)
+    else:
+        raise FileError(f"{name}: the suffix must be one of {', '.join(MCIF_SUFFIXES + XYZ_SUFFIXES)}.")
+    _save(text, name, overwrite)
+
+
+def _save(text: str, name: str, overwrite: bool) -> None:
+    """Write under a temporary name beside the target, then rename."""
+    if os.path.exists(name) and not overwrite:
+        raise FileError(f"{name}: the file exists. Choose another name, or overwrite it with overwrite=True.")
+    temporary = f"{name}.part{os.getpid()}"
+    try:
+        with open(temporary, "x", encoding="utf-8") as stream:
+            stream.write(text)
+        os.replace(temporary, name)
+    except OSError as error:
+        if os.path.exists(temporary):
+            os.unlink(temporary)
+        raise FileError(f"{name}: the file cannot be written ({error.strerror}).") from None
+
+
+def _magnetic_cell(ordering: Ordering, name: str) -> _MagneticCell:
+    """The ordering in the smallest multiple of its cell in which every k is a reciprocal lattice vector."""
+    crystal = ordering.crystal
+    counts = _periods(ordering.k, name)
+    cells = list(itertools.product(*(range(n) for n in counts)))
+    if len(cells) * crystal.n_sites > MAX_ATOMS:
+        raise FileError(
+            f"{name}: the magnetic cell of {' × '.join(map(str, counts))} cells would hold "
+            f"{len(cells) * crystal.n_sites} atoms; at most {MAX_ATOMS} are written."
+        )
+    lattice = np.array(cells, dtype=float)
+    scale = np.array(counts, dtype=float)
+    positions = ((crystal.positions[None] + lattice[:, None]) / scale).reshape(-1, 3)
+    # Away from zone-boundary k a moment mixes two amplitudes, whose uncertainties are not those of the moment.
+    keeps_su = len(ordering.k) == 1 and bool(is_self_conjugate(ordering.k)[0])
+    su = ordering.moment_su if keeps_su else np.full((crystal.n_sites, 3), np.nan)
+    parent = ordering.parent
+    return _MagneticCell(
+        crystal.cell * scale[:, None],
+        positions,
+        crystal.symbols * len(cells),
+        crystal.labels * len(cells),
+        np.tile(crystal.occupancies, len(cells)),
+        ordering.moments(cells).reshape(-1, 3),
+        np.tile(su, (len(cells), 1)),
+        np.tile(ordering.is_magnetic, len(cells)),
+        None if parent is None else ParentTransform(np.asarray(parent.P) * scale, parent.p),
+    )
+
+
+def _periods(k: FloatArray, name: str) -> list[int]:
+    counts = [1, 1, 1]
+    for vector in k:
+        for axis, value in enumerate(vector):
+            nearest = Fraction(float(value)).limit_denominator(MAX_PERIOD)
+            if abs(float(nearest) - value) > K_SNAP:
+                raise FileError(
+                    f"{name}: k = ({', '.join(f'{x:.6g}' for x in vector)}) repeats in no supercell of up to "
+                    f"{MAX_PERIOD} cells along an axis. Incommensurate orderings are not written; take a "
+                    "commensurate k nearby."
+                )
+            counts[axis] = int(np.lcm(counts[axis], nearest.denominator))
+    return counts
+
+
+def _as_mcif(ordering: Ordering, name: str) -> str:
+    crystal = ordering.crystal
+    if not all(crystal.pbc):
+        raise FileError(f"{name}: a CIF repeats in three directions, this crystal does not. Write it as .xyz.")
+    if np.linalg.det(crystal.cell) < 0:
+        raise FileError(
+            f"{name}: the cell vectors are left-handed, which a CIF cannot say. Write it as .xyz, "
+            "or exchange two cell vectors."
+        )
+    magnetic = _magnetic_cell(ordering, name)
+    names = _distinct(magnetic.labels)
+    lengths, angles = _cell_parameters(magnetic.cell)
+    axes = magnetic.cell / lengths[:, None]
+    components = magnetic.moments_cart @ np.linalg.inv(axes)
+    lines = ["# Magnetic structure in P 1, written by latticedip", f"data_{_block_name(ordering.name)}"]
+    lines += [f"_cell_length_{axis} {_digits(value)}" for axis, value in zip("abc", lengths, strict=True)]
+    lines += [f"_cell_angle_{a} {_digits(value)}" for a, value in zip(("alpha", "beta", "gamma"), angles, strict=True)]
+    lines += ["_space_group_magn.number_BNS '1.1'", "_space_group_magn.name_BNS 'P1'"]
+    if magnetic.parent is not None:
+        lines.append(f"_parent_space_group.child_transform_Pp_abc '{format_transform(magnetic.parent)}'")
+    lines += _loop(
+        ["_space_group_symop_magn_operation.id", "_space_group_symop_magn_operation.xyz"], [["1", "x,y,z,+1"]]
+    )
+    # Where several atoms share a label, each gets one of its own, and the shared one stands in a column beside it.
+    shared = names != list(magnetic.labels)
+    lines += _loop(
+        [
+            *(f"_atom_site_{tag}" for tag in ("label", "type_symbol", "fract_x", "fract_y", "fract_z", "occupancy")),
+            *(["_latticedip_site_label"] if shared else []),
+        ],
+        [
+            [
+                _quoted(label, name),
+                magnetic.symbols[i],
+                *map(_digits, magnetic.positions[i]),
+                _digits(magnetic.occupancies[i]),
+                *([_quoted(magnetic.labels[i], name)] if shared else []),
+            ]
+            for i, label in enumerate(names)
+        ],
+    )
+    has_su = not np.all(np.isnan(magnetic.moment_su))
+    lines += _loop(
+        [
+            "_atom_site_moment.label",
+            *(f"_atom_site_moment.crystalaxis_{x}" for x in "xyz"),
+            *([f"_atom_site_moment.crystalaxis_{x}_su" for x in "xyz"] if has_su else []),
+        ],
+        [
+            [
+                _quoted(label, name),
+                *map(_digits, components[i]),
+                *(map(_digits, magnetic.moment_su[i]) if has_su else []),
+            ]
+            for i, label in enumerate(names)
+            if magnetic.magnetic[i]
+        ],
+        empty=["."] * (7 if has_su else 4),
+    )
+    return "\n".join(lines) + "\n"
+
+
+def _loop(tags: list[str], rows: Sequence[list[str]], empty: list[str] | None = None) -> list[str]:
+    return ["loop_", *tags, *(" ".join(row) for row in rows or [empty or []])]
+
+
+def _as_xyz(ordering: Ordering, name: str) -> str:
+    magnetic = _magnetic_cell(ordering, name)
+    for label in magnetic.labels:
+        if not re.fullmatch(r"[^\s\"'=]+", label):
+            raise FileError(
+                f"{name}: the label {label!r} holds a blank, a quote or =, which extended XYZ cannot keep. "
+                "Write it as .mcif."
+            )
+    lattice = " ".join(_digits(value) for value in magnetic.cell.ravel())
+    pbc = " ".join("T" if periodic else "F" for periodic in ordering.crystal.pbc)
+    positions = magnetic.positions @ magnetic.cell
+    rows = [
+        " ".join(
+            [
+                magnetic.symbols[i],
+                *map(_digits, positions[i]),
+                *map(_digits, magnetic.moments_cart[i]),
+                magnetic.labels[i],
+                _digits(magnetic.occupancies[i]),
+            ]
+        )
+        for i in range(len(magnetic.symbols))
+    ]
+    head = (
+        f'Lattice="{lattice}" Properties=species:S:1:pos:R:3:initial_magmoms:R:3:labels:S:1:occupancies:R:1 pbc="{pbc}"'
+    )
+    return "\n".join([str(len(rows)), head, *rows]) + "\n"
+
+
+def _digits(value: float) -> str:
+    """A number with 17 significant digits (enough for any double), ``.`` for NaN; minus zero becomes zero."""
+    return "." if np.isnan(value) else f"{value + 0.0:.17g}"
+
+
+def _quoted(text: str, name: str) -> str:
+    for quote in "'\"":
+        if text == text.strip() and text and text.isprintable() and f"{quote} " not in text:
+            return f"{quote}{text}{quote}"
+    raise FileError(f"{name}: the label {text!r} cannot be written in a CIF. Rename the site.")
+
+
+def _block_name(text: str) -> str:
+    return re.sub(r"[^A-Za-z0-9_.+-]+", "_", text).strip("_")[:60] or "ordering"
+
+
+def _distinct(labels: Sequence[str]) -> list[str]:
+    """The labels, those of several atoms with a running number that no other label has."""
+    counts = Counter(labels)
+    taken = set(labels)
+    numbers: Counter[str] = Counter()
+    names = []
+    for label in labels:
+        name = label
+        while counts[label] > 1 and name in taken:
+            numbers[label] += 1
+            name = f"{label}_{numbers[label]}"
+        taken.add(name)
+        names.append(name)
+    return names
+
+
+def _cell_parameters(cell: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Lengths (Å) and angles (degrees) of a cell; angles within rounding of 60, 90 and 120 are those."""
+    lengths = np.linalg.norm(cell, axis=1)
+    angles = []
+    for i, j in ((1, 2), (0, 2), (0, 1)):
+        first, second = cell[i] / lengths[i], cell[j] / lengths[j]
+        angle = float(np.degrees(np.arctan2(np.linalg.norm(np.cross(first, second)), first @ second)))
+        angles.append(next((exact for exact in (60.0, 90.0, 120.0) if abs(angle - exact) < 1e-12), angle))
+    return lengths, np.array(angles)
+
+
+def format_transform(transform: ParentTransform) -> str:
+    """A change of cell as the dictionaries write it, ``a-b,a+b,2c;1/4,0,0``."""
+    vectors = []
+    for column in np.asarray(transform.P).T:
+        terms = [_term(value, axis) for value, axis in zip(column, "abc", strict=True) if abs(value) > 1e-12]
+        vectors.append("".join(terms).removeprefix("+"))
+    shift = ",".join(_fraction(value) for value in transform.p)
+    return f"{','.join(vectors)};{shift}"
+
+
+def _term(value: float, axis: str) -> str:
+    size = _fraction(abs(value))
+    return ("-" if value < 0 else "+") + ("" if size == "1" else size) + axis
+
+
+def _fraction(value: float) -> str:
+    """A simple fraction where the number is one, else its decimals (no exponent: the grammar has none)."""
+    nearest = Fraction(float(value)).limit_denominator(48)
+    if abs(float(nearest) - value) < 1e-12:
+        return str(nearest)
+    return f"{value:.17f}"

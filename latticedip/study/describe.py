@@ -1,0 +1,357 @@
+"""What was understood of a structure file or a study, in plain values: the content of ``latticedip show``."""
+
+from __future__ import annotations
+
+import itertools
+import math
+from collections.abc import Mapping, Sequence
+from fractions import Fraction
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from latticedip.checks import FloatArray
+from latticedip.crystal.lattice import label_centrings
+from latticedip.crystal.model import Crystal
+from latticedip.crystal.neighbours import close_pairs, neighbours_of
+from latticedip.crystal.symmetry import operations_of
+from latticedip.ordering.model import Ordering
+from latticedip.particles import particle_named
+from latticedip.physics.boundary import boundary_words, has_net_moment
+from latticedip.probe import SHELL_TOLERANCE_A, Probe
+from latticedip.sample import Sample
+from latticedip.study.documents import document
+from latticedip.study.start import OFTEN_MAGNETIC
+from latticedip.units import DIPOLE_EV_A3_PER_MUB2, K_PER_EV
+
+if TYPE_CHECKING:
+    from latticedip.study.schema import Study
+
+#: Cells shown for one ordering at most, and along one axis where k has no short period.
+MOST_CELLS = 16
+CELLS_ALONG = 8
+#: Shells of magnetic neighbours listed for one site label.
+SHELLS = 3
+#: Atoms closer than this (Å) are warned of; with hydrogen the second.
+SHORT_A, SHORT_HYDROGEN_A = 1.0, 0.6
+#: A probe closer than this (Å) to an atom is warned of.
+SHORT_PROBE_A = 0.8
+#: Neighbours are looked for up to this distance (Å).
+FARTHEST_A = 60.0
+
+
+def describe_study(study: Study) -> dict[str, Any]:
+    """The document of `show` for a study."""
+    own = [ordering for ordering in study.orderings if ordering.reference is None]
+    sizes = dict(moment_sizes(own))
+    for name, size in study.moments.items():
+        for site in study.crystal.find(name):
+            sizes.setdefault(study.crystal.labels[site], float(size))
+    where = study.crystal
+    if not sizes and study.orderings:
+        where, sizes = study.orderings[0].crystal, moment_sizes(study.orderings[:1])
+    boundaries = [boundary_words(ordering, study.sample) for ordering in study.orderings]
+    return document(
+        "show",
+        files=study.files,
+        options={},
+        boundary="; ".join(dict.fromkeys(boundaries)),
+        results={
+            "title": study.title,
+            **_structure(study.crystal),
+            "moments_muB": {name: float(size) for name, size in study.moments.items()},
+            "orderings": [describe_ordering(ordering) for ordering in study.orderings],
+            "neighbours": magnetic_neighbours(where, sizes),
+            "probes": [describe_probe(probe, study.crystal, set(sizes)) for probe in study.probes],
+            "sample": study.sample.to_dict(),
+            "warnings": _study_warnings(study, sizes),
+        },
+    )
+
+
+def describe_structure(path: Path, found: Crystal | Ordering) -> dict[str, Any]:
+    """The document of `show` for a structure file, with its moments where it has them."""
+    orderings = [found] if isinstance(found, Ordering) else []
+    crystal = found.crystal if isinstance(found, Ordering) else found
+    sizes = moment_sizes(orderings)
+    return document(
+        "show",
+        files={"structure": path},
+        options={},
+        boundary="; ".join(boundary_words(ordering, None) for ordering in orderings),
+        results={
+            "title": crystal.name or path.name,
+            **_structure(crystal),
+            "moments_muB": {},
+            "orderings": [describe_ordering(ordering) for ordering in orderings],
+            "neighbours": magnetic_neighbours(crystal, sizes),
+            "probes": [],
+            "sample": None,
+            "warnings": _crystal_warnings(crystal),
+        },
+    )
+
+
+# --- the crystal ----------------------------------------------------------------------------------------
+
+
+def _structure(crystal: Crystal) -> dict[str, Any]:
+    lengths = np.linalg.norm(crystal.cell, axis=1)
+    unit = crystal.axes_unit
+    cosines = [unit[1] @ unit[2], unit[2] @ unit[0], unit[0] @ unit[1]]
+    operations = operations_of(crystal)
+    return {
+        "crystal": {
+            "name": crystal.name,
+            "cell_A": crystal.cell.tolist(),
+            "lengths_A": lengths.tolist(),
+            "angles_deg": [float(np.degrees(np.arccos(np.clip(c, -1, 1)))) for c in cosines],
+            "volume_A3": crystal.volume_A3,
+            "periodic": list(crystal.pbc),
+            "symmetry_operations": len(operations.rotations),
+            "centrings": len(label_centrings(crystal)),
+            "atoms": crystal.n_sites,
+            "notes": list(crystal.notes),
+        },
+        "sites": _sites(crystal),
+    }
+
+
+def _sites(crystal: Crystal) -> list[dict[str, Any]]:
+    """One entry per label, its atoms in the order in which signs and amplitudes count."""
+    entries = []
+    for label in dict.fromkeys(crystal.labels):
+        indices = crystal.find(label)
+        occupancies = sorted({round(float(crystal.occupancies[i]), 9) for i in indices})
+        entries.append(
+            {
+                "label": label,
+                "elements": list(dict.fromkeys(crystal.symbols[i] for i in indices)),
+                "multiplicity": len(indices),
+                "occupancies": occupancies,
+                "positions": [crystal.positions[i].tolist() for i in indices],
+            }
+        )
+    return entries
+
+
+def _crystal_warnings(crystal: Crystal) -> list[str]:
+    warnings = []
+    for i, j, distance in close_pairs(crystal, SHORT_A):
+        hydrogen = {"H", "D"} & {crystal.symbols[i], crystal.symbols[j]}
+        shared = crystal.occupancies[i] + crystal.occupancies[j] <= 1 + 1e-6
+        if not shared and distance < (SHORT_HYDROGEN_A if hydrogen else SHORT_A):
+            warnings.append(
+                f"{crystal.labels[i]} (atom {i + 1}) and {crystal.labels[j]} (atom {j + 1}) are only "
+                f"{distance:.3f} Å apart: check the cell and the positions."
+            )
+    partial = [lab for lab, p in zip(crystal.labels, crystal.occupancies, strict=True) if p < 1 - 1e-9]
+    if partial and not any("occup" in note for note in crystal.notes):
+        warnings.append(f"partly occupied: {', '.join(dict.fromkeys(partial))}; sums take the mean moment.")
+    return warnings
+
+
+# --- orderings ------------------------------------------------------------------------------------------
+
+
+def moment_sizes(orderings: Sequence[Ordering]) -> dict[str, float]:
+    """Largest moment (µB, of the ion, over all cells) by site label; sites without a moment are left out."""
+    sizes: dict[str, float] = {}
+    for ordering in orderings:
+        for site in np.flatnonzero(ordering.is_magnetic):
+            # Real and imaginary part span an ellipse; its larger half axis is the largest moment. Several k add up.
+            parts = np.stack([ordering.components[:, site].real, ordering.components[:, site].imag], axis=1)
+            size = float(np.linalg.norm(parts, ord=2, axis=(1, 2)).sum())
+            label = ordering.crystal.labels[site]
+            sizes[label] = max(size, sizes.get(label, 0.0))
+    return sizes
+
+
+def first_cells(ordering: Ordering) -> tuple[list[tuple[int, ...]], str]:
+    """Cells that show how an ordering goes on, and in words which they are."""
+    periods = [_period(ordering.k[:, axis]) for axis in range(3)]
+    whole = math.prod(p or 0 for p in periods)
+    if 0 < whole <= MOST_CELLS:
+        every: list[tuple[int, ...]] = list(itertools.product(*(range(p or 1) for p in periods)))
+        return every, "the cell" if whole == 1 else "all cells of one magnetic period"
+    cells: list[tuple[int, ...]] = [(0, 0, 0)]
+    for axis, period in enumerate(periods):
+        for step in range(1, min(period or CELLS_ALONG, CELLS_ALONG)):
+            cells.append((step * (axis == 0), step * (axis == 1), step * (axis == 2)))
+    return cells, "the first cells along each axis; the pattern goes on"
+
+
+def _period(coordinates: FloatArray) -> int | None:
+    """The number of cells after which all phases along one axis repeat; None where that is not below 13."""
+    period = 1
+    for value in coordinates:
+        fraction = Fraction(float(value)).limit_denominator(12)
+        if abs(float(fraction) - value) > 1e-9:
+            return None
+        period = math.lcm(period, fraction.denominator)
+    return period if period <= 12 else None
+
+
+def describe_ordering(ordering: Ordering) -> dict[str, Any]:
+    """An ordering with every moment over its first cells, along the axes of its own cell."""
+    crystal = ordering.crystal
+    cells, words = first_cells(ordering)
+    moments = ordering.moments(cells)
+    along = _common_direction(moments)
+    atoms = []
+    for label in dict.fromkeys(crystal.labels):
+        for number, site in enumerate(crystal.find(label), start=1):
+            if not ordering.is_magnetic[site]:
+                continue
+            of_site = moments[:, site]
+            atoms.append(
+                {
+                    "label": label,
+                    "atom": number,
+                    "position": crystal.positions[site].tolist(),
+                    "moments_abc_muB": crystal.to_crystal_axes(of_site).tolist(),
+                    "sizes_muB": np.linalg.norm(of_site, axis=1).tolist(),
+                    "along_muB": None if along is None else (of_site @ along).tolist(),
+                    "moment_su_muB": None
+                    if np.all(np.isnan(ordering.moment_su[site]))
+                    else ordering.moment_su[site].tolist(),
+                }
+            )
+    return {
+        "ordering": ordering.name,
+        "k": ordering.k.tolist(),
+        "ions_per_cell": ordering.n_ions,
+        "net_moment_muB_per_cell": ordering.net_moment.tolist(),
+        "own_cell": None if ordering.reference is None else _own_cell(ordering),
+        "cells": [list(cell) for cell in cells],
+        "cells_are": words,
+        "direction_abc": None if along is None else crystal.to_crystal_axes(along).tolist(),
+        "atoms": atoms,
+        "notes": list(ordering.notes),
+    }
+
+
+def _own_cell(ordering: Ordering) -> dict[str, Any]:
+    return {
+        "lengths_A": np.linalg.norm(ordering.crystal.cell, axis=1).tolist(),
+        "atoms": ordering.crystal.n_sites,
+        "how": "" if ordering.reference is None else ordering.reference.how,
+    }
+
+
+def _common_direction(moments: FloatArray) -> FloatArray | None:
+    """The unit vector that all moments lie along, None where they are not collinear; the largest first one is +."""
+    flat = moments.reshape(-1, 3)
+    sizes = np.linalg.norm(flat, axis=1)
+    largest = float(sizes.max(initial=0.0))
+    if largest == 0.0:
+        return None
+    first = int(np.argmax(sizes > 0.999 * largest))
+    direction = flat[first] / sizes[first]
+    across = flat - np.outer(flat @ direction, direction)
+    return direction if float(np.abs(across).max()) <= 1e-6 * largest else None
+
+
+# --- neighbours -----------------------------------------------------------------------------------------
+
+
+def magnetic_neighbours(crystal: Crystal, sizes_muB: Mapping[str, float]) -> list[dict[str, Any]]:
+    """The nearest shells of magnetic neighbours of each magnetic label, with the dipolar scale µ0 m1 m2/(4π r³).
+
+    Counted round the first atom of the label. sizes_muB: moment of the ion by label.
+    """
+    sites = tuple(i for i, label in enumerate(crystal.labels) if label in sizes_muB)
+    rows = []
+    for label in dict.fromkeys(crystal.labels[i] for i in sites):
+        home = crystal.find(label)[0]
+        for partner, distance, count in _shells(crystal, crystal.positions[home], sites)[:SHELLS]:
+            energy = DIPOLE_EV_A3_PER_MUB2 * sizes_muB[label] * sizes_muB[partner] / distance**3
+            rows.append(
+                {
+                    "site": label,
+                    "neighbour": partner,
+                    "count": count,
+                    "distance_A": distance,
+                    "dipolar_scale_ueV": energy * 1e6,
+                    "dipolar_scale_K": energy * K_PER_EV,
+                }
+            )
+    return rows
+
+
+def _shells(crystal: Crystal, point: FloatArray, sites: tuple[int, ...]) -> list[tuple[str, float, int]]:
+    """Label, distance (Å) and number of the nearest atoms, the point itself left out; whole shells only."""
+    if not sites:
+        return []
+    radius = 5.0
+    while True:
+        found, _, vectors = neighbours_of(crystal, point, radius, sites)
+        distances = np.linalg.norm(vectors, axis=1)
+        shells: list[tuple[str, float, int]] = []
+        for site, distance in zip(found, distances, strict=True):
+            if distance < 1e-3 or distance > radius - SHELL_TOLERANCE_A:
+                continue
+            label = crystal.labels[site]
+            place = next(
+                (i for i, s in enumerate(shells) if s[0] == label and distance - s[1] < SHELL_TOLERANCE_A), None
+            )
+            if place is None:
+                shells.append((label, float(distance), 1))
+            else:
+                shells[place] = (label, shells[place][1], shells[place][2] + 1)
+        if len(shells) >= SHELLS or radius > FARTHEST_A or not any(crystal.pbc):
+            return shells
+        radius *= 1.6
+
+
+# --- probes ---------------------------------------------------------------------------------------------
+
+
+def describe_probe(probe: Probe, crystal: Crystal, magnetic: set[str]) -> dict[str, Any]:
+    """A probe, and what is nearest to it (for a site: to its first atom)."""
+    sites = () if probe.site is None else crystal.find(probe.site)
+    point = probe.position if probe.site is None else crystal.positions[sites[0]]
+    everything = _shells(crystal, point, tuple(range(crystal.n_sites)))
+    ions = _shells(crystal, point, tuple(i for i, label in enumerate(crystal.labels) if label in magnetic))
+    return {
+        "probe": probe.name,
+        "particle": probe.particle,
+        "MHz_per_T": particle_named(probe.particle).MHz_per_T,
+        "site": probe.site,
+        "position": None if probe.position is None else probe.position.tolist(),
+        "points": max(len(sites), 1),
+        "nearest_atom": everything[0][0] if everything else None,
+        "nearest_atom_A": everything[0][1] if everything else None,
+        "nearest_ion": ions[0][0] if ions else None,
+        "nearest_ion_A": ions[0][1] if ions else None,
+        "contact_terms": len(probe.contact),
+    }
+
+
+def _study_warnings(study: Study, sizes: Mapping[str, float]) -> list[str]:
+    warnings = _crystal_warnings(study.crystal)
+    known = set(sizes)
+    for ordering in study.orderings:
+        known |= {ordering.crystal.labels[i] for i in np.flatnonzero(ordering.is_magnetic)}
+    magnetic_elements = {o.crystal.symbols[i] for o in study.orderings for i in np.flatnonzero(o.is_magnetic)}
+    for label in dict.fromkeys(study.crystal.labels):
+        symbol = study.crystal.symbols[study.crystal.labels.index(label)]
+        if symbol in OFTEN_MAGNETIC and label not in known and symbol not in magnetic_elements:
+            warnings.append(f"{label} holds {symbol}, which often carries a moment, but no ordering gives it one.")
+    if study.sample.shape == Sample().shape:
+        with_moment = [ordering.name for ordering in study.orderings if has_net_moment(ordering)]
+        if with_moment:
+            warnings.append(
+                f"net moment without a shape of the sample ({', '.join(with_moment)}): N = 0 is assumed. "
+                "State [sample] where the sample has a shape of its own."
+            )
+    for probe in study.probes:
+        if probe.position is None:
+            continue
+        near = _shells(study.crystal, probe.position, tuple(range(study.crystal.n_sites)))
+        if near and near[0][1] < SHORT_PROBE_A:
+            warnings.append(f"{probe.name} lies only {near[0][1]:.3f} Å from {near[0][0]}.")
+    return warnings
+
+

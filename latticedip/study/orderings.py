@@ -1,0 +1,280 @@
+"""The [[ordering]] tables of a study: patterns of signs, cosine and sine amplitudes, or files with their own cell.
+
+`along`, `cosine` and `sine` are crystal-axis components, along unit vectors parallel to a, b, c of [crystal].
+An ordering with `along` covers every site that has a size in [moments]; sites that `signs` leaves out are all +.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import stat
+from collections.abc import Callable, Mapping
+from pathlib import Path
+
+import numpy as np
+
+from latticedip.checks import ComplexArray, FloatArray, as_floats
+from latticedip.crystal.model import Crystal, site_order
+from latticedip.ordering.model import Ordering
+from latticedip.ordering.patterns import (
+    VANISHING_FRACTION,
+    Setting,
+    expected_entries,
+    read_signs,
+    triple,
+    unit_direction,
+)
+from latticedip.study.frames import place_in_frame
+from latticedip.study.keys import Key
+
+FILE_KEYS = ("file", "block", "domain")
+SIGN_KEYS = ("along", "signs")
+WAVE_KEYS = ("cosine", "sine", "phase")
+ORDERING_KEYS = ("name", "k", *SIGN_KEYS, *WAVE_KEYS, *FILE_KEYS)
+
+_DIRECTION = "a direction in crystal axes a, b, c, such as [0, 0, 1]"
+_K = 'three reduced coordinates, such as [0, 0, 0.5] or [0, 0, "1/3"]'
+
+
+@dataclasses.dataclass(frozen=True, eq=False)
+class Sizes:
+    """Moment sizes in µB. of_site: Shape (n_sites,) float, NaN where [moments] gives none. by_name: as written."""
+
+    of_site: FloatArray
+    by_name: Mapping[str, float]
+
+
+def read_moments(key: Key | None, crystal: Crystal) -> Sizes:
+    """The [moments] table: sizes by site label or element; a label goes before the element."""
+    of_site = np.full(crystal.n_sites, np.nan)
+    by_name: dict[str, float] = {}
+    named = {} if key is None else key.table()
+    for by_label in (False, True):
+        for name, child in named.items():
+            if (name in crystal.labels) is by_label:
+                with child.located():
+                    sites = crystal.find(name)
+                by_name[name] = child.number("a size in Bohr magnetons, at least 0", low=0.0)
+                of_site[list(sites)] = by_name[name]
+    return Sizes(of_site, {name: by_name[name] for name in named})
+
+
+def read_orderings(
+    key: Key | None, crystal: Crystal, sizes: Sizes, folder: Path, files: dict[str, Path]
+) -> tuple[Ordering, ...]:
+    """All [[ordering]] tables, in order; the paths of the files they name are added to ``files``."""
+    if key is None:
+        return ()
+    orderings: list[Ordering] = []
+    for number, item in enumerate(key.items("a list of tables, each headed [[ordering]]"), start=1):
+        table = item.table(ORDERING_KEYS)
+        name = table["name"].text("a name in one line") if "name" in table else ""
+        if "file" in table:
+            ordering = _from_file(item, table, crystal, folder, files, number)
+            name = name or Path(table["file"].value).stem
+        else:
+            for other in ("block", "domain"):
+                if other in table:
+                    raise table[other].refuse("goes only with `file`, which this ordering has not.")
+            name = name or f"ordering {number}"
+            ordering = _from_pattern(item, table, crystal, sizes)
+        _refuse_taken(item, table, name, [other.name for other in orderings])
+        orderings.append(dataclasses.replace(ordering, name=name))
+    return tuple(orderings)
+
+
+def _refuse_taken(item: Key, table: dict[str, Key], name: str, taken: list[str]) -> None:
+    if name not in taken:
+        return
+    where = f"ordering[{taken.index(name) + 1}]"
+    if "name" in table:
+        raise table["name"].expected(f"a name of its own ({where} has this one)")
+    raise item.refuse(f"without `name` it is called {name!r}, as {where} is already. Give it a name.")
+
+
+def _from_file(
+    item: Key, table: dict[str, Key], crystal: Crystal, folder: Path, files: dict[str, Path], number: int
+) -> Ordering:
+    from latticedip.files.read import read_ordering
+
+    for other in ("k", *SIGN_KEYS, *WAVE_KEYS):
+        if other in table:
+            raise table[other].refuse("does not go with `file`: the file states its own k and moments. Leave one out.")
+    path = existing_file(table["file"], folder, "the path of a structure file with moments")
+    block = read_block(table)
+    domain = table["domain"].whole("the number of a domain, from 1") if "domain" in table else None
+    with table["block" if block is not None else "file"].located():
+        ordering = read_ordering(path, block=block)
+    files[f"ordering {number}"] = path
+    with table["domain" if domain is not None else "file"].located():
+        return place_in_frame(ordering, crystal, domain)
+
+
+def read_block(table: dict[str, Key]) -> str | int | None:
+    """The `block` of a file that holds several structures: a name, or the number of an image."""
+    if "block" not in table:
+        return None
+    key = table["block"]
+    if isinstance(key.value, int):
+        return key.whole("the number of a structure in the file, from 1")
+    return key.text("the name of a data block, or the number of a structure in the file")
+
+
+def existing_file(key: Key, folder: Path, what: str) -> Path:
+    """The path a key names, relative to the folder of the study; StudyError where no file is there."""
+    path = folder / key.text(what)
+    try:
+        kind = path.stat().st_mode
+    except OSError as error:
+        reason = "there is no file" if isinstance(error, FileNotFoundError) else str(error.strerror)
+        raise key.expected(f"{what} ({reason}: {path})") from None
+    if stat.S_ISDIR(kind):
+        raise key.expected(f"{what} ({path} is a folder)")
+    return path
+
+
+def _from_pattern(item: Key, table: dict[str, Key], crystal: Crystal, sizes: Sizes) -> Ordering:
+    signs, waves = [[name for name in names if name in table] for names in (SIGN_KEYS, WAVE_KEYS)]
+    if signs and waves:
+        raise item.refuse(f"`{signs[0]}` and `{waves[0]}` describe the moments in two ways. Leave one out.")
+    if not signs and "cosine" not in table and "sine" not in table:
+        raise item.refuse("says nothing of its moments, expected one of `along`, `cosine`, `sine` or `file`.")
+    if signs and "along" not in table:
+        raise item.missing("along", _DIRECTION)
+    if "k" not in table:
+        raise item.missing("k", _K)
+    k = table["k"].numbers(3, _K, fractions=True)
+    with table["k"].located():
+        setting = Setting.of(crystal, k)
+    components = _sign_components(table, setting, sizes) if signs else _wave_components(table, setting)
+    with item.located():
+        return setting.finish(components, notes=_k_notes(setting.k))
+
+
+def _k_notes(k: FloatArray) -> list[str]:
+    """A remark on a coordinate that looks like a third or a sixth cut short, which is another vector."""
+    for x in k:
+        nearest = round(6 * x) / 6
+        if 1e-9 < abs(x - nearest) < 1e-3:
+            return [
+                f"k = ({', '.join(f'{float(y):.10g}' for y in k)}) is taken as written; a third or a sixth is given "
+                'exactly by a string such as "1/3"'
+            ]
+    return []
+
+
+def _sign_components(table: dict[str, Key], setting: Setting, sizes: Sizes) -> ComplexArray:
+    crystal = setting.crystal
+    sized = np.flatnonzero(~np.isnan(sizes.of_site))
+    if len(sized) == 0:
+        raise table["along"].refuse("no site has a moment size, expected a table [moments], such as Mn = 4.6.")
+    signs = np.zeros(crystal.n_sites, dtype=complex)
+    listed = np.zeros(crystal.n_sites, dtype=bool)
+    if "signs" in table:
+
+        def one(key: Key, sites: tuple[int, ...]) -> ComplexArray:
+            for i in sites:
+                if np.isnan(sizes.of_site[i]):
+                    label = crystal.labels[i]
+                    raise key.refuse(f"{label} has no moment size, expected it or its element in [moments].")
+            return _read_sign_list(key, setting, sites)
+
+        listed = _fill(table["signs"], crystal, signs, one)
+    rest = tuple(i for i in site_order(crystal.positions) if i in sized and not listed[i])
+    if rest:
+        signs[list(rest)] = setting.spread(rest, np.ones(setting.counts(rest)[0]))
+    directions = _directions(table["along"], crystal, signs != 0)
+    return np.asarray(np.nan_to_num(sizes.of_site)[:, None] * signs[:, None] * directions)
+
+
+def _read_sign_list(key: Key, setting: Setting, sites: tuple[int, ...]) -> ComplexArray:
+    primitive, whole = setting.counts(sites)
+    what = f"a string of {expected_entries(primitive, whole)} of the signs +, -, 0"
+    if not isinstance(key.value, str):
+        raise key.expected(what)
+    with key.located():
+        entries = read_signs(key.value)
+    if len(entries) not in (primitive, whole):
+        raise key.expected(what)
+    return setting.spread(sites, entries)
+
+
+def _directions(key: Key, crystal: Crystal, used: np.ndarray) -> FloatArray:
+    """Shape (n_sites, 3) float. Cartesian unit vectors, from one direction or from a table by label or element."""
+    directions = np.zeros((crystal.n_sites, 3))
+    if isinstance(key.value, list):
+        directions[:] = unit_direction(crystal, key.direction(_DIRECTION))
+        return directions
+    if not isinstance(key.value, dict):
+        raise key.expected(f"{_DIRECTION}, or a table of them by site label or element")
+
+    def one(child: Key, sites: tuple[int, ...]) -> FloatArray:
+        return np.tile(unit_direction(crystal, child.direction(_DIRECTION)), (len(sites), 1))
+
+    given = _fill(key, crystal, directions, one)
+    for i in np.flatnonzero(used & ~given):
+        raise key.missing(crystal.labels[i], f"{_DIRECTION} (it has a size in [moments] and a sign)")
+    return directions
+
+
+def _wave_components(table: dict[str, Key], setting: Setting) -> ComplexArray:
+    crystal = setting.crystal
+    follow = "phase" not in table or table["phase"].one_of(("position", "cell")) == "position"
+    components = np.zeros((crystal.n_sites, 3), dtype=complex)
+    for name, factor in (("cosine", 1.0), ("sine", 1j)):
+        if name not in table:
+            continue
+        part = np.zeros_like(components)
+
+        def one(key: Key, sites: tuple[int, ...], factor: complex = factor) -> ComplexArray:
+            entries = factor * _read_triples(key, setting, sites)
+            if follow:
+                # A list for the primitive cell holds amplitudes, which centring leaves as they are; the position
+                # carries the whole phase.
+                still = dataclasses.replace(setting, k=np.zeros(3))
+                values = still.spread(sites, entries) * setting.follow_positions(sites)[:, None]
+            else:
+                values = setting.spread(sites, entries)
+            if factor == 1j and setting.self_conjugate and _has_no_real_part(values):
+                raise key.refuse(
+                    f"at k = {triple(setting.k)}, where k and −k are the same vector, a sine amplitude has no effect "
+                    "on these atoms. Leave it out, or give it as cosine."
+                )
+            return np.asarray(values @ crystal.axes_unit)
+
+        _fill(table[name], crystal, part, one)
+        components += part
+    return components
+
+
+def _has_no_real_part(values: ComplexArray) -> bool:
+    size = float(np.abs(values).max())
+    return size > 0 and float(np.abs(values.real).max()) <= VANISHING_FRACTION * size
+
+
+def _read_triples(key: Key, setting: Setting, sites: tuple[int, ...]) -> FloatArray:
+    """Shape (m, 3) float: one triple for every atom alike, or a list of them."""
+    primitive, whole = setting.counts(sites)
+    what = f"a triple of µB along a, b, c, or a list of {expected_entries(primitive, whole)} such triples"
+    items = key.items(what)
+    if items and all(isinstance(item.value, list) for item in items):
+        if len(items) not in (primitive, whole):
+            raise key.expected(what)
+        return np.array([item.numbers(3, "a triple of µB along a, b, c") for item in items])
+    return np.tile(as_floats("triple", key.numbers(3, what), (3,)), (primitive, 1))
+
+
+def _fill(
+    key: Key, crystal: Crystal, into: np.ndarray, one: Callable[[Key, tuple[int, ...]], np.ndarray]
+) -> np.ndarray:
+    """Read a table by site label or element into an array over all sites; returns which sites it covers."""
+    by_whom: dict[int, str] = {}
+    for name, child in key.table(header="a table by site label or element, such as { Mn1 = ... }").items():
+        with child.located():
+            sites = crystal.find(name)
+        for i in sites:
+            if i in by_whom:
+                raise child.refuse(f"covers {crystal.labels[i]}, which {by_whom[i]} covers already. Leave one out.")
+            by_whom[i] = name
+        into[list(sites)] = one(child, sites)
+    return np.isin(np.arange(crystal.n_sites), list(by_whom))
