@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import sys
+
 import numpy as np
 import pytest
 
@@ -21,7 +23,7 @@ def worst():
     ratios: dict[tuple[str, float], float] = {}
     yield ratios
     for (kind, tol), ratio in sorted(ratios.items()):
-        print(f"\nlargest error / bound, k {kind:16s} tol {tol:.0e}: {ratio:.3f}", end="")
+        sys.stdout.write(f"\nlargest error / bound, k {kind:16s} tol {tol:.0e}: {ratio:.3f}")
 
 
 @pytest.mark.parametrize("seed", SEEDS)
@@ -58,7 +60,9 @@ def test_many_targets_in_one_call():
         assert np.abs(found[i] - exact).max() <= 1e-10 * max(1.0, np.abs(exact).max())
 
 
-@pytest.mark.parametrize(("k", "is_real"), [((0, 0, 0), True), ((0.5, 0, 0.5), True), ((1, -2, 0), True), ((0.1, 0, 0), False)])
+@pytest.mark.parametrize(
+    ("k", "is_real"), [((0, 0, 0), True), ((0.5, 0, 0.5), True), ((1, -2, 0), True), ((0.1, 0, 0), False)]
+)
 def test_real_where_k_is_its_own_opposite(k, is_real):
     found = ld.dipole_tensor(5 * np.eye(3), [[1.0, 0.4, 0.2]], k)
     assert found.shape == (1, 3, 3)

@@ -143,6 +143,10 @@ MAGCIF = {
         change(("\nFe1 0 0 2 2", "\nFe1 0 0 NaN 2")),
         "bad.mcif: _atom_site_moment.crystalaxis_z is 'NaN' in row 2, which is not a number.",
     ),
+    "moment beyond reason": (
+        change(("\nFe1 0 0 2 2", "\nFe1 0 0 1e30 .")),
+        "bad.mcif: the moment of Fe1 is given as [0.0, 0.0, 1e+30], beyond 1e+06 µB.",
+    ),
     "moment in part": (
         change(("\nFe1 0 0 2 2", "\nFe1 0 ? 2 2")),
         "bad.mcif: _atom_site_moment.crystalaxis_y of Fe1 is '?' although its other components are given.",
@@ -262,6 +266,12 @@ MAGCIF = {
         "bad.mcif: this is a modulated structure in superspace (_cell_modulation_dimension), which is "
         "not read. Give a commensurate description in the magnetic cell, or the average structure as "
         "[crystal] and the modulation as k, cosine and sine in a study.",
+    ),
+    "Fourier moments alone": (
+        GOOD[: GOOD.index("loop_\n_atom_site_moment")] + "loop_\n_atom_site_moment_Fourier_param.cos\n1.0\n",
+        "bad.mcif: this is a modulated structure in superspace (_atom_site_moment_Fourier_param.cos), "
+        "which is not read. Give a commensurate description in the magnetic cell, or the average "
+        "structure as [crystal] and the modulation as k, cosine and sine in a study.",
     ),
     "Fourier moments": (
         GOOD + "loop_\n_atom_site_moment_Fourier_param_cos\n1.0\n",

@@ -152,7 +152,7 @@ def test_stated_multiplicity_is_compared(read):
 @settings(max_examples=40, deadline=None)
 @given(
     st.sampled_from(["P 63/m m c", "R -3 m", "P -3 c 1"]),
-    st.tuples(*[st.sampled_from([0.0, 0.1234, 0.25, 1 / 3, 0.5, 2 / 3, 0.57, 0.875])] * 3),
+    st.tuples(*[st.sampled_from([0.0, 0.11, 0.25, 1 / 3, 0.5, 2 / 3, 0.58, 0.875])] * 3),
     st.integers(0, 10_000),
 )
 def test_any_image_may_represent_its_orbit(symbol, position, seed):
@@ -161,7 +161,7 @@ def test_any_image_may_represent_its_orbit(symbol, position, seed):
 
     def expand(x):
         symmetry = f"_space_group_name_H-M_alt '{symbol}'"
-        text = cif(f"Mn1 {x[0]:.17g} {x[1]:.17g} {x[2]:.17g}", symmetry, c=7, gamma=120)
+        text = cif(f"Mn1 {x[0]:.17g} {x[1]:.17g} {x[2]:.17g}", symmetry, a=8, b=8, c=14, gamma=120)
         return read_structure(parse_blocks(text.encode(), "x.cif")[0], "x").crystal
 
     first = expand(position)

@@ -99,7 +99,10 @@ def test_reduced_basis_holds_the_shortest_vectors(entries, seed):
 # By the stated transformation
 
 
-def doubled(moments_along=(4.5, 0, 0), parent=ParentTransform(np.diag([1, 1, 2.0]), np.array([0, 0, 0.5])), rotation=None):
+DOUBLING = ParentTransform(np.diag([1, 1, 2.0]), np.array([0, 0, 0.5]))
+
+
+def doubled(moments_along=(4.5, 0, 0), parent=DOUBLING, rotation=None):
     """Layers of opposite moments in a cell doubled along c, its origin at z = ½ of the parent."""
     P, p = np.diag([1, 1, 2]), (0, 0, 0.5)
     child = child_of(TETRAGONAL, P, p, rotation=rotation)
@@ -273,10 +276,12 @@ def test_hexagonal_to_orthohexagonal():
     placed = place_in_frame(ordering, HEXAGONAL)
     assert "domain 1 of 3 (the smallest rotation, 0°" in placed.notes[-1]
     np.testing.assert_allclose(placed.reference.transform.P, P)
-    stated = place_in_frame(dataclasses.replace(ordering, parent=ParentTransform(P.astype(float), np.array(p))), HEXAGONAL)
+    parent = ParentTransform(P.astype(float), np.array(p))
+    stated = place_in_frame(dataclasses.replace(ordering, parent=parent), HEXAGONAL)
     assert stated.reference.how == "by the parent transformation that its file states (a,a+2b,c;0,0,1/2)"
     # (1/3, 2/3, 0.1): solving x = u + v, y = 2v gives v = 1/3, u = 0, z = 0.1 − ½; then v + ½ and u ± ½ for the next b.
-    np.testing.assert_allclose(stated.reference.carry([1 / 3, 2 / 3, 0.1]), [[0, 1 / 3, 0.6], [0.5, 5 / 6, 0.6]], atol=1e-12)
+    carried = stated.reference.carry([1 / 3, 2 / 3, 0.1])
+    np.testing.assert_allclose(carried, [[0, 1 / 3, 0.6], [0.5, 5 / 6, 0.6]], atol=1e-12)
 
 
 def test_a_small_strain_is_taken_and_told():
@@ -310,8 +315,8 @@ def test_a_bare_sublattice_that_fits_in_unrelated_ways_is_refused():
     with pytest.raises(InputError) as caught:
         place_in_frame(bare, parent)
     assert str(caught.value) == (
-        "the file lists only Mn, which can be placed in [crystal] in 6 ways that its symmetry does not relate. List all "
-        "atoms in the file, or name a placement: domain = 1 to 6."
+        "the file lists only Mn, which can be placed in [crystal] in 6 ways that its symmetry does not relate. List "
+        "all atoms in the file, or name a placement: domain = 1 to 6."
     )
     np.testing.assert_allclose(place_in_frame(bare, parent, 1).components[0].real, [[0, 0, 1]])
 
@@ -345,7 +350,8 @@ def replaced(crystal, **changes):
 def test_what_does_not_match_is_refused(child, message):
     with pytest.raises(InputError) as caught:
         place_in_frame(Ordering(child, np.ones((child.n_sites, 3))), TETRAGONAL)
-    assert str(caught.value) == f"the structure of this ordering does not match that of [crystal], its parent: {message}"
+    start = "the structure of this ordering does not match that of [crystal], its parent: "
+    assert str(caught.value) == start + message
 
 
 def test_layers_match_in_the_same_cell_alone():

@@ -124,7 +124,8 @@ def test_columns_of_P_are_the_child_vectors():
     text = minimal(extra="_parent_space_group.child_transform_Pp_abc 'a-b,a+b,c;1/4,0,0'")
     parent = read_text(text).parent
     # One step along the child's a is one along the parent's a and one back along its b.
-    assert parent.P @ [1, 0, 0] == pytest.approx([1, -1, 0])
+    step = parent.P @ [1, 0, 0]
+    assert step == pytest.approx([1, -1, 0])
     assert parent.P @ [0, 1, 0] + parent.p == pytest.approx([1.25, 1, 0])
 
 

@@ -31,7 +31,8 @@ def test_every_section_is_read(chains):
     assert chains.title == "Which way do the chains order?"
     assert chains.path == DATA / "chains.toml"
     assert chains.crystal.n_sites == 7
-    assert [ordering.name for ordering in chains.orderings] == ["antiparallel layers", "ordering 2", "cycloid", "doubled"]
+    names = ["antiparallel layers", "ordering 2", "cycloid", "doubled"]
+    assert [ordering.name for ordering in chains.orderings] == names
     assert [probe.name for probe in chains.probes] == ["muon A", "19F at F1"]
     assert chains.moments == {"Mn": 4.6}
     assert chains.files == {

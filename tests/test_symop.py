@@ -56,7 +56,7 @@ def test_bad_operations_are_refused(text, message):
 
 
 def test_time_reversal_is_refused_where_it_has_no_place():
-    with pytest.raises(InputError, match="^it has 4 parts, not 3$"):
+    with pytest.raises(InputError, match=r"^it has 4 parts, not 3$"):
         parse_operation("x,y,z,+1", time=False)
 
 
@@ -130,7 +130,7 @@ def test_vectors_that_do_not_parse_are_refused():
 
 def test_moment_images_are_read():
     assert parse_moment_image("mx-my,-my,-mz").tolist() == [[1, -1, 0], [0, -1, 0], [0, 0, -1]]
-    with pytest.raises(InputError, match="^a moment has no translation$"):
+    with pytest.raises(InputError, match=r"^a moment has no translation$"):
         parse_moment_image("mx+1/2,my,mz")
 
 

@@ -42,7 +42,7 @@ ROWS = [
 def test_a_table_that_fits() -> None:
     assert table(COLUMNS, ROWS, width=80) == "\n".join(
         [
-            "                                        above",
+            "                                      above",
             "rank  ordering              energy   lowest  position",
             "                           µeV/ion  µeV/ion  own cell",
             "----  -------------------  -------  -------  ------------",
@@ -53,14 +53,14 @@ def test_a_table_that_fits() -> None:
 
 
 def test_words_wrap_and_numbers_do_not() -> None:
-    assert table(COLUMNS[:3], ROWS and [row[:3] for row in ROWS], width=28) == "\n".join(
+    assert table(COLUMNS[:3], [row[:3] for row in ROWS], width=28) == "\n".join(
         [
-            "rank  ordering       energy",
-            "                    µeV/ion",
-            "----  ------------  -------",
-            "   1  antiparallel  -12.500",
+            "rank  ordering        energy",
+            "                     µeV/ion",
+            "----  -------------  -------",
+            "   1  antiparallel   -12.500",
             "      chains",
-            "   2  up              3.250",
+            "   2  up               3.250",
         ]
     )
 

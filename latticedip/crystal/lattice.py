@@ -160,7 +160,7 @@ def translation_classes(crystal: Crystal, translations: FloatArray) -> tuple[np.
 
 
 def _images(crystal: Crystal, translations: FloatArray) -> np.ndarray:
-    """Shape (n_translations, n_sites) int. The atom of the same element that each translation carries each atom onto."""
+    """Shape (n_translations, n_sites) int. The atom of its element that each translation carries each atom onto."""
     targets = np.tile(np.arange(crystal.n_sites), (len(translations), 1))
     if len(translations) == 1:
         return targets
@@ -168,7 +168,7 @@ def _images(crystal: Crystal, translations: FloatArray) -> np.ndarray:
         alike = np.array([i for i, other in enumerate(crystal.symbols) if other == symbol])
         home = crystal.positions[alike]
         # Nearness in fractional coordinates only proposes atoms; the distance in Å decides among them.
-        tree = cKDTree(_into_box(home), boxsize=1.0)
+        tree = cKDTree(_into_box(home), boxsize=[1.0, 1.0, 1.0])
         for row, shift in enumerate(translations):
             moved = home + shift
             near = tree.query(_into_box(moved), k=list(range(1, min(4, len(alike)) + 1)))[1]
@@ -180,8 +180,8 @@ def _images(crystal: Crystal, translations: FloatArray) -> np.ndarray:
                 site = int(alike[np.argmax(closest)])
                 words = ", ".join(f"{x:.4g}" for x in shift)
                 raise InputError(
-                    f"the centring translation ({words}) of the crystal maps atom {site + 1} ({crystal.labels[site]}) onto "
-                    "no atom: the symmetry operations stated are not those of this crystal."
+                    f"the centring translation ({words}) of the crystal maps atom {site + 1} ({crystal.labels[site]}) "
+                    "onto no atom: the symmetry operations stated are not those of this crystal."
                 )
             targets[row, alike] = alike[near[np.arange(len(alike)), best]]
     return targets

@@ -64,9 +64,9 @@ def read_magnetic_ordering(block: Block, name: str) -> Ordering:
     Raises FileError naming file, item and value where something is missing, contradicts itself, or has no model
     here (superspace, the OG setting).
     """
+    structure = _structure(block, name)
     if not has_moments(block):
         raise block.error("it lists no moments (_atom_site_moment.crystalaxis_x and sisters).")
-    structure = _structure(block, name)
     cell = structure.crystal.cell
     moments = read_moments(block, cell, [site.label for site in structure.sites])
     notes: list[str] = []

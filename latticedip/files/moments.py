@@ -24,6 +24,8 @@ SYSTEMS = {
 }
 #: A stated magnitude, or a second system, may differ from the components by this much (µB) or fraction.
 AGREE_MUB, AGREE_FRACTION = 0.05, 0.02
+#: Larger numbers (µB, degrees) are slips.
+LARGEST = 1e6
 
 
 @dataclass(frozen=True, eq=False)
@@ -152,6 +154,8 @@ def _to_crystal_axes(
 ) -> SiteMoment:
     """Components of one system as crystal-axis components; uncertainties propagated as uncorrelated ones."""
     numbers, su = values
+    if np.nanmax(np.abs(np.concatenate([numbers, su]))) > LARGEST:
+        raise block.error(f"the moment of {label} is given as {numbers.tolist()}, beyond {LARGEST:g} µB.")
     if system == "crystalaxis":
         return SiteMoment(numbers, su)
     from_cartesian: FloatArray = np.asarray(np.linalg.inv(axes).T, dtype=np.float64)

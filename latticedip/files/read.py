@@ -52,7 +52,7 @@ def read_crystal(path: str | os.PathLike[str], *, block: str | int | None = None
         if is_magnetic(chosen):
             return read_magnetic_crystal(chosen, _title(name))
         return read_structure(chosen, _title(name)).crystal
-    return _with_name(name, lambda: _noted(Crystal.from_ase(_read_ase(name, block))))
+    return _crystal_of(name, _read_ase(name, block))
 
 
 def read_ordering(path: str | os.PathLike[str], *, block: str | int | None = None) -> Ordering:
@@ -72,8 +72,7 @@ def read_ordering(path: str | os.PathLike[str], *, block: str | int | None = Non
             # A structure in superspace carries its moments in items of its own; it is refused under its own name.
             _structure_only(chosen)
         return read_magnetic_ordering(chosen, _title(name))
-    ordering = _with_name(name, lambda: Ordering.from_ase(_read_ase(name, block), _title(name)))
-    return replace(ordering, crystal=_noted(ordering.crystal))
+    return _ordering_of(name, _read_ase(name, block))
 
 
 def read_file(path: str | os.PathLike[str], *, block: str | int | None = None) -> Crystal | Ordering:
@@ -89,8 +88,8 @@ def read_file(path: str | os.PathLike[str], *, block: str | int | None = None) -
     atoms = _read_ase(name, block)
     results = getattr(atoms.calc, "results", {})
     if atoms.get_initial_magnetic_moments().any() or "magmoms" in results:
-        return _with_name(name, lambda: Ordering.from_ase(atoms, _title(name)))
-    return _with_name(name, lambda: Crystal.from_ase(atoms))
+        return _ordering_of(name, atoms)
+    return _crystal_of(name, atoms)
 
 
 def _structure_only(block: Block) -> None:
@@ -170,6 +169,15 @@ def _read_ase(name: str, block: str | int | None) -> Atoms:
     if not found:
         raise FileError(f"{name}: ASE finds no structure in it.")
     return found[_image_number(name, len(found), block)]
+
+
+def _crystal_of(name: str, atoms: Atoms) -> Crystal:
+    return _with_name(name, lambda: _noted(Crystal.from_ase(atoms)))
+
+
+def _ordering_of(name: str, atoms: Atoms) -> Ordering:
+    ordering = _with_name(name, lambda: Ordering.from_ase(atoms, _title(name)))
+    return replace(ordering, crystal=_noted(ordering.crystal))
 
 
 def _noted(crystal: Crystal) -> Crystal:

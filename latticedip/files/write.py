@@ -52,8 +52,11 @@ def write_ordering(ordering: Ordering, path: str | os.PathLike[str], *, overwrit
     they are known; it fixes lengths and angles, so that a turned cell comes back in the standard orientation.
     The extended XYZ keeps the cell vectors, labels, occupancies and Cartesian moments, but no uncertainties.
 
-    path: its suffix chooses the format. The file appears whole or not at all. Raises FileError where the suffix is unknown, the file exists (unless
-    overwrite), k is incommensurate, the supercell is too large, or the format cannot hold the ordering.
+    path: its suffix chooses the format. overwrite: whether an existing file is replaced. The file appears whole
+    or not at all.
+
+    Raises FileError where the suffix is unknown, the file exists (unless overwrite), k is incommensurate, the
+    supercell is too large, or the format cannot hold the ordering.
     """
     name = os.fspath(path)
     suffix = Path(name).suffix.lower()
@@ -181,23 +184,22 @@ def _as_mcif(ordering: Ordering, name: str) -> str:
                 *(map(_digits, magnetic.moment_su[i]) if has_su else []),
             ]
             for i, label in enumerate(names)
-            if magnetic.magnetic[i]
+            if magnetic.magnetic[i] or not magnetic.magnetic.any()
         ],
-        empty=["."] * (7 if has_su else 4),
     )
     return "\n".join(lines) + "\n"
 
 
-def _loop(tags: list[str], rows: Sequence[list[str]], empty: list[str] | None = None) -> list[str]:
-    return ["loop_", *tags, *(" ".join(row) for row in rows or [empty or []])]
+def _loop(tags: list[str], rows: Sequence[list[str]]) -> list[str]:
+    return ["loop_", *tags, *(" ".join(row) for row in rows)]
 
 
 def _as_xyz(ordering: Ordering, name: str) -> str:
     magnetic = _magnetic_cell(ordering, name)
     for label in magnetic.labels:
-        if not re.fullmatch(r"[^\s\"'=]+", label):
+        if not re.fullmatch(r"\S+", label):
             raise FileError(
-                f"{name}: the label {label!r} holds a blank, a quote or =, which extended XYZ cannot keep. "
+                f"{name}: the label {label!r} is empty or holds a blank, which extended XYZ cannot keep. "
                 "Write it as .mcif."
             )
     lattice = " ".join(_digits(value) for value in magnetic.cell.ravel())

@@ -14,6 +14,14 @@ from latticedip.crystal.model import OVERLAP_A, SAME_PLACE_A, Crystal
 from latticedip.crystal.neighbours import close_pairs
 from latticedip.errors import InputError, LimitError
 from latticedip.ordering.model import is_self_conjugate, snap_k
+from latticedip.physics.candidates import (
+    ImaginaryPartError,
+    QuadraticForm,
+    candidate_array,
+    energies_in_blocks,
+    sign_array,
+    sign_quadratics,
+)
 from latticedip.sums.bulk import lattice_sum
 from latticedip.units import EV_PER_MUB_T
 
@@ -53,23 +61,81 @@ class Coupling:
         """Shape (n_candidates,) float in eV per cell. Dipolar energy at N = 0, averaged over cells for k ≠ 0.
 
         moments: Shape (n_candidates, n_sites, 3), µB, Cartesian, of the ions (occupancy is applied here); complex
-        components at a general k, real ones where k and −k are the same vector.
+        components at a general k, real ones where k and −k are the same vector. Taken block by block, never copied whole.
 
         Raises InputError for other shapes, values that are not finite, imaginary parts where they mean nothing, or
         two magnetic sites between 1e-3 and 0.1 Å apart.
         """
-        parts = as_complex("moments", moments, (None, self.crystal.n_sites, 3))
-        own_opposite = bool(is_self_conjugate(self.k[None])[0])
-        if own_opposite and np.abs(parts.imag).max(initial=0.0) > 1e-9 * max(1.0, np.abs(parts).max(initial=0.0)):
-            raise InputError(f"moments must be real at k = {self.k.tolist()}, where k and −k are the same vector.")
-        refuse_split_ions(self.crystal, np.flatnonzero(np.any(parts != 0, axis=(0, 2))))
-        mean = (parts * self.crystal.occupancies[:, None]).reshape(len(parts), -1)
         n = self.crystal.n_sites
-        matrix = self.tensors.transpose(0, 2, 1, 3).reshape(3 * n, 3 * n)
-        if own_opposite:
-            real = mean.real
-            return np.asarray(-0.5 * EV_PER_MUB_T * np.einsum("ci,ci->c", real, real @ matrix.T))
-        return np.asarray(-0.25 * EV_PER_MUB_T * np.einsum("ci,ci->c", mean.conj(), mean @ matrix.T).real)
+        raw = candidate_array(moments, n)
+        if np.any(self.crystal.occupancies != 1):
+            refuse_split_ions(self.crystal, np.flatnonzero(np.any(raw != 0, axis=(0, 2))))
+        real, general = self._forms(raw.dtype.kind == "c")
+        try:
+            return energies_in_blocks(raw, real, general)
+        except ImaginaryPartError:
+            raise InputError(
+                f"moments must be real at k = {self.k.tolist()}, where k and −k are the same vector."
+            ) from None
+
+    def sign_energies(self, signs: Any, axes: Any) -> FloatArray:
+        """Shape (n_candidates,) float in eV per cell. As `energies`, for moments signs[c, i] · axes[i].
+
+        signs: Shape (n_candidates, n_sites), +1 or −1; int8 is taken as it is. axes: Shape (n_sites, 3) or (3,), µB,
+        Cartesian, of the ions; complex at a general k. A site with a zero axis carries no moment.
+
+        Raises InputError for other shapes, other signs, values that are not finite, and as `energies` does.
+        """
+        n = self.crystal.n_sites
+        flat = np.ndim(axes) == 1
+        vectors = np.broadcast_to(as_complex("axes", axes, (3,) if flat else (n, 3)), (n, 3))
+        pattern = sign_array(signs, n)
+        if self.is_self_conjugate and np.abs(vectors.imag).max(initial=0.0) > 0:
+            raise InputError(f"axes must be real at k = {self.k.tolist()}, where k and −k are the same vector.")
+        refuse_split_ions(self.crystal, np.flatnonzero(np.any(vectors != 0, axis=1)))
+        mean = vectors * self.crystal.occupancies[:, None]
+        form = np.einsum("ia,ijab,jb->ij", mean.conj(), self.tensors, mean, optimize=True).real
+        return sign_quadratics(pattern, self._scale * 0.5 * (form + form.T))
+
+    def sign_forms(self, signs: Any, sizes: Any) -> FloatArray:
+        """Shape (n_candidates, 3, 3) float in eV per cell. Q of E(û) = û·Q·û, the energy of moments s_i sizes_i û.
+
+        signs: as in `sign_energies`. sizes: Shape (n_sites,) float, µB, of the ions. The lowest eigenvalue of Q is the
+        energy of the pattern along its best axis, which is the eigenvector.
+
+        Raises InputError as `sign_energies` does.
+        """
+        n = self.crystal.n_sites
+        lengths = as_floats("sizes", sizes, (n,))
+        pattern = sign_array(signs, n)
+        refuse_split_ions(self.crystal, np.flatnonzero(lengths))
+        mean = lengths * self.crystal.occupancies
+        out = np.empty((len(pattern), 3, 3))
+        for a in range(3):
+            for b in range(a, 3):
+                # The tensors are symmetric in a and b, and Hermitian in i and j: the real part is symmetric.
+                form = self._scale * mean[:, None] * self.tensors[:, :, a, b].real * mean[None, :]
+                out[:, a, b] = out[:, b, a] = sign_quadratics(pattern, 0.5 * (form + form.T))
+        return out
+
+    @property
+    def is_self_conjugate(self) -> bool:
+        """True where k and −k are the same vector, so that only real components have a meaning."""
+        return bool(is_self_conjugate(self.k[None])[0])
+
+    @property
+    def _scale(self) -> float:
+        """−½ for real components, −¼ for a Fourier pair, in eV per µB T."""
+        return (-0.5 if self.is_self_conjugate else -0.25) * EV_PER_MUB_T
+
+    def _forms(self, with_general: bool) -> tuple[QuadraticForm, QuadraticForm | None]:
+        """The energy as a form of real moments and, at a general k, of complex ones; occupancies included."""
+        n = self.crystal.n_sites
+        weights = np.repeat(self.crystal.occupancies, 3)
+        matrix = self.tensors.transpose(0, 2, 1, 3).reshape(3 * n, 3 * n) * (self._scale * np.outer(weights, weights))
+        matrix = 0.5 * (matrix + matrix.conj().T)
+        real = QuadraticForm(np.ascontiguousarray(matrix.real))
+        return real, QuadraticForm(matrix) if with_general and not self.is_self_conjugate else None
 
 
 def require_bulk(crystal: Crystal) -> None:

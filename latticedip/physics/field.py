@@ -255,10 +255,11 @@ def _snap(ordering: Ordering, rows: list[_Row]) -> tuple[FloatArray, np.ndarray]
             apart = np.linalg.norm((gap[i] - whole[i] - (gap[i, site] - whole[i, site])) @ lattice.cell, axis=1)
             split = np.flatnonzero(ordering.is_magnetic & (apart > SAME_PLACE_A) & (apart < OVERLAP_A))
             if len(split):
+                other = int(split[0])
                 raise InputError(
-                    f"{rows[row].name} sits on atom {crystal.labels[site]} at {_text(placed[row])}, {apart[split[0]]:.4f} "
-                    f"Å from the magnetic atom {crystal.labels[split[0]]}: only one of them is there at a time. Give "
-                    "both the same position."
+                    f"{rows[row].name} sits on atom {crystal.labels[site]} at {_text(placed[row])}, "
+                    f"{apart[other]:.4f} Å from the magnetic atom {crystal.labels[other]}: only one of them is there "
+                    "at a time. Give both the same position."
                 )
     return placed, sites
 

@@ -6,7 +6,6 @@ import math
 import os
 import shutil
 import sys
-import textwrap
 import unicodedata
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
@@ -142,11 +141,35 @@ def _set(
 
 
 def _wrapped(text: str, width: int) -> list[str]:
+    """Lines no wider than ``width`` on the screen, broken at blanks, and inside a word only where it is too long."""
     lines: list[str] = []
     for line in text.split("\n"):
-        fits = text_width(line) <= width
-        lines.extend([line] if fits else textwrap.wrap(line, max(width, 1), break_on_hyphens=False))
+        if text_width(line) <= width:
+            lines.append(line)
+            continue
+        current = ""
+        for word in line.split():
+            while text_width(word) > width:
+                room = width - (text_width(current) + 1 if current else 0)
+                head = _head(word, room)
+                if not head:
+                    lines, current = [*lines, current], ""
+                    continue
+                lines, current, word = [*lines, f"{current} {head}".strip()], "", word[len(head) :]
+            joined = f"{current} {word}" if current else word
+            if text_width(joined) > width:
+                lines, joined = [*lines, current], word
+            current = joined
+        lines += [current] if current else []
     return lines or [""]
+
+
+def _head(word: str, width: int) -> str:
+    """The longest beginning of a word that fits; one character at least where there is any room."""
+    for end in range(len(word), 1, -1):
+        if text_width(word[:end]) <= width:
+            return word[:end]
+    return word[:1] if width > 0 else ""
 
 
 def _line(
@@ -172,17 +195,12 @@ def pairs(items: Iterable[tuple[str, str]], *, width: int | None = None, indent:
     return "\n".join(lines)
 
 
-def paragraph(text: str, *, width: int | None = None, indent: int = 0, first: str = "") -> str:
+def paragraph(text: str, *, width: int | None = None, first: str = "") -> str:
     """Return a text wrapped to the screen; ``first`` leads the first line, the others are indented alike."""
     width = screen_width() if width is None else width
-    hang = " " * (indent + text_width(first))
-    return textwrap.fill(
-        clean(text),
-        width,
-        initial_indent=" " * indent + first,
-        subsequent_indent=hang,
-        break_on_hyphens=False,
-    )
+    lead = text_width(first)
+    lines = _wrapped(clean(text), max(width - lead, NARROWEST))
+    return "\n".join((first if i == 0 else " " * lead) + line for i, line in enumerate(lines))
 
 
 def bullets(sentences: Iterable[str], *, width: int | None = None) -> str:

@@ -35,6 +35,8 @@ CELLS_ALONG = 8
 SHELLS = 3
 #: Atoms closer than this (Å) are warned of; with hydrogen the second.
 SHORT_A, SHORT_HYDROGEN_A = 1.0, 0.6
+#: Pairs of atoms warned of one by one.
+MOST_WARNINGS = 10
 #: A probe closer than this (Å) to an atom is warned of.
 SHORT_PROBE_A = 0.8
 #: Neighbours are looked for up to this distance (Å).
@@ -146,6 +148,8 @@ def _crystal_warnings(crystal: Crystal) -> list[str]:
                 f"{crystal.labels[i]} (atom {i + 1}) and {crystal.labels[j]} (atom {j + 1}) are only "
                 f"{distance:.3f} Å apart: check the cell and the positions."
             )
+    if len(warnings) > MOST_WARNINGS:
+        warnings[MOST_WARNINGS:] = [f"and {len(warnings) - MOST_WARNINGS} more pairs of atoms that are too close."]
     partial = [lab for lab, p in zip(crystal.labels, crystal.occupancies, strict=True) if p < 1 - 1e-9]
     if partial and not any("occup" in note for note in crystal.notes):
         warnings.append(f"partly occupied: {', '.join(dict.fromkeys(partial))}; sums take the mean moment.")

@@ -54,7 +54,9 @@ def place_in_frame(ordering: Ordering, crystal: Crystal, domain: int | None = No
     try:
         matches = match_structures(crystal, ordering.crystal)
     except InputError as error:
-        also = f" The parent transformation it states does not fit either: {reason}" if reason not in ("", str(error)) else ""
+        also = ""
+        if reason not in ("", str(error)):
+            also = f" The parent transformation it states does not fit either: {reason}"
         raise InputError(
             f"the structure of this ordering does not match that of [crystal], its parent: {error}{also}"
         ) from None

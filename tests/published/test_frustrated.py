@@ -208,5 +208,5 @@ def test_easy_axis_of_gadolinium():
 
 
 def test_constants_of_the_references_are_those_of_the_program():
-    assert units.DIPOLE_EV_A3_PER_MUB2 == pytest.approx(DIPOLE_EV, rel=1e-14)
-    assert units.DIPOLE_EV_A3_PER_MUB2 * units.K_PER_EV == pytest.approx(DIPOLE_K, rel=1e-14)
+    assert pytest.approx(DIPOLE_EV, rel=1e-14) == units.DIPOLE_EV_A3_PER_MUB2
+    assert pytest.approx(DIPOLE_K, rel=1e-14) == units.DIPOLE_EV_A3_PER_MUB2 * units.K_PER_EV

@@ -23,7 +23,9 @@ def test_sphere_sum_vanishes_at_cubic_sites(lattice, primitive):
     moment = np.array([0.3, -0.5, 0.8])
     field = ld.local_field(ordering(cell, sites, moment), sites)
     assert np.abs(field.dipolar).max() < 1e-10
-    assert reduced_field(field.lorentz, A) == pytest.approx(np.tile(4 * np.pi / 3 * per_cube * moment, (len(sites), 1)), rel=1e-9)
+    assert reduced_field(field.lorentz, A) == pytest.approx(
+        np.tile(4 * np.pi / 3 * per_cube * moment, (len(sites), 1)), rel=1e-9
+    )
 
 
 @pytest.mark.parametrize(
@@ -36,7 +38,10 @@ def test_sphere_sum_vanishes_at_cubic_sites(lattice, primitive):
     ],
 )
 def test_lorentz_field_of_iron_and_nickel(lattice, a, moment, magnetization_T, lorentz_T, printed):
-    found = ld.local_field(ordering(a * np.eye(3), CENTRINGS[lattice], [0, 0, moment]), [[0.5, 0.5, 0.0]] if lattice == "bcc" else [[0.5, 0.5, 0.5]])
+    found = ld.local_field(
+        ordering(a * np.eye(3), CENTRINGS[lattice], [0, 0, moment]),
+        [[0.5, 0.5, 0.0]] if lattice == "bcc" else [[0.5, 0.5, 0.5]],
+    )
     assert found.lorentz[0] == pytest.approx([0, 0, lorentz_T], abs=5e-5)
     assert 3 * found.lorentz[0, 2] == pytest.approx(magnetization_T, abs=1.5e-4)
     assert round(found.lorentz[0, 2], 2) == printed

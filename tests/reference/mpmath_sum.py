@@ -162,7 +162,9 @@ class _Splitting:
         # With u = d² and f(u) = −erf(αd)/d, ∂_a ∂_b f = 4 f'' x_a x_b + 2 f' δ_ab, so B = −2 f' and C = 4 f''.
         first = second = mpf(0)
         for n in range(1, 12):
-            term = -2 * self.alpha / mp.sqrt(mp.pi) * (-1) ** n * self.alpha ** (2 * n) / (mp.factorial(n) * (2 * n + 1))
+            term = (
+                -2 * self.alpha / mp.sqrt(mp.pi) * (-1) ** n * self.alpha ** (2 * n) / (mp.factorial(n) * (2 * n + 1))
+            )
             first += n * term * square ** (n - 1)
             if n > 1:
                 second += n * (n - 1) * term * square ** (n - 2)
