@@ -164,17 +164,15 @@ def cost_by_size() -> None:
     """(d) Cost against the number of targets and of sources."""
     plan = lattice_sum(CELL, (0, 0, 0), TOL)
     print("(d) ns per pair of target and source (level means linear)")
-    for words, sizes in (
-        ("20 sources, targets", [(n, 20) for n in (500, 1000, 2000, 4000, 8000)]),
-        ("1000 targets, sources", [(1000, n) for n in (5, 10, 20, 40, 80, 160)]),
+    for words, varied, sizes in (
+        ("20 sources, targets", 0, [(n, 20) for n in (500, 1000, 2000, 4000, 8000)]),
+        ("1000 targets, sources", 1, [(1000, n) for n in (5, 10, 20, 40, 80, 160)]),
     ):
         cells = []
-        for n_t, n_s in sizes:
-            targets, sources = points(n_t, 5), points(n_s, 6)
-            spent = seconds(lambda t=targets, s=sources: plan.tensors(plan.place(t), plan.place(s)), 7)
-            cells.append(
-                f"{n_t if n_s == 20 and 'targets' in words.split(', ')[1] else n_s}: {1e9 * spent / (n_t * n_s):.0f}"
-            )
+        for size in sizes:
+            targets, sources = plan.place(points(size[0], 5)), plan.place(points(size[1], 6))
+            spent = seconds(lambda t=targets, s=sources: plan.tensors(t, s), 9)
+            cells.append(f"{size[varied]}: {1e9 * spent / (size[0] * size[1]):.0f}")
         print(f"    {words:24s} " + "   ".join(cells))
     print()
 

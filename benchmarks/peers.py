@@ -139,7 +139,7 @@ def best_plain_ewald(cell: np.ndarray, tol: float, targets: np.ndarray, sources:
     for factor in (0.8, 0.9, 1.0, 1.1, 1.2, 1.3, 1.5, 1.7, 2.0):
         plan = PlainEwald(cell, tol, factor * scale)
         plan.tensors(targets[:8], sources)
-        for _ in range(2):
+        for _ in range(5):
             start = time.perf_counter()
             plan.tensors(targets, sources)
             spent = time.perf_counter() - start

@@ -163,6 +163,24 @@ def test_rotate_finds_the_cubic_directions(folder: Path) -> None:
     assert "[0 0 1]" in text
 
 
+def test_digits_stop_where_the_error_bound_is(folder: Path) -> None:
+    def shown(tol: str) -> str:
+        lines = run("rank", "study.toml", "--tol", tol).stdout.splitlines()
+        return next(line.split()[2] for line in lines if line.startswith("   1  "))
+
+    assert shown("1e-10") == "-8.9809"
+    # The bound is ½ (2 µB)² × 1e-2 T/µB = 0.02 µB T, which is 1.16 µeV: no digit behind the point is certain.
+    assert shown("1e-2").startswith("-9") and "." not in shown("1e-2")
+
+
+def test_fields_that_change_from_cell_to_cell_are_said_to_be_of_one(folder: Path) -> None:
+    sentence = "fields are those in the home cell; with k ≠ 0 they differ from cell to cell"
+    assert any(sentence in note for note in document("rank", "study.toml")["notes"])
+    ferromagnet, rods, _ = document("field", "study.toml")["orderings"]
+    assert not any(sentence in note for note in ferromagnet["notes"])
+    assert any(sentence in note for note in rods["notes"])
+
+
 def test_rank_csv(folder: Path) -> None:
     result = run("rank", "study.toml", "--rotate", "--csv", "out.csv")
     assert result.exit_code == 0
@@ -293,6 +311,24 @@ def test_show_warns_of_short_distances_and_forgotten_ions(folder: Path) -> None:
     assert "muon A lies only 0.200 Å from O1." in warnings
 
 
+CONTACT = """
+[[probe]]
+name = "coupled"
+position = [0.5, 0, 0]
+contact = [{ shell = 1, coupling_T_per_muB = 0.05 }, { within = 1.0, coupling_T_per_muB = 0.1 }]
+"""
+
+
+def test_show_says_which_ions_a_contact_term_couples_to(folder: Path) -> None:
+    Path("study.toml").write_text(STUDY + CONTACT, encoding="utf-8")
+    first, second = document("show", "study.toml")["probes"][2]["contact"]
+    assert first["neighbours"] == [{"site": "Mn1", "distance_A": 2.0, "count": 2}]
+    assert second["refused"] == "contact: no magnetic ion lies within 1 Å of the probe."
+    text = " ".join(run("show", "study.toml").stdout.split())
+    assert "- coupled: 0.05 T/µB for each ion of shell 1: 2 Mn1 at 2.000 Å" in text
+    assert "contact: no magnetic ion lies within 1 Å of the probe." in text
+
+
 # --- start ----------------------------------------------------------------------------------------------
 
 
@@ -414,6 +450,20 @@ def test_help_of_every_command_holds_an_example() -> None:
 
 def test_version() -> None:
     assert run("--version").stdout == f"latticedip, version {latticedip.__version__}\n"
+
+
+@pytest.mark.skipif(not os.path.exists("/dev/full"), reason="this system has no device that is always full")
+def test_a_full_disk_is_one_message(folder: Path) -> None:
+    with open("/dev/full", "w", encoding="utf-8") as full:
+        result = subprocess.run(
+            [sys.executable, "-m", "latticedip", "demag", "--sphere"],
+            stdout=full,
+            stderr=subprocess.PIPE,
+            text=True,
+            check=False,
+            timeout=120,
+        )
+    assert (result.returncode, result.stderr) == (2, "Error: No space left on device.\n")
 
 
 def test_interruption_ends_quietly(folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -55,7 +55,7 @@ def test_dipolar_part_is_the_sphere_sum(name):
     found = ld.local_field(ordering, [POINTS[0], POINTS[2], PLACES[1], PLACES[0] + [2, 0, -1]])
     moments = waves(k, np.array(components), OCCUPANCIES)
     for point, field in zip(found.points, found.dipolar, strict=True):
-        assert np.abs(sphere_field(TRICLINIC, PLACES, moments, point) - field).max() < 1e-8
+        assert np.abs(sphere_field(TRICLINIC, PLACES, moments, point) - field).max() < 5e-8
     assert list(found.sites) == [-1, -1, 1, 0]
 
 

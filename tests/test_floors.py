@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ast
+import sys
 from pathlib import Path
 
 import pytest
@@ -106,8 +107,6 @@ def test_imports_never_climb(name):
 
 @pytest.mark.parametrize("name", MODULES)
 def test_heavy_libraries_stay_in_their_rooms(name):
-    import sys
-
     wrong = []
     for line, target, typing_only in imports(MODULES[name]):
         library = target.split(".")[0]

@@ -294,3 +294,50 @@ def test_reciprocal_directions(tmp_path):
     path.write_text('[crystal]\nfile = "skew.xyz"\n[sample]\nplate = true\naxes = ["a*"]\n')
     normal = np.array([5, 0, 2]) / 29**0.5  # across b and c
     np.testing.assert_allclose(ld.read_study(path).sample.demagnetizing_tensor, np.outer(normal, normal), atol=1e-12)
+
+
+# Centred cells as a diffractionist means them
+
+
+@pytest.mark.parametrize(
+    ("k", "literal_k", "literal"),
+    [("[0, 0, 1]", "[0, 0, 0]", "+--+"), ("[0.5, 0.5, 0.5]", "[0.5, 0.5, 0.5]", "+---")],
+)
+def test_a_centred_k_and_its_signs_written_out_are_one_ordering(tmp_path, k, literal_k, literal):
+    """Type I and type II of a face-centred lattice; sites in order (0,0,0), (0,½,½), (½,0,½), (½,½,0)."""
+    (tmp_path / "fcc.cif").write_text(
+        "data_fcc\n_cell_length_a 4.4\n_cell_length_b 4.4\n_cell_length_c 4.4\n_cell_angle_alpha 90\n"
+        "_cell_angle_beta 90\n_cell_angle_gamma 90\n_space_group_name_H-M_alt 'F m -3 m'\nloop_\n_atom_site_label\n"
+        "_atom_site_fract_x\n_atom_site_fract_y\n_atom_site_fract_z\nMn1 0 0 0\nO1 0.5 0.5 0.5\n",
+        encoding="utf-8",
+    )
+    path = tmp_path / "study.toml"
+    path.write_text(
+        f"""
+[crystal]
+file = "fcc.cif"
+[moments]
+Mn = 5.0
+[[ordering]]
+name = "by k"
+k = {k}
+along = [1, -1, 0]
+signs = {{ Mn1 = "+" }}
+[[ordering]]
+name = "written out"
+k = {literal_k}
+along = [1, -1, 0]
+signs = {{ Mn1 = "{literal}" }}
+[[probe]]
+position = [0.21, 0.13, 0.34]
+""",
+        encoding="utf-8",
+    )
+    study = ld.read_study(path)
+    one, two = study.orderings
+    np.testing.assert_allclose(one.components, two.components, atol=1e-12)
+    assert ld.dipolar_energy(one).per_ion_eV == pytest.approx(ld.dipolar_energy(two).per_ion_eV, rel=1e-10)
+    np.testing.assert_allclose(
+        ld.local_field(one, study.probes).total, ld.local_field(two, study.probes).total, atol=1e-9
+    )
+    assert {row.tie for row in ld.rank(study.orderings, rotate=True).rows} == {True}

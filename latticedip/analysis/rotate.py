@@ -6,20 +6,20 @@ energy is a quadratic form of û, with a net moment in an applied field a linear
     E(û) = û·Q·û − g·û,   Q_ab = −Σ_k w_k Re Σ_ij a*_i T_ij,ab a_j + (µ0/2V) |M|² N_ab,   g = |M| B_applied
 
 so its stationary points on the sphere solve (Q − λ) û = g/2. For other patterns E is a quadratic form of the nine
-elements of the rotation matrix, searched over all rotations from several starts.
+elements of the rotation matrix: evaluated on a grid of all rotations, then followed down from the best of them.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cache
 from itertools import pairwise
 
 import numpy as np
 from scipy.optimize import brentq, minimize
 from scipy.spatial.transform import Rotation
 
-from latticedip.checks import FloatArray
+from latticedip.checks import FloatArray, frozen
 from latticedip.ordering.model import Ordering
 from latticedip.physics.energy import dipolar_energy, require_ions, weighted_couplings
 from latticedip.sample import Sample
@@ -27,6 +27,8 @@ from latticedip.units import EV_PER_MUB_T, MU0_T_A3_PER_MUB
 
 #: Singular values of the moments below this part of the largest count as zero: collinear, coplanar.
 SHAPE_TOLERANCE = 1e-9
+#: Descents begin at this many rotations of the grid at most, so far apart (degrees).
+MAX_STARTS, APART_DEG = 12, 25.0
 #: Energies closer than this part of their scale count as equal when directions are degenerate.
 DEGENERATE = 1e-9
 
@@ -95,33 +97,25 @@ def stationary_directions(form: FloatArray, linear: FloatArray) -> list[tuple[Fl
     """All stationary unit vectors of û·Q·û − g·û with their energies, lowest first.
 
     (Q − λ)û = g/2 with |û| = 1 gives Σ_i (g_i/2)²/(q_i − λ)² = 1 in the eigenframe of Q. Where g has no part along an
-    eigenvector, λ may equal its eigenvalue (the hard case of trust-region methods: Moré and Sorensen 1983).
+    eigenvector, λ may equal its eigenvalue (the hard case of trust-region methods: Moré and Sorensen 1983). Without g
+    these are the three eigenvectors, each standing for its opposite too.
     """
     values, vectors = np.linalg.eigh(form)
-    half = 0.5 * (vectors.T @ linear)
-    scale = max(float(np.abs(values).max()), float(np.abs(half).max()), 1e-300)
-    if np.abs(half).max() <= 1e-14 * scale:
-        # No linear term: eigenvectors, each with its opposite.
+    if _is_free(form, linear):
         return [(vectors[:, i], float(values[i])) for i in range(3)]
-    found: list[float] = []
-    active = np.abs(half) > 1e-13 * scale
-
-    def excess(lam: float) -> float:
-        gaps = values[active] - lam
-        return float(np.sum((half[active] / gaps) ** 2)) - 1.0 if np.all(gaps != 0) else np.inf
-
-    reach = float(np.linalg.norm(half)) + 1e-6 * scale
-    poles = np.unique(values[active])
-    edges = np.concatenate([[poles[0] - 2 * reach], poles, [poles[-1] + 2 * reach]])
-    for low, high in pairwise(edges):
-        found += _roots_between(excess, float(low), float(high), low in poles, high in poles)
-    candidates = [np.where(active, half / np.where(active, values - lam, 1.0), 0.0) for lam in found]
+    half = 0.5 * (vectors.T @ linear)
+    scale = max(float(np.abs(values).max()), float(np.abs(half).max()))
+    levels, half = values / scale, half / scale
+    active = np.abs(half) > 1e-13
+    candidates = []
+    for origin, shift in _multipliers(levels[active], half[active]):
+        gaps = (levels - origin) - shift
+        candidates.append(np.where(active, half / np.where(active, gaps, 1.0), 0.0))
     for i in np.flatnonzero(~active):
         # λ = q_i: the part along the eigenvectors of this eigenvalue is free and takes up the missing length.
-        same = np.abs(values - values[i]) <= DEGENERATE * scale
-        if np.any(active & same):
+        if np.any(active & (np.abs(levels - levels[i]) <= DEGENERATE)):
             continue
-        rest = np.where(active, half / np.where(active, values - values[i], 1.0), 0.0)
+        rest = np.where(active, half / np.where(active, levels - levels[i], 1.0), 0.0)
         missing = 1.0 - float(rest @ rest)
         if missing >= 0:
             for sign in (1.0, -1.0):
@@ -134,40 +128,53 @@ def stationary_directions(form: FloatArray, linear: FloatArray) -> list[tuple[Fl
     return [(directions[i], energies[i]) for i in order]
 
 
-def _roots_between(
-    f: Callable[[float], float], low: float, high: float, pole_low: bool, pole_high: bool
-) -> list[float]:
-    """Roots of Σ h²/(q − λ)² − 1 between two poles (it falls, then rises: none, one or two) or beside one."""
-    span = high - low
-    if span <= 0:
-        return []
-    a = float(np.nextafter(low, high)) if pole_low else low
-    b = float(np.nextafter(high, low)) if pole_high else high
-    if pole_low != pole_high:
-        return [brentq(f, a, b, xtol=1e-300, rtol=1e-15)] if f(a) * f(b) < 0 else []
-    # Between poles the function is convex: find its minimum by bisecting the slope, then one root on each side.
-    left, right = a, b
-    for _ in range(200):
-        third = (right - left) / 3
-        if third <= 1e-16 * span:
-            break
-        if f(left + third) < f(right - third):
-            right -= third
-        else:
-            left += third
-    bottom = 0.5 * (left + right)
-    if f(bottom) >= 0:
-        return []
-    return [brentq(f, x, y, xtol=1e-300, rtol=1e-15) for x, y in ((a, bottom), (bottom, b)) if f(x) * f(y) < 0]
+def _is_free(form: FloatArray, linear: FloatArray) -> bool:
+    """True where the linear term is nothing beside the quadratic one."""
+    return bool(np.abs(linear).max() <= 1e-14 * float(np.abs(form).max()))
+
+
+def _multipliers(levels: FloatArray, half: FloatArray) -> list[tuple[float, float]]:
+    """All λ with Σ h²/(q − λ)² = 1 for ascending q, each as (nearest q, distance from it), which keeps small distances.
+
+    At a root every term is at most 1, so that λ keeps |h| away from each q; there the sum minus 1 is not negative.
+    """
+    reach = float(np.linalg.norm(half)) * (1 + 1e-9)
+    edge = np.abs(half) * (1 - 1e-9)
+
+    def excess(shift: float, origin: float) -> float:
+        return float(np.sum((half / (levels - origin - shift)) ** 2)) - 1.0
+
+    def slope(shift: float, origin: float) -> float:
+        return float(np.sum(2 * half**2 / (levels - origin - shift) ** 3))
+
+    def root(low: float, high: float, origin: float) -> tuple[float, float]:
+        return origin, float(brentq(excess, low, high, args=(origin,), xtol=1e-300, rtol=1e-15, maxiter=1000))
+
+    first, last = float(levels[0]), float(levels[-1])
+    found = [root(-reach, -_nearest_edge(levels, edge, first), first)]
+    for i, (low, high) in enumerate(pairwise(levels.tolist())):
+        # Between two levels the sum falls, then rises: none, one or two roots, one on each side of the bottom.
+        a, b = float(edge[i]), float(high - low - edge[i + 1])
+        if a >= b or slope(a, low) >= 0 or slope(b, low) <= 0:
+            continue
+        bottom = float(brentq(slope, a, b, args=(low,), xtol=1e-300, rtol=1e-15, maxiter=1000))
+        if excess(bottom, low) < 0:
+            found += [root(a, bottom, low), root(low + bottom - high, -float(edge[i + 1]), high)]
+    found.append(root(_nearest_edge(levels, edge, last), reach, last))
+    return found
+
+
+def _nearest_edge(levels: FloatArray, edge: FloatArray, level: float) -> float:
+    """The widest margin that the terms of one level, which may occur more than once, ask for."""
+    return float(edge[levels == level].max())
 
 
 def _collinear(ordering: Ordering, sample: Sample, tol: float, axis: FloatArray) -> Orientation:
     form, linear = quadratic_form(ordering, sample, tol, axis)
     points = stationary_directions(form, linear)
-    free = np.abs(linear).max() <= 1e-14 * max(float(np.abs(form).max()), 1e-300)
     notes = []
     easy, hard = points[0][0], points[-1][0]
-    if free:
+    if _is_free(form, linear):
         values = np.array([energy for _, energy in points])
         # What the sums cannot resolve, and what rounding leaves of a symmetry, is no anisotropy.
         same = DEGENERATE * float(np.abs(form).max()) + 2 * dipolar_energy(ordering, tol=tol).error_bound_eV
@@ -243,14 +250,24 @@ def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray 
     scale = max(float(np.abs(kernel).max()), float(np.abs(linear).max()), 1e-300)
 
     def search(sign: float) -> tuple[FloatArray, float]:
-        best: tuple[float, FloatArray] | None = None
-        for start in _starts():
-            energy, rotation = _descend(sign * kernel / scale, sign * linear / scale, start)
-            # Only a real gain replaces an earlier start, so that the least turn wins a tie.
-            if best is None or energy < best[0] - 1e-9:
-                best = energy, rotation
-        assert best is not None
-        return best[1], sign * best[0] * scale
+        ends = [_descend(sign * kernel / scale, sign * linear / scale, start) for start in starts(sign)]
+        lowest = min(energy for energy, _ in ends)
+        # Of equally good ends the least turn.
+        best = max((r for energy, r in ends if energy <= lowest + DEGENERATE), key=lambda r: float(np.trace(r)))
+        return best, float(best.ravel() @ kernel @ best.ravel() - linear @ best.ravel())
+
+    def starts(sign: float) -> list[FloatArray]:
+        grid = _grid()
+        flat = grid.reshape(-1, 9)
+        energies = sign * (np.einsum("na,ab,nb->n", flat, kernel, flat) - flat @ linear)
+        chosen = [0]
+        for i in np.argsort(energies, kind="stable"):
+            # tr(AᵀB) = 1 + 2 cos(angle between A and B).
+            if np.max(flat[chosen] @ flat[i]) < 1 + 2 * np.cos(np.radians(APART_DEG)):
+                chosen.append(int(i))
+            if len(chosen) == MAX_STARTS:
+                break
+        return [grid[i] for i in chosen]
 
     easy, easy_energy = search(1.0)
     hard, hard_energy = search(-1.0)
@@ -259,12 +276,17 @@ def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray 
     return Orientation(easy, hard, easy @ normal, hard @ normal, "plane normal", easy_energy, hard_energy)
 
 
-def _starts() -> list[FloatArray]:
-    """The 24 rotations of a cube, identity first, and 24 between them: denser than any basin met in tests."""
+@cache
+def _grid() -> FloatArray:
+    """Shape (1537, 3, 3). Rotations about 15° apart, the identity first."""
     cube = Rotation.create_group("O").as_matrix()
-    order = np.argsort([-np.trace(r) for r in cube], kind="stable")
-    between = Rotation.from_rotvec([0.31, 0.47, 0.59]).as_matrix()
-    return [cube[i] for i in order] + [between @ cube[i] for i in order]
+    cube = cube[np.argsort(-np.trace(cube, axis1=1, axis2=2), kind="stable")]
+    # Quaternions in the cell around the identity that the cube's rotations carry over the rest.
+    axis = np.array([-0.3, -0.1, 0.1, 0.3])
+    vectors = np.stack(np.meshgrid(axis, axis, axis, indexing="ij"), axis=-1).reshape(-1, 3)
+    inner = Rotation.from_quat(np.concatenate([vectors, np.ones((len(vectors), 1))], axis=1)).as_matrix()
+    grid = np.einsum("iab,jbc->ijac", inner, cube).reshape(-1, 3, 3)
+    return frozen(np.concatenate([np.eye(3)[None], grid]))
 
 
 def _descend(kernel: FloatArray, linear: FloatArray, start: FloatArray) -> tuple[float, FloatArray]:

@@ -48,12 +48,12 @@ def demag(
         )
     from latticedip.report.demag import demag_text
     from latticedip.study import tasks
+    from latticedip.study.bodies import demag_table
 
-    shape = tasks.demag(*given[0])
-    document = tasks.demag_document(shape)
+    document = tasks.demag(*given[0])
     deliver(
         document,
-        rows=lambda: tasks.demag_table(document),
+        rows=lambda: demag_table(document),
         text=lambda: demag_text(document),
         as_json=as_json,
         csv_path=csv_path,

@@ -10,7 +10,7 @@ import click
 from latticedip.cli.options import deliver, output_options, study_argument, tol_option
 
 if TYPE_CHECKING:
-    from latticedip.study.tasks import Axes, Unit
+    from latticedip.study.fields import Axes, Unit
 
 
 @click.command(short_help="Local fields at the probes, in five parts.")
@@ -35,12 +35,12 @@ def field(study: Path, axes: Axes, unit: Unit, tol: float, as_json: bool, csv_pa
     """
     from latticedip.report.field import field_text
     from latticedip.study import tasks
+    from latticedip.study.fields import field_table
 
-    opened = tasks.open_study(study)
-    document = tasks.field_document(opened, tasks.field(opened, tol=tol), axes=axes, unit=unit, tol=tol)
+    document = tasks.field(tasks.open_study(study), axes=axes, unit=unit, tol=tol)
     deliver(
         document,
-        rows=lambda: tasks.field_table(document),
+        rows=lambda: field_table(document),
         text=lambda: field_text(document),
         as_json=as_json,
         csv_path=csv_path,

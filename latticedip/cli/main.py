@@ -6,6 +6,7 @@ that closes the pipe with 141, as shells expect. Nothing heavy is imported befor
 
 from __future__ import annotations
 
+import contextlib
 import importlib
 import io
 import logging
@@ -66,9 +67,14 @@ class CommandGroup(click.Group):
         except LatticedipError as error:
             raise WrongInput(str(error)) from None
         except BrokenPipeError:
-            # What is left in the buffer has no reader; without this the interpreter would complain at its end.
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+            _abandon_stdout()
             ctx.exit(141)
+        except OSError as error:
+            _abandon_stdout()
+            where = f"{error.filename}: " if error.filename else ""
+            raise WrongInput(f"{where}{error.strerror or error}.") from None
+        except MemoryError:
+            raise WrongInput("there is not enough memory for this.") from None
         except KeyboardInterrupt:
             click.echo("Interrupted.", err=True)
             ctx.exit(130)
@@ -80,6 +86,12 @@ class WrongInput(click.ClickException):
     """Input that cannot be used: its message on stderr, exit status 2."""
 
     exit_code = 2
+
+
+def _abandon_stdout() -> None:
+    """Send what is left in the buffer nowhere: the interpreter would fail on it once more at its end."""
+    with contextlib.suppress(OSError, ValueError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _plain_warning(message: Warning | str, category: type[Warning], *_: Any, **__: Any) -> None:

@@ -30,12 +30,12 @@ def rank(study: Path, rotate: bool, tol: float, as_json: bool, csv_path: Path | 
     """
     from latticedip.report.rank import rank_text
     from latticedip.study import tasks
+    from latticedip.study.rankings import rank_table
 
-    opened = tasks.open_study(study)
-    document = tasks.rank_document(opened, tasks.rank(opened, rotate=rotate, tol=tol), rotate=rotate, tol=tol)
+    document = tasks.rank(tasks.open_study(study), rotate=rotate, tol=tol)
     deliver(
         document,
-        rows=lambda: tasks.rank_table(document),
+        rows=lambda: rank_table(document),
         text=lambda: rank_text(document),
         as_json=as_json,
         csv_path=csv_path,

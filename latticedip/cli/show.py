@@ -26,13 +26,14 @@ def show(file: Path, block: str | None, as_json: bool, csv_path: Path | None) ->
     """
     from latticedip.report.show import show_text
     from latticedip.study import tasks
+    from latticedip.study.describe import show_table
 
     if block is not None and tasks.is_study(file):
         raise click.UsageError("--block goes with a structure file; in a study, write block = ... beside the file.")
     document = tasks.show(file, block=block)
     deliver(
         document,
-        rows=lambda: tasks.show_table(document),
+        rows=lambda: show_table(document),
         text=lambda: show_text(document),
         as_json=as_json,
         csv_path=csv_path,

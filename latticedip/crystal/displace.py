@@ -167,35 +167,30 @@ def _chosen(crystal: Crystal, place: Place, term: Displaced) -> tuple[np.ndarray
             raise InputError(f"displaced: atom {site} in cell {cell} is the place of the probe itself.")
         return np.array([site]), np.array([cell]), vector[None]
     among = tuple(range(crystal.n_sites)) if term.of is None else crystal.find(term.of)
-    radius = 4.0 if term.within is None else term.within + 1.0
-    seen = -1
+    finite = not any(crystal.pbc)
+    radius = MAX_RADIUS_A if finite else 4.0 if term.within is None else term.within + 1.0
     while True:
-        sites, cells, vectors = neighbours_of(crystal, place.position, radius, among)
+        sites, cells, _ = neighbours_of(crystal, place.position, radius, among)
+        vectors = place.cart - crystal.places_cart[sites] - cells @ crystal.cell
         distance = np.linalg.norm(vectors, axis=1)
         away = distance > OVERLAP_A
         sites, cells, vectors, distance = sites[away], cells[away], vectors[away], distance[away]
         shell = np.cumsum(np.diff(distance, prepend=distance[:1]) > SHELL_TOLERANCE_A) + 1
         # The outermost shell seen may go on beyond the radius: only shells with a gap behind them are whole.
-        finished = not any(crystal.pbc) and len(sites) == seen == int(np.sum(np.isin(np.arange(crystal.n_sites), among)))
-        seen = len(sites)
-        whole = np.ones(len(shell), dtype=bool) if finished else shell < shell.max(initial=0)
-        if term.shell is not None:
-            chosen = (shell == term.shell) & whole
-            if np.any(chosen):
-                break
-        else:
-            inside = distance <= term.within
-            chosen = shell <= shell[inside].max(initial=0)
-            if np.any(inside) and np.all(whole[chosen]):
-                break
-            if not np.any(inside):
+        last_whole = shell.max(initial=0) - (0 if finite else 1)
+        if term.within is not None:
+            wanted = int(shell[distance <= term.within].max(initial=0))
+            if wanted == 0:
                 raise InputError(f"displaced: no atom lies within {term.within:g} Å of the probe.")
+            chosen = shell <= wanted
+        else:
+            wanted = int(term.shell or 0)
+            chosen = shell == wanted
+        if wanted <= last_whole:
+            return sites[chosen], cells[chosen], vectors[chosen]
         radius *= 1.5
         if radius > MAX_RADIUS_A:
-            raise InputError(
-                f"displaced: the shell asked for (number {term.shell}) does not lie within {MAX_RADIUS_A:g} Å."
-            )
-    return sites[chosen], cells[chosen], vectors[chosen]
+            raise InputError(f"displaced: shell {wanted} lies farther than {MAX_RADIUS_A:g} Å from the probe.")
 
 
 def _whole(value: Any) -> bool:

@@ -6,6 +6,7 @@ A lattice basis is a (3, 3) array whose rows are vectors, as for a cell.
 from __future__ import annotations
 
 import itertools
+from typing import Any
 
 import numpy as np
 from scipy.spatial import cKDTree
@@ -168,7 +169,7 @@ def _images(crystal: Crystal, translations: FloatArray) -> np.ndarray:
         alike = np.array([i for i, other in enumerate(crystal.symbols) if other == symbol])
         home = crystal.positions[alike]
         # Nearness in fractional coordinates only proposes atoms; the distance in Å decides among them.
-        tree = cKDTree(_into_box(home), boxsize=[1.0, 1.0, 1.0])
+        tree: Any = cKDTree(_into_box(home), boxsize=np.ones(3))
         for row, shift in enumerate(translations):
             moved = home + shift
             near = tree.query(_into_box(moved), k=list(range(1, min(4, len(alike)) + 1)))[1]

@@ -131,9 +131,13 @@ def match_structures(parent: Crystal, child: Crystal) -> list[Match]:
     anchors = _anchors(parent, child, translations)
     nearest_miss: Match | None = None
     count_complaint = ""
-    for strain in STRAINS:
+    # The short translations of the child structure leave few ways to try. A child with other elements than the
+    # parent, or a less distorted one, may have translations the parent lacks: then its cell vectors are tried.
+    own = primitive_basis(translations_of(child))
+    spans = (np.eye(3),) if np.allclose(own, np.eye(3)) else (own, np.eye(3))
+    for strain, vectors in itertools.product(STRAINS, spans):
         found: list[Match] = []
-        for P in _lattice_maps(parent, child, basis, strain, len(translations)):
+        for P in _lattice_maps(parent, child, vectors, basis, strain, len(translations)):
             turn = _turn(child.cell, P.T @ parent.cell)
             if not turn.proper or turn.strain > strain:
                 continue
@@ -189,10 +193,13 @@ def _turn(child_cell: FloatArray, target: FloatArray) -> _Turn:
 
 
 def _lattice_maps(
-    parent: Crystal, child: Crystal, basis: FloatArray, strain: float, n_translations: int
+    parent: Crystal, child: Crystal, own: FloatArray, basis: FloatArray, strain: float, n_translations: int
 ) -> Iterator[FloatArray]:
-    """Every P whose child vectors are translations of the parent with the right lengths and angles."""
-    short, steps = reduced_basis(child.cell)
+    """Every P that carries translations of the child (rows of ``own``, in its cell) onto translations of the parent.
+
+    Lengths and angles agree within the strain. basis: primitive vectors of the parent, Cartesian, reduced.
+    """
+    short, steps = reduced_basis(own @ child.cell)
     lengths = np.linalg.norm(short, axis=1)
     shells = [vectors_between(basis, length * (1 - strain), length * (1 + strain)) for length in lengths]
     vectors = [shell @ basis for shell in shells]
@@ -204,7 +211,7 @@ def _lattice_maps(
 
     pairs = 0
     to_parent = basis @ np.linalg.inv(parent.cell)
-    back = np.round(np.linalg.inv(steps))
+    back = np.round(np.linalg.inv(steps @ own))
     for one, first in enumerate(vectors[0]):
         third_one = fits(0, first, 2)
         for two in np.flatnonzero(fits(0, first, 1)):

@@ -14,7 +14,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from latticedip.kernels.jit import ORDERED, kernel
+from latticedip.kernels.jit import kernel
 
 #: Columns of a quadratic form: xx, yy, zz, yz, xz, xy.
 N_FORM = 6
@@ -164,7 +164,7 @@ def is_wanted(code, n_free, free, signs, weights, zero, inverse, factors):
     return is_first(signs, inverse, factors)
 
 
-@kernel(fastmath=ORDERED)
+@kernel(fastmath=True)
 def low_tables(n_a, n_b, form, linear, out):
     """out (n_forms, 2^n_a, 2^n_b): ½ s·Q·s + g·s of the low patterns, without the diagonal of Q.
 
@@ -203,7 +203,7 @@ def high_part(code, n_low, n_free, form, linear, signs, fields):
     return total
 
 
-@kernel(fastmath=ORDERED)
+@kernel(fastmath=True)
 def search_along(
     first, last, n_chunks, n_a, n_b, form, linear, table, free, start, weights, zero, inverse, factors, limit,
     out_energies, out_codes,
@@ -248,7 +248,7 @@ def search_along(
                             bar = min(limit, energies[keep - 1])
 
 
-@kernel(fastmath=ORDERED)
+@kernel(fastmath=True)
 def search_best_axis(
     first, last, n_chunks, n_a, n_b, form, linear, constant, table, free, start, weights, zero, inverse, factors,
     pull, limit, out_energies, out_codes,
@@ -306,7 +306,7 @@ def search_best_axis(
                             bar = min(limit, energies[keep - 1])
 
 
-@kernel(fastmath=ORDERED, inline=True)
+@kernel(fastmath=True, inline=True)
 def minor_of(xx, yy, zz, yz, xz, xy):
     """Smallest leading minor of a symmetric 3×3 matrix: above zero where the matrix is positive definite."""
     second = xx * yy - xy * xy
@@ -314,7 +314,7 @@ def minor_of(xx, yy, zz, yz, xz, xy):
     return min(xx, min(second, third))
 
 
-@kernel(fastmath=ORDERED, inline=True)
+@kernel(fastmath=True, inline=True)
 def least_minor(a, table, sums_a, sums_b, base, bar):
     """Smallest leading minor of Q − bar over the patterns b of a row."""
     t0, t1, t2, t3, t4, t5 = table[0, a], table[1, a], table[2, a], table[3, a], table[4, a], table[5, a]

@@ -1,8 +1,7 @@
-"""Energies of many candidates as matrix products, block by block.
+"""Energies of many candidates that share one Coupling, as quadratic forms of their components.
 
-The energy of candidate x is a quadratic form of its 3N components, x†Hx with H Hermitian. Only half of H is needed:
-it is cut into panels of columns, of each only the rows down to the diagonal are multiplied, and what lies off the
-diagonal counts twice.
+The energy of candidate x is x†Hx with H Hermitian. A complex row is a real one of twice the length (real and imaginary
+part in turn, as it lies in memory), so that one compiled loop does both.
 """
 
 from __future__ import annotations
@@ -14,12 +13,11 @@ import numpy as np
 from latticedip.checks import ComplexArray, FloatArray, as_complex
 from latticedip.errors import InputError
 from latticedip.kernels.jit import over_rows
+from latticedip.kernels.quadratic import quadratic_forms
 from latticedip.kernels.signs import GROUP, ROWS, sign_forms
 
-#: Numbers in one block of candidates: a few MB, so that a block stays in the cache between product and dot product.
-BLOCK_NUMBERS = 2**19
-#: Narrowest panel: narrower ones lose more in the matrix product than they save.
-PANEL = 96
+#: Numbers converted or checked at one time, where the candidates are not yet doubles.
+BLOCK_NUMBERS = 2**20
 #: With fewer sign patterns than this the tables of `sign_forms` cost more than they save.
 FEW_PATTERNS = 4096
 
@@ -28,47 +26,36 @@ class ImaginaryPartError(Exception):
     """A moment has an imaginary part where k and −k are the same vector; the caller knows k and says so."""
 
 
-class QuadraticForm:
-    """x†Hx for rows x, H Hermitian; panels of H are laid out once.
+def half_form(matrix: FloatArray | ComplexArray) -> FloatArray:
+    """A real symmetric or Hermitian form (m, m) as `quadratic_forms` takes it: half of it, padded to groups of four."""
+    whole = np.asarray(matrix)
+    if np.iscomplexobj(whole):
+        m = 2 * len(whole)
+        paired = np.empty((m, m))
+        paired[0::2, 0::2] = paired[1::2, 1::2] = whole.real
+        paired[1::2, 0::2] = whole.imag
+        paired[0::2, 1::2] = -whole.imag
+        whole = paired
+    m = len(whole)
+    padded = (m + 3) // 4 * 4
+    group = np.arange(padded) // 4
+    half = np.zeros((padded, padded))
+    half[:m, :m] = whole
+    half *= np.where(group[:, None] > group[None, :], 2.0, 1.0)
+    return half
 
-    matrix: Shape (m, m), real symmetric or Hermitian.
-    """
 
-    def __init__(self, matrix: FloatArray | ComplexArray) -> None:
-        self.size = len(matrix)
-        self.dtype = matrix.dtype
-        count = max(1, self.size // PANEL)
-        edges = [self.size * i // count for i in range(count + 1)]
-        self.panels = []
-        for low, high in zip(edges[:-1], edges[1:], strict=True):
-            # Conjugated, so that rows are multiplied as they come: conj(x H) = conj(x) conj(H).
-            panel = np.array(matrix[:high, low:high].conj(), order="C")
-            panel[:low] *= 2.0
-            self.panels.append((low, high, panel))
-
-    @property
-    def block_rows(self) -> int:
-        """Rows to pass at one time."""
-        return max(64, BLOCK_NUMBERS // max(1, self.size))
-
-    def __call__(self, rows: FloatArray | ComplexArray) -> FloatArray:
-        """Shape (n,) float. The form of each of n C-contiguous rows of the matrix's own kind."""
-        total = np.zeros(len(rows))
-        for low, high, panel in self.panels:
-            product = rows[:, :high] @ panel
-            part = rows[:, low:high]
-            if np.iscomplexobj(product):
-                # Re conj(y) x is the dot product of the two as pairs of real numbers.
-                total += np.einsum("ci,ci->c", product.view(float), np.ascontiguousarray(part).view(float))
-            else:
-                total += np.einsum("ci,ci->c", product, part)
-        return total
+def quadratics(rows: FloatArray, half: FloatArray) -> FloatArray:
+    """Shape (n,) float. The form of each row (n, m) of C-contiguous doubles."""
+    out = np.empty(len(rows))
+    over_rows(quadratic_forms, len(rows), rows, half, out, at_least=64)
+    return out
 
 
 def candidate_array(moments: Any, n_sites: int) -> np.ndarray:
     """Moments (n_candidates, n_sites, 3) as an array of any numeric kind, not copied where it is one.
 
-    Raises InputError as `as_complex` does for another shape or kind; values are looked at block by block.
+    Raises InputError as `as_complex` does for another shape or kind; values are looked at with the energies.
     """
     raw = moments
     if not isinstance(raw, np.ndarray):
@@ -82,42 +69,44 @@ def candidate_array(moments: Any, n_sites: int) -> np.ndarray:
     return raw
 
 
-def energies_in_blocks(moments: np.ndarray, real: QuadraticForm, general: QuadraticForm | None) -> FloatArray:
+def energies_in_blocks(moments: np.ndarray, half: FloatArray) -> FloatArray:
     """Shape (n_candidates,) float. The form of every candidate, in the order given.
 
-    real: for real moments. general: for complex ones; None where imaginary parts have no meaning.
+    moments: as `candidate_array` returns them. half: `half_form` of a Hermitian matrix where complex moments have a
+    meaning, of a real one otherwise; then an imaginary part is refused.
 
+    Doubles in order are read where they lie; anything else is converted block by block.
     Raises InputError for values that are not finite, ImaginaryPartError for imaginary parts without a meaning.
     """
-    out = np.empty(len(moments))
-    is_complex = moments.dtype.kind == "c"
-    form = general if is_complex and general is not None else real
-    kind = np.complex128 if form is general else np.float64
-    for start in range(0, len(moments), form.block_rows):
-        block = moments[start : start + form.block_rows]
-        if is_complex and general is None:
+    n = len(moments)
+    numbers = max(1, int(np.prod(moments.shape[1:])))
+    takes_complex = len(half) >= 2 * numbers
+    kind = np.complex128 if takes_complex else np.float64
+    out = np.empty(n)
+    whole = moments.dtype == kind and moments.flags.c_contiguous
+    step = max(1, n) if whole else max(64, BLOCK_NUMBERS // numbers)
+    for start in range(0, n, step):
+        block = moments[start : start + step]
+        if block.dtype.kind == "c" and not takes_complex:
             imaginary = np.abs(block.imag).max(initial=0.0)
             if imaginary > 1e-9 * max(1.0, float(np.abs(block).max(initial=0.0))):
                 raise ImaginaryPartError
             block = block.real
         rows = np.ascontiguousarray(block, dtype=kind).reshape(len(block), -1)
-        with np.errstate(invalid="ignore", over="ignore"):
-            part = form(rows)
-        if not np.all(np.isfinite(part)):
-            _refuse_values(block, start, part)
-        out[start : start + len(block)] = part
+        out[start : start + len(block)] = quadratics(rows.view(np.float64), half)
+    if not np.all(np.isfinite(out)):
+        _refuse_values(moments, out)
     return out
 
 
-def _refuse_values(block: np.ndarray, start: int, energies: FloatArray) -> None:
-    bad = ~np.isfinite(block)
-    if np.any(bad):
-        i, site, axis = (int(n) for n in np.argwhere(bad)[0])
-        raise InputError(
-            f"moments holds a value that is not finite: {block[i, site, axis]} at index {(start + i, site, axis)}."
-        )
-    i = int(np.argmax(~np.isfinite(energies)))
-    raise InputError(f"moments: the energy of candidate {start + i} is too large for a double.")
+def _refuse_values(moments: np.ndarray, energies: FloatArray) -> None:
+    candidate = int(np.argmax(~np.isfinite(energies)))
+    bad = np.argwhere(~np.isfinite(moments[candidate]))
+    if len(bad):
+        site, axis = (int(n) for n in bad[0])
+        value = moments[candidate, site, axis]
+        raise InputError(f"moments holds a value that is not finite: {value} at index {(candidate, site, axis)}.")
+    raise InputError(f"moments: the energy of candidate {candidate} is too large for a double.")
 
 
 def sign_array(signs: Any, n_sites: int) -> np.ndarray:
@@ -141,8 +130,8 @@ def refuse_other_signs(signs: np.ndarray) -> None:
     """Raise InputError where an entry is neither +1 nor −1."""
     bad = (signs != 1) & (signs != -1)
     if np.any(bad):
-        where = tuple(int(i) for i in np.argwhere(bad)[0])
-        raise InputError(f"signs must be +1 or −1, got {signs[where]} at index {where}.")
+        row, site = (int(i) for i in np.argwhere(bad)[0])
+        raise InputError(f"signs must be +1 or −1, got {signs[row, site]} at index {(row, site)}.")
 
 
 def sign_quadratics(signs: np.ndarray, form: FloatArray) -> FloatArray:
@@ -152,10 +141,7 @@ def sign_quadratics(signs: np.ndarray, form: FloatArray) -> FloatArray:
     """
     if len(signs) < FEW_PATTERNS:
         refuse_other_signs(signs)
-        quadratic = QuadraticForm(form)
-        rows = quadratic.block_rows
-        parts = [quadratic(signs[i : i + rows].astype(float)) for i in range(0, len(signs), rows)]
-        return np.concatenate([np.zeros(0), *parts])
+        return quadratics(signs.astype(float), half_form(form))
     n = len(form)
     padded = -(-n // GROUP) * GROUP
     whole = np.zeros((padded, padded))

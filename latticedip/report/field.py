@@ -20,7 +20,7 @@ from latticedip.report.tables import (
     table,
     vector,
 )
-from latticedip.study.tasks import PARTS
+from latticedip.study.fields import PARTS
 
 _COMPONENTS = {"cartesian": ("x", "y", "z"), "crystal": ("along a", "along b", "along c")}
 _AXES_WORDS = {

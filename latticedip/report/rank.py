@@ -19,7 +19,7 @@ from latticedip.report.tables import (
     table,
     vector,
 )
-from latticedip.study.tasks import field_levels
+from latticedip.study.rankings import field_levels
 from latticedip.units import K_PER_EV
 
 
@@ -144,9 +144,16 @@ def _turn_remarks(rows: Sequence[Mapping[str, Any]]) -> list[str]:
         if row["axis_meaning"] in meaning:
             axis, angle = axis_and_angle(row["rotation"])
             turned = f"turned by {angle:.2f} degrees about {direction(axis)} (Cartesian)"
-            lines.append(f"{row['ordering']}: {turned}{meaning[row['axis_meaning']]}")
+            lines.append(f"{row['ordering']}: {turned}{meaning[row['axis_meaning']]}{_within_plane(row)}")
         lines += [f"{row['ordering']}: {note}" for note in row["orientation_notes"]]
     return lines
+
+
+def _within_plane(row: Mapping[str, Any]) -> str:
+    easy, hard = row["easy_axis_cart"], row["hard_axis_cart"]
+    if easy is None or hard is None or abs(float(np.dot(easy, hard))) < 1 - 1e-6:
+        return ""
+    return "; easy and hard orientation differ by a turn within that plane"
 
 
 def axis_and_angle(rotation: Sequence[Sequence[float]]) -> tuple[list[float], float]:
@@ -174,8 +181,12 @@ def _fields(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
     listed = [
         [(name, *level) for name, points in row["fields"].items() for level in field_levels(points)] for row in rows
     ]
-    digits = decimals_for([level[1] for levels in listed for level in levels], error=1e-9)
-    frequency_digits = decimals_for([level[2] for levels in listed for level in levels], error=1e-7)
+    points = [point for row in rows for several in row["fields"].values() for point in several]
+    error = max((point["error_bound_T"] for point in points), default=0.0)
+    per_tesla = [p["frequency_MHz"] / p["field_size_T"] for p in points if p["field_size_T"] > 0]
+    digits = decimals_for([level[1] for levels in listed for level in levels], error=error)
+    frequencies = [level[2] for levels in listed for level in levels]
+    frequency_digits = decimals_for(frequencies, error=error * max(per_tesla, default=0.0))
     cells = []
     for row, levels in zip(rows, listed, strict=True):
         for i, (name, size, frequency, count) in enumerate(levels):

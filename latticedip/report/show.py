@@ -34,6 +34,8 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         parts += ["", paragraph("The dipolar scale is µ0 m1 m2/(4π r³).", width=width)]
     if document["probes"]:
         parts += ["", "Probes", "", _probes(document["probes"], width)]
+        contacts = _contacts(document["probes"])
+        parts += ["", "Contact terms", "", bullets(contacts, width=width)] if contacts else []
     if document["sample"] is not None:
         parts += ["", "Sample", "", _sample(document["sample"], width)]
     notes = [*document["crystal"]["notes"], *(n for entry in document["orderings"] for n in entry["notes"])]
@@ -46,7 +48,8 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
 
 def _crystal(crystal: Mapping[str, Any], width: int | None) -> str:
     centrings = crystal["centrings"]
-    symmetry = f"{crystal['symmetry_operations']} operations of the structure without moments"
+    count = crystal["symmetry_operations"]
+    symmetry = f"{count} operation{'' if count == 1 else 's'} of the structure without moments"
     if centrings > 1:
         symmetry += f"; centred: {centrings} primitive cells in this cell"
     items = [
@@ -58,7 +61,8 @@ def _crystal(crystal: Mapping[str, Any], width: int | None) -> str:
     ]
     if not all(crystal["periodic"]):
         along = [axis for axis, periodic in zip("abc", crystal["periodic"], strict=True) if periodic]
-        items.append(("periodic", "along " + ", ".join(along) if along else "in no direction"))
+        where = "along " + ", ".join(along) if along else "in no direction"
+        items[-1] = ("periodic", f"{where}; the other vectors only complete the frame")
     return pairs(items, width=width)
 
 
@@ -156,7 +160,6 @@ def _probes(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
         Column("place", words=True),
         Column("nearest atom", words=True),
         Column("nearest ion", words=True),
-        Column("contact\nterms"),
     ]
     cells = []
     for row in rows:
@@ -170,10 +173,27 @@ def _probes(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
                 place,
                 _near(row["nearest_atom"], row["nearest_atom_A"]),
                 _near(row["nearest_ion"], row["nearest_ion_A"]),
-                str(row["contact_terms"]) if row["contact_terms"] else "none",
             ]
         )
     return table(columns, cells, width=width, keys=1)
+
+
+def _contacts(rows: Sequence[Mapping[str, Any]]) -> list[str]:
+    lines = []
+    for row in rows:
+        for term in row["contact"]:
+            if term["coupling_T_per_muB"] is None:
+                lines.append(f"{row['probe']}: moment density {vector(term['moment_density_muB_per_A3'])} µB/Å³")
+                continue
+            tensor = term["coupling_T_per_muB"]
+            scalar = all(tensor[i][j] == (tensor[0][0] if i == j else 0) for i in range(3) for j in range(3))
+            size = short(tensor[0][0]) if scalar else "; ".join(vector(line) for line in tensor)
+            reach = f"shell {term['shell']}" if term["within_A"] is None else f"all within {short(term['within_A'])} Å"
+            found = term.get("refused") or "; ".join(
+                f"{n['count']} {n['site']} at {n['distance_A']:.3f} Å" for n in term["neighbours"] or []
+            )
+            lines.append(f"{row['probe']}: {size} T/µB for each ion of {reach}" + (f": {found}" if found else ""))
+    return lines
 
 
 def _near(label: str | None, distance: float | None) -> str:

@@ -55,9 +55,7 @@ def text_width(text: str) -> int:
     return width
 
 
-def table(
-    columns: Sequence[Column], rows: Sequence[Sequence[str]], *, width: int | None = None, keys: int = 1
-) -> str:
+def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], *, width: int | None = None, keys: int = 1) -> str:
     """Return an aligned table as text without a final newline.
 
     Columns of words wrap where the table is wider than ``width`` (default: the screen). If that is not
@@ -172,9 +170,7 @@ def _head(word: str, width: int) -> str:
     return word[:1] if width > 0 else ""
 
 
-def _line(
-    columns: Sequence[Column], block: Sequence[int], widths: dict[int, int], parts: dict[int, str]
-) -> str:
+def _line(columns: Sequence[Column], block: Sequence[int], widths: dict[int, int], parts: dict[int, str]) -> str:
     set_parts = []
     for i in block:
         blank = " " * max(0, widths[i] - text_width(parts[i]))

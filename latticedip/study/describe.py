@@ -16,13 +16,15 @@ from latticedip.crystal.lattice import label_centrings
 from latticedip.crystal.model import Crystal
 from latticedip.crystal.neighbours import close_pairs, neighbours_of
 from latticedip.crystal.symmetry import operations_of
+from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.particles import particle_named
 from latticedip.physics.boundary import boundary_words, has_net_moment
-from latticedip.probe import SHELL_TOLERANCE_A, Probe
+from latticedip.physics.contact import shell_neighbours
+from latticedip.probe import SHELL_TOLERANCE_A, Contact, Probe
 from latticedip.sample import Sample
-from latticedip.study.documents import document
-from latticedip.study.start import OFTEN_MAGNETIC
+from latticedip.study.documents import NO_SUM, document
+from latticedip.study.start import OFTEN_MAGNETIC, formula
 from latticedip.units import DIPOLE_EV_A3_PER_MUB2, K_PER_EV
 
 if TYPE_CHECKING:
@@ -58,14 +60,16 @@ def describe_study(study: Study) -> dict[str, Any]:
         "show",
         files=study.files,
         options={},
-        boundary="; ".join(dict.fromkeys(boundaries)),
+        boundary="; ".join(dict.fromkeys(boundaries)) or NO_SUM,
         results={
             "title": study.title,
             **_structure(study.crystal),
             "moments_muB": {name: float(size) for name, size in study.moments.items()},
             "orderings": [describe_ordering(ordering) for ordering in study.orderings],
             "neighbours": magnetic_neighbours(where, sizes),
-            "probes": [describe_probe(probe, study.crystal, set(sizes)) for probe in study.probes],
+            "probes": [
+                describe_probe(probe, study.crystal, set(sizes), own[0] if own else None) for probe in study.probes
+            ],
             "sample": study.sample.to_dict(),
             "warnings": _study_warnings(study, sizes),
         },
@@ -81,9 +85,9 @@ def describe_structure(path: Path, found: Crystal | Ordering) -> dict[str, Any]:
         "show",
         files={"structure": path},
         options={},
-        boundary="; ".join(boundary_words(ordering, None) for ordering in orderings),
+        boundary="; ".join(boundary_words(ordering, None) for ordering in orderings) or NO_SUM,
         results={
-            "title": crystal.name or path.name,
+            "title": f"{path.name} ({formula(crystal)})",
             **_structure(crystal),
             "moments_muB": {},
             "orderings": [describe_ordering(ordering) for ordering in orderings],
@@ -312,8 +316,13 @@ def _shells(crystal: Crystal, point: FloatArray, sites: tuple[int, ...]) -> list
 # --- probes ---------------------------------------------------------------------------------------------
 
 
-def describe_probe(probe: Probe, crystal: Crystal, magnetic: set[str]) -> dict[str, Any]:
-    """A probe, and what is nearest to it (for a site: to its first atom)."""
+def describe_probe(
+    probe: Probe, crystal: Crystal, magnetic: set[str], ordering: Ordering | None = None
+) -> dict[str, Any]:
+    """A probe, what is nearest to it (for a site: to its first atom) and which ions its contact terms couple to.
+
+    ordering: one that lives in the crystal, whose ions the contact terms are shown for; None: they are not looked up.
+    """
     sites = () if probe.site is None else crystal.find(probe.site)
     point = probe.position if probe.site is None else crystal.positions[sites[0]]
     everything = _shells(crystal, point, tuple(range(crystal.n_sites)))
@@ -329,8 +338,32 @@ def describe_probe(probe: Probe, crystal: Crystal, magnetic: set[str]) -> dict[s
         "nearest_atom_A": everything[0][1] if everything else None,
         "nearest_ion": ions[0][0] if ions else None,
         "nearest_ion_A": ions[0][1] if ions else None,
-        "contact_terms": len(probe.contact),
+        "contact": [_contact(term, point, ordering) for term in probe.contact],
     }
+
+
+def _contact(term: Contact, point: FloatArray, ordering: Ordering | None) -> dict[str, Any]:
+    plain: dict[str, Any] = {
+        "coupling_T_per_muB": None if term.coupling_T_per_muB is None else term.coupling_T_per_muB.tolist(),
+        "shell": term.shell,
+        "within_A": term.within,
+        "moment_density_muB_per_A3": None
+        if term.moment_density_muB_per_A3 is None
+        else term.moment_density_muB_per_A3.tolist(),
+        "neighbours": None,
+    }
+    if term.coupling_T_per_muB is None or ordering is None:
+        return plain
+    try:
+        sites, _, distances = shell_neighbours(ordering, point, term)
+    except InputError as error:
+        return {**plain, "refused": str(error)}
+    rows: dict[tuple[str, float], int] = {}
+    for site, distance in zip(sites, distances, strict=True):
+        key = (ordering.crystal.labels[site], round(float(distance), 3))
+        rows[key] = rows.get(key, 0) + 1
+    plain["neighbours"] = [{"site": site, "distance_A": r, "count": count} for (site, r), count in rows.items()]
+    return plain
 
 
 def _study_warnings(study: Study, sizes: Mapping[str, float]) -> list[str]:
@@ -359,3 +392,28 @@ def _study_warnings(study: Study, sizes: Mapping[str, float]) -> list[str]:
     return warnings
 
 
+# --- rows -----------------------------------------------------------------------------------------------
+
+
+def show_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
+    """The rows of a show document for CSV: every moment in every cell listed, or the atoms where there is none."""
+    moments = [
+        {
+            "ordering": entry["ordering"],
+            "k": entry["k"],
+            "site": atom["label"],
+            "atom": atom["atom"],
+            "position": atom["position"],
+            "cell": cell,
+            "moment_abc_muB": atom["moments_abc_muB"][i],
+            "moment_size_muB": atom["sizes_muB"][i],
+        }
+        for entry in doc["orderings"]
+        for atom in entry["atoms"]
+        for i, cell in enumerate(entry["cells"])
+    ]
+    return moments or [
+        {"site": site["label"], "element": ", ".join(site["elements"]), "atom": number, "position": position}
+        for site in doc["sites"]
+        for number, position in enumerate(site["positions"], start=1)
+    ]

@@ -10,11 +10,16 @@ import hashlib
 import os
 from collections.abc import Iterable, Mapping
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from latticedip import __version__
 from latticedip.errors import FileError
 
+if TYPE_CHECKING:
+    from latticedip.ordering.model import Ordering
+
+#: The boundary of a document without any sum.
+NO_SUM = "none: nothing was summed"
 #: The ends of keys that are units; the letter of a component goes in front of them.
 _UNITS = ("_T_per_A", "_G_per_A", "_muB_per_cell", "_muB_per_ion", "_muB", "_T", "_G", "_A")
 
@@ -49,6 +54,24 @@ def content_hash(path: Path) -> str:
         return hashlib.sha256(path.read_bytes()).hexdigest()
     except OSError as error:
         raise FileError(f"cannot read {os.fspath(path)!r}: {error.strerror or error}.") from None
+
+
+def ordering_head(ordering: Ordering) -> dict[str, Any]:
+    """What every document says of an ordering: its name, k, ions per cell and net moment."""
+    return {
+        "ordering": ordering.name,
+        "k": ordering.k.tolist(),
+        "ions_per_cell": ordering.n_ions,
+        "net_moment_muB_per_cell": ordering.net_moment.tolist(),
+    }
+
+
+def home_cell_notes(orderings: Iterable[Ordering]) -> list[str]:
+    """What must be said of fields under orderings whose moments differ from cell to cell."""
+    moving = [ordering.name for ordering in orderings if not all(float(x).is_integer() for x in ordering.k.ravel())]
+    if not moving:
+        return []
+    return [f"fields are those in the home cell; with k ≠ 0 they differ from cell to cell ({', '.join(moving)})"]
 
 
 def flat(row: Mapping[str, Any]) -> dict[str, Any]:

@@ -95,27 +95,34 @@ def distinct_domains(
     """
     translations = translations_of(crystal) if all(crystal.pbc) else np.zeros((1, 3))
     ordered = matches if first is None else [first, *matches]
+    lattice = _SiteClasses(primitive_basis(translations), *translation_classes(crystal, translations))
     kept: list[tuple[Match, Waves, FloatArray]] = []
     for match in ordered:
-        waves, child = _waves(ordering, crystal, match, translations)
+        waves, child = _waves(ordering, match, lattice)
         if not any(_same_up_to_translation(waves, other, steps) for _, other, steps in kept):
             kept.append((match, waves, box_of(hermite_basis(child)).astype(float)))
     return [match for match, _, _ in kept]
 
 
-def _waves(
-    ordering: Ordering, crystal: Crystal, match: Match, translations: FloatArray
-) -> tuple[Waves, np.ndarray]:
+@dataclasses.dataclass(frozen=True, eq=False)
+class _SiteClasses:
+    """The primitive vectors of a crystal (rows, in its cell); per site the first of its class and the way there."""
+
+    basis: FloatArray
+    first: np.ndarray
+    shift: FloatArray
+
+
+def _waves(ordering: Ordering, match: Match, crystal: _SiteClasses) -> tuple[Waves, np.ndarray]:
     """Fourier components of the turned moments over the primitive lattice of the crystal, and the child cell in it.
 
     With m(ℓ) the moment of a site class at lattice vector ℓ, m(ℓ) = Σ_q A(q) exp(−2πi q·ℓ); both q and −q are kept.
     q counts in reciprocal vectors of the primitive cell, of which N = |child cell| lie in each class of k.
     """
-    basis = primitive_basis(translations)
-    to_basis = np.linalg.inv(basis)
+    to_basis = np.linalg.inv(crystal.basis)
     child = np.round(match.P.T @ to_basis).astype(np.int64)
-    first, shift = translation_classes(crystal, translations)
-    lattice = (shift[match.partners] + match.cells) @ to_basis
+    heads, classes = np.unique(crystal.first[match.partners], return_inverse=True)
+    lattice = (crystal.shift[match.partners] + match.cells) @ to_basis
     turned = ordering.components @ match.rotation.T
     n_cells = len(box_of(hermite_basis(child)))
     steps = box_of(hermite_basis(child.T))
@@ -124,8 +131,8 @@ def _waves(
     for k, component in zip(ordering.k, turned, strict=True):
         for q in np.linalg.solve(child.astype(float), (k + steps).T).T:
             phases = np.exp(2j * np.pi * ((lattice @ q) % 1.0))
-            amplitude = np.zeros((crystal.n_sites, 3), dtype=complex)
-            np.add.at(amplitude, first[match.partners], component * phases[:, None] / (2 * n_cells))
+            amplitude = np.zeros((len(heads), 3), dtype=complex)
+            np.add.at(amplitude, classes, component * phases[:, None] / (2 * n_cells))
             if np.abs(amplitude).max(initial=0.0) > SAME_MOMENTS * scale / 10:
                 for sign, part in ((1, amplitude), (-1, amplitude.conj())):
                     name = _wave_name(sign * q)
@@ -147,6 +154,8 @@ def _same_up_to_translation(waves: Waves, other: Waves, steps: FloatArray) -> bo
     ours = np.array([waves[name] for name in names])
     theirs = np.array([other[name] for name in names])
     bound = SAME_MOMENTS * float(np.abs(theirs).max(initial=0.0))
+    if np.abs(np.abs(theirs) - np.abs(ours)).max(initial=0.0) > bound:
+        return False
     turns = np.exp(2j * np.pi * ((steps @ q.T) % 1.0))
     return any(np.abs(theirs * turn[:, None, None] - ours).max(initial=0.0) <= bound for turn in turns)
 
@@ -170,7 +179,7 @@ def _strain_notes(match: Match) -> list[str]:
 
 
 def _fit_words(match: Match) -> str:
-    return f"sites within {match.displacement_A:.2g} Å, lengths within {100 * match.strain:.2g} %"
+    return f"sites within {match.displacement_A:.3f} Å, lengths within {100 * match.strain:.2f} %"
 
 
 def transform_words(P: FloatArray, p: FloatArray) -> str:

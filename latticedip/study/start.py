@@ -135,13 +135,12 @@ def magnetic_sites(crystal: Crystal, sizes: Mapping[str, float], ordering: Order
 
 def _head(crystal: Crystal, source: str) -> str:
     lengths = np.linalg.norm(crystal.cell, axis=1)
-    formula = _formula(crystal)
     counts: dict[tuple[str, str], int] = {}
     for label, symbol in zip(crystal.labels, crystal.symbols, strict=True):
         counts[label, symbol] = counts.get((label, symbol), 0) + 1
     listed = [f"{label} ({count} {symbol})" for (label, symbol), count in counts.items()]
     lines = [
-        f"title = {_quoted(f'{formula}: which ordering does the dipolar interaction favour?')}",
+        f"title = {_quoted(f'{formula(crystal)}: which ordering does the dipolar interaction favour?')}",
         "",
         "[crystal]",
         source,
@@ -311,7 +310,8 @@ _SAMPLE = """\
 """
 
 
-def _formula(crystal: Crystal) -> str:
+def formula(crystal: Crystal) -> str:
+    """Elements in the order of the file, in smallest whole numbers or, where sites are partly filled, per cell."""
     counts: dict[str, float] = {}
     for symbol, occupancy in zip(crystal.symbols, crystal.occupancies, strict=True):
         counts[symbol] = counts.get(symbol, 0.0) + float(occupancy)

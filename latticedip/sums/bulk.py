@@ -195,7 +195,7 @@ def reciprocal_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, 
         shaped[1, :, :, 1] = shaped[0, :, :, 0]
     over_rows(
         reciprocal_tensors, len(targets), targets, plan.lattice.waves, plan.runs, plan.k, plan.limits, right, flat,
-        at_least=max(4, 50_000 // right.size * 4),
+        at_least=max(4, 50_000 // max(1, right.size) * 4),
     )  # fmt: skip
 
 

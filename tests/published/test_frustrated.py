@@ -90,7 +90,7 @@ def test_spin_ice_ground_state():
 
 
 def test_local_axes_order_at_001():
-    """The same from the four bands of the Ising matrix: among a mesh of k none lies below (0,0,1), given ±1 spins there."""
+    """The same from the four bands of the Ising matrix: none on a mesh of k lies below (0,0,1)."""
     sites = SITES @ np.linalg.inv(PRIMITIVE)
     lowest = {}
     for k in itertools.product(np.arange(0, 1.01, 0.25), repeat=3):

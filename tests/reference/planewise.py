@@ -1,8 +1,8 @@
 """Planewise sum: layer after layer, each layer by its two-dimensional Fourier series.
 
 For a target off every plane, Σ 1/|r − ρ| over one layer of area A per point is (2π/A) Σ_g exp(ig·ρ) exp(−|g||z|)/|g|
-(Poisson's formula in the plane; the term g = 0, −2π|z|/A, has no second derivatives off the plane). The layers at z − n h
-form geometric series in exp(−|g| h), which are summed in closed form: the result converges exponentially in g.
+(Poisson's formula in the plane; the term g = 0, −2π|z|/A, has no second derivatives off the plane). The layers at
+z − n h form geometric series in exp(−|g| h), which are summed in closed form: all converges exponentially in g.
 
 Layers added symmetrically up and down make an infinite plate, so at k = 0 the result carries the plate's
 demagnetizing tensor n n; the N = 0 sum adds (4π/V) n n.

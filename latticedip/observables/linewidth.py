@@ -1,0 +1,252 @@
+"""Static linewidth from nuclear moments: dipolar second moments in a strong field and in zero field.
+
+Every nuclear spin is random and independent. For one nucleus of moment µ and spin I at distance r from the probe, with
+b = (µ0/4π) µ/(I r³) the field per unit of spin and θ the angle between r and the strong field, the mean square field
+
+    along a strong field, unlike spins   (1/3) I(I+1) b² (1 − 3cos²θ)²     Van Vleck, Phys. Rev. 74, 1168 (1948)
+    along a strong field, like spins     (3/4) I(I+1) b² (1 − 3cos²θ)²     the same: 9/4 of it, by mutual flips
+    in zero field, ⟨B_a B_b⟩             (1/3) I(I+1) b² (3 n_a n_b + δ_ab)
+
+adds up over sites with occupancy and abundance as probabilities. Averaged over all directions (1 − 3cos²θ)² is 4/5. A
+muon in a strong field relaxes with σ, exp(−σ²t²/2), σ² = γ² ⟨B_∥²⟩; in zero field with Δ per field component,
+Δ² = γ² ⟨B²⟩/3, and Δ²/σ² = 5/2 in a powder (Hayano et al., Phys. Rev. B 20, 850 (1979)).
+
+The strong field is stronger than all dipolar fields and quadrupole splittings of the nuclei; like spins are those of
+the probe's own isotope, as if all of them had the same resonance. In a quadrupole splitting that the muon itself
+causes at low fields the secular part differs (Hartmann, Phys. Rev. Lett. 39, 832 (1977)): that is not included.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from latticedip.checks import FloatArray, as_unit_vector, frozen
+from latticedip.crystal.displace import Displaced, moved_pairs
+from latticedip.crystal.model import OVERLAP_A, Crystal
+from latticedip.crystal.place import Place, place_of
+from latticedip.errors import InputError
+from latticedip.observables.isotopes import element_of, isotopes_by_element
+from latticedip.particles import Particle, particle_named
+from latticedip.sums.pairs import pair_power_tensors
+from latticedip.sums.powers import direction_sum, power_tensors
+from latticedip.units import BOHR_MAGNETON_J_PER_T, DIPOLE_T_A3_PER_MUB, NUCLEAR_MAGNETON_J_PER_T
+
+#: (µ0/4π) µ_N/Å³ in T.
+NUCLEAR_FIELD_T_A3 = DIPOLE_T_A3_PER_MUB * NUCLEAR_MAGNETON_J_PER_T / BOHR_MAGNETON_J_PER_T
+#: Second moment of like spins over that of unlike ones.
+LIKE_FACTOR = 9 / 4
+#: Below this share of sites with a moment a line is no longer near a Gaussian.
+DILUTE = 0.1
+
+
+@dataclass(frozen=True, eq=False)
+class Contribution:
+    """What one isotope adds.
+
+    isotope: its name. like: True for the isotope of the probe itself. atoms_per_cell: mean number in the cell.
+    second_moment_T2: mean square field along the strong field, T².
+    mean_square_field_T2: ⟨B²⟩ of all three components in zero field, T².
+    """
+
+    isotope: str
+    like: bool
+    atoms_per_cell: float
+    second_moment_T2: float
+    mean_square_field_T2: float
+
+
+@dataclass(frozen=True, eq=False)
+class Linewidth:
+    """Static dipolar second moments and widths of a probe; see the module for their meaning.
+
+    position: Shape (3,) fractional. site: label of the atom it is on, empty where it is on none.
+    particle: name of the probe. MHz_per_T: its |γ|/2π.
+    direction: Shape (3,) unit vector of the strong field (in zero field: of the initial polarization), Cartesian; None
+        for a powder.
+    strong_tensor_T2: Shape (3, 3, 3, 3) in T². Σ p (1/3 or 3/4) I(I+1) b² n_a n_b n_c n_d, from which every direction follows.
+    zero_tensor_T2: Shape (3, 3) in T². ⟨B_a B_b⟩ in zero field.
+    contributions: by isotope. notes: sentences a report must repeat.
+    """
+
+    position: FloatArray
+    site: str
+    particle: str
+    MHz_per_T: float
+    direction: FloatArray | None
+    strong_tensor_T2: FloatArray
+    zero_tensor_T2: FloatArray
+    contributions: tuple[Contribution, ...]
+    notes: tuple[str, ...] = field(default=(), repr=False)
+
+    @property
+    def second_moment_T2(self) -> float:
+        """Mean square dipolar field along a strong field, T²; along `direction`, or powder average."""
+        return _along(self.strong_tensor_T2, self.direction)
+
+    @property
+    def transverse_width_per_us(self) -> float:
+        """σ = γ √(second moment) in 1/µs (angular frequency), as in exp(−σ²t²/2)."""
+        return self._rate(self.second_moment_T2)
+
+    @property
+    def zero_field_width_per_us(self) -> float | None:
+        """Δ in 1/µs of the static Kubo–Toyabe function, Δ² = γ² ⟨B²⟩/3; None for anything but a muon.
+
+        With a direction it is the width that a polarization along it shows, from the two field components across:
+        Δ² = γ² (⟨B²⟩ − ⟨B_∥²⟩)/2, so that the polarization starts as 1 − Δ² t².
+        """
+        if self.particle != "muon":
+            return None
+        whole = float(np.trace(self.zero_tensor_T2))
+        if self.direction is None:
+            return self._rate(whole / 3)
+        return self._rate((whole - float(self.direction @ self.zero_tensor_T2 @ self.direction)) / 2)
+
+    def second_moment_along(self, direction: Any) -> float:
+        """Second moment in T² with the strong field along a Cartesian direction (3,); InputError for a zero vector."""
+        return _along(self.strong_tensor_T2, as_unit_vector("direction", direction))
+
+    def _rate(self, mean_square_T2: float) -> float:
+        return 2 * math.pi * self.MHz_per_T * math.sqrt(max(0.0, mean_square_T2))
+
+    def to_dict(self) -> dict[str, Any]:
+        """Plain dict; keys carry their units."""
+        return {
+            "position": self.position.tolist(),
+            "site": self.site or None,
+            "particle": self.particle,
+            "direction": None if self.direction is None else self.direction.tolist(),
+            "second_moment_T2": self.second_moment_T2,
+            "root_second_moment_mT": 1e3 * math.sqrt(max(0.0, self.second_moment_T2)),
+            "transverse_width_per_us": self.transverse_width_per_us,
+            "zero_field_width_per_us": self.zero_field_width_per_us,
+            "zero_field_tensor_T2": self.zero_tensor_T2.tolist(),
+            "contributions": [
+                {
+                    "isotope": part.isotope,
+                    "like": part.like,
+                    "atoms_per_cell": part.atoms_per_cell,
+                    "second_moment_T2": part.second_moment_T2,
+                    "mean_square_field_T2": part.mean_square_field_T2,
+                }
+                for part in self.contributions
+            ],
+            "notes": list(self.notes),
+        }
+
+
+def linewidth(
+    crystal: Crystal,
+    position: Any,
+    *,
+    particle: str,
+    nuclei: str | Iterable[str] | None = None,
+    direction: Any = None,
+    abundances: Mapping[str, float] | None = None,
+    displaced: Displaced | Iterable[Displaced] = (),
+) -> Linewidth:
+    """Static dipolar second moment and widths of a probe from the nuclear moments around it.
+
+    crystal: periodic in three directions, or in none. position: Shape (3,) fractional; within 1e-3 Å of an atom it is
+    that site, and neither that atom nor one that shares its place acts on the probe. particle: "muon" or an isotope;
+    spins of the same isotope are like spins. nuclei: isotopes ("63Cu") or elements ("Cu") that count; None: all.
+    direction: Shape (3,) Cartesian, of the strong field; None: powder average. abundances: fraction of the atoms of an
+    element that are an isotope, by its name, where they are not the natural ones. displaced: neighbours that the probe
+    moves. Lattice sums are exact to ten digits or better.
+
+    Raises InputError for unknown particles and nuclei, a zero direction, a position between 1e-3 and 0.1 Å from an
+    atom, a shell that is not there, or a crystal that is periodic in one or two directions.
+    """
+    probe = particle_named(particle)
+    along = None if direction is None else frozen(as_unit_vector("direction", direction))
+    isotopes = isotopes_by_element(crystal, nuclei, abundances)
+    place = place_of(crystal, position)
+    terms = (displaced,) if isinstance(displaced, Displaced) else tuple(displaced)
+    sums = _site_sums(crystal, place, terms)
+    strong, zero = np.zeros((3, 3, 3, 3)), np.zeros((3, 3))
+    contributions = []
+    for element, entries in isotopes.items():
+        sites = np.array([symbol == element for symbol in crystal.symbols])
+        occupied = float(crystal.occupancies[sites].sum())
+        around = np.einsum("s,sabcd->abcd", crystal.occupancies[sites], sums[sites])
+        second = np.einsum("abcc->ab", around)
+        for isotope, share in entries:
+            like = isotope.name == probe.name
+            scale = share * _mean_square_T2_A6(isotope)
+            part = (LIKE_FACTOR if like else 1.0) * scale * around
+            random = scale * (3 * second + np.trace(second) * np.eye(3))
+            strong += part
+            zero += random
+            contributions.append(
+                Contribution(isotope.name, like, share * occupied, _along(part, along), float(np.trace(random)))
+            )
+    return Linewidth(
+        position=place.position,
+        site=crystal.labels[place.site] if place.site >= 0 else "",
+        particle=probe.name,
+        MHz_per_T=probe.MHz_per_T,
+        direction=along,
+        strong_tensor_T2=frozen(strong),
+        zero_tensor_T2=frozen(zero),
+        contributions=tuple(contributions),
+        notes=_notes(crystal, place, probe, terms, contributions),
+    )
+
+
+def _mean_square_T2_A6(isotope: Particle) -> float:
+    """(1/3) I(I+1) (µ0/4π)² (µ/I)² in T² Å⁶: mean square of one component of (µ0/4π) µ I/I."""
+    field_per_spin = NUCLEAR_FIELD_T_A3 * isotope.moment_nuclear_magnetons / isotope.spin
+    return isotope.spin * (isotope.spin + 1) / 3 * field_per_spin**2
+
+
+def _along(tensor: FloatArray, direction: FloatArray | None) -> float:
+    if direction is None:
+        return 4 / 5 * float(np.einsum("aabb->", tensor))
+    # Squares add up to at least zero; rounding may fall below it where every term vanishes.
+    return max(0.0, float(direction_sum(tensor, direction)))
+
+
+def _site_sums(crystal: Crystal, place: Place, displaced: tuple[Displaced, ...]) -> FloatArray:
+    """Shape (n_sites, 3, 3, 3, 3) in 1/Å⁶. Σ n_a n_b n_c n_d r⁻⁶ over the atoms of each site, all cells."""
+    offsets = place.cart - crystal.places_cart
+    if all(crystal.pbc):
+        sums = power_tensors(crystal.cell, offsets, leave_out_A=OVERLAP_A)
+    elif not any(crystal.pbc):
+        sums = np.zeros((crystal.n_sites, 3, 3, 3, 3))
+        away = np.linalg.norm(offsets, axis=1) >= OVERLAP_A
+        sums[away] = pair_power_tensors(offsets[away])
+    else:
+        raise InputError(
+            f"the structure is periodic along {crystal.pbc} only; linewidths are available for three periodic "
+            "directions or none."
+        )
+    pairs = moved_pairs(crystal, place, displaced)
+    np.add.at(sums, pairs.sites, pair_power_tensors(pairs.after) - pair_power_tensors(pairs.before))
+    return sums
+
+
+def _notes(
+    crystal: Crystal, place: Place, probe: Particle, displaced: tuple[Displaced, ...], parts: list[Contribution]
+) -> tuple[str, ...]:
+    notes = [*crystal.notes, *(f"displaced: {term.words()}" for term in displaced)]
+    if place.site >= 0:
+        symbol, label = crystal.symbols[place.site], crystal.labels[place.site]
+        notes.append(f"the position is that of atom {label}, which does not act on the probe")
+        if probe.name != "muon" and element_of(probe.name) != symbol:
+            notes.append(f"the probe {probe.name} takes the place of an atom of another element, {label}")
+    if parts:
+        strongest = max(parts, key=lambda part: part.second_moment_T2)
+        element = element_of(strongest.isotope)
+        atoms = sum(symbol == element for symbol in crystal.symbols)
+        share = strongest.atoms_per_cell / atoms
+        if strongest.second_moment_T2 > 0 and share < DILUTE:
+            notes.append(
+                f"{strongest.isotope} sits on {100 * share:.3g} % of the {element} places only: the line of dilute spins "
+                "is narrower than its second moment says (Kittel and Abrahams 1953)"
+            )
+    return tuple(notes)

@@ -1,0 +1,164 @@
+"""Susceptibility of magnetic ions: units, tables against temperature, tensors of each atom."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from scipy import constants
+
+from latticedip.checks import FloatArray, as_float, as_floats, frozen
+from latticedip.crystal.model import Crystal
+from latticedip.crystal.symmetry import operations_of
+from latticedip.errors import InputError, near_match
+from latticedip.units import BOHR_MAGNETON_J_PER_T
+
+#: µB per tesla and ion for one unit. A cgs molar susceptibility is the moment of a mole in emu per oersted (1 Oe is
+#: 1e-4 T in vacuum, 1 emu is 1e-3 A m²); the SI one is the moment per mole over H = B/µ0, 4π·10⁻⁶ times the cgs one.
+UNITS = {
+    "cm3/mol": 10 / (constants.N_A * BOHR_MAGNETON_J_PER_T),
+    "m3/mol": 1 / (constants.mu_0 * constants.N_A * BOHR_MAGNETON_J_PER_T),
+    "muB/T": 1.0,
+}
+#: How far a tensor may be from symmetric, and from the symmetry of its site, relative to its largest element.
+TENSOR_TOLERANCE = 1e-6
+#: An operation carries an atom onto another within this distance (Å).
+SAME_ATOM_A = 0.02
+
+
+@dataclass(frozen=True, eq=False)
+class Susceptibility:
+    """Moment of one magnetic ion per applied field, m = χ B_applied, to first order in the field.
+
+    chi: a number (isotropic), a (3, 3) Cartesian tensor, or (n_atoms, 3, 3) with one tensor for each atom of the label
+        in the order of `Crystal.find`. With temperatures one more axis goes first: (n_T,), (n_T, 3, 3) or
+        (n_T, n_atoms, 3, 3).
+    unit: "cm3/mol" (cgs, emu per oersted and mole of magnetic ions), "m3/mol" (SI) or "muB/T" (per ion).
+    temperatures_K: Shape (n_T,) in K, distinct and positive, where chi is a table; between them it is interpolated
+        linearly.
+    local: True: chi is the tensor of the label's first atom; that of every other atom is what the operations of the
+        crystal make of it. False: a (3, 3) tensor is the same, in the Cartesian frame, for all atoms.
+
+    A mole is one of fully occupied sites; partial occupancy is applied when fields are summed.
+
+    Raises InputError for wrong shapes, values that are not finite, tensors that are not symmetric, an unknown unit,
+    or temperatures that are not positive or occur twice.
+    """
+
+    chi: Any
+    unit: str = "cm3/mol"
+    temperatures_K: Any = None
+    local: bool = False
+
+    def __post_init__(self) -> None:
+        if self.unit not in UNITS:
+            raise InputError(
+                f"unknown unit of susceptibility {self.unit!r}. Known are: {', '.join(UNITS)}."
+                + near_match(str(self.unit), UNITS)
+            )
+        table = self.temperatures_K is not None
+        depth = np.ndim(self.chi) - (1 if table else 0)
+        if depth not in (0, 2, 3):
+            raise InputError(
+                f"chi must be a number, a (3, 3) tensor or (n_atoms, 3, 3) tensors{' per temperature' if table else ''}, "
+                f"got shape {np.shape(self.chi)}."
+            )
+        if self.local and depth != 2:
+            raise InputError("a local susceptibility is one (3, 3) tensor, that of the first atom of its label.")
+        lead: tuple[int | None, ...] = (None,) if table else ()
+        inner: tuple[int | None, ...] = {0: (), 2: (3, 3), 3: (None, 3, 3)}[depth]
+        chi = as_floats("chi", self.chi, (*lead, *inner)) if lead or inner else np.array(as_float("chi", self.chi))
+        if depth >= 2:
+            gap = np.abs(chi - np.swapaxes(chi, -1, -2)).max(initial=0.0)
+            if gap > TENSOR_TOLERANCE * np.abs(chi).max(initial=0.0):
+                raise InputError(f"chi must be symmetric, its elements across the diagonal differ by {gap:.6g}.")
+            chi = (chi + np.swapaxes(chi, -1, -2)) / 2
+        if table:
+            temperatures = as_floats("temperatures_K", self.temperatures_K, (None,))
+            if len(temperatures) != len(chi) or not len(temperatures):
+                raise InputError(f"temperatures_K has {len(temperatures)} values, but chi is for {len(chi)}.")
+            if np.any(temperatures <= 0):
+                raise InputError(f"temperatures_K must be positive, got {float(temperatures.min())!r}.")
+            order = np.argsort(temperatures, kind="stable")
+            temperatures, chi = temperatures[order], chi[order]
+            twice = np.flatnonzero(np.diff(temperatures) == 0)
+            if len(twice):
+                raise InputError(f"temperatures_K holds {float(temperatures[twice[0]])!r} twice.")
+            object.__setattr__(self, "temperatures_K", frozen(temperatures))
+        object.__setattr__(self, "chi", frozen(chi))
+
+    def at(self, temperature_K: float | None = None) -> FloatArray:
+        """Shape (), (3, 3) or (n_atoms, 3, 3) float in µB/T per ion, at a temperature where chi is a table.
+
+        Raises InputError where a table gets no temperature or one outside it, or a single value gets one.
+        """
+        if self.temperatures_K is None:
+            if temperature_K is not None:
+                raise InputError(
+                    f"the susceptibility is a single value, so temperature_K = {temperature_K!r} has no meaning. "
+                    "Leave it out, or give temperatures_K with a table."
+                )
+            return np.asarray(self.chi * UNITS[self.unit])
+        low, high = float(self.temperatures_K[0]), float(self.temperatures_K[-1])
+        if temperature_K is None:
+            raise InputError(f"the susceptibility is a table from {low:g} to {high:g} K: give temperature_K.")
+        wanted = as_float("temperature_K", temperature_K)
+        if not low <= wanted <= high:
+            raise InputError(
+                f"temperature_K = {wanted!r} lies outside the table of the susceptibility, {low:g} to {high:g} K."
+            )
+        above = min(int(np.searchsorted(self.temperatures_K, wanted)), len(self.temperatures_K) - 1)
+        below = max(0, above - 1)
+        span = self.temperatures_K[above] - self.temperatures_K[below]
+        share = (wanted - self.temperatures_K[below]) / span if span > 0 else 1.0
+        return np.asarray(((1 - share) * self.chi[below] + share * self.chi[above]) * UNITS[self.unit])
+
+    def of_atoms(self, crystal: Crystal, name: str, temperature_K: float | None = None) -> FloatArray:
+        """Shape (n_atoms, 3, 3) float in µB/T per ion, for the atoms of a label or element in order.
+
+        Raises InputError for an unknown name, a number of tensors that is not that of the atoms, and a local tensor
+        that has not the symmetry of its site or whose label covers atoms of several kinds.
+        """
+        sites = crystal.find(name)
+        value = self.at(temperature_K)
+        if value.ndim == 0:
+            return np.asarray(np.tile(value * np.eye(3), (len(sites), 1, 1)))
+        if value.ndim == 3:
+            if len(value) != len(sites):
+                raise InputError(f"{name}: {len(value)} susceptibility tensors for {len(sites)} atoms.")
+            return value
+        if self.local:
+            return _carried(crystal, name, sites, value)
+        return np.asarray(np.tile(value, (len(sites), 1, 1)))
+
+
+def _carried(crystal: Crystal, name: str, sites: tuple[int, ...], tensor: FloatArray) -> FloatArray:
+    """Tensors of all atoms of a label from that of the first, by the operations of the crystal."""
+    operations = operations_of(crystal)
+    columns = crystal.cell.T
+    out = np.full((len(sites), 3, 3), np.nan)
+    scale = TENSOR_TOLERANCE * float(np.abs(tensor).max())
+    home = crystal.positions[sites[0]]
+    for rotation, translation in zip(operations.rotations, operations.translations, strict=True):
+        gap = crystal.positions[list(sites)] - (rotation @ home + translation)
+        distance = np.linalg.norm((gap - np.round(gap)) @ crystal.cell, axis=1)
+        target = int(np.argmin(distance))
+        if distance[target] > SAME_ATOM_A:
+            continue
+        turn = columns @ rotation @ np.linalg.inv(columns)
+        turned = turn @ tensor @ turn.T
+        if np.isnan(out[target, 0, 0]):
+            out[target] = turned
+        elif np.abs(out[target] - turned).max() > scale:
+            raise InputError(
+                f"{name}: the local susceptibility does not have the symmetry of its site (an operation changes it by "
+                f"{np.abs(out[target] - turned).max():.3g} µB/T). Give one tensor per atom, or one that the site allows."
+            )
+    missing = np.flatnonzero(np.isnan(out[:, 0, 0]))
+    if len(missing):
+        raise InputError(
+            f"{name}: no operation of the crystal carries its first atom onto number {int(missing[0]) + 1}, so a local "
+            "susceptibility cannot be carried over. Name the distinct sites one by one."
+        )
+    return out

@@ -1,0 +1,103 @@
+"""Local fields as documents: one row per probe and point, vectors in the axes and the unit asked for."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any, Literal
+
+import numpy as np
+
+from latticedip.checks import FloatArray
+from latticedip.study.documents import document, home_cell_notes, ordering_head
+from latticedip.units import T_PER_GAUSS
+
+if TYPE_CHECKING:
+    from latticedip.crystal.model import Crystal
+    from latticedip.physics.field import LocalField
+    from latticedip.study.schema import Study
+
+Axes = Literal["cartesian", "crystal", "polar"]
+Unit = Literal["T", "G"]
+
+#: The parts of a field by the keys of a document, in the order in which they are reported, and their names in words.
+PARTS = {
+    "dipolar": "dipolar",
+    "lorentz": "Lorentz",
+    "demagnetizing": "demagnetizing",
+    "contact": "contact",
+    "applied": "applied",
+    "field": "total",
+}
+
+
+def field_document(
+    study: Study, fields: Sequence[LocalField], *, axes: Axes = "cartesian", unit: Unit = "T", tol: float = 1e-10
+) -> dict[str, Any]:
+    """The document of `field`: per ordering one row per probe and point, vectors in the axes and unit asked for."""
+    orderings = []
+    for ordering, result in zip(study.orderings, fields, strict=True):
+        plain = result.to_dict()
+        rows = [field_row(row, study.crystal, axes, unit) for row in plain["rows"]]
+        notes = [*plain["notes"], *home_cell_notes([ordering])]
+        orderings.append({**ordering_head(ordering), **plain, "rows": rows, "notes": notes})
+    return document(
+        "field",
+        files=study.files,
+        options={"axes": axes, "unit": unit, "tol": tol},
+        boundary=common_boundary([result.boundary for result in fields]),
+        results={"title": study.title, "axes": axes, "sample": study.sample.to_dict(), "orderings": orderings},
+    )
+
+
+def field_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
+    """The rows of a field document as one list, each led by its ordering and boundary."""
+    return [
+        {"ordering": entry["ordering"], "k": entry["k"], **row, "boundary": entry["boundary"]}
+        for entry in doc["orderings"]
+        for row in entry["rows"]
+    ]
+
+
+def field_row(row: dict[str, Any], crystal: Crystal, axes: Axes, unit: Unit) -> dict[str, Any]:
+    """A row of `LocalField.to_dict` with its vectors in the axes and the unit asked for."""
+    factor = 1.0 if unit == "T" else 1.0 / T_PER_GAUSS
+    turned: dict[str, Any] = {}
+    for key, value in row.items():
+        base, suffix = next(((key.removesuffix(s), s) for s in ("_T_per_A", "_T") if key.endswith(s)), (key, ""))
+        if not suffix:
+            turned[key] = value
+        elif isinstance(value, list):
+            turned.update(vector_keys(base, np.array(value) * factor, crystal, axes, suffix.replace("_T", f"_{unit}")))
+        else:
+            turned[f"{base}_{unit}"] = value * factor
+    slope = float(np.linalg.norm(row["gradient_of_size_T_per_A"])) * factor
+    turned[f"gradient_of_size_length_{unit}_per_A"] = slope
+    return turned
+
+
+def vector_keys(name: str, vector: FloatArray, crystal: Crystal, axes: Axes, suffix: str) -> dict[str, Any]:
+    """A vector as keys of a document: components, or its size with the angles from z and, in the xy plane, from x."""
+    if axes == "cartesian":
+        return {f"{name}{suffix}": vector.tolist()}
+    if axes == "crystal":
+        return {f"{name}_abc{suffix}": crystal.to_crystal_axes(vector).tolist()}
+    size, theta, phi = polar(vector)
+    return {f"{name}_size{suffix}": size, f"{name}_theta_deg": theta, f"{name}_phi_deg": phi}
+
+
+def polar(vector: FloatArray) -> tuple[float, float | None, float | None]:
+    """Size, angle from Cartesian z and angle of the projection from x (degrees); None where it has no meaning."""
+    x, y, z = (float(v) for v in vector)
+    size = float(np.linalg.norm(vector))
+    if not size > 0.0:
+        return size, None, None
+    across = float(np.hypot(x, y))
+    theta = float(np.degrees(np.arctan2(across, z)))
+    if across <= 1e-9 * size:
+        return size, theta, None
+    return size, theta, float(np.degrees(np.arctan2(y, x))) % 360.0
+
+
+def common_boundary(boundaries: Sequence[str]) -> str:
+    """The one boundary that all results assume, or all that occur."""
+    return "; ".join(dict.fromkeys(boundaries))

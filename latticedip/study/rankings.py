@@ -1,0 +1,123 @@
+"""Rankings as documents: one row per ordering, lowest first, with the field at every probe."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from latticedip.checks import FloatArray
+from latticedip.study.documents import document, home_cell_notes, ordering_head
+
+if TYPE_CHECKING:
+    from latticedip.analysis.rank import Ranking, RankingRow
+    from latticedip.crystal.model import Crystal
+    from latticedip.physics.field import LocalField
+    from latticedip.study.schema import Study
+
+UEV_PER_EV = 1e6
+#: Fields at equivalent points that differ by less than this (relative to the largest) are listed once.
+SAME_FIELD = 1e-6
+
+
+def rank_document(study: Study, ranking: Ranking, *, rotate: bool = False, tol: float = 1e-10) -> dict[str, Any]:
+    """The document of `rank`: one row per ordering, lowest first, with the field at every probe."""
+    rows = [_rank_row(number, row, study.crystal) for number, row in enumerate(ranking.rows, start=1)]
+    return document(
+        "rank",
+        files=study.files,
+        options={"rotate": rotate, "tol": tol},
+        boundary=ranking.boundary,
+        results={
+            "title": study.title,
+            "sample": study.sample.to_dict(),
+            "rows": rows,
+            "notes": [*(home_cell_notes([r.ordering for r in ranking.rows]) if study.probes else []), *ranking.notes],
+        },
+    )
+
+
+def _rank_row(number: int, row: RankingRow, crystal: Crystal) -> dict[str, Any]:
+    energy = row.energy
+    per_ion = UEV_PER_EV / energy.n_ions
+    plain: dict[str, Any] = {
+        "rank": number,
+        **ordering_head(row.ordering),
+        "net_moment_muB_per_ion": float(np.linalg.norm(energy.net_moment)) / energy.n_ions,
+        "energy_ueV_per_ion": energy.per_ion_eV * UEV_PER_EV,
+        "energy_K_per_ion": energy.per_ion_K,
+        "above_lowest_ueV_per_ion": row.above_lowest_eV * UEV_PER_EV,
+        "tie": bool(row.tie),
+        "dipolar_ueV_per_ion": energy.dipolar_eV * per_ion,
+        "shape_ueV_per_ion": energy.shape_eV * per_ion,
+        "applied_ueV_per_ion": energy.applied_eV * per_ion,
+        "error_bound_ueV_per_ion": energy.error_bound_eV * per_ion,
+        "energy_eV_per_cell": energy.per_cell_eV,
+        "boundary": energy.boundary,
+        "notes": list(energy.notes),
+    }
+    if row.orientation is not None:
+        plain["axis_meaning"] = row.orientation.axis_meaning
+        for word, direction in (("easy", row.easy_axis_cart), ("hard", row.hard_axis_cart)):
+            plain[f"{word}_axis_cart"] = None if direction is None else direction.tolist()
+            plain[f"{word}_axis_abc"] = None if direction is None else axis_in_crystal(direction, crystal).tolist()
+        plain["rotation"] = row.orientation.easy_rotation.tolist()
+        plain["anisotropy_ueV_per_ion"] = (row.anisotropy_eV_per_ion or 0.0) * UEV_PER_EV
+        plain["anisotropy_J_per_m3"] = row.anisotropy_J_per_m3
+        plain["orientation_notes"] = list(row.orientation.notes)
+    plain["fields"] = {name: _brief_field(result) for name, result in row.fields.items()}
+    return plain
+
+
+def _brief_field(result: LocalField) -> list[dict[str, Any]]:
+    """The whole field at each point of one probe; its parts are what `field` gives."""
+    return [
+        {
+            "position": result.points[i].tolist(),
+            "field_T": result.total[i].tolist(),
+            "field_size_T": float(result.size_T[i]),
+            "frequency_MHz": float(result.frequency_MHz[i]),
+            "error_bound_T": float(result.error_bound_T[i]),
+        }
+        for i in range(len(result.points))
+    ]
+
+
+def field_levels(points: Sequence[dict[str, Any]]) -> list[tuple[float, float, int]]:
+    """The distinct field sizes (T) of a probe's points, largest first, each with frequency (MHz) and number of points.
+
+    Sizes within 1e-6 of the largest are one level: symmetry makes them equal, rounding does not keep them so.
+    """
+    ordered = sorted(points, key=lambda point: -point["field_size_T"])
+    slack = SAME_FIELD * ordered[0]["field_size_T"] if ordered else 0.0
+    levels: list[list[dict[str, Any]]] = []
+    for point in ordered:
+        if levels and levels[-1][0]["field_size_T"] - point["field_size_T"] <= slack:
+            levels[-1].append(point)
+        else:
+            levels.append([point])
+    return [(level[0]["field_size_T"], level[0]["frequency_MHz"], len(level)) for level in levels]
+
+
+def axis_in_crystal(direction: FloatArray, crystal: Crystal) -> FloatArray:
+    """A direction as components along unit vectors parallel to a, b, c (as `along` in a study), the largest 1."""
+    components = crystal.to_crystal_axes(direction)
+    return np.asarray(components / np.abs(components).max())
+
+
+def rank_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
+    """The rows of a rank document with the field levels of each probe spread over columns, for CSV."""
+    table = []
+    for row in doc["rows"]:
+        spread = {key: value for key, value in row.items() if key not in ("fields", "rotation", "boundary")}
+        for i, line in enumerate(row.get("rotation", [])):
+            spread.update({f"rotation_{i + 1}{j + 1}": value for j, value in enumerate(line)})
+        for name, points in row["fields"].items():
+            for number, (size, frequency, count) in enumerate(field_levels(points), start=1):
+                lead = name if number == 1 else f"{name} ({number})"
+                spread.update({f"{lead}: field_size_T": size, f"{lead}: frequency_MHz": frequency})
+                spread[f"{lead}: points"] = count
+        spread["boundary"] = row["boundary"]
+        table.append(spread)
+    return table
