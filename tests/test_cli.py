@@ -417,6 +417,7 @@ def test_wrong_input_is_one_message(folder: Path, arguments: list[str], message:
         (["demag"], "exactly one shape is needed"),
         (["demag", "--sphere", "--plate"], "got --sphere and --plate."),
         (["start", "cube.cif", "--moment", "Mn"], "'Mn' is not of the form LABEL=SIZE, such as Mn1=4.6."),
+        (["start", "cube.cif", "--moment", "Mn=1", "--moment", "Mn=2"], "--moment gives 'Mn' twice."),
         (["show", "study.toml", "--block", "x"], "--block goes with a structure file"),
         (["field", "study.toml", "--unit", "Oe"], "'Oe' is not one of 'T', 'G'."),
     ],
@@ -446,6 +447,13 @@ def test_help_of_every_command_holds_an_example() -> None:
     top = run("--help").stdout
     assert all(f"  {name} " in top for name in COMMANDS)
     assert "_LATTICEDIP_COMPLETE=bash_source" in top
+
+
+def test_verbose_reports_on_stderr(folder: Path) -> None:
+    result = run("--verbose", "rank", "study.toml")
+    assert result.stderr.startswith("read study.toml: 1 sites, 3 orderings, 2 probes\ndone in ")
+    assert run("rank", "study.toml").stderr == ""
+    assert run("rank", "study.toml").stdout == result.stdout
 
 
 def test_version() -> None:

@@ -130,11 +130,11 @@ def test_all_stationary_points_of_a_form(form, linear):
     for u, value in found:
         assert np.linalg.norm(u) == pytest.approx(1, abs=1e-12)
         slope = 2 * form @ u - linear
-        assert np.linalg.norm(slope - (slope @ u) * u) < 1e-6 * scale
+        assert np.linalg.norm(slope - (slope @ u) * u) <= 1e-6 * scale
         assert value == pytest.approx(u @ form @ u - linear @ u, abs=1e-12 * scale)
 
 
-@pytest.mark.parametrize(("size", "count"), [(0.01, 6), (1.2, 4), (50.0, 2)])
+@pytest.mark.parametrize(("size", "count"), [(0.01, 6), (2.5, 4), (50.0, 2)])
 def test_number_of_stationary_points(size, count):
     # Six in a weak field (three axes, both ways), two in a strong one; the polynomial of degree six by hand.
     form, linear = np.diag([0.0, 1.0, 3.0]), size * np.array([0.3, 0.5, -0.4])

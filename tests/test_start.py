@@ -163,6 +163,12 @@ def test_the_study_runs_and_its_paths_lead_back(tmp_path: Path, group: str) -> N
     assert [row["known"] for row in document["rows"]] == [False, False]
 
 
+def test_a_label_goes_before_an_element() -> None:
+    crystal = Crystal(CUBE, [[0, 0, 0], [0.5, 0.5, 0]], ("Fe", "Fe"), ("Fe1", "Fe2"))
+    for sizes in ({"Fe1": 4.0, "Fe": 2.0}, {"Fe": 2.0, "Fe1": 4.0}):
+        assert tomllib.loads(starting_study(crystal, "x.cif", sizes_muB=sizes))["moments"] == {"Fe1": 4.0, "Fe2": 2.0}
+
+
 def test_moments_of_the_file_are_taken_over() -> None:
     ordering = Ordering(simple_cubic(), [[0, 3.0, 4.0]])
     study = tomllib.loads(starting_study(ordering.crystal, "x.mcif", ordering=ordering))

@@ -106,7 +106,7 @@ def stationary_directions(form: FloatArray, linear: FloatArray) -> list[tuple[Fl
     half = 0.5 * (vectors.T @ linear)
     scale = max(float(np.abs(values).max()), float(np.abs(half).max()))
     levels, half = values / scale, half / scale
-    active = np.abs(half) > 1e-13
+    active = np.abs(half) > 1e-14
     candidates = []
     for origin, shift in _multipliers(levels[active], half[active]):
         gaps = (levels - origin) - shift
@@ -130,7 +130,7 @@ def stationary_directions(form: FloatArray, linear: FloatArray) -> list[tuple[Fl
 
 def _is_free(form: FloatArray, linear: FloatArray) -> bool:
     """True where the linear term is nothing beside the quadratic one."""
-    return bool(np.abs(linear).max() <= 1e-14 * float(np.abs(form).max()))
+    return bool(np.abs(linear).max() <= 1e-12 * float(np.abs(form).max()))
 
 
 def _multipliers(levels: FloatArray, half: FloatArray) -> list[tuple[float, float]]:

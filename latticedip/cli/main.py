@@ -88,6 +88,13 @@ class WrongInput(click.ClickException):
     exit_code = 2
 
 
+class EchoHandler(logging.Handler):
+    """Writes messages to the stderr of the moment."""
+
+    def emit(self, record: logging.LogRecord) -> None:
+        click.echo(self.format(record), err=True)
+
+
 def _abandon_stdout() -> None:
     """Send what is left in the buffer nowhere: the interpreter would fail on it once more at its end."""
     with contextlib.suppress(OSError, ValueError):
@@ -117,5 +124,7 @@ def main(verbose: bool) -> None:
     `start` writes one for a structure, `show` says what was understood, `field` and `rank` compute.
     """
     _prepare_streams()
-    logging.basicConfig(level=logging.INFO if verbose else logging.WARNING, format="%(message)s", stream=sys.stderr)
+    if verbose and not any(isinstance(handler, EchoHandler) for handler in _log.handlers):
+        _log.addHandler(EchoHandler())
+    _log.setLevel(logging.INFO if verbose else logging.WARNING)
     warnings.showwarning = _plain_warning

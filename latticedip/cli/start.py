@@ -27,7 +27,13 @@ class Moment(click.ParamType):
 
 @click.command(short_help="Write a commented study for a structure.")
 @click.argument("file", type=click.Path(path_type=Path))
-@click.option("-o", "--output", type=click.Path(path_type=Path), metavar="STUDY", help="Write to this file.")
+@click.option(
+    "-o",
+    "--output",
+    type=click.Path(path_type=Path, allow_dash=True),
+    metavar="STUDY",
+    help="Write to this file; without it, or with -, to stdout.",
+)
 @click.option("--force", is_flag=True, help="Write over a file that exists.")
 @click.option(
     "--moment",
@@ -62,6 +68,10 @@ def start(
     from latticedip.errors import InputError
     from latticedip.study import tasks
 
+    output = None if str(output) == "-" else output
+    twice = [label for i, (label, _) in enumerate(moments) if label in dict(moments[:i])]
+    if twice:
+        raise click.UsageError(f"--moment gives {twice[0]!r} twice.")
     if output is not None and output.exists() and not force:
         raise InputError(f"{str(output)!r} exists. Name another file, or use --force to write over it.")
     document = tasks.start(file, output=output, sizes_muB=dict(moments), block=block)

@@ -156,7 +156,7 @@ def coupling_tensor(
         n_ions=total,
         dipolar=frozen(np.einsum("s,sab->ab", parts.occupancies, parts.dipolar)),
         lorentz=frozen(volume_T / 3 * np.eye(3)),
-        demagnetizing=frozen(-volume_T * specimen.demagnetizing_tensor),
+        demagnetizing=frozen(0.0 - volume_T * specimen.demagnetizing_tensor),
         contact=frozen(np.einsum("s,sab->ab", parts.occupancies, parts.contact)),
         error_bound=parts.error_bound,
         boundary=boundary_words(parts.ordering, sample),

@@ -71,13 +71,10 @@ def _checked_name(crystal: Crystal, found: Mapping[str, list[tuple[Particle, flo
     if isinstance(name, str) and re.fullmatch(r"\d+[A-Z][a-z]?", name) and element_of(name) in found:
         isotope = particle_named(name)
         raise InputError(
-            f"nuclei: {isotope.name} has no abundance here. Give it with abundances, such as "
-            f"{{{isotope.name!r}: 1.0}}."
+            f"nuclei: {isotope.name} has no abundance here. Give it with abundances, such as {{{isotope.name!r}: 1.0}}."
         )
     known = [*found, *sorted(present)]
-    raise InputError(
-        f"nuclei: the crystal holds no {name!r}; {_holds(crystal)}" + (near_match(str(name), known))
-    )
+    raise InputError(f"nuclei: the crystal holds no {name!r}; {_holds(crystal)}" + (near_match(str(name), known)))
 
 
 def _holds(crystal: Crystal) -> str:

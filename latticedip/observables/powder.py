@@ -112,4 +112,3 @@ def _cone(wide: FloatArray, narrow: FloatArray, beyond: FloatArray) -> FloatArra
     z = (1 + b) / (1 + a)
     value = (a * elliprf(0.0, y, z) - (a - b) / 3 * elliprj(0.0, y, z, 1.0)) / np.sqrt(a * (1 + a))
     return np.asarray(1 - 2 / np.pi * value)
-

@@ -294,7 +294,7 @@ def _shift(
         dipolar=frozen(np.einsum("sab,sbc->ac", parts.dipolar, weighted)),
         contact=frozen(np.einsum("sab,sbc->ac", parts.contact, weighted)),
         lorentz=frozen(volume / 3),
-        demagnetizing=frozen(-specimen.demagnetizing_tensor @ volume),
+        demagnetizing=frozen(0.0 - specimen.demagnetizing_tensor @ volume),
         volume_susceptibility=frozen(volume),
         chi_cm3_per_mol=mean / UNITS["cm3/mol"],
         boundary=boundary_words(parts.ordering, sample),

@@ -17,6 +17,7 @@ class PrincipalFrame:
     values: Shape (3,) float, xx, yy, zz with |zz − iso| ≥ |xx − iso| ≥ |yy − iso|; same unit as the tensor.
     axes: Shape (3, 3) float. Rows are the unit vectors, Cartesian, a right-handed set. Where two values are equal the
         axes between them are arbitrary.
+    zero: differences up to this are none (the accuracy of the tensor).
     """
 
     values: FloatArray
@@ -39,8 +40,8 @@ class PrincipalFrame:
         reduced = self.values[2] - self.isotropic
         if abs(reduced) <= self.zero:
             return 0.0
-        # Rounding may leave −1e-17 for an axial tensor; adding zero turns −0 into 0.
-        return float(np.clip((self.values[1] - self.values[0]) / reduced, 0.0, 1.0)) + 0.0
+        difference = float(self.values[1] - self.values[0])
+        return 0.0 if abs(difference) <= self.zero else float(np.clip(difference / reduced, 0.0, 1.0))
 
     def to_dict(self) -> dict[str, Any]:
         """Plain dict of values, axes, isotropic part, anisotropy and asymmetry."""
@@ -56,7 +57,7 @@ class PrincipalFrame:
 def principal_frame(tensor: FloatArray, zero: float = 0.0) -> PrincipalFrame:
     """Principal frame of the symmetric part of a (3, 3) tensor.
 
-    zero: |zz − iso| up to this counts as no anisotropy (the accuracy of the tensor).
+    zero: differences of principal values up to this count as none (the accuracy of the tensor).
     """
     values, vectors = np.linalg.eigh((tensor + tensor.T) / 2)
     size = np.abs(values - values.mean())

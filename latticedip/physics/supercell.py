@@ -24,7 +24,7 @@ from latticedip.checks import ComplexArray, FloatArray, frozen
 from latticedip.crystal.model import Crystal
 from latticedip.errors import InputError, LimitError
 from latticedip.ordering.model import Ordering, is_self_conjugate, snap_k
-from latticedip.physics.coupling import require_bulk
+from latticedip.physics.coupling import refuse_split_ions, require_bulk
 from latticedip.sample import Sample
 from latticedip.sums.bulk import lattice_sum
 from latticedip.units import EV_PER_MUB_T, MU0_T_A3_PER_MUB
@@ -77,6 +77,7 @@ class Supercell:
                 f"a supercell of {' × '.join(map(str, self.repeat))} cells holds {self.n_moments:,} moments, more than "
                 f"{MAX_MOMENTS:,}. Take a smaller supercell."
             )
+        refuse_split_ions(self.crystal, np.array(self.sites))
 
     @property
     def n_cells(self) -> int:
@@ -123,7 +124,7 @@ class Supercell:
                 f"{MAX_TABLE_BYTES // 2**30} GiB. Take a primitive cell or a smaller supercell."
             )
         plan = lattice_sum(self.cell, (0.0, 0.0, 0.0), tol)
-        home = self.crystal.positions_cart[list(self.sites)]
+        home = self.crystal.places_cart[list(self.sites)]
         targets = (home[None] + (self.cells @ self.crystal.cell)[:, None]).reshape(-1, 3)
         sources = plan.place(home)
         out = np.empty((self.n_cells * n, n, 6))

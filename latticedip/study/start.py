@@ -109,6 +109,8 @@ def magnetic_sites(crystal: Crystal, sizes: Mapping[str, float], ordering: Order
     for name, size in sizes.items():
         if not (np.isfinite(size) and size > 0):
             raise InputError(f"the moment of {name!r} must be a positive number of Bohr magnetons, got {size!r}.")
+    # As in a study, a label goes before an element.
+    for name, size in sorted(sizes.items(), key=lambda item: item[0] in crystal.labels):
         for site in crystal.find(name):
             chosen[crystal.labels[site]] = (float(size), True)
     if not chosen and ordering is not None:

@@ -67,7 +67,10 @@ def start(
     ordering = found if isinstance(found, Ordering) else None
     crystal = found.crystal if isinstance(found, Ordering) else found
     folder = Path.cwd() if output is None else output.absolute().parent
-    file = Path(os.path.relpath(path.absolute(), folder)).as_posix()
+    try:
+        file = Path(os.path.relpath(path.absolute(), folder)).as_posix()
+    except ValueError:  # another drive: no relative path leads there
+        file = path.absolute().as_posix()
     sizes = sizes_muB or {}
     rows = [
         {"site": site.label, "element": site.element, "moment_muB": site.size_muB, "known": site.known}

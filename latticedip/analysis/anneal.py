@@ -1,0 +1,253 @@
+"""Simulated annealing with restarts, for supercells too large to try every pattern.
+
+Kirkpatrick, Gelatt and Vecchi, Science 220, 671 (1983). Every restart begins at random at a temperature where all moves
+pass, cools by a constant factor per sweep, and ends downhill; moments that may point anywhere are then brought to the
+bottom of their valley by a quasi-Newton descent with the exact gradient. The same seed gives the same result on any
+number of threads.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.optimize import minimize
+
+from latticedip.analysis.exhaustive import best_axis
+from latticedip.analysis.problem import Found, SearchProblem
+from latticedip.checks import FloatArray
+from latticedip.errors import InputError
+from latticedip.kernels.annealing import anneal_best_axis, anneal_signs, anneal_vectors
+from latticedip.kernels.jit import over_rows
+from latticedip.physics.supercell import COLUMNS, ROWS
+from latticedip.units import EV_PER_MUB_T
+
+#: Temperature at the start and at the end, over the rms field on a moment among random ones.
+HOT, COLD_SIGNS, COLD_VECTORS = 2.0, 0.02, 1e-3
+#: What holds the net moment at zero, over the rms field: for moments of the mean weight, at start and end.
+PENALTY_HOT, PENALTY_COLD = 0.25, 2.0
+#: Energies closer than this part count as the same state reached by two restarts.
+SAME_ENERGY = 1e-8
+
+
+@dataclass(frozen=True)
+class Schedule:
+    """restarts, and sweeps (moves per moment) in each."""
+
+    restarts: int
+    sweeps: int
+
+    @classmethod
+    def usual(cls, n_units: int, vectors: bool) -> Schedule:
+        """What a minute or so on two cores allows: more restarts for few moments."""
+        if n_units <= 200:
+            return cls(32, 600 if vectors else 400)
+        if n_units <= 2000:
+            return cls(16, 400)
+        return cls(4 if vectors else 8, 200 if vectors else 300)
+
+
+@dataclass(frozen=True, eq=False)
+class Annealed:
+    """found: different arrangements, lowest first. restarts: how many were made; at_best: how many found the best."""
+
+    found: tuple[Found, ...]
+    restarts: int
+    at_best: int
+
+
+def anneal(problem: SearchProblem, kind: str, schedule: Schedule, seed: int, keep: int) -> Annealed:
+    """Anneal moments of a kind: "ising" (signs along the axes of the problem, or along each pattern's own best axis),
+    "planar" (each across its axis) or "heisenberg" (free).
+
+    Raises InputError where no restart ends with the net moment that the problem wants.
+    """
+    rng = np.random.SeedSequence(seed)
+    seeds = rng.generate_state(schedule.restarts, dtype=np.uint64)
+    if kind == "ising":
+        states = _signs(problem, schedule, seeds)
+    else:
+        states = _vectors(problem, kind == "planar", schedule, seeds)
+    admitted = [(energy, units, notes) for energy, units, notes in states if problem.admits(problem.spread(units))]
+    if not admitted:
+        raise InputError(
+            f"none of {schedule.restarts} annealing restarts ended without a net moment; the sizes or the supercell may "
+            "not allow it. Take another supercell, or more restarts."
+        )
+    admitted.sort(key=lambda item: item[0])
+    lowest = admitted[0][0]
+    close = SAME_ENERGY * max(abs(lowest), 1e-300)
+    at_best = sum(energy - lowest <= close for energy, _, _ in admitted)
+    note = f"simulated annealing: {at_best} of {schedule.restarts} restarts found the best"
+    found: list[tuple[float, Found]] = []
+    for energy, units, notes in admitted:
+        moments = problem.spread(units)
+        if any(abs(energy - e) <= close and problem.symmetry.are_same(f.moments, moments) for e, f in found):
+            continue
+        found.append((energy, Found(moments, "annealing", problem.symmetry.orbit_size(moments), (note, *notes))))
+        if len(found) == keep:
+            break
+    return Annealed(tuple(f for _, f in found), schedule.restarts, at_best)
+
+
+State = tuple[float, FloatArray, tuple[str, ...]]
+
+
+def doubled(table: FloatArray, repeat: tuple[int, int, int]) -> FloatArray:
+    """Shape (n_c, n, nx, ny, 2 nz − 1, n). A table (n_cells, n, n, n_c) as the kernels read it."""
+    n = table.shape[1]
+    nz = repeat[2]
+    grid = table.reshape(*repeat, n, n, -1)
+    along = np.arange(-(nz - 1), nz) % nz
+    # From (x, y, z, target, source, component).
+    return np.ascontiguousarray(grid[:, :, along].transpose(5, 4, 0, 1, 2, 3))
+
+
+def _scale(table: FloatArray) -> float:
+    """Rms field in eV on a unit among random signs, of the unit that feels most."""
+    return max(float(np.sqrt((table**2).sum(axis=(0, 2)).max())), 1e-300)
+
+
+def _schedule(problem: SearchProblem, schedule: Schedule, cold: float) -> tuple[FloatArray, FloatArray, bool]:
+    temperatures = np.geomspace(HOT, cold, schedule.sweeps)
+    held = problem.net_zero and problem.has_uniform_part
+    if not held:
+        return temperatures, np.zeros(schedule.sweeps), False
+    mean = float(np.mean(problem.weights**2))
+    return temperatures, np.geomspace(PENALTY_HOT, PENALTY_COLD, schedule.sweeps) / mean, True
+
+
+def _signs(problem: SearchProblem, schedule: Schedule, seeds: np.ndarray) -> list[State]:
+    n = problem.n_units
+    start = np.zeros(n, dtype=np.int8) if problem.fixed is None else problem.fixed
+    free = np.flatnonzero(start == 0)
+    temperatures, penalties, held = _schedule(problem, schedule, COLD_SIGNS)
+    signs = np.zeros((schedule.restarts, n), dtype=np.int8)
+    energies = np.zeros(schedule.restarts)
+    nx, ny, nz = problem.repeat
+    if problem.axes is not None:
+        axes = problem.axes
+        factors = np.where(ROWS == COLUMNS, 0.5, 1.0)
+        pairs = axes[:, None, ROWS] * axes[None, :, COLUMNS] + axes[:, None, COLUMNS] * axes[None, :, ROWS]
+        table = np.einsum("dijc,ijc,c->dij", problem.table, pairs, factors)[..., None]
+        unit = problem.unit_axes
+        assert unit is not None
+        scale = _scale(table[..., 0])
+        linear = np.einsum("pa,pa->p", problem.linear, unit) / scale
+        weights = np.ascontiguousarray((problem.weights[:, None] * unit).T) if held else np.zeros((0, n))
+        over_rows(
+            anneal_signs, schedule.restarts, doubled(table / scale, problem.repeat)[0], nx, ny, nz, linear, free,
+            start, weights, temperatures, penalties, held, seeds, signs, energies, at_least=1,
+        )  # fmt: skip
+        return [(float(e) * scale, s[:, None] * unit, ()) for e, s in zip(energies, signs, strict=True)]
+    scale = _scale(np.sqrt((problem.table**2).sum(axis=-1)))
+    pull = np.zeros(3)
+    if problem.has_uniform_part:
+        pull = EV_PER_MUB_T * problem.copies * problem.sample.applied_T / scale
+    over_rows(
+        anneal_best_axis, schedule.restarts, doubled(problem.table / scale, problem.repeat), nx, ny, nz, free, start,
+        problem.weights[None].copy(), pull, temperatures, penalties, held, seeds, signs, energies, at_least=1,
+    )  # fmt: skip
+    states = []
+    for energy, pattern in zip(energies, signs, strict=True):
+        directions, notes = best_axis(problem, pattern)
+        states.append((float(energy) * scale, pattern[:, None] * directions, notes))
+    return states
+
+
+def _vectors(problem: SearchProblem, planar: bool, schedule: Schedule, seeds: np.ndarray) -> list[State]:
+    n = problem.n_units
+    scale = _scale(np.sqrt((problem.table**2).sum(axis=-1)))
+    temperatures, penalties, _ = _schedule(problem, schedule, COLD_VECTORS)
+    planes = np.zeros((0, 2, 3))
+    if planar:
+        normals = problem.unit_axes
+        assert normals is not None
+        planes = np.array([np.linalg.svd(normal[None])[2][1:] for normal in normals])
+    vectors = np.zeros((schedule.restarts, n, 3))
+    energies = np.zeros(schedule.restarts)
+    nx, ny, nz = problem.repeat
+    over_rows(
+        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), nx, ny, nz,
+        np.ascontiguousarray(problem.linear / scale), planes, problem.weights, temperatures, penalties, seeds, vectors,
+        energies, at_least=1,
+    )  # fmt: skip
+    return [(*settle(problem, units, planes), ()) for units in vectors]
+
+
+def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArray] | FloatArray) -> tuple[float, FloatArray]:
+    """The bottom of the valley of unit vectors (n_units, 3): energy in eV per supercell, and the vectors there.
+
+    planes: Shape (n_units, 2, 3), or (0, 2, 3) where vectors are free. With ``net_zero`` the net moment is brought to
+    zero by multipliers (augmented Lagrangian: Hestenes 1969, Powell 1969).
+    """
+    form = UnitForm(problem)
+    scale = max(abs(form(units)[0]), 1e-300)
+    plane = np.asarray(planes)
+    multiplier = np.zeros(3)
+    held = problem.net_zero and problem.has_uniform_part
+    stiffness = 10.0 / max(float((problem.weights**2).sum()), 1e-300) if held else 0.0
+    current = units
+    for _ in range(40 if held else 1):
+        base = current
+
+        def value(x: FloatArray, base: FloatArray = base) -> tuple[float, FloatArray]:
+            vectors, back = _unit_vectors(x, plane, base)
+            energy, slope = form(vectors)
+            net = problem.weights @ vectors
+            total = energy / scale + multiplier @ net + 0.5 * stiffness * net @ net
+            slope = slope / scale + problem.weights[:, None] * (multiplier + stiffness * net)
+            return float(total), back(slope)
+
+        x0 = np.zeros(len(base)) if len(plane) else np.array(base).ravel()
+        result = minimize(value, x0, jac=True, method="L-BFGS-B", options={"maxiter": 5000, "gtol": 1e-10, "ftol": 1e-15})
+        current = _unit_vectors(result.x, plane, base)[0]
+        net = problem.weights @ current
+        if not held or np.linalg.norm(net) < 1e-9:
+            break
+        multiplier = multiplier + stiffness * net
+        stiffness *= 1.5
+    return form(current)[0], current
+
+
+class UnitForm:
+    """Energy in eV per supercell of unit vectors (n_units, 3), and its slope."""
+
+    def __init__(self, problem: SearchProblem) -> None:
+        self.problem = problem
+
+    def __call__(self, units: FloatArray) -> tuple[float, FloatArray]:
+        """Energy, and its derivatives with respect to the components, shape (n_units, 3)."""
+        problem = self.problem
+        if problem.k is not None or problem.supercell.n_cells == 1:
+            slope = np.empty_like(units)
+            t = problem.table[0]
+            for a, columns in enumerate(((0, 5, 4), (5, 1, 3), (4, 3, 2))):
+                slope[:, a] = sum(t[..., c] @ units[:, b] for b, c in enumerate(columns))
+        else:
+            moments = units * np.tile(problem.sizes, problem.supercell.n_cells)[:, None]
+            slope = -EV_PER_MUB_T * problem.weights[:, None] * problem.field.fields(moments)
+        energy = 0.5 * float(np.vdot(units, slope)) + float(np.vdot(units, problem.linear))
+        return energy, slope + problem.linear
+
+
+def _unit_vectors(x: FloatArray, planes: FloatArray, base: FloatArray):  # type: ignore[no-untyped-def]
+    """Unit vectors (n, 3) from free coordinates, and what turns a slope in them into one in the coordinates.
+
+    planes given: x (n,) turns ``base`` in its plane by angles; else x (3n,) is scaled to length one.
+    """
+    if len(planes):
+        angles = np.arctan2(np.einsum("pa,pa->p", base, planes[:, 1]), np.einsum("pa,pa->p", base, planes[:, 0])) + x
+        vectors = np.cos(angles)[:, None] * planes[:, 0] + np.sin(angles)[:, None] * planes[:, 1]
+        across = -np.sin(angles)[:, None] * planes[:, 0] + np.cos(angles)[:, None] * planes[:, 1]
+        return vectors, lambda slope: np.einsum("pa,pa->p", slope, across)
+    raw = x.reshape(-1, 3)
+    lengths = np.linalg.norm(raw, axis=1)[:, None]
+    vectors = raw / lengths
+
+    def back(slope: FloatArray) -> FloatArray:
+        inside = np.einsum("pa,pa->p", slope, vectors)[:, None] * vectors
+        return np.asarray(((slope - inside) / lengths).ravel())
+
+    return vectors, back
