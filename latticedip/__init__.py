@@ -29,6 +29,7 @@ _HOMES = {
     "dipole_tensor": "latticedip.sums",
     "linewidth": "latticedip.observables.linewidth",
     "local_field": "latticedip.physics.field",
+    "lowest_mode": "latticedip.analysis.modes",
     "orbit": "latticedip.crystal.orbit",
     "paramagnetic_shift": "latticedip.observables.shift",
     "rank": "latticedip.analysis.rank",

@@ -79,7 +79,7 @@ def test_tensor_couplings_and_several_terms():
 
 def test_neighbours_at_equal_distance_are_never_split():
     # 0.005 Å off the centre the eight distances spread over less than 0.01 Å: one shell. 0.05 Å off they are several.
-    near, far = CENTRE + [0.004 / A, 0, 0], CENTRE + [0.05 / A, 0, 0]
+    near, far = (CENTRE + np.array([d / A, 0, 0]) for d in (0.004, 0.05))
     assert np.allclose(contact(cubic(), near, ld.Contact(1.0, shell=1)), 8 * M)
     assert np.allclose(contact(cubic(), near, ld.Contact(1.0, within=A * np.sqrt(3) / 2 - 0.001)), 8 * M)
     assert np.allclose(contact(cubic(), far, ld.Contact(1.0, shell=1)), 4 * M)

@@ -113,7 +113,9 @@ linears = st.one_of(
     st.tuples(st.sampled_from([1e-9, 1e-4, 0.3, 1.0, 4.0, 100.0]), st.integers(0, 10**6)).map(
         lambda t: t[0] * np.random.default_rng(t[1]).normal(size=3)
     ),
-    st.tuples(st.sampled_from([1e-9, 1e-3, 0.5, 2.0, 4.0, 50.0]), st.integers(0, 2)).map(lambda t: t[0] * np.eye(3)[t[1]]),
+    st.tuples(st.sampled_from([1e-9, 1e-3, 0.5, 2.0, 4.0, 50.0]), st.integers(0, 2)).map(
+        lambda t: t[0] * np.eye(3)[t[1]]
+    ),
 )
 
 

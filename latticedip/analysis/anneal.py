@@ -13,12 +13,13 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.optimize import minimize
+from scipy.spatial.transform import Rotation
 
 from latticedip.analysis.exhaustive import best_axis
 from latticedip.analysis.problem import Found, SearchProblem
 from latticedip.checks import FloatArray
 from latticedip.errors import InputError
-from latticedip.kernels.annealing import anneal_best_axis, anneal_signs, anneal_vectors
+from latticedip.kernels.annealing import anneal_signs, anneal_vectors, descend_best_axis
 from latticedip.kernels.jit import over_rows
 from latticedip.physics.supercell import COLUMNS, ROWS
 from latticedip.units import EV_PER_MUB_T
@@ -27,6 +28,8 @@ from latticedip.units import EV_PER_MUB_T
 HOT, COLD_SIGNS, COLD_VECTORS = 2.0, 0.02, 1e-3
 #: What holds the net moment at zero, over the rms field: for moments of the mean weight, at start and end.
 PENALTY_HOT, PENALTY_COLD = 0.25, 2.0
+#: Most times that a restart takes the best axis of what it found as its next direction.
+AXIS_ROUNDS = 4
 #: Energies closer than this part count as the same state reached by two restarts.
 SAME_ENERGY = 1e-8
 
@@ -69,29 +72,32 @@ def anneal(problem: SearchProblem, kind: str, schedule: Schedule, seed: int, kee
         states = _signs(problem, schedule, seeds)
     else:
         states = _vectors(problem, kind == "planar", schedule, seeds)
-    admitted = [(energy, units, notes) for energy, units, notes in states if problem.admits(problem.spread(units))]
+    admitted = sorted((s for s in states if problem.admits(problem.spread(s[1]))), key=lambda state: state[0])
     if not admitted:
         raise InputError(
             f"none of {schedule.restarts} annealing restarts ended without a net moment; the sizes or the supercell may "
             "not allow it. Take another supercell, or more restarts."
         )
-    admitted.sort(key=lambda item: item[0])
     lowest = admitted[0][0]
     close = SAME_ENERGY * max(abs(lowest), 1e-300)
-    at_best = sum(energy - lowest <= close for energy, _, _ in admitted)
+    at_best = sum(state[0] - lowest <= close for state in admitted)
     note = f"simulated annealing: {at_best} of {schedule.restarts} restarts found the best"
     found: list[tuple[float, Found]] = []
-    for energy, units, notes in admitted:
+    for energy, units, signs, notes in admitted:
         moments = problem.spread(units)
-        if any(abs(energy - e) <= close and problem.symmetry.are_same(f.moments, moments) for e, f in found):
+        equal = [other for other_energy, other in found if abs(energy - other_energy) <= close]
+        # Free moments often have a continuous family of states of one energy: one stands for it.
+        if equal and (signs is None or any(problem.symmetry.are_same(other.moments, moments) for other in equal)):
             continue
-        found.append((energy, Found(moments, "annealing", problem.symmetry.orbit_size(moments), (note, *notes))))
+        count = problem.multiplicity(signs, moments)
+        found.append((energy, Found(moments, "annealing", count, (note, *notes))))
         if len(found) == keep:
             break
     return Annealed(tuple(f for _, f in found), schedule.restarts, at_best)
 
 
-State = tuple[float, FloatArray, tuple[str, ...]]
+#: Energy in eV per supercell, unit vectors (n_units, 3), signs of a pattern, notes.
+State = tuple[float, FloatArray, np.ndarray | None, tuple[str, ...]]
 
 
 def doubled(table: FloatArray, repeat: tuple[int, int, int]) -> FloatArray:
@@ -119,41 +125,83 @@ def _schedule(problem: SearchProblem, schedule: Schedule, cold: float) -> tuple[
 
 
 def _signs(problem: SearchProblem, schedule: Schedule, seeds: np.ndarray) -> list[State]:
+    if problem.axes is None:
+        return _signs_along_best_axes(problem, schedule, seeds)
+    signs, energies = _anneal_along(problem, problem.axes, schedule, seeds)
+    unit = problem.unit_axes
+    assert unit is not None
+    return [(float(e), s[:, None] * unit, s, ()) for e, s in zip(energies, signs, strict=True)]
+
+
+def _anneal_along(
+    problem: SearchProblem, axes: FloatArray, schedule: Schedule, seeds: np.ndarray
+) -> tuple[np.ndarray, FloatArray]:
+    """Signs (n_restarts, n_units) and energies in eV of restarts along given axes (n_sites, 3)."""
     n = problem.n_units
-    start = np.zeros(n, dtype=np.int8) if problem.fixed is None else problem.fixed
-    free = np.flatnonzero(start == 0)
+    start, free = _free(problem)
     temperatures, penalties, held = _schedule(problem, schedule, COLD_SIGNS)
-    signs = np.zeros((schedule.restarts, n), dtype=np.int8)
-    energies = np.zeros(schedule.restarts)
-    nx, ny, nz = problem.repeat
-    if problem.axes is not None:
-        axes = problem.axes
-        factors = np.where(ROWS == COLUMNS, 0.5, 1.0)
-        pairs = axes[:, None, ROWS] * axes[None, :, COLUMNS] + axes[:, None, COLUMNS] * axes[None, :, ROWS]
-        table = np.einsum("dijc,ijc,c->dij", problem.table, pairs, factors)[..., None]
-        unit = problem.unit_axes
-        assert unit is not None
-        scale = _scale(table[..., 0])
-        linear = np.einsum("pa,pa->p", problem.linear, unit) / scale
-        weights = np.ascontiguousarray((problem.weights[:, None] * unit).T) if held else np.zeros((0, n))
-        over_rows(
-            anneal_signs, schedule.restarts, doubled(table / scale, problem.repeat)[0], nx, ny, nz, linear, free,
-            start, weights, temperatures, penalties, held, seeds, signs, energies, at_least=1,
-        )  # fmt: skip
-        return [(float(e) * scale, s[:, None] * unit, ()) for e, s in zip(energies, signs, strict=True)]
+    factors = np.where(ROWS == COLUMNS, 0.5, 1.0)
+    pairs = axes[:, None, ROWS] * axes[None, :, COLUMNS] + axes[:, None, COLUMNS] * axes[None, :, ROWS]
+    table = np.einsum("dijc,ijc->dij", problem.table, pairs * factors)[..., None]
+    unit = np.tile(axes, (n // len(axes), 1))
+    scale = _scale(table[..., 0])
+    linear = np.einsum("pa,pa->p", problem.linear, unit) / scale
+    weights = np.ascontiguousarray((problem.weights[:, None] * unit).T) if held else np.zeros((0, n))
+    signs = np.zeros((len(seeds), n), dtype=np.int8)
+    energies = np.zeros(len(seeds))
+    over_rows(
+        anneal_signs, len(seeds), doubled(table / scale, problem.repeat)[0], *problem.repeat, linear, free, start,
+        weights, temperatures, penalties, held, seeds, signs, energies, at_least=1,
+    )  # fmt: skip
+    return signs, energies * scale
+
+
+def _signs_along_best_axes(problem: SearchProblem, schedule: Schedule, seeds: np.ndarray) -> list[State]:
+    """Each restart anneals along a direction of its own, then along the best axis of what it found, and so on."""
+    n_sites = problem.n_sites
+    _, free = _free(problem)
+    held = problem.net_zero and problem.has_uniform_part
     scale = _scale(np.sqrt((problem.table**2).sum(axis=-1)))
+    tables = doubled(problem.table / scale, problem.repeat)
     pull = np.zeros(3)
     if problem.has_uniform_part:
         pull = EV_PER_MUB_T * problem.copies * problem.sample.applied_T / scale
-    over_rows(
-        anneal_best_axis, schedule.restarts, doubled(problem.table / scale, problem.repeat), nx, ny, nz, free, start,
-        problem.weights[None].copy(), pull, temperatures, penalties, held, seeds, signs, energies, at_least=1,
-    )  # fmt: skip
-    states = []
-    for energy, pattern in zip(energies, signs, strict=True):
-        directions, notes = best_axis(problem, pattern)
-        states.append((float(energy) * scale, pattern[:, None] * directions, notes))
+    states: list[State] = []
+    for direction, seed in zip(_directions(len(seeds), int(seeds[0])), seeds, strict=True):
+        best: State | None = None
+        for turn in range(AXIS_ROUNDS):
+            # Two tries along one axis share its table, and the threads.
+            tries = np.array([seed + np.uint64(2 * turn), seed + np.uint64(2 * turn + 1)])
+            signs, energies = _anneal_along(problem, np.tile(direction, (n_sites, 1)), schedule, tries)
+            pattern = signs[int(np.argmin(energies))]
+            if not held:
+                descend_best_axis(tables, *problem.repeat, free, problem.weights, pull, pattern)
+            axes, notes = best_axis(problem, pattern)
+            units = pattern[:, None] * axes
+            energy = problem.form_of(units)[0]
+            better = best is None or energy < best[0] - SAME_ENERGY * abs(best[0])
+            if best is None or energy < best[0]:
+                best = energy, units, pattern, notes
+            if not better:
+                break
+            direction = axes[0]
+        assert best is not None
+        states.append(best)
     return states
+
+
+def _directions(count: int, seed: int) -> FloatArray:
+    """Shape (count, 3). Directions spread evenly over a half sphere (a spiral), turned at random."""
+    heights = (np.arange(count) + 0.5) / count
+    angles = np.pi * (3 - np.sqrt(5)) * np.arange(count)
+    radius = np.sqrt(1 - heights**2)
+    spiral = np.stack([radius * np.cos(angles), radius * np.sin(angles), heights], axis=1)
+    return np.asarray(spiral @ Rotation.random(random_state=seed % 2**32).as_matrix())
+
+
+def _free(problem: SearchProblem) -> tuple[np.ndarray, np.ndarray]:
+    start = np.zeros(problem.n_units, dtype=np.int8) if problem.fixed is None else problem.fixed
+    return start, np.flatnonzero(start == 0)
 
 
 def _vectors(problem: SearchProblem, planar: bool, schedule: Schedule, seeds: np.ndarray) -> list[State]:
@@ -167,13 +215,12 @@ def _vectors(problem: SearchProblem, planar: bool, schedule: Schedule, seeds: np
         planes = np.array([np.linalg.svd(normal[None])[2][1:] for normal in normals])
     vectors = np.zeros((schedule.restarts, n, 3))
     energies = np.zeros(schedule.restarts)
-    nx, ny, nz = problem.repeat
     over_rows(
-        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), nx, ny, nz,
+        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), *problem.repeat,
         np.ascontiguousarray(problem.linear / scale), planes, problem.weights, temperatures, penalties, seeds, vectors,
         energies, at_least=1,
     )  # fmt: skip
-    return [(*settle(problem, units, planes), ()) for units in vectors]
+    return [(*settle(problem, units, planes), None, ()) for units in vectors]
 
 
 def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArray] | FloatArray) -> tuple[float, FloatArray]:
@@ -182,7 +229,7 @@ def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArra
     planes: Shape (n_units, 2, 3), or (0, 2, 3) where vectors are free. With ``net_zero`` the net moment is brought to
     zero by multipliers (augmented Lagrangian: Hestenes 1969, Powell 1969).
     """
-    form = UnitForm(problem)
+    form = problem.form_of
     scale = max(abs(form(units)[0]), 1e-300)
     plane = np.asarray(planes)
     multiplier = np.zeros(3)
@@ -201,7 +248,7 @@ def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArra
             return float(total), back(slope)
 
         x0 = np.zeros(len(base)) if len(plane) else np.array(base).ravel()
-        result = minimize(value, x0, jac=True, method="L-BFGS-B", options={"maxiter": 5000, "gtol": 1e-10, "ftol": 1e-15})
+        result = minimize(value, x0, jac=True, method="L-BFGS-B", options={"maxiter": 3000 if len(base) <= 1000 else 500, "gtol": 1e-10, "ftol": 1e-15})
         current = _unit_vectors(result.x, plane, base)[0]
         net = problem.weights @ current
         if not held or np.linalg.norm(net) < 1e-9:
@@ -209,27 +256,6 @@ def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArra
         multiplier = multiplier + stiffness * net
         stiffness *= 1.5
     return form(current)[0], current
-
-
-class UnitForm:
-    """Energy in eV per supercell of unit vectors (n_units, 3), and its slope."""
-
-    def __init__(self, problem: SearchProblem) -> None:
-        self.problem = problem
-
-    def __call__(self, units: FloatArray) -> tuple[float, FloatArray]:
-        """Energy, and its derivatives with respect to the components, shape (n_units, 3)."""
-        problem = self.problem
-        if problem.k is not None or problem.supercell.n_cells == 1:
-            slope = np.empty_like(units)
-            t = problem.table[0]
-            for a, columns in enumerate(((0, 5, 4), (5, 1, 3), (4, 3, 2))):
-                slope[:, a] = sum(t[..., c] @ units[:, b] for b, c in enumerate(columns))
-        else:
-            moments = units * np.tile(problem.sizes, problem.supercell.n_cells)[:, None]
-            slope = -EV_PER_MUB_T * problem.weights[:, None] * problem.field.fields(moments)
-        energy = 0.5 * float(np.vdot(units, slope)) + float(np.vdot(units, problem.linear))
-        return energy, slope + problem.linear
 
 
 def _unit_vectors(x: FloatArray, planes: FloatArray, base: FloatArray):  # type: ignore[no-untyped-def]

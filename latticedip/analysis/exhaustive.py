@@ -17,7 +17,6 @@ from latticedip.checks import FloatArray
 from latticedip.errors import LimitError
 from latticedip.kernels.jit import over_rows
 from latticedip.kernels.patterns import FAR, low_tables, search_along, search_best_axis
-from latticedip.ordering.symmetry import pattern_orbit
 from latticedip.physics.boundary import NET_MOMENT_MUB
 from latticedip.physics.supercell import COLUMNS, ROWS
 from latticedip.units import EV_PER_MUB_T
@@ -63,7 +62,7 @@ def exhaustive(problem: SearchProblem, keep: int) -> list[Found]:
             'use method="annealing".'
         )
     start = np.ones(problem.n_units, dtype=np.int8) if problem.fixed is None else problem.fixed
-    inverse, factors = problem.unit_permutations()
+    inverse, factors = problem.unit_permutations
     if problem.axes is not None:
         codes = _search_along(problem, free, start, inverse, factors, keep)
     else:
@@ -75,7 +74,7 @@ def exhaustive(problem: SearchProblem, keep: int) -> list[Found]:
         directions, notes = (problem.unit_axes, ()) if problem.axes is not None else best_axis(problem, signs)
         assert directions is not None
         moments = problem.spread(signs[:, None] * directions)
-        found.append(Found(moments, "exhaustive", pattern_orbit(signs, inverse, factors), notes))
+        found.append(Found(moments, "exhaustive", problem.multiplicity(signs, moments), notes))
     return found
 
 
@@ -194,11 +193,7 @@ def best_axis(problem: SearchProblem, signs: np.ndarray) -> tuple[FloatArray, tu
 
     Where it is free in a plane or in space, a short lattice direction that lies there is taken.
     """
-    values = np.zeros((3, 3))
-    s = signs.astype(float)
-    parts = 0.5 * np.einsum("pqc,p,q->c", problem.dense, s, s)
-    values[ROWS, COLUMNS] = values[COLUMNS, ROWS] = parts
-    pull = -np.einsum("pa,p->a", problem.linear, s)
+    values, pull = problem.axis_form(signs)
     scale = max(float(np.abs(values).max()), 1e-300)
     notes: tuple[str, ...] = ()
     if np.abs(pull).max() > 1e-14 * scale:

@@ -21,11 +21,15 @@ from latticedip.checks import FloatArray, as_float, as_floats, frozen
 from latticedip.crystal.model import Crystal
 from latticedip.errors import InputError
 from latticedip.ordering.model import snap_k
-from latticedip.ordering.symmetry import SupercellSymmetry
+from latticedip.ordering.symmetry import SupercellSymmetry, pattern_orbit
 from latticedip.physics.boundary import NET_MOMENT_MUB
 from latticedip.physics.supercell import Supercell, SupercellField
 from latticedip.sample import Sample
 from latticedip.units import EV_PER_MUB_T
+
+
+#: Longest lists of permutations that are written out; beyond, copies are counted by correlations.
+MOST_NUMBERS = 30_000_000
 
 
 @dataclass(frozen=True, eq=False)
@@ -159,6 +163,7 @@ class SearchProblem:
         """Fields and energies of all moments of the supercell."""
         return SupercellField(self.supercell, self.whole, self.sample.applied_T)
 
+    @cached_property
     def unit_permutations(self) -> tuple[np.ndarray, np.ndarray]:
         """Signed permutations of the units, as `SupercellSymmetry.signed_permutations`, that keep the fixed signs."""
         axes = None if self.axes is None else np.tile(self.axes, (self.supercell.n_cells, 1))
@@ -189,6 +194,48 @@ class SearchProblem:
         if self.k is None:
             return np.asarray(sizes * units)
         return np.asarray(sizes * (self.cell_signs[:, None, None] * units[None]).reshape(-1, 3))
+
+    def form_of(self, units: FloatArray) -> tuple[float, FloatArray]:
+        """Energy in eV per supercell of unit vectors (n_units, 3), and its slope, shape (n_units, 3)."""
+        if self.k is not None or self.supercell.n_cells == 1:
+            slope = np.empty(units.shape)
+            t = self.table[0]
+            for a, columns in enumerate(((0, 5, 4), (5, 1, 3), (4, 3, 2))):
+                slope[:, a] = sum(t[..., c] @ units[:, b] for b, c in enumerate(columns))
+        else:
+            moments = units * np.tile(self.sizes, self.supercell.n_cells)[:, None]
+            slope = -EV_PER_MUB_T * self.weights[:, None] * self.field.fields(moments)
+        energy = 0.5 * float(np.vdot(units, slope)) + float(np.vdot(units, self.linear))
+        return energy, slope + self.linear
+
+    def axis_form(self, signs: np.ndarray) -> tuple[FloatArray, FloatArray]:
+        """(Q, g), shapes (3, 3) and (3,), in eV: the energy of a pattern along a common axis u is u·Q·u − g·u."""
+        s = signs.astype(float)
+        rows = []
+        for axis in np.eye(3):
+            slope = self.form_of(s[:, None] * axis)[1] - self.linear
+            rows.append(0.5 * s @ slope)
+        form = np.array(rows)
+        return 0.5 * (form + form.T), -(s @ self.linear)
+
+    def multiplicity(self, signs: np.ndarray | None, moments: FloatArray) -> int:
+        """How many arrangements of the searched set are the same as one by symmetry, itself included.
+
+        signs: Shape (n_units,), of a sign pattern; None for moments that point anywhere. moments: (n_moments, 3).
+        """
+        if signs is None:
+            return self.symmetry.orbit_size(moments)
+        if self.permutation_numbers <= MOST_NUMBERS:
+            return pattern_orbit(np.asarray(signs, dtype=np.int8), *self.unit_permutations)
+        if self.axes is not None:
+            return self.symmetry.keeping_axes(np.tile(self.axes, (self.supercell.n_cells, 1))).orbit_size(moments)
+        flat = (self.cell_signs[:, None] * np.reshape(signs, (-1, self.n_sites))).ravel()
+        return self.symmetry.of_signs().orbit_size(flat[:, None] * np.array([0.0, 0.0, 1.0]))
+
+    @property
+    def permutation_numbers(self) -> int:
+        """Size of the lists of `unit_permutations` before any is dropped."""
+        return 2 * len(self.symmetry.operations) * self.supercell.n_cells * self.supercell.n_moments
 
     def net_moment(self, moments: FloatArray) -> FloatArray:
         """Shape (3,) float in µB per supercell, occupancy applied."""

@@ -140,13 +140,19 @@ def rank(
     rotate: also turn each pattern rigidly as a whole to its best orientation, and rank those.
     probes: fields are worked out at each, under every ordering as ranked. tol: as `dipole_tensor`.
 
-    Raises InputError for an empty list, an ordering without moments, or two probes of one name.
+    Raises InputError for an empty list, an ordering without moments, two probes of one name, or another kind of object.
     """
     check_tol(tol)
-    if isinstance(orderings, Ordering):
-        orderings = [orderings]
+    orderings = [orderings] if isinstance(orderings, Ordering) else list(orderings)
+    probes = [probes] if isinstance(probes, Probe) else list(probes)
     if not orderings:
         raise InputError("there is no ordering to rank; give at least one.")
+    for i, item in enumerate(orderings, start=1):
+        if not isinstance(item, Ordering):
+            raise InputError(f"rank takes Orderings, got {type(item).__name__} as number {i}.")
+    for probe in probes:
+        if not isinstance(probe, Probe):
+            raise InputError(f"probes must be Probes, got {probe!r}.")
     names = [probe.name for probe in probes]
     for name in names:
         if names.count(name) > 1:

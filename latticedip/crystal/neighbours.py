@@ -13,23 +13,23 @@ from latticedip.errors import LimitError
 if TYPE_CHECKING:
     from latticedip.crystal.model import Crystal
 
-#: Images of the cell held at one time.
-MAX_SHIFTS = 10_000_000
+#: Images of atoms held at one time.
+MAX_IMAGES = 20_000_000
 
 
 def image_shifts(crystal: Crystal, radius: float) -> FloatArray:
     """Shape (n, 3) int-valued float. Cell shifts that can hold a point within ``radius`` Å of the home cell.
 
     The home cell is that of wrapped coordinates in [0, 1); only periodic directions are shifted. Raises LimitError
-    beyond 10 million shifts.
+    where these are more than 20 million atoms.
     """
     reciprocal = np.linalg.pinv(crystal.cell).T
     reach = np.where(crystal.pbc, np.ceil(radius * np.linalg.norm(reciprocal, axis=1) + 1e-9), 0.0)
-    count = float(np.prod(2 * reach + 1))
-    if count > MAX_SHIFTS:
+    count = float(np.prod(2 * reach + 1)) * max(1, crystal.n_sites)
+    if count > MAX_IMAGES:
         raise LimitError(
-            f"neighbours within {radius:g} Å would need {count:.3g} images of the cell {crystal.cell.tolist()}, more "
-            f"than {MAX_SHIFTS}. Use a less skewed cell or a smaller radius."
+            f"neighbours within {radius:g} Å would need {count:.3g} images of atoms in the cell {crystal.cell.tolist()}, "
+            f"more than {MAX_IMAGES}. Use a less skewed cell or a smaller radius."
         )
     axes = [np.arange(-n, n + 1) for n in reach]
     return np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)

@@ -7,8 +7,9 @@ from typing import Any
 import numpy as np
 
 from latticedip.checks import FloatArray, as_floats
+from latticedip.crystal.lattice import CENTRING_TOLERANCE_A, exact_translations, primitive_basis
 from latticedip.crystal.model import Crystal, site_order
-from latticedip.crystal.symmetry import operations_of
+from latticedip.crystal.symmetry import find_operations, operations_of
 
 #: Images of a position closer than this (Å) are one: coordinates are typed with few digits ("0.333" for a third).
 SAME_POSITION_A = 0.01
@@ -30,8 +31,7 @@ def orbit(crystal: Crystal, position: Any) -> FloatArray:
     Raises InputError for a position that is not three finite numbers.
     """
     point = as_floats("position", position, (3,))
-    operations = operations_of(crystal)
-    images = operations.rotations @ point + operations.translations
+    images = _images(crystal, point)
     # The given position goes first and represents its own images, with the digits it was given.
     images = np.vstack([point, images])
     periodic = np.array(crystal.pbc)
@@ -47,6 +47,46 @@ def orbit(crystal: Crystal, position: Any) -> FloatArray:
         tolerance /= 4
     points = images[kept]
     return np.asarray(points[site_order(points)])
+
+
+def _images(crystal: Crystal, point: FloatArray) -> FloatArray:
+    """Shape (n, 3) float. The position carried by every operation, not wrapped."""
+    operations = operations_of(crystal)
+    images = np.asarray(operations.rotations @ point + operations.translations)
+    centrings = operations.centrings()
+    if len(centrings) == 1 or not all(crystal.pbc):
+        return images
+    found, _ = find_operations(crystal)
+    if found is None or len(found.rotations) != len(operations.rotations):
+        # A file that states another group than the atoms have is taken at its word.
+        return images
+    # In a supercell an operation that does not map its edges onto one another has no place in a list of whole-number
+    # matrices; the crystal has it all the same, and the primitive cell shows it.
+    basis = primitive_basis(exact_translations(centrings))
+    finer, _ = find_operations(_primitive(crystal, basis))
+    if finer is None or len(finer.rotations) * len(centrings) <= len(images):
+        return images
+    carried = (finer.rotations @ (point @ np.linalg.inv(basis)) + finer.translations) @ basis
+    return np.asarray((carried[:, None] + centrings[None]).reshape(-1, 3))
+
+
+def _primitive(crystal: Crystal, basis: FloatArray) -> Crystal:
+    """The same atoms in the cell whose rows are ``basis``, in coordinates of the cell given."""
+    cell = basis @ crystal.cell
+    positions = crystal.positions @ np.linalg.inv(basis)
+    kept: list[int] = []
+    for i, position in enumerate(positions):
+        alike = [
+            j
+            for j in kept
+            if crystal.symbols[j] == crystal.symbols[i] and abs(crystal.occupancies[j] - crystal.occupancies[i]) < 1e-6
+        ]
+        gap = positions[alike] - position
+        if not len(alike) or np.linalg.norm((gap - np.round(gap)) @ cell, axis=1).min() > CENTRING_TOLERANCE_A:
+            kept.append(i)
+    return Crystal(
+        cell, positions[kept], tuple(crystal.symbols[i] for i in kept), occupancies=crystal.occupancies[kept]
+    )
 
 
 def _clusters(crystal: Crystal, images: FloatArray, tolerance: float) -> tuple[list[int], list[int]]:

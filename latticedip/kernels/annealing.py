@@ -66,6 +66,38 @@ def add_field(table, nx, ny, nz, place, change, fields):
                 out[i] += change * row[i]
 
 
+@kernel(fastmath=True, inline=True)
+def add_vector_field(tables, nx, ny, nz, place, change, fields):
+    """fields (3, n_moments) += Q[:, place] change, all six components in one pass; tables as in `anneal_vectors`."""
+    n = tables.shape[1]
+    site = place % n
+    cell = place // n
+    z = cell % nz
+    y = (cell // nz) % ny
+    x = cell // (nz * ny)
+    length = nz * n
+    begin = (nz - 1 - z) * n
+    a, b, c = change[0], change[1], change[2]
+    for tx in range(nx):
+        dx = tx - x if tx >= x else tx - x + nx
+        for ty in range(ny):
+            dy = ty - y if ty >= y else ty - y + ny
+            xx = tables[0, site, dx, dy].ravel()[begin : begin + length]
+            yy = tables[1, site, dx, dy].ravel()[begin : begin + length]
+            zz = tables[2, site, dx, dy].ravel()[begin : begin + length]
+            yz = tables[3, site, dx, dy].ravel()[begin : begin + length]
+            xz = tables[4, site, dx, dy].ravel()[begin : begin + length]
+            xy = tables[5, site, dx, dy].ravel()[begin : begin + length]
+            start = (tx * ny + ty) * length
+            one = fields[0, start : start + length]
+            two = fields[1, start : start + length]
+            three = fields[2, start : start + length]
+            for i in range(length):
+                one[i] += xx[i] * a + xy[i] * b + xz[i] * c
+                two[i] += xy[i] * a + yy[i] * b + yz[i] * c
+                three[i] += xz[i] * a + yz[i] * b + zz[i] * c
+
+
 @kernel(inline=True)
 def coupling_between(table, nx, ny, nz, target, source):
     """Q[target, source] of one component."""
@@ -197,85 +229,51 @@ def sum_fields(table, nx, ny, nz, signs, fields):
 
 
 @kernel()
-def anneal_best_axis(
-    first, last, tables, nx, ny, nz, free, start, weights, pull, temperatures, penalties, exchange, seeds, out_signs,
-    out_energies,
-):  # fmt: skip
-    """Anneal signs with a common axis that is the best one for every pattern; as `anneal_signs`.
+def descend_best_axis(tables, nx, ny, nz, free, weights, pull, signs):
+    """Turn single signs round while that lowers the energy along the pattern's own best axis; changes ``signs``.
 
-    tables (6, n, nx, ny, 2 nz − 1, n): the form of the axis, xx, yy, zz, yz, xz, xy. weights (1, n_moments): net
-    moment along the axis. pull (3,): energy −(net moment) pull·u in the applied field.
+    tables (6, n, nx, ny, 2 nz − 1, n): the form of the axis, xx, yy, zz, yz, xz, xy. weights (n_moments,): net moment
+    along the axis. pull (3,): energy −(net moment) pull·u in the applied field. Returns that energy.
     """
-    n = start.shape[0]
-    n_free = free.shape[0]
-    state = np.empty(1, dtype=np.uint64)
+    n = signs.shape[0]
     fields = np.empty((6, n))
     form, trial, arm, values, vectors = np.empty(6), np.empty(6), np.empty(3), np.empty(3), np.empty((3, 3))
-    for restart in range(first, last):
-        seed_random(seeds[restart], state)
-        signs = out_signs[restart]
-        for p in range(n):
-            signs[p] = start[p]
-        for i in range(n_free):
-            signs[free[i]] = 1 if next_random(state) < 0.5 else -1
+    energy = 0.0
+    for _ in range(100):
+        # Afresh in every round, so that no rounding builds up.
         net = 0.0
         for p in range(n):
-            net += weights[0, p] * signs[p]
-        sweeps = temperatures.shape[0]
-        energy = 0.0
-        for sweep in range(sweeps + 100):
-            # Afresh from time to time, so that no rounding builds up.
-            if sweep % 20 == 0 or sweep == sweeps:
+            net += weights[p] * signs[p]
+        for c in range(6):
+            sum_fields(tables[c], nx, ny, nz, signs, fields[c])
+            total = 0.0
+            for p in range(n):
+                total += signs[p] * fields[c, p]
+            form[c] = 0.5 * total
+        for i in range(3):
+            arm[i] = net * pull[i]
+        energy = lowest_on_sphere(form, arm, values, vectors)
+        turned = 0
+        for step in range(free.shape[0]):
+            place = free[step]
+            sign = signs[place]
+            after = net - 2.0 * sign * weights[place]
+            for c in range(6):
+                own = coupling_between(tables[c], nx, ny, nz, place, place)
+                trial[c] = form[c] - 2.0 * sign * fields[c, place] + 2.0 * own
+            for i in range(3):
+                arm[i] = after * pull[i]
+            new = lowest_on_sphere(trial, arm, values, vectors)
+            if new < energy - 1e-11 * (1.0 + abs(energy)):
+                turned += 1
+                energy, net = new, after
+                signs[place] = -sign
                 for c in range(6):
-                    sum_fields(tables[c], nx, ny, nz, signs, fields[c])
-                    total = 0.0
-                    for p in range(n):
-                        total += signs[p] * fields[c, p]
-                    form[c] = 0.5 * total
-                for i in range(3):
-                    arm[i] = net * pull[i]
-                energy = lowest_on_sphere(form, arm, values, vectors)
-            # After the last sweep: downhill only, until nothing changes.
-            temperature = temperatures[sweep] if sweep < sweeps else 0.0
-            penalty = penalties[min(sweep, sweeps - 1)]
-            turned = 0
-            for step in range(n_free):
-                place = free[int(next_random(state) * n_free)] if sweep < sweeps else free[step]
-                other = -1
-                if exchange and sweep < sweeps and next_random(state) < EXCHANGES:
-                    other = free[int(next_random(state) * n_free)]
-                    if signs[other] * signs[place] >= 0:
-                        continue
-                sign = signs[place]
-                after = net - 2.0 * sign * weights[0, place]
-                if other >= 0:
-                    after -= 2.0 * signs[other] * weights[0, other]
-                for c in range(6):
-                    change = -2.0 * sign * fields[c, place] + 2.0 * coupling_between(tables[c], nx, ny, nz, place, place)
-                    if other >= 0:
-                        change += -2.0 * signs[other] * fields[c, other]
-                        change += 2.0 * coupling_between(tables[c], nx, ny, nz, other, other)
-                        change += 4.0 * sign * signs[other] * coupling_between(tables[c], nx, ny, nz, place, other)
-                    trial[c] = form[c] + change
-                for i in range(3):
-                    arm[i] = after * pull[i]
-                new = lowest_on_sphere(trial, arm, values, vectors)
-                rise = new - energy + penalty * (after * after - net * net)
-                margin = 0.0 if sweep < sweeps else -1e-12
-                if rise <= margin or (temperature > 0.0 and next_random(state) < np.exp(-rise / temperature)):
-                    turned += 1
-                    energy, net = new, after
-                    for c in range(6):
-                        form[c] = trial[c]
-                        add_field(tables[c], nx, ny, nz, place, -2.0 * sign, fields[c])
-                        if other >= 0:
-                            add_field(tables[c], nx, ny, nz, other, -2.0 * signs[other], fields[c])
-                    signs[place] = -sign
-                    if other >= 0:
-                        signs[other] = -signs[other]
-            if sweep >= sweeps and turned == 0:
-                break
-        out_energies[restart] = energy
+                    form[c] = trial[c]
+                    add_field(tables[c], nx, ny, nz, place, -2.0 * sign, fields[c])
+        if turned == 0:
+            break
+    return energy
 
 
 @kernel()
@@ -333,15 +331,7 @@ def anneal_vectors(
                     for a in range(3):
                         moments[place, a] = new[a]
                         net[a] += weights[place] * step[a]
-                    add_field(tables[0], nx, ny, nz, place, step[0], fields[0])
-                    add_field(tables[5], nx, ny, nz, place, step[1], fields[0])
-                    add_field(tables[4], nx, ny, nz, place, step[2], fields[0])
-                    add_field(tables[5], nx, ny, nz, place, step[0], fields[1])
-                    add_field(tables[1], nx, ny, nz, place, step[1], fields[1])
-                    add_field(tables[3], nx, ny, nz, place, step[2], fields[1])
-                    add_field(tables[4], nx, ny, nz, place, step[0], fields[2])
-                    add_field(tables[3], nx, ny, nz, place, step[1], fields[2])
-                    add_field(tables[2], nx, ny, nz, place, step[2], fields[2])
+                    add_vector_field(tables, nx, ny, nz, place, step, fields)
             # Keep about half of the moves: short steps when it is cold.
             rate = accepted / n
             reach = min(1e9 if rate > 0.9 else 3.0, max(1e-4, reach * (0.7 if rate < 0.4 else 1.4 if rate > 0.6 else 1.0)))
@@ -392,13 +382,4 @@ def sum_vector_fields(tables, nx, ny, nz, moments, fields):
     """Fields of all unit vectors afresh."""
     fields[:] = 0.0
     for p in range(moments.shape[0]):
-        x, y, z = moments[p, 0], moments[p, 1], moments[p, 2]
-        add_field(tables[0], nx, ny, nz, p, x, fields[0])
-        add_field(tables[5], nx, ny, nz, p, y, fields[0])
-        add_field(tables[4], nx, ny, nz, p, z, fields[0])
-        add_field(tables[5], nx, ny, nz, p, x, fields[1])
-        add_field(tables[1], nx, ny, nz, p, y, fields[1])
-        add_field(tables[3], nx, ny, nz, p, z, fields[1])
-        add_field(tables[4], nx, ny, nz, p, x, fields[2])
-        add_field(tables[3], nx, ny, nz, p, y, fields[2])
-        add_field(tables[2], nx, ny, nz, p, z, fields[2])
+        add_vector_field(tables, nx, ny, nz, p, moments[p], fields)

@@ -62,7 +62,8 @@ def thread_count() -> int:
         count = int(numba.config.NUMBA_NUM_THREADS)
     else:
         count = int(numba.get_num_threads())
-    stated = os.environ.get("OMP_NUM_THREADS", "")
+    # OpenMP takes a list, one count per level of nesting; the first is that of the outermost.
+    stated = os.environ.get("OMP_NUM_THREADS", "").split(",")[0].strip()
     if stated.isdigit() and int(stated) > 0:
         count = min(count, int(stated))
     return max(1, count)

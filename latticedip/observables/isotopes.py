@@ -56,7 +56,7 @@ def _stated(crystal: Crystal, abundances: Mapping[str, float]) -> dict[str, dict
         if isotope.name == "muon" or element not in crystal.symbols:
             raise InputError(f"abundances: the crystal holds no nuclei {name!r}; {_holds(crystal)}")
         out.setdefault(element, {})[isotope.name] = as_float(f"abundance of {name}", value, low=0.0, high=1.0)
-    for element, shares in out.items():
+    for shares in out.values():
         if sum(shares.values()) > 1 + 1e-9:
             raise InputError(f"abundances of {', '.join(shares)} add up to {sum(shares.values()):.6g}, more than 1.")
     return out

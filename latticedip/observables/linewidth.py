@@ -68,7 +68,7 @@ class Linewidth:
     particle: name of the probe. MHz_per_T: its |γ|/2π.
     direction: Shape (3,) unit vector of the strong field (in zero field: of the initial polarization), Cartesian; None
         for a powder.
-    strong_tensor_T2: Shape (3, 3, 3, 3) in T². Σ p (1/3 or 3/4) I(I+1) b² n_a n_b n_c n_d, from which every direction follows.
+    strong_tensor_T2: Shape (3, 3, 3, 3) in T². Σ p (1/3 or 3/4) I(I+1) b² n_a n_b n_c n_d, for all directions.
     zero_tensor_T2: Shape (3, 3) in T². ⟨B_a B_b⟩ in zero field.
     contributions: by isotope. notes: sentences a report must repeat.
     """
@@ -246,7 +246,7 @@ def _notes(
         share = strongest.atoms_per_cell / atoms
         if strongest.second_moment_T2 > 0 and share < DILUTE:
             notes.append(
-                f"{strongest.isotope} sits on {100 * share:.3g} % of the {element} places only: the line of dilute spins "
-                "is narrower than its second moment says (Kittel and Abrahams 1953)"
+                f"{strongest.isotope} sits on {100 * share:.3g} % of the {element} places only: the line of dilute "
+                "spins is narrower than its second moment says (Kittel and Abrahams 1953)"
             )
     return tuple(notes)

@@ -110,7 +110,7 @@ class Shift:
         return PowderLine(self.principal.values)
 
     def along(self, direction: Any) -> float:
-        """Shift with the applied field along a Cartesian direction (3,), as a fraction; InputError for the zero vector."""
+        """Shift as a fraction, applied field along a Cartesian direction (3,); InputError for the zero vector."""
         h = as_unit_vector("direction", direction)
         return float(h @ self.total @ h)
 
@@ -238,8 +238,9 @@ def shift_curve(
     displaced: Displaced | Iterable[Displaced] = (),
     tol: float = 1e-10,
 ) -> ShiftCurve:
-    """Shifts of a probe over temperatures; arguments as `paramagnetic_shift`.
+    """Shifts of a probe over temperatures.
 
+    crystal, position, susceptibility, sample, contact, displaced, tol: as `paramagnetic_shift`.
     temperatures_K: Shape (n,); None: those of the first table.
 
     Raises InputError as `paramagnetic_shift`, and where no susceptibility is a table.

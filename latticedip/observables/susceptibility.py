@@ -11,7 +11,7 @@ from scipy import constants
 from latticedip.checks import FloatArray, as_float, as_floats, frozen
 from latticedip.crystal.model import Crystal
 from latticedip.crystal.symmetry import operations_of
-from latticedip.errors import InputError, near_match
+from latticedip.errors import InputError
 from latticedip.units import BOHR_MAGNETON_J_PER_T
 
 #: µB per tesla and ion for one unit. A cgs molar susceptibility is the moment of a mole in emu per oersted (1 Oe is
@@ -54,15 +54,15 @@ class Susceptibility:
     def __post_init__(self) -> None:
         if self.unit not in UNITS:
             raise InputError(
-                f"unknown unit of susceptibility {self.unit!r}. Known are: {', '.join(UNITS)}."
-                + near_match(str(self.unit), UNITS)
+                f"unknown unit of susceptibility {self.unit!r}. Known are: cm3/mol (cgs, emu per oersted and mole), "
+                "m3/mol, muB/T."
             )
         table = self.temperatures_K is not None
         depth = np.ndim(self.chi) - (1 if table else 0)
         if depth not in (0, 2, 3):
             raise InputError(
-                f"chi must be a number, a (3, 3) tensor or (n_atoms, 3, 3) tensors{' per temperature' if table else ''}, "
-                f"got shape {np.shape(self.chi)}."
+                "chi must be a number, a (3, 3) tensor or (n_atoms, 3, 3) tensors"
+                f"{' per temperature' if table else ''}, got shape {np.shape(self.chi)}."
             )
         if self.local and depth != 2:
             raise InputError("a local susceptibility is one (3, 3) tensor, that of the first atom of its label.")
@@ -152,8 +152,9 @@ def _carried(crystal: Crystal, name: str, sites: tuple[int, ...], tensor: FloatA
             out[target] = turned
         elif np.abs(out[target] - turned).max() > scale:
             raise InputError(
-                f"{name}: the local susceptibility does not have the symmetry of its site (an operation changes it by "
-                f"{np.abs(out[target] - turned).max():.3g} µB/T). Give one tensor per atom, or one that the site allows."
+                f"{name}: the local susceptibility does not have the symmetry of its site (an operation changes it "
+                f"by {np.abs(out[target] - turned).max():.3g} µB/T). Give one tensor per atom, or one that the site "
+                "allows."
             )
     missing = np.flatnonzero(np.isnan(out[:, 0, 0]))
     if len(missing):

@@ -6,7 +6,7 @@ turns it round. Moments run over the cells of a supercell, sites inside a cell f
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -198,6 +198,19 @@ class SupercellSymmetry:
         distinct = distinct[np.any(distinct != same, axis=1)]
         return np.ascontiguousarray(distinct[:, :n]), np.ascontiguousarray(distinct[:, n:].astype(np.int8))
 
+    def keeping_axes(self, axes: FloatArray) -> SupercellSymmetry:
+        """The operations that turn no moment out of its line; axes: Shape (n_moments, 3) unit vectors."""
+        keeps = [
+            bool(np.all(np.abs(np.abs(np.einsum("pa,pa->p", axes[self.moved(i)], axes @ turn.T)) - 1) <= SAME_VECTOR))
+            for i, turn in enumerate(self.operations.axial)
+        ]
+        return SupercellSymmetry(self.repeat, self.operations.chosen(np.array(keeps)), self.signs[np.array(keeps)])
+
+    def of_signs(self) -> SupercellSymmetry:
+        """The operations as they act on signs whose axis follows: nothing is turned, all signs may be."""
+        unturned = replace(self.operations, axial=np.tile(np.eye(3), (len(self.operations), 1, 1)))
+        return SupercellSymmetry(self.repeat, unturned, np.ones_like(self.signs))
+
     def _overlaps(self, first: FloatArray, second: FloatArray) -> FloatArray:
         """Shape (n_ops, n_cells). Σ m'·m of an image of ``first``, moved on by every cell, with ``second``."""
         n = self.operations.targets.shape[1]
@@ -231,13 +244,3 @@ def pattern_orbit(signs: np.ndarray, inverse: np.ndarray, factors: np.ndarray) -
     """Number of different sign patterns that signed permutations make of one, itself included."""
     images = factors * signs[inverse] if len(inverse) else np.zeros((0, len(signs)), dtype=signs.dtype)
     return len(np.unique(np.concatenate([signs[None], images]), axis=0))
-
-
-def keeping(inverse: np.ndarray, factors: np.ndarray, fixed: np.ndarray, free_sense: bool) -> np.ndarray:
-    """Shape (n,) bool. Which signed permutations carry a set of fixed signs (0: free) into itself.
-
-    free_sense: also those that turn all of them round count (the axis follows).
-    """
-    images = factors * fixed[inverse]
-    keeps = np.all(images == fixed, axis=1)
-    return np.asarray(keeps | np.all(images == -fixed, axis=1) if free_sense else keeps)

@@ -19,12 +19,13 @@ from latticedip.physics.coupling import require_bulk
 from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
 from latticedip.sums.bulk import lattice_sum
+from latticedip.sums.fields import field_plan, lattice_field
 from latticedip.sums.lattice import reduce_cell
 
 #: A site carried over from another crystal is the atom of its element this close (Å): as far as matching lets it lie.
 CARRIED_SITE_A = 0.2
-#: Points evaluated together.
-BLOCK = 4096
+#: Points evaluated together, for gradients and for fields.
+BLOCK, FIELD_BLOCK = 4096, 2**18
 #: Below this field (T) the direction of B, and so the gradient of |B|, has no meaning.
 ZERO_FIELD_T = 1e-12
 
@@ -300,13 +301,13 @@ def _whole_sum(ordering: Ordering, targets: FloatArray, tol: float) -> tuple[Flo
     """N = 0 lattice sum at Cartesian targets in T, and the bound of its error."""
     total, bound = np.zeros((len(targets), 3)), np.zeros(len(targets))
     for k, moments, sources in _components(ordering):
-        plan = lattice_sum(ordering.crystal.cell, k, tol)
+        plan = field_plan(ordering.crystal.cell, k, tol, len(sources))
         placed = plan.place(sources)
-        size = np.abs(moments).sum(axis=1)
-        for rows in _blocks(len(targets)):
-            tensors = plan.tensors(plan.place(targets[rows]), placed)
-            total[rows] += np.einsum("tsab,sb->ta", tensors, moments).real
-            bound[rows] += tol * np.maximum(1.0, np.abs(tensors).max(axis=(2, 3))) @ size
+        size = float(np.abs(moments).sum())
+        for rows in _blocks(len(targets), FIELD_BLOCK):
+            fields, added = lattice_field(plan, plan.place(targets[rows]), placed, moments)
+            total[rows] += fields.real
+            bound[rows] += tol * (size + added)
     return total, bound
 
 

@@ -78,6 +78,7 @@ class Supercell:
                 f"{MAX_MOMENTS:,}. Take a smaller supercell."
             )
         refuse_split_ions(self.crystal, np.array(self.sites))
+        refuse_split_ions(self.crystal, np.array(self.sites))
 
     @property
     def n_cells(self) -> int:

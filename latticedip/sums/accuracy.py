@@ -105,10 +105,16 @@ def reciprocal_cutoffs(alpha: FloatArray, lengths: FloatArray, wanted: float) ->
 #: Relative cost of one image in the real part and of one pair ±q in the reciprocal part, for a pair of target and
 #: source (measured in nanoseconds on one core; many targets and several sources).
 COST_IMAGE, COST_WAVE = 9.0, 0.7
+#: The same where only the field of given moments is wanted: one image of one source, one wave for all sources.
+COST_FIELD_IMAGE, COST_FIELD_WAVE = 5.0, 3.0
 
 
-def choose_splitting(lengths: FloatArray, volume: float, wanted: float) -> tuple[float, float, float]:
+def choose_splitting(
+    lengths: FloatArray, volume: float, wanted: float, costs: tuple[float, float] = (COST_IMAGE, COST_WAVE)
+) -> tuple[float, float, float]:
     """Cheapest splitting α (1/Å) with its cut-offs r_c (Å) and q_c (1/Å), each tail at most ``wanted`` (1/Å³).
+
+    costs: of one image and of one pair of waves ±q, for one target and one source.
 
     Raises AccuracyError when no splitting keeps the bound.
     """
@@ -119,7 +125,7 @@ def choose_splitting(lengths: FloatArray, volume: float, wanted: float) -> tuple
     # sphere wider than the cut-off by the distance of target and source.
     images = 4 * np.pi / 3 * (r_c**3 + 0.15 * (r_c + 0.5 * volume ** (1 / 3)) ** 3) / volume + 1
     waves = q_c**3 * volume / (12 * np.pi**2) + 1
-    cost = np.where(alpha * r_c < U_MAX, COST_IMAGE * images + COST_WAVE * waves, np.inf)
+    cost = np.where(alpha * r_c < U_MAX, costs[0] * images + costs[1] * waves, np.inf)
     best = int(np.argmin(cost))
     if not np.isfinite(cost[best]):
         raise AccuracyError("no splitting of the lattice sum keeps the requested tolerance in this cell.")

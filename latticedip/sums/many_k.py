@@ -125,7 +125,9 @@ def many_k(cell: FloatArray, places_cart: FloatArray, tol: float = 1e-10, alpha:
     lattice = reduce_cell(check_cell("cell", cell))
     wanted = TAIL_SHARE * check_tol(tol) / DIPOLE_T_A3_PER_MUB
     distances = lattice.layer_distances
-    grid = np.sqrt(np.pi) / lattice.volume ** (1 / 3) * np.geomspace(0.25, 4.0, 33) if alpha is None else np.array([alpha])
+    grid = (
+        np.sqrt(np.pi) / lattice.volume ** (1 / 3) * np.geomspace(0.25, 4.0, 33) if alpha is None else np.array([alpha])
+    )
     r_c = real_cutoffs(grid, distances, wanted)
     q_c = reciprocal_cutoffs(grid, distances, wanted)
     # Whatever k, its waves within the cut-off are among those of a sphere wider by the longest reduced k.
@@ -139,7 +141,9 @@ def many_k(cell: FloatArray, places_cart: FloatArray, tol: float = 1e-10, alpha:
             f"{len(places_cart)} sites need tables larger than {MAX_TABLE_BYTES // 2**30} GiB for sums at many k. "
             "Give a primitive cell, fewer magnetic sites or a larger tol."
         )
-    return _tabulate(lattice, np.asarray(places_cart, dtype=float), float(grid[best]), float(r_c[best]), float(q_c[best] + widest))
+    return _tabulate(
+        lattice, np.asarray(places_cart, dtype=float), float(grid[best]), float(r_c[best]), float(q_c[best] + widest)
+    )
 
 
 def _half_diagonal(basis: FloatArray) -> float:

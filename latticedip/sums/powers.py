@@ -184,5 +184,6 @@ def _unpack(flat: FloatArray) -> FloatArray:
     out = np.empty((len(flat), 3, 3, 3, 3))
     for e, index in enumerate(ELEMENTS):
         for order in set(itertools.permutations(index)):
-            out[(slice(None), *order)] = flat[:, e]
+            a, b, c, d = order
+            out[:, a, b, c, d] = flat[:, e]
     return out
