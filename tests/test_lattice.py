@@ -59,8 +59,9 @@ def check(cell: np.ndarray) -> np.ndarray:
         longest = lengths[np.flatnonzero(combination).max()]
         assert np.linalg.norm(combination @ lattice.cell) >= longest * (1 - 1e-9)
     # The first is the shortest of all vectors of the lattice.
-    whole = points_within(lattice.cell, np.zeros(3), lengths[0] * (1 - 1e-6))
-    assert np.all(np.linalg.norm(whole @ lattice.cell, axis=1) * ~np.any(whole, axis=1) == 0) or len(whole) <= 1
+    whole = points_within(lattice.cell, np.zeros(3), lengths[0] * 1.1)
+    whole = whole[np.any(whole != 0, axis=1)]
+    assert np.linalg.norm(whole @ lattice.cell, axis=1).min() >= lengths[0] * (1 - 1e-9)
     return lattice.steps
 
 

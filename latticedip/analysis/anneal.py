@@ -45,7 +45,7 @@ class Schedule:
     def usual(cls, n_units: int, vectors: bool) -> Schedule:
         """What a minute or so on two cores allows: more restarts for few moments."""
         if n_units <= 200:
-            return cls(32, 600 if vectors else 400)
+            return cls(64, 400)
         if n_units <= 2000:
             return cls(16, 400)
         return cls(4 if vectors else 8, 200 if vectors else 300)
@@ -101,13 +101,13 @@ State = tuple[float, FloatArray, np.ndarray | None, tuple[str, ...]]
 
 
 def doubled(table: FloatArray, repeat: tuple[int, int, int]) -> FloatArray:
-    """Shape (n_c, n, nx, ny, 2 nz − 1, n). A table (n_cells, n, n, n_c) as the kernels read it."""
+    """Shape (n_c, n · nx · ny · (2 nz − 1) · n). A table (n_cells, n, n, n_c) as the kernels read it."""
     n = table.shape[1]
     nz = repeat[2]
     grid = table.reshape(*repeat, n, n, -1)
     along = np.arange(-(nz - 1), nz) % nz
     # From (x, y, z, target, source, component).
-    return np.ascontiguousarray(grid[:, :, along].transpose(5, 4, 0, 1, 2, 3))
+    return np.ascontiguousarray(grid[:, :, along].transpose(5, 4, 0, 1, 2, 3)).reshape(table.shape[-1], -1)
 
 
 def _scale(table: FloatArray) -> float:
@@ -150,7 +150,7 @@ def _anneal_along(
     signs = np.zeros((len(seeds), n), dtype=np.int8)
     energies = np.zeros(len(seeds))
     over_rows(
-        anneal_signs, len(seeds), doubled(table / scale, problem.repeat)[0], *problem.repeat, linear, free, start,
+        anneal_signs, len(seeds), doubled(table / scale, problem.repeat)[0], problem.n_sites, *problem.repeat, linear, free, start,
         weights, temperatures, penalties, held, seeds, signs, energies, at_least=1,
     )  # fmt: skip
     return signs, energies * scale
@@ -175,7 +175,7 @@ def _signs_along_best_axes(problem: SearchProblem, schedule: Schedule, seeds: np
             signs, energies = _anneal_along(problem, np.tile(direction, (n_sites, 1)), schedule, tries)
             pattern = signs[int(np.argmin(energies))]
             if not held:
-                descend_best_axis(tables, *problem.repeat, free, problem.weights, pull, pattern)
+                descend_best_axis(tables, problem.n_sites, *problem.repeat, free, problem.weights, pull, pattern)
             axes, notes = best_axis(problem, pattern)
             units = pattern[:, None] * axes
             energy = problem.form_of(units)[0]
@@ -216,7 +216,7 @@ def _vectors(problem: SearchProblem, planar: bool, schedule: Schedule, seeds: np
     vectors = np.zeros((schedule.restarts, n, 3))
     energies = np.zeros(schedule.restarts)
     over_rows(
-        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), *problem.repeat,
+        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), problem.n_sites, *problem.repeat,
         np.ascontiguousarray(problem.linear / scale), planes, problem.weights, temperatures, penalties, seeds, vectors,
         energies, at_least=1,
     )  # fmt: skip

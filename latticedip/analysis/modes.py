@@ -1,6 +1,7 @@
 """The lowest dipolar mode: a lower bound of the dipolar energy of every ordering, and the ordering that reaches it.
 
-Luttinger and Tisza, Phys. Rev. 70, 954 (1946); Lyons and Kaplan, Phys. Rev. 120, 1580 (1960). Energies and words as in `latticedip.analysis.modes_bands`.
+Luttinger and Tisza, Phys. Rev. 70, 954 (1946); Lyons and Kaplan, Phys. Rev. 120, 1580 (1960). Energies and words as in
+`latticedip.analysis.modes_bands`.
 """
 
 from __future__ import annotations
@@ -108,9 +109,9 @@ def balanced_mode(
 ) -> LowestMode:
     """As `lowest_mode`, with the highest bound that weights of the sites can give (Lyons and Kaplan 1960).
 
-    Where sites are not equivalent the plain mode may put most of its amplitude on a few of them, and its energy lies far
-    below every ordering. Here energy_per_ion_eV is the better bound; it is the energy of the components only where
-    their moments are equal. The same as `lowest_mode` where all magnetic sites are equivalent.
+    Where sites are not equivalent the plain mode may put most of its amplitude on a few of them, and its energy then
+    lies far below every ordering. Here energy_per_ion_eV is the better bound; it is the energy of the components only
+    where their moments are equal. The same as `lowest_mode` where all magnetic sites are equivalent.
 
     Raises InputError and LimitError as `eigenvalues` does.
     """
@@ -218,7 +219,8 @@ def bound_above(ranking: Ranking, mode: LowestMode) -> FloatArray:
         if abs(mean - wanted) > SAME_SIZE * wanted:
             raise InputError(
                 f"ordering {ordering.name!r} has a root-mean-square moment of {np.sqrt(mean):.6g} µB, the mode one of "
-                f"{np.sqrt(wanted):.6g} µB: the bound holds for equal sizes alone. Make a mode with the sizes of the ordering."
+                f"{np.sqrt(wanted):.6g} µB: the bound holds for equal sizes alone. "
+                "Make a mode with the sizes of the ordering."
             )
         part = row.energy.dipolar_eV + row.energy.shape_eV
         above.append(part / row.energy.n_ions - mode.energy_per_ion_eV)
@@ -254,7 +256,7 @@ class _Maker:
     def at_zero(self, level: tuple[FloatArray, FloatArray], *, reached: bool) -> LowestMode:
         """The mode at k = 0 from eigenvalues and vectors, or the limit k → 0 across its net moment."""
         values, vectors = level
-        space = vectors[:, : _multiplicity(values, self.sites.scale_eV)]
+        space = vectors.astype(complex)[:, : _multiplicity(values, self.sites.scale_eV)]
         zero = np.zeros((1, 3))
         found = combine(zero, [space])
         assert found is not None
@@ -304,10 +306,10 @@ class _Maker:
         parts = np.zeros((len(found.amplitudes), crystal.n_sites, 3), dtype=complex)
         parts[:, sites.ions] = found.amplitudes * sites.of_site[sites.ions][None, :, None]
         components = _tidy(parts if len(parts) > 1 else parts[0])
-        if k is None or np.all(is_self_conjugate(np.atleast_2d(k))):
-            components = components.real
+        own_opposite = k is None or bool(np.all(is_self_conjugate(np.atleast_2d(k))))
+        kept: FloatArray | ComplexArray = components.real if own_opposite else components
         return LowestMode(
-            crystal, sites.of_site, None if k is None else frozen(k), direction, energy, frozen(components), found.equal,
+            crystal, sites.of_site, None if k is None else frozen(k), direction, energy, frozen(kept), found.equal,
             degeneracy, frozen(star), self.uniform_eV, sites.n_ions, sites.error_bound_eV, self.boundary,
             (*crystal.notes, *self.notes),
         )  # fmt: skip

@@ -1,12 +1,14 @@
 """The best lower bound that site weights give, where the magnetic sites are not all equivalent.
 
-For numbers u_i that add up to zero, an ordering with |s_i| = 1 has the energy (1/S) s†(H − u)s whatever u, so the lowest
-eigenvalue of H(k) − u over all k is a lower bound for every u; it is a concave function of u, and the highest one is
-sought (Lyons and Kaplan, Phys. Rev. 120, 1580 (1960): weights of the sites). At its maximum the level holds sites in
+For numbers u_i that add up to zero, an ordering with |s_i| = 1 has the energy (1/S) s†(H − u)s whatever u, so the
+lowest eigenvalue of H(k) − u over all k is a lower bound for every u; it is a concave function of u, and the highest
+one is sought (Lyons and Kaplan, Phys. Rev. 120, 1580 (1960): weights of the sites). At its maximum the level holds sites in
 equal amounts. Sites that symmetry makes equivalent share one u.
 """
 
 from __future__ import annotations
+
+from typing import Any
 
 import numpy as np
 from scipy.optimize import minimize
@@ -23,7 +25,7 @@ WORKING, ROUNDS = 8, 5
 SHARPNESS = (30.0, 300.0, 3000.0, 30000.0)
 
 #: When a stage of the search ends.
-STOP = {"maxiter": 40, "ftol": 1e-14, "gtol": 1e-9}
+STOP: dict[str, Any] = {"maxiter": 40, "ftol": 1e-14, "gtol": 1e-9}
 
 
 def balance(sites: MagneticSites) -> FloatArray | None:
@@ -55,7 +57,9 @@ def balance(sites: MagneticSites) -> FloatArray | None:
     return np.asarray((free @ x)[kinds] * scale)
 
 
-def _sharpen(matrices: FloatArray, free: FloatArray, kinds: np.ndarray, start: FloatArray, sharpness: float) -> FloatArray:
+def _sharpen(
+    matrices: FloatArray, free: FloatArray, kinds: np.ndarray, start: FloatArray, sharpness: float
+) -> FloatArray:
     """Maximise −(1/β) log Σ exp(−βλ) over all eigenvalues λ of the given matrices, a smooth concave lower estimate."""
     size = matrices.shape[1]
     diagonal = np.arange(size)

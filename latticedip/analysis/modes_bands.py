@@ -8,8 +8,8 @@ tensors between the S magnetic sites. With D = diag(p_i size_i) the energy per i
 which every ordering with |m_i| = size_i obeys. So no such ordering lies below the lowest eigenvalue of H over all k
 (Luttinger and Tisza, Phys. Rev. 70, 954 (1946), the weak constraint).
 
-k = 0 is a point apart. There the sum means N = 0 and a sample adds +½(µ0/V)(S/Σp) D_i N D_j between all pairs, while the
-limit k → 0 along a direction k̂ is that of N = k̂k̂: longitudinal waves pay, transverse ones keep the N = 0 value.
+k = 0 is a point apart. There the sum means N = 0 and a sample adds +½(µ0/V)(S/Σp) D_i N D_j between all pairs, while
+the limit k → 0 along a direction k̂ is that of N = k̂k̂: longitudinal waves pay, transverse ones keep the N = 0 value.
 """
 
 from __future__ import annotations
@@ -146,7 +146,8 @@ def magnetic_sites(crystal: Crystal, sizes: Mapping[str, float], tol: float = 1e
                 continue
             if isinstance(size, bool) or not isinstance(size, numbers.Real) or not 0 < float(size) < np.inf:
                 raise InputError(
-                    f"sizes[{name!r}] must be a moment above zero in µB, got {size!r}. Leave out sites without a moment."
+                    f"sizes[{name!r}] must be a moment above zero in µB, got {size!r}. "
+                    "Leave out sites without a moment."
                 )
             of_site[list(crystal.find(name))] = float(size)
     sites = MagneticSites(crystal, frozen(of_site), check_tol(tol))
@@ -178,7 +179,8 @@ def limit_eigenvalues(
     vectors = as_floats("directions", directions, (None, 3))
     lengths = np.linalg.norm(vectors, axis=1)
     if np.any(lengths == 0):
-        raise InputError(f"directions: number {int(np.argmin(lengths)) + 1} is the zero vector, which has no direction.")
+        number = int(np.argmin(lengths)) + 1
+        raise InputError(f"directions: number {number} is the zero vector, which has no direction.")
     units = vectors / lengths[:, None]
     return np.array([np.linalg.eigvalsh(sites.uniform_matrix(np.outer(u, u))) for u in units]).reshape(len(units), -1)
 
@@ -199,8 +201,8 @@ def uniform_eigenvalues(
 class Bands:
     """Energies of the dipolar modes along the band path of the lattice.
 
-    path: k, distances and names. energies_eV_per_ion: Shape (n, 3S), lowest first. is_limit: Shape (n,) bool; True where
-    k is a whole vector: the row is the limit k → 0 along the segment, which depends on its direction.
+    path: k, distances and names. energies_eV_per_ion: Shape (n, 3S), lowest first. is_limit: Shape (n,) bool; True
+    where k is a whole vector: the row is the limit k → 0 along the segment, which depends on its direction.
     uniform_eV_per_ion: Shape (3S,), at k = 0 itself with the sample. notes: what a report repeats.
     """
 

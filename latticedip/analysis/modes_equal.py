@@ -29,7 +29,7 @@ MOST_CELLS = 216
 
 @dataclass(frozen=True, eq=False)
 class Combination:
-    """An ordering within a level. amplitudes: Shape (n_arms, S, 3) complex, s of each arm; deviation: of |s|² from 1."""
+    """An ordering within a level. amplitudes: Shape (n_arms, S, 3) complex, s per arm. deviation: of |s|² from 1."""
 
     amplitudes: ComplexArray
     deviation: float
@@ -58,7 +58,7 @@ def combine(arms: FloatArray, spaces: list[ComplexArray]) -> Combination | None:
             columns += [(arm, d, factor) for d in range(basis.shape[1])]
     linear = np.concatenate(parts, axis=2).reshape(len(phases) * count, 3, -1)
     best = None
-    for start in _starts(linear, count):
+    for start in _starts(linear):
         solution = _solve(linear, start)
         moments = linear @ solution
         deviation = float(np.abs(np.einsum("ia,ia->i", moments, moments) - 1).max())
@@ -70,10 +70,10 @@ def combine(arms: FloatArray, spaces: list[ComplexArray]) -> Combination | None:
     amplitudes = np.zeros((len(arms), 3 * count), dtype=complex)
     for value, (arm, d, factor) in zip(best[0], columns, strict=True):
         amplitudes[arm] += value * factor * spaces[arm][:, d]
-    amplitudes = amplitudes.reshape(len(arms), count, 3)
+    parted = amplitudes.reshape(len(arms), count, 3)
     weight = np.where(single, 1.0, 0.5)
-    norm = float(np.einsum("a,aic->", weight, np.abs(amplitudes) ** 2))
-    return Combination(amplitudes * np.sqrt(count / norm), best[1])
+    norm = float(np.einsum("a,aic->", weight, np.abs(parted) ** 2))
+    return Combination(parted * np.sqrt(count / norm), best[1])
 
 
 def _phases(arms: FloatArray) -> ComplexArray | None:
@@ -100,9 +100,9 @@ def _phases(arms: FloatArray) -> ComplexArray | None:
     return np.exp(-2j * np.pi * np.array(sorted(turns), dtype=float))
 
 
-def _starts(linear: FloatArray, count: int) -> list[FloatArray]:
+def _starts(linear: FloatArray) -> list[FloatArray]:
     """Parameters to start from: all moments along a Cartesian axis as far as the space allows, then random ones."""
-    rows, _, size = linear.shape
+    size = linear.shape[2]
     starts = []
     for axis in (2, 0, 1):
         projected = linear[:, axis, :].sum(axis=0)

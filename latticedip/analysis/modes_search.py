@@ -24,8 +24,8 @@ MESH_WORK, MESH_LEAST, MESH_MOST = 8192, 512, 2197
 STARTS = 12
 #: Energies closer than this part of their scale count as equal.
 EQUAL = 1e-9
-#: A minimum this close to k = 0 (in mesh steps) is the limit k → 0.
-NEAR_ZERO = 0.05
+#: A descent that ends this close to k = 0 (in mesh steps), and not below it, went to the limit k → 0.
+NEAR_ZERO = 0.4
 #: A descent this close (in mesh steps) to a lower one ends where that one does.
 FOLLOWS = 0.05
 #: A minimum this close to a line or point of symmetry (reduced coordinates) lies on it.
@@ -47,7 +47,7 @@ def magnetic_lattice(sites: MagneticSites) -> Crystal:
     kinds: dict[float, str] = {}
     names = [kinds.setdefault(round(float(mean), 9), f"M{len(kinds)}") for mean in sites.means]
     occupancies = crystal.occupancies[sites.ions]
-    return Crystal(crystal.cell, crystal.positions[sites.ions], names, occupancies=occupancies)
+    return Crystal(crystal.cell, crystal.positions[sites.ions], tuple(names), occupancies=occupancies)
 
 
 def local_minima(sites: MagneticSites) -> tuple[list[Minimum], np.ndarray]:
@@ -61,13 +61,15 @@ def local_minima(sites: MagneticSites) -> tuple[list[Minimum], np.ndarray]:
     mesh, step = symmetric_mesh(lattice, wanted, rotations)
     points = np.concatenate([mesh[1:], _special(lattice)])
     energies = sites.lowest(points)
-    scale = float(np.abs(energies).max())
+    at_zero = float(sites.lowest(np.zeros((1, 3)))[0])
+    scale = sites.scale_eV
     starts = _spread(points, energies, step)
     k, found = descend(sites.lowest, starts, step, scale)
     best: list[Minimum] = []
     for index in np.argsort(found, kind="stable"):
         vector, energy = k[index], float(found[index])
-        if np.abs((vector - np.round(vector)) / step).max() < NEAR_ZERO:
+        near_zero = np.abs((vector - np.round(vector)) / step).max() < NEAR_ZERO
+        if near_zero and energy >= at_zero - EQUAL * scale:
             continue
         exact = symmetrized(vector, rotations, NEAR_SYMMETRY)
         at_exact = float(sites.lowest(exact[None])[0])

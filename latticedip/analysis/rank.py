@@ -109,7 +109,7 @@ class RankingRow:
 
 @dataclass(frozen=True, eq=False)
 class Ranking:
-    """Orderings by energy per magnetic ion, lowest first. notes: what every report repeats."""
+    """Orderings by energy per magnetic ion, lowest first, ties in the order given. notes: what every report repeats."""
 
     rows: tuple[RankingRow, ...]
     rotated: bool
@@ -134,7 +134,7 @@ def rank(
     probes: Sequence[Probe] = (),
     tol: float = 1e-10,
 ) -> Ranking:
-    """Rank orderings by energy per magnetic ion (dipolar, shape and applied field), lowest first.
+    """Rank orderings by energy per magnetic ion (dipolar, shape and applied field), lowest first, ties as given.
 
     orderings: in one Cartesian frame, each on its own crystal. sample: one for all; None means N = 0.
     rotate: also turn each pattern rigidly as a whole to its best orientation, and rank those.
@@ -167,9 +167,9 @@ def rank(
             energy = dipolar_energy(ordering, sample=sample, tol=tol)
         fields = {probe.name: local_field(ordering, probe, sample=sample, tol=tol) for probe in probes}
         evaluated.append((ordering, energy, orientation, fields))
-    evaluated.sort(key=lambda item: item[1].per_ion_eV)
-    ties = _ties([energy for _, energy, _, _ in evaluated])
-    lowest = evaluated[0][1].per_ion_eV
+    numbers, ties = _ranked([energy for _, energy, _, _ in evaluated])
+    evaluated = [evaluated[number] for number in numbers]
+    lowest = min(energy.per_ion_eV for _, energy, _, _ in evaluated)
     rows = tuple(
         RankingRow(ordering, energy, energy.per_ion_eV - lowest, tie, fields, orientation)
         for (ordering, energy, orientation, fields), tie in zip(evaluated, ties, strict=True)
@@ -177,12 +177,26 @@ def rank(
     return Ranking(rows, rotate, _boundary(rows), (CAVEAT,))
 
 
-def _ties(energies: list[Energy]) -> list[bool]:
-    """True for rows (sorted) whose energy per ion equals that of the row above or below within their bounds."""
+def _ranked(energies: list[Energy]) -> tuple[list[int], list[bool]]:
+    """Numbers of the energies, lowest first and tied ones in the order given; and for each place whether it is tied."""
+    numbers = sorted(range(len(energies)), key=lambda i: energies[i].per_ion_eV)
+    close = _close_to_next([energies[i] for i in numbers])
+    ties = [below or above for below, above in zip([*close, False], [False, *close], strict=True)]
+    placed: list[int] = []
+    group: list[int] = []
+    for number, tied_to_next in zip(numbers, [*close, False], strict=True):
+        group.append(number)
+        if not tied_to_next:
+            placed += sorted(group)
+            group = []
+    return placed, ties
+
+
+def _close_to_next(energies: list[Energy]) -> list[bool]:
+    """Shape (n − 1). Whether each energy per ion (sorted) equals the next one within their bounds."""
     values = np.array([energy.per_ion_eV for energy in energies])
     bounds = np.array([energy.error_bound_eV / energy.n_ions for energy in energies]) + ROUNDING * np.abs(values)
-    close = np.diff(values) <= bounds[:-1] + bounds[1:]
-    return [bool(below or above) for below, above in zip([*close, False], [False, *close], strict=True)]
+    return [bool(close) for close in np.diff(values) <= bounds[:-1] + bounds[1:]]
 
 
 def _boundary(rows: tuple[RankingRow, ...]) -> str:

@@ -7,7 +7,14 @@ from typing import TYPE_CHECKING
 
 import click
 
-from latticedip.cli.options import deliver, output_options, study_argument, tol_option
+from latticedip.cli.options import (
+    deliver,
+    ordering_option,
+    output_options,
+    probe_option,
+    study_argument,
+    tol_option,
+)
 
 if TYPE_CHECKING:
     from latticedip.study.fields import Axes, Unit
@@ -24,20 +31,34 @@ if TYPE_CHECKING:
     "size and angles (theta from z, phi from x in the xy plane).",
 )
 @click.option("--unit", type=click.Choice(["T", "G"]), default="T", show_default=True, help="Tesla or gauss.")
+@ordering_option
+@probe_option
 @tol_option
 @output_options
-def field(study: Path, axes: Axes, unit: Unit, tol: float, as_json: bool, csv_path: Path | None) -> None:
+def field(
+    study: Path,
+    axes: Axes,
+    unit: Unit,
+    orderings: tuple[str, ...],
+    probes: tuple[str, ...],
+    tol: float,
+    as_json: bool,
+    csv_path: Path | None,
+) -> None:
     """Print the local field at every probe under every ordering, in its five parts.
 
     \b
     Example:
       latticedip field study.toml --axes crystal --csv fields.csv
+      latticedip field study.toml --ordering "ferromagnet" --probe "muon A"
     """
     from latticedip.report.field import field_text
     from latticedip.study import tasks
     from latticedip.study.fields import field_table
 
-    document = tasks.field(tasks.open_study(study), axes=axes, unit=unit, tol=tol)
+    document = tasks.field(
+        tasks.open_study(study), axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol
+    )
     deliver(
         document,
         rows=lambda: field_table(document),

@@ -19,10 +19,11 @@ from typing import Any
 import click
 
 from latticedip import __version__
+from latticedip.cli.options import report_progress
 from latticedip.errors import LatticedipError, near_match
 
 #: Subcommands in the order in which a user meets them; each is found in the module of its name.
-COMMANDS = ("start", "show", "field", "rank", "demag")
+COMMANDS = ("start", "show", "field", "rank", "shift", "linewidth", "demag")
 
 EPILOG = """\b
 Example:
@@ -88,13 +89,6 @@ class WrongInput(click.ClickException):
     exit_code = 2
 
 
-class EchoHandler(logging.Handler):
-    """Writes messages to the stderr of the moment."""
-
-    def emit(self, record: logging.LogRecord) -> None:
-        click.echo(self.format(record), err=True)
-
-
 def _abandon_stdout() -> None:
     """Send what is left in the buffer nowhere: the interpreter would fail on it once more at its end."""
     with contextlib.suppress(OSError, ValueError):
@@ -121,10 +115,11 @@ def main(verbose: bool) -> None:
     """Local fields and energies of magnetic orderings from dipolar lattice sums.
 
     A study file names a crystal structure, candidate orderings, probe positions and the shape of the sample.
-    `start` writes one for a structure, `show` says what was understood, `field` and `rank` compute.
+    `start` writes one for a structure, `show` says what was understood, `field`, `rank`, `shift` and `linewidth`
+    compute.
     """
     _prepare_streams()
-    if verbose and not any(isinstance(handler, EchoHandler) for handler in _log.handlers):
-        _log.addHandler(EchoHandler())
-    _log.setLevel(logging.INFO if verbose else logging.WARNING)
+    _log.setLevel(logging.WARNING)
+    if verbose:
+        report_progress()
     warnings.showwarning = _plain_warning

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import math
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
@@ -10,6 +11,39 @@ from typing import Any, TypeVar
 import click
 
 F = TypeVar("F", bound=Callable[..., Any])
+
+_log = logging.getLogger("latticedip")
+
+
+class EchoHandler(logging.Handler):
+    """Writes messages to the stderr of the moment."""
+
+    def emit(self, record: logging.LogRecord) -> None:
+        click.echo(self.format(record), err=True)
+
+
+def report_progress() -> None:
+    """Say on stderr what is being done."""
+    if not any(isinstance(handler, EchoHandler) for handler in _log.handlers):
+        _log.addHandler(EchoHandler())
+    _log.setLevel(logging.INFO)
+
+
+def _turn_on(ctx: click.Context, param: click.Parameter, value: bool) -> None:
+    if value:
+        report_progress()
+
+
+def verbose_option(function: F) -> F:
+    """-v, which goes in front of a command or behind it."""
+    return click.option(
+        "-v",
+        "--verbose",
+        is_flag=True,
+        expose_value=False,
+        callback=_turn_on,
+        help="Say on stderr what is being done and how long it takes.",
+    )(function)
 
 
 class Tolerance(click.ParamType):
@@ -52,8 +86,40 @@ def block_option(function: F) -> F:
     )(function)
 
 
+def ordering_option(function: F) -> F:
+    """The orderings of a study that count."""
+    return click.option(
+        "--ordering",
+        "orderings",
+        multiple=True,
+        metavar="NAME",
+        help="Take this ordering of the study only; may be given several times.",
+    )(function)
+
+
+def probe_option(function: F) -> F:
+    """The probes of a study that count."""
+    return click.option(
+        "--probe",
+        "probes",
+        multiple=True,
+        metavar="NAME",
+        help="Take this probe of the study only; may be given several times.",
+    )(function)
+
+
+def orbit_option(function: F) -> F:
+    """Whether a position stands for all that are equivalent to it."""
+    return click.option(
+        "--orbit",
+        is_flag=True,
+        help="Take every position that the symmetry of the crystal makes equal to the one of the probe.",
+    )(function)
+
+
 def output_options(function: F) -> F:
-    """--json and --csv FILE."""
+    """--json, --csv FILE and -v."""
+    function = verbose_option(function)
     function = click.option(
         "--csv",
         "csv_path",

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import click
 
-from latticedip.cli.options import deliver, output_options, study_argument, tol_option
+from latticedip.cli.options import deliver, ordering_option, output_options, study_argument, tol_option
 
 
 @click.command(short_help="Rank orderings by their dipolar energy.")
@@ -16,9 +16,12 @@ from latticedip.cli.options import deliver, output_options, study_argument, tol_
     is_flag=True,
     help="Turn each pattern as a whole to its best orientation; prints easy axis, hard axis and the energy between.",
 )
+@ordering_option
 @tol_option
 @output_options
-def rank(study: Path, rotate: bool, tol: float, as_json: bool, csv_path: Path | None) -> None:
+def rank(
+    study: Path, rotate: bool, orderings: tuple[str, ...], tol: float, as_json: bool, csv_path: Path | None
+) -> None:
     """Rank the orderings of a study by their dipolar energy per magnetic ion, lowest first.
 
     The size of the field at every probe is given beside each. Exchange and crystal field are not part of the
@@ -27,12 +30,13 @@ def rank(study: Path, rotate: bool, tol: float, as_json: bool, csv_path: Path | 
     \b
     Example:
       latticedip rank study.toml --rotate
+      latticedip rank study.toml --ordering "ferromagnet" --ordering "layers"
     """
     from latticedip.report.rank import rank_text
     from latticedip.study import tasks
     from latticedip.study.rankings import rank_table
 
-    document = tasks.rank(tasks.open_study(study), rotate=rotate, tol=tol)
+    document = tasks.rank(tasks.open_study(study), rotate=rotate, orderings=orderings, tol=tol)
     deliver(
         document,
         rows=lambda: rank_table(document),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import warnings
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -16,8 +17,8 @@ from latticedip.errors import InputError
 class BandPath:
     """Propagation vectors along straight segments between special points.
 
-    k: Shape (n, 3) float, reduced coordinates of the crystal's own cell. distance: Shape (n,) float in 1/Å (2π included),
-    along the path; it stands still where the path jumps. segment: Shape (n,) int, the segment each k belongs to: a
+    k: Shape (n, 3) float, reduced coordinates of the crystal's own cell. distance: Shape (n,) float in 1/Å (2π
+    included), along the path; it stands still where the path jumps. segment: Shape (n,) int, the one each k is on: a
     special point at which one segment ends and the next begins is listed twice.
     ticks: (distance, name) of the special points in order; "A|B" where the path jumps from A to B.
     points: reduced coordinates of the special points by name.
@@ -95,4 +96,4 @@ def _names(text: str, points: dict[str, FloatArray]) -> list[str]:
 
 
 def _pairs(names: list[str]) -> list[tuple[str, str]]:
-    return list(zip(names[:-1], names[1:], strict=True))
+    return list(pairwise(names))

@@ -28,8 +28,8 @@ def image_shifts(crystal: Crystal, radius: float) -> FloatArray:
     count = float(np.prod(2 * reach + 1)) * max(1, crystal.n_sites)
     if count > MAX_IMAGES:
         raise LimitError(
-            f"neighbours within {radius:g} Å would need {count:.3g} images of atoms in the cell {crystal.cell.tolist()}, "
-            f"more than {MAX_IMAGES}. Use a less skewed cell or a smaller radius."
+            f"neighbours within {radius:g} Å would need {count:.3g} images of atoms in the cell "
+            f"{crystal.cell.tolist()}, more than {MAX_IMAGES}. Use a less skewed cell or a smaller radius."
         )
     axes = [np.arange(-n, n + 1) for n in reach]
     return np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
@@ -46,7 +46,7 @@ def close_pairs(crystal: Crystal, radius: float) -> list[tuple[int, int, float]]
     images = (home[None, :, :] + shifts[:, None, :]).reshape(-1, 3) @ crystal.cell
     tree = cKDTree(images)
     found = []
-    hits_of_all: list[list[int]] = list(tree.query_ball_point(home @ crystal.cell, radius))  # type: ignore[arg-type]
+    hits_of_all: list[list[int]] = list(tree.query_ball_point(home @ crystal.cell, radius))
     for i, hits in enumerate(hits_of_all):
         for hit in sorted(hits):
             j = hit % crystal.n_sites

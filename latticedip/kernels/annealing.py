@@ -43,70 +43,73 @@ def seed_random(seed, state):
 
 
 @kernel(fastmath=True, inline=True)
-def add_field(table, nx, ny, nz, place, change, fields):
+def add_field(table, m, nx, ny, nz, place, change, fields):
     """fields += change · Q[:, place] for one component of the coupling.
 
-    table (n, nx, ny, 2 nz − 1, n): source site, differences of cells, target site. fields (n_moments,).
+    table: flat, of shape (m, nx, ny, 2 nz − 1, m): source site, differences of cells, target site. fields (n_moments,).
     """
-    n = table.shape[0]
-    site = place % n
-    cell = place // n
+    cell = place // m
     z = cell % nz
     y = (cell // nz) % ny
     x = cell // (nz * ny)
-    length = nz * n
-    begin = (nz - 1 - z) * n
+    length = nz * m
+    wide = (2 * nz - 1) * m
+    begin = (place % m) * nx * ny * wide + (nz - 1 - z) * m
     for tx in range(nx):
         dx = tx - x if tx >= x else tx - x + nx
         for ty in range(ny):
             dy = ty - y if ty >= y else ty - y + ny
-            row = table[site, dx, dy].ravel()[begin : begin + length]
-            out = fields[(tx * ny + ty) * length : (tx * ny + ty + 1) * length]
+            here = begin + (dx * ny + dy) * wide
+            there = (tx * ny + ty) * length
+            # Slices, because an index that might be negative would keep the loop from being vectorised.
+            row = table[here : here + length]
+            out = fields[there : there + length]
             for i in range(length):
                 out[i] += change * row[i]
 
 
 @kernel(fastmath=True, inline=True)
-def add_vector_field(tables, nx, ny, nz, place, change, fields):
-    """fields (3, n_moments) += Q[:, place] change, all six components in one pass; tables as in `anneal_vectors`."""
-    n = tables.shape[1]
-    site = place % n
-    cell = place // n
+def add_vector_field(tables, m, nx, ny, nz, place, change, fields):
+    """fields (3, n_moments) += Q[:, place] change; tables (6, …) flat, in the order xx, yy, zz, yz, xz, xy."""
+    t0, t1, t2, t3, t4, t5 = tables[0], tables[1], tables[2], tables[3], tables[4], tables[5]
+    f0, f1, f2 = fields[0], fields[1], fields[2]
+    a, b, c = change[0], change[1], change[2]
+    cell = place // m
     z = cell % nz
     y = (cell // nz) % ny
     x = cell // (nz * ny)
-    length = nz * n
-    begin = (nz - 1 - z) * n
-    a, b, c = change[0], change[1], change[2]
+    length = nz * m
+    wide = (2 * nz - 1) * m
+    begin = (place % m) * nx * ny * wide + (nz - 1 - z) * m
     for tx in range(nx):
         dx = tx - x if tx >= x else tx - x + nx
         for ty in range(ny):
             dy = ty - y if ty >= y else ty - y + ny
-            xx = tables[0, site, dx, dy].ravel()[begin : begin + length]
-            yy = tables[1, site, dx, dy].ravel()[begin : begin + length]
-            zz = tables[2, site, dx, dy].ravel()[begin : begin + length]
-            yz = tables[3, site, dx, dy].ravel()[begin : begin + length]
-            xz = tables[4, site, dx, dy].ravel()[begin : begin + length]
-            xy = tables[5, site, dx, dy].ravel()[begin : begin + length]
-            start = (tx * ny + ty) * length
-            one = fields[0, start : start + length]
-            two = fields[1, start : start + length]
-            three = fields[2, start : start + length]
+            here = begin + (dx * ny + dy) * wide
+            end = here + length
+            there = (tx * ny + ty) * length
+            xx, yy, zz = t0[here:end], t1[here:end], t2[here:end]
+            yz, xz, xy = t3[here:end], t4[here:end], t5[here:end]
+            # One output per loop: with more, the checks for overlap keep it from being vectorised.
+            out = f0[there : there + length]
             for i in range(length):
-                one[i] += xx[i] * a + xy[i] * b + xz[i] * c
-                two[i] += xy[i] * a + yy[i] * b + yz[i] * c
-                three[i] += xz[i] * a + yz[i] * b + zz[i] * c
+                out[i] += xx[i] * a + xy[i] * b + xz[i] * c
+            out = f1[there : there + length]
+            for i in range(length):
+                out[i] += xy[i] * a + yy[i] * b + yz[i] * c
+            out = f2[there : there + length]
+            for i in range(length):
+                out[i] += xz[i] * a + yz[i] * b + zz[i] * c
 
 
 @kernel(inline=True)
-def coupling_between(table, nx, ny, nz, target, source):
+def coupling_between(table, m, nx, ny, nz, target, source):
     """Q[target, source] of one component."""
-    n = table.shape[0]
-    one, two = target // n, source // n
+    one, two = target // m, source // m
     dz = one % nz - two % nz + nz - 1
     dy = ((one // nz) % ny - (two // nz) % ny) % ny
     dx = (one // (nz * ny) - two // (nz * ny)) % nx
-    return table[source % n, dx, dy, dz, target % n]
+    return table[((((source % m) * nx + dx) * ny + dy) * (2 * nz - 1) + dz) * m + target % m]
 
 
 @kernel(inline=True)
@@ -121,12 +124,12 @@ def penalty_change(penalty, net, weights, place, change):
 
 @kernel()
 def anneal_signs(
-    first, last, table, nx, ny, nz, linear, free, start, weights, temperatures, penalties, exchange, seeds, out_signs,
+    first, last, table, m, nx, ny, nz, linear, free, start, weights, temperatures, penalties, exchange, seeds, out_signs,
     out_energies,
 ):  # fmt: skip
     """Anneal signs along given axes; restarts first..last.
 
-    table (n, nx, ny, 2 nz − 1, n): Q. linear (n_moments,): g. free (n_free,): places of the signs that may change;
+    table: Q, flat, of shape (m, nx, ny, 2 nz − 1, m) with m sites in a cell. linear (n_moments,): g. free (n_free,): places of the signs that may change;
     start (n_moments,) int8: the fixed ones, 0 where free. weights (n_c, n_moments): net moment, c components, held at
     zero by penalties (n_sweeps,). exchange: whether pairs are exchanged too.
     out_signs (n_restarts, n_moments) int8; out_energies (n_restarts,), penalty left out.
@@ -143,7 +146,7 @@ def anneal_signs(
             signs[p] = start[p]
         for i in range(n_free):
             signs[free[i]] = 1 if next_random(state) < 0.5 else -1
-        sum_fields(table, nx, ny, nz, signs, fields)
+        sum_fields(table, m, nx, ny, nz, signs, fields)
         for c in range(net.shape[0]):
             net[c] = 0.0
             for p in range(n):
@@ -156,39 +159,39 @@ def anneal_signs(
                     other = free[int(next_random(state) * n_free)]
                     if signs[other] * signs[place] < 0:
                         exchange_signs(
-                            place, other, table, nx, ny, nz, linear, weights, penalty, temperature, state, signs, fields,
+                            place, other, table, m, nx, ny, nz, linear, weights, penalty, temperature, state, signs, fields,
                             net,
                         )  # fmt: skip
                     continue
                 sign = signs[place]
-                own = coupling_between(table, nx, ny, nz, place, place)
+                own = coupling_between(table, m, nx, ny, nz, place, place)
                 change = -2.0 * sign * (fields[place] + linear[place]) + 2.0 * own
                 change += penalty_change(penalty, net, weights, place, -2.0 * sign)
                 if change <= 0.0 or (temperature > 0.0 and next_random(state) < np.exp(-change / temperature)):
                     for c in range(net.shape[0]):
                         net[c] -= 2.0 * sign * weights[c, place]
                     signs[place] = -sign
-                    add_field(table, nx, ny, nz, place, -2.0 * sign, fields)
+                    add_field(table, m, nx, ny, nz, place, -2.0 * sign, fields)
         # Descend until no single sign gains: the last sweeps at a low temperature may have left one.
-        sum_fields(table, nx, ny, nz, signs, fields)
+        sum_fields(table, m, nx, ny, nz, signs, fields)
         penalty = penalties[penalties.shape[0] - 1]
         for _ in range(100):
             flips = 0
             for i in range(n_free):
                 place = free[i]
                 sign = signs[place]
-                own = coupling_between(table, nx, ny, nz, place, place)
+                own = coupling_between(table, m, nx, ny, nz, place, place)
                 change = -2.0 * sign * (fields[place] + linear[place]) + 2.0 * own
                 change += penalty_change(penalty, net, weights, place, -2.0 * sign)
                 if change < -1e-12:
                     for c in range(net.shape[0]):
                         net[c] -= 2.0 * sign * weights[c, place]
                     signs[place] = -sign
-                    add_field(table, nx, ny, nz, place, -2.0 * sign, fields)
+                    add_field(table, m, nx, ny, nz, place, -2.0 * sign, fields)
                     flips += 1
             if flips == 0:
                 break
-        sum_fields(table, nx, ny, nz, signs, fields)
+        sum_fields(table, m, nx, ny, nz, signs, fields)
         energy = 0.0
         for p in range(n):
             energy += signs[p] * (0.5 * fields[p] + linear[p])
@@ -197,14 +200,14 @@ def anneal_signs(
 
 @kernel(inline=True)
 def exchange_signs(
-    place, other, table, nx, ny, nz, linear, weights, penalty, temperature, state, signs, fields, net
+    place, other, table, m, nx, ny, nz, linear, weights, penalty, temperature, state, signs, fields, net
 ):  # fmt: skip
     """Try to turn round two opposite signs at once."""
     one, two = signs[place], signs[other]
     change = -2.0 * one * (fields[place] + linear[place]) - 2.0 * two * (fields[other] + linear[other])
-    change += 2.0 * coupling_between(table, nx, ny, nz, place, place)
-    change += 2.0 * coupling_between(table, nx, ny, nz, other, other)
-    change += 4.0 * one * two * coupling_between(table, nx, ny, nz, place, other)
+    change += 2.0 * coupling_between(table, m, nx, ny, nz, place, place)
+    change += 2.0 * coupling_between(table, m, nx, ny, nz, other, other)
+    change += 4.0 * one * two * coupling_between(table, m, nx, ny, nz, place, other)
     extra = 0.0
     for c in range(net.shape[0]):
         step = -2.0 * (one * weights[c, place] + two * weights[c, other])
@@ -215,24 +218,24 @@ def exchange_signs(
             net[c] -= 2.0 * (one * weights[c, place] + two * weights[c, other])
         signs[place] = -one
         signs[other] = -two
-        add_field(table, nx, ny, nz, place, -2.0 * one, fields)
-        add_field(table, nx, ny, nz, other, -2.0 * two, fields)
+        add_field(table, m, nx, ny, nz, place, -2.0 * one, fields)
+        add_field(table, m, nx, ny, nz, other, -2.0 * two, fields)
 
 
 @kernel(inline=True)
-def sum_fields(table, nx, ny, nz, signs, fields):
+def sum_fields(table, m, nx, ny, nz, signs, fields):
     """Fields of all signs afresh."""
     fields[:] = 0.0
     for p in range(signs.shape[0]):
         if signs[p] != 0:
-            add_field(table, nx, ny, nz, p, np.float64(signs[p]), fields)
+            add_field(table, m, nx, ny, nz, p, np.float64(signs[p]), fields)
 
 
 @kernel()
-def descend_best_axis(tables, nx, ny, nz, free, weights, pull, signs):
+def descend_best_axis(tables, m, nx, ny, nz, free, weights, pull, signs):
     """Turn single signs round while that lowers the energy along the pattern's own best axis; changes ``signs``.
 
-    tables (6, n, nx, ny, 2 nz − 1, n): the form of the axis, xx, yy, zz, yz, xz, xy. weights (n_moments,): net moment
+    tables (6, …), flat as in `anneal_signs`: the form of the axis, xx, yy, zz, yz, xz, xy. weights (n_moments,): net moment
     along the axis. pull (3,): energy −(net moment) pull·u in the applied field. Returns that energy.
     """
     n = signs.shape[0]
@@ -245,7 +248,7 @@ def descend_best_axis(tables, nx, ny, nz, free, weights, pull, signs):
         for p in range(n):
             net += weights[p] * signs[p]
         for c in range(6):
-            sum_fields(tables[c], nx, ny, nz, signs, fields[c])
+            sum_fields(tables[c], m, nx, ny, nz, signs, fields[c])
             total = 0.0
             for p in range(n):
                 total += signs[p] * fields[c, p]
@@ -259,7 +262,7 @@ def descend_best_axis(tables, nx, ny, nz, free, weights, pull, signs):
             sign = signs[place]
             after = net - 2.0 * sign * weights[place]
             for c in range(6):
-                own = coupling_between(tables[c], nx, ny, nz, place, place)
+                own = coupling_between(tables[c], m, nx, ny, nz, place, place)
                 trial[c] = form[c] - 2.0 * sign * fields[c, place] + 2.0 * own
             for i in range(3):
                 arm[i] = after * pull[i]
@@ -270,7 +273,7 @@ def descend_best_axis(tables, nx, ny, nz, free, weights, pull, signs):
                 signs[place] = -sign
                 for c in range(6):
                     form[c] = trial[c]
-                    add_field(tables[c], nx, ny, nz, place, -2.0 * sign, fields[c])
+                    add_field(tables[c], m, nx, ny, nz, place, -2.0 * sign, fields[c])
         if turned == 0:
             break
     return energy
@@ -278,11 +281,11 @@ def descend_best_axis(tables, nx, ny, nz, free, weights, pull, signs):
 
 @kernel()
 def anneal_vectors(
-    first, last, tables, nx, ny, nz, linear, planes, weights, temperatures, penalties, seeds, out_vectors, out_energies
+    first, last, tables, m, nx, ny, nz, linear, planes, weights, temperatures, penalties, seeds, out_vectors, out_energies
 ):  # fmt: skip
     """Anneal unit vectors, free or each in a plane; restarts first..last.
 
-    tables (6, n, nx, ny, 2 nz − 1, n): Q_ab in the order xx, yy, zz, yz, xz, xy. linear (n_moments, 3): g.
+    tables (6, …), flat as in `anneal_signs`: Q_ab in the order xx, yy, zz, yz, xz, xy. linear (n_moments, 3): g.
     planes (n_moments, 2, 3): two unit vectors of the plane of each, or (0, 2, 3) where moments are free.
     weights (n_moments,): net moment Σ w u held at zero by penalties (n_sweeps,).
     out_vectors (n_restarts, n_moments, 3); out_energies (n_restarts,), penalty left out.
@@ -297,7 +300,7 @@ def anneal_vectors(
         moments = out_vectors[restart]
         for p in range(n):
             draw_direction(p, flat, planes, 1e9, old, state, moments[p])
-        sum_vector_fields(tables, nx, ny, nz, moments, fields)
+        sum_vector_fields(tables, m, nx, ny, nz, moments, fields)
         for a in range(3):
             net[a] = 0.0
             for p in range(n):
@@ -318,12 +321,12 @@ def anneal_vectors(
                     change += step[a] * (fields[a, place] + linear[place, a])
                     w = weights[place] * step[a]
                     change += penalty * w * (2.0 * net[a] + w)
-                q0 = coupling_between(tables[0], nx, ny, nz, place, place)
-                q1 = coupling_between(tables[1], nx, ny, nz, place, place)
-                q2 = coupling_between(tables[2], nx, ny, nz, place, place)
-                q3 = coupling_between(tables[3], nx, ny, nz, place, place)
-                q4 = coupling_between(tables[4], nx, ny, nz, place, place)
-                q5 = coupling_between(tables[5], nx, ny, nz, place, place)
+                q0 = coupling_between(tables[0], m, nx, ny, nz, place, place)
+                q1 = coupling_between(tables[1], m, nx, ny, nz, place, place)
+                q2 = coupling_between(tables[2], m, nx, ny, nz, place, place)
+                q3 = coupling_between(tables[3], m, nx, ny, nz, place, place)
+                q4 = coupling_between(tables[4], m, nx, ny, nz, place, place)
+                q5 = coupling_between(tables[5], m, nx, ny, nz, place, place)
                 change += 0.5 * (q0 * step[0] * step[0] + q1 * step[1] * step[1] + q2 * step[2] * step[2])
                 change += q3 * step[1] * step[2] + q4 * step[0] * step[2] + q5 * step[0] * step[1]
                 if change <= 0.0 or next_random(state) < np.exp(-change / temperature):
@@ -331,11 +334,11 @@ def anneal_vectors(
                     for a in range(3):
                         moments[place, a] = new[a]
                         net[a] += weights[place] * step[a]
-                    add_vector_field(tables, nx, ny, nz, place, step, fields)
+                    add_vector_field(tables, m, nx, ny, nz, place, step, fields)
             # Keep about half of the moves: short steps when it is cold.
             rate = accepted / n
             reach = min(1e9 if rate > 0.9 else 3.0, max(1e-4, reach * (0.7 if rate < 0.4 else 1.4 if rate > 0.6 else 1.0)))
-        sum_vector_fields(tables, nx, ny, nz, moments, fields)
+        sum_vector_fields(tables, m, nx, ny, nz, moments, fields)
         energy = 0.0
         for p in range(n):
             for a in range(3):
@@ -378,8 +381,8 @@ def draw_direction(place, flat, planes, reach, old, state, out):
 
 
 @kernel(inline=True)
-def sum_vector_fields(tables, nx, ny, nz, moments, fields):
+def sum_vector_fields(tables, m, nx, ny, nz, moments, fields):
     """Fields of all unit vectors afresh."""
     fields[:] = 0.0
     for p in range(moments.shape[0]):
-        add_vector_field(tables, nx, ny, nz, p, moments[p], fields)
+        add_vector_field(tables, m, nx, ny, nz, p, moments[p], fields)

@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from latticedip.checks import FloatArray
 from latticedip.kernels.jit import kernel
 
 #: Numbers in the rows held at one time: they stay in the second cache while every row of H passes by.
@@ -18,7 +17,7 @@ REORDERED = {"reassoc", "nsz", "contract", "arcp"}
 
 
 @kernel(fastmath=REORDERED)
-def quadratic_forms(first: int, last: int, rows: FloatArray, half: FloatArray, out: FloatArray) -> None:
+def quadratic_forms(first: int, last: int, rows: np.ndarray, half: np.ndarray, out: np.ndarray) -> None:
     """Write the form of rows first..last to ``out`` (n,).
 
     rows (n, m). half (M, M), M the next multiple of four: row j holds H_ji for the group of four that j is in, 2 H_ji

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from latticedip.checks import FloatArray
 from latticedip.kernels.jit import kernel
 
 #: Signs per group. A table of 64 × 64 doubles fills the fastest cache.
@@ -20,7 +19,7 @@ ROWS = 16384
 
 
 @kernel(inline=True)
-def pair_table(block: FloatArray, table: FloatArray) -> None:
+def pair_table(block: np.ndarray, table: np.ndarray) -> None:
     """Fill table[64 a + b] with Σ_ij s_i(a) block_ij s_j(b), s_i(a) = +1 where bit i of a is set, else −1."""
     rows = np.empty((GROUP, STATES))
     for i in range(GROUP):
@@ -43,7 +42,7 @@ def pair_table(block: FloatArray, table: FloatArray) -> None:
 
 
 @kernel()
-def sign_forms(first: int, last: int, signs: np.ndarray, form: FloatArray, out: FloatArray) -> None:
+def sign_forms(first: int, last: int, signs: np.ndarray, form: np.ndarray, out: np.ndarray) -> None:
     """Write Σ_ij s_i Q_ij s_j to rows first..last of ``out`` (n,); NaN where a row holds anything but ±1.
 
     signs (n, N) int8. form (G·6, G·6): Q, symmetric, padded with zeros to whole groups.

@@ -144,9 +144,20 @@ def coupling_tensor(
     if not names:
         raise InputError("magnetic names no label or element.")
     sites = sorted({site for name in names for site in crystal.find(name)})
-    specimen = Sample() if sample is None else sample
     parts = site_couplings(crystal, position, sites, contact=contact, displaced=displaced, tol=tol)
-    total = float(parts.occupancies.sum())
+    return summed(crystal, parts, np.arange(len(sites)), names, sample)
+
+
+def summed(
+    crystal: Crystal, parts: SiteCouplings, rows: np.ndarray, names: tuple[str, ...], sample: Sample | None
+) -> CouplingTensor:
+    """Coupling tensor to equal moments on some of the sites of `site_couplings`.
+
+    rows: Shape (n,) int, which of them. names: what they are called. sample: None means N = 0.
+    """
+    specimen = Sample() if sample is None else sample
+    occupancies = parts.occupancies[rows]
+    total = float(occupancies.sum())
     volume_T = parts.magnetization_T * total
     place = parts.place
     return CouplingTensor(
@@ -154,10 +165,10 @@ def coupling_tensor(
         site=crystal.labels[place.site] if place.site >= 0 else "",
         magnetic=names,
         n_ions=total,
-        dipolar=frozen(np.einsum("s,sab->ab", parts.occupancies, parts.dipolar)),
+        dipolar=frozen(np.einsum("s,sab->ab", occupancies, parts.dipolar[rows])),
         lorentz=frozen(volume_T / 3 * np.eye(3)),
         demagnetizing=frozen(0.0 - volume_T * specimen.demagnetizing_tensor),
-        contact=frozen(np.einsum("s,sab->ab", parts.occupancies, parts.contact)),
+        contact=frozen(np.einsum("s,sab->ab", occupancies, parts.contact[rows])),
         error_bound=parts.error_bound,
         boundary=boundary_words(parts.ordering, sample),
         notes=parts.notes,

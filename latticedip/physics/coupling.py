@@ -61,7 +61,7 @@ class Coupling:
         """Shape (n_candidates,) float in eV per cell. Dipolar energy at N = 0, averaged over cells for k ≠ 0.
 
         moments: Shape (n_candidates, n_sites, 3), µB, Cartesian, of the ions (occupancy is applied here); complex
-        components at a general k, real ones where k and −k are the same vector. Taken block by block, never copied whole.
+        components at a general k, real ones where k and −k are the same vector. Never copied whole.
 
         Raises InputError for other shapes, values that are not finite, imaginary parts where they mean nothing, or
         two magnetic sites between 1e-3 and 0.1 Å apart.

@@ -56,11 +56,19 @@ def field_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
 
 def ordering_lines(entry: Mapping[str, Any]) -> list[tuple[str, str]]:
     """Return k, ions and net moment of an ordering in words."""
-    return [
+    lines = [
         ("k", k_text(entry["k"])),
         ("magnetic ions", f"{short(entry['ions_per_cell'])} per cell"),
         ("net moment", f"{vector(entry['net_moment_muB_per_cell'])} µB per cell, Cartesian"),
     ]
+    if entry.get("own_cell_placed"):
+        lines.append(("its own cell", placed_words(entry["own_cell_placed"])))
+    return lines
+
+
+def placed_words(how: str) -> str:
+    """Return in words how the cell of an ordering was placed in the crystal of the study."""
+    return f"placed {how}" if how.startswith("by ") else how
 
 
 def k_text(vectors: Sequence[Sequence[float]]) -> str:

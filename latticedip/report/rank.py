@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from latticedip.report.field import placed_words
 from latticedip.report.tables import (
     Column,
     bullets,
@@ -35,18 +36,31 @@ def rank_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
     parts = [heading(document["title"]), "", pairs(lead, width=width), "", _energies(rows, width)]
     if any(row["tie"] for row in rows):
         parts += ["", paragraph("= : a tie; the energies differ by less than the error bound.", width=width)]
-    if any(row["shape_ueV_per_ion"] or row["applied_ueV_per_ion"] for row in rows):
-        parts += ["", "Parts of the energy", "", _energy_parts(rows, width)]
+    zero = document["zero_parts"]
+    if len(zero) < 2:
+        parts += ["", "Parts of the energy", "", _energy_parts(rows, zero, width)]
+    if zero:
+        parts += ["", bullets(zero.values(), width=width)]
     if rotate:
         parts += ["", "Easy and hard axis", "", _turns(rows, width)]
         remarks = _turn_remarks(rows)
         parts += ["", bullets(remarks, width=width)] if remarks else []
     if any(row["fields"] for row in rows):
         parts += ["", "Field at the probes", "", _fields(rows, width)]
-    notes = [f"{row['ordering']}: {note}" for row in rows for note in row["notes"]]
+    placed = [
+        f"{row['ordering']}: has a cell of its own, {placed_words(row['own_cell_placed'])}"
+        for row in rows
+        if row["own_cell_placed"]
+    ]
+    notes = [
+        f"{row['ordering']}: {note}"
+        for row in rows
+        for note in row["notes"]
+        if note not in (row["own_cell_placed"] or "")
+    ]
     common = [note for row in rows for note in row["notes"] if all(note in other["notes"] for other in rows)]
     own = [line for line in notes if line.split(": ", 1)[1] not in common]
-    parts += ["", bullets([*common, *own, *document["notes"]], width=width)]
+    parts += ["", bullets([*common, *placed, *own, *document["notes"]], width=width)]
     return "\n".join(parts)
 
 
@@ -91,8 +105,8 @@ def _energies(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
     return table(columns, cells, width=width, keys=2)
 
 
-def _energy_parts(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
-    names = ("dipolar", "shape", "applied")
+def _energy_parts(rows: Sequence[Mapping[str, Any]], zero: Mapping[str, str], width: int | None) -> str:
+    names = [name for name in ("dipolar", "shape", "applied") if name not in zero]
     columns = [Column("rank"), Column("ordering", words=True), *(Column(name, "µeV/ion") for name in names)]
     shown = [_column(rows, f"{name}_ueV_per_ion") for name in names]
     cells = [[str(row["rank"]), row["ordering"], *(part[i] for part in shown)] for i, row in enumerate(rows)]
@@ -178,13 +192,18 @@ def _fields(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
         Column("frequency", "MHz"),
         Column("points"),
     ]
-    listed = [
-        [(name, *level) for name, points in row["fields"].items() for level in field_levels(points)] for row in rows
-    ]
     points = [point for row in rows for several in row["fields"].values() for point in several]
     error = max((point["error_bound_T"] for point in points), default=0.0)
     per_tesla = [p["frequency_MHz"] / p["field_size_T"] for p in points if p["field_size_T"] > 0]
-    digits = decimals_for([level[1] for levels in listed for level in levels], error=error)
+    digits = decimals_for([point["field_size_T"] for point in points], error=error)
+    listed = [
+        [
+            (name, *level)
+            for name, several in row["fields"].items()
+            for level in field_levels(several, zero_T=0.5 * 10.0**-digits)
+        ]
+        for row in rows
+    ]
     frequencies = [level[2] for levels in listed for level in levels]
     frequency_digits = decimals_for(frequencies, error=error * max(per_tesla, default=0.0))
     cells = []

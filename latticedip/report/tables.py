@@ -14,6 +14,8 @@ from dataclasses import dataclass
 GAP = 2
 #: A column of words is never made narrower than this.
 NARROWEST = 12
+#: A direction is written in whole numbers up to this where its components are in such a ratio, within RATIO.
+LARGEST_INDEX, RATIO = 9, 1e-6
 #: Significant digits of a physical quantity on screen; files carry all of them.
 SIGNIFICANT = 6
 
@@ -256,10 +258,19 @@ def vector(values: Iterable[float], significant: int = 4) -> str:
 
 
 def direction(components: Iterable[float] | None) -> str:
-    """Return components of a direction in square brackets, with at most four decimals; - where there is none."""
+    """Return components of a direction in square brackets; - where there is none.
+
+    Whole numbers up to 9 where the components are in such a ratio, else the components with four decimals.
+    """
     if components is None:
         return "-"
-    return "[" + " ".join(short(round(x, 4)) for x in _without_dust(components)) + "]"
+    listed = _without_dust(components)
+    largest = max((abs(x) for x in listed), default=0.0)
+    for index in range(1, LARGEST_INDEX + 1) if largest > 0 else ():
+        scaled = [x * index / largest for x in listed]
+        if all(abs(x - round(x)) <= RATIO * index for x in scaled):
+            return "[" + " ".join(str(round(x)) for x in scaled) + "]"
+    return "[" + " ".join(fixed(x, 4) for x in listed) + "]"
 
 
 def _without_dust(values: Iterable[float]) -> list[float]:

@@ -57,12 +57,15 @@ def content_hash(path: Path) -> str:
 
 
 def ordering_head(ordering: Ordering) -> dict[str, Any]:
-    """What every document says of an ordering: its name, k, ions per cell and net moment."""
+    """What every document says of an ordering: its name, k, ions per cell, net moment and, if it has a cell of its
+    own, how that was placed in the crystal of the study.
+    """
     return {
         "ordering": ordering.name,
         "k": ordering.k.tolist(),
         "ions_per_cell": ordering.n_ions,
         "net_moment_muB_per_cell": ordering.net_moment.tolist(),
+        "own_cell_placed": None if ordering.reference is None else ordering.reference.how,
     }
 
 

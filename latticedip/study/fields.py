@@ -31,21 +31,38 @@ PARTS = {
 
 
 def field_document(
-    study: Study, fields: Sequence[LocalField], *, axes: Axes = "cartesian", unit: Unit = "T", tol: float = 1e-10
+    study: Study,
+    fields: Sequence[LocalField],
+    *,
+    axes: Axes = "cartesian",
+    unit: Unit = "T",
+    orderings: Sequence[str] = (),
+    probes: Sequence[str] = (),
+    tol: float = 1e-10,
 ) -> dict[str, Any]:
-    """The document of `field`: per ordering one row per probe and point, vectors in the axes and unit asked for."""
-    orderings = []
+    """The document of `field`: per ordering one row per probe and point, vectors in the axes and unit asked for.
+
+    orderings, probes: the names that were asked for; none: all.
+    """
+    entries = []
     for ordering, result in zip(study.orderings, fields, strict=True):
         plain = result.to_dict()
         rows = [field_row(row, study.crystal, axes, unit) for row in plain["rows"]]
-        notes = [*plain["notes"], *home_cell_notes([ordering])]
-        orderings.append({**ordering_head(ordering), **plain, "rows": rows, "notes": notes})
+        placed = "" if ordering.reference is None else ordering.reference.how
+        notes = [note for note in [*plain["notes"], *home_cell_notes([ordering])] if note not in placed]
+        entries.append({**ordering_head(ordering), **plain, "rows": rows, "notes": notes})
     return document(
         "field",
         files=study.files,
-        options={"axes": axes, "unit": unit, "tol": tol},
+        options={
+            "axes": axes,
+            "unit": unit,
+            "orderings": list(orderings) or None,
+            "probes": list(probes) or None,
+            "tol": tol,
+        },
         boundary=common_boundary([result.boundary for result in fields]),
-        results={"title": study.title, "axes": axes, "sample": study.sample.to_dict(), "orderings": orderings},
+        results={"title": study.title, "axes": axes, "sample": study.sample.to_dict(), "orderings": entries},
     )
 
 

@@ -11,6 +11,7 @@ from latticedip.crystal.model import Crystal
 from latticedip.ordering.patterns import unit_direction
 from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
+from latticedip.study.directions import named_directions
 from latticedip.study.keys import Key
 
 PROBE_KEYS = ("name", "particle", "position", "site", "contact")
@@ -164,13 +165,10 @@ def _axes(key: Key, table: dict[str, Key], shape: str, crystal: Crystal) -> list
 def _direction(item: Key, crystal: Crystal) -> FloatArray:
     if isinstance(item.value, list):
         return unit_direction(crystal, item.direction(_AXIS))
-    reciprocal = np.linalg.inv(crystal.cell).T
-    named = {axis: crystal.cell[i] for i, axis in enumerate("abc")}
-    named |= {f"{axis}*": reciprocal[i] for i, axis in enumerate("abc")}
+    named = named_directions(crystal)
     if not isinstance(item.value, str) or item.value not in named:
         raise item.expected(_AXIS)
-    vector = named[item.value]
-    return np.asarray(vector / np.linalg.norm(vector))
+    return named[item.value]
 
 
 def _completed(axes: list[FloatArray]) -> FloatArray:

@@ -19,20 +19,38 @@ if TYPE_CHECKING:
 UEV_PER_EV = 1e6
 #: Fields at equivalent points that differ by less than this (relative to the largest) are listed once.
 SAME_FIELD = 1e-6
+#: Parts of an energy that may be zero for every ordering, and why.
+ZERO_PARTS = {
+    "shape": "no energy of the shape: no demagnetizing field for any of these orderings",
+    "applied": "no energy in an applied field: no field is applied, or no ordering has a net moment",
+}
 
 
-def rank_document(study: Study, ranking: Ranking, *, rotate: bool = False, tol: float = 1e-10) -> dict[str, Any]:
-    """The document of `rank`: one row per ordering, lowest first, with the field at every probe."""
+def rank_document(
+    study: Study,
+    ranking: Ranking,
+    *,
+    rotate: bool = False,
+    orderings: Sequence[str] = (),
+    tol: float = 1e-10,
+) -> dict[str, Any]:
+    """The document of `rank`: one row per ordering, lowest first, with the field at every probe.
+
+    orderings: the names that were asked for; none: all.
+    """
     rows = [_rank_row(number, row, study.crystal) for number, row in enumerate(ranking.rows, start=1)]
     return document(
         "rank",
         files=study.files,
-        options={"rotate": rotate, "tol": tol},
+        options={"rotate": rotate, "orderings": list(orderings) or None, "tol": tol},
         boundary=ranking.boundary,
         results={
             "title": study.title,
             "sample": study.sample.to_dict(),
             "rows": rows,
+            "zero_parts": {
+                part: reason for part, reason in ZERO_PARTS.items() if not any(r[f"{part}_ueV_per_ion"] for r in rows)
+            },
             "notes": [*(home_cell_notes([r.ordering for r in ranking.rows]) if study.probes else []), *ranking.notes],
         },
     )
@@ -75,6 +93,7 @@ def _brief_field(result: LocalField) -> list[dict[str, Any]]:
     return [
         {
             "position": result.points[i].tolist(),
+            "position_in_reference_cell": result.reference_points[i].tolist(),
             "field_T": result.total[i].tolist(),
             "field_size_T": float(result.size_T[i]),
             "frequency_MHz": float(result.frequency_MHz[i]),
@@ -84,16 +103,21 @@ def _brief_field(result: LocalField) -> list[dict[str, Any]]:
     ]
 
 
-def field_levels(points: Sequence[dict[str, Any]]) -> list[tuple[float, float, int]]:
+def field_levels(points: Sequence[dict[str, Any]], zero_T: float = 0.0) -> list[tuple[float, float, int]]:
     """The distinct field sizes (T) of a probe's points, largest first, each with frequency (MHz) and number of points.
 
-    Sizes within 1e-6 of the largest are one level: symmetry makes them equal, rounding does not keep them so.
+    Sizes within 1e-6 of the largest or within their error bounds are one level: symmetry makes them equal, rounding
+    does not keep them so. zero_T: sizes below this are one level too.
     """
     ordered = sorted(points, key=lambda point: -point["field_size_T"])
     slack = SAME_FIELD * ordered[0]["field_size_T"] if ordered else 0.0
     levels: list[list[dict[str, Any]]] = []
     for point in ordered:
-        if levels and levels[-1][0]["field_size_T"] - point["field_size_T"] <= slack:
+        first = levels[-1][0] if levels else point
+        # A bound holds for each of three components.
+        bound = 3**0.5 * (first["error_bound_T"] + point["error_bound_T"])
+        alike = first["field_size_T"] - point["field_size_T"] <= max(slack, bound) or first["field_size_T"] < zero_T
+        if levels and alike:
             levels[-1].append(point)
         else:
             levels.append([point])
@@ -101,9 +125,8 @@ def field_levels(points: Sequence[dict[str, Any]]) -> list[tuple[float, float, i
 
 
 def axis_in_crystal(direction: FloatArray, crystal: Crystal) -> FloatArray:
-    """A direction as components along unit vectors parallel to a, b, c (as `along` in a study), the largest 1."""
-    components = crystal.to_crystal_axes(direction)
-    return np.asarray(components / np.abs(components).max())
+    """A unit vector as components along unit vectors parallel to a, b, c (as `along` in a study)."""
+    return np.asarray(crystal.to_crystal_axes(direction / np.linalg.norm(direction)))
 
 
 def rank_table(doc: dict[str, Any]) -> list[dict[str, Any]]:

@@ -1,6 +1,6 @@
 """The study file: a crystal, orderings, probes and a sample, read from TOML into the objects the calls take.
 
-Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample]. A key that is not known, a value of another type
+Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample], [susceptibility], [abundances]. A key that is not known, a value of another type
 and a value that is missing are refused with the path of the key, the value, what was expected and the nearest
 known word. Items are counted from 1. Paths are relative to the study file.
 """
@@ -16,14 +16,16 @@ from typing import Any
 
 from latticedip.crystal.model import Crystal
 from latticedip.errors import StudyError
+from latticedip.observables.susceptibility import Susceptibility
 from latticedip.ordering.model import Ordering
 from latticedip.probe import Probe
 from latticedip.sample import Sample
 from latticedip.study.keys import Key
+from latticedip.study.magnetism import read_abundances, read_susceptibility
 from latticedip.study.orderings import existing_file, read_block, read_moments, read_orderings
 from latticedip.study.probes import read_probes, read_sample
 
-STUDY_KEYS = ("title", "crystal", "moments", "ordering", "probe", "sample")
+STUDY_KEYS = ("title", "crystal", "moments", "ordering", "probe", "sample", "susceptibility", "abundances")
 CRYSTAL_KEYS = ("file", "block")
 #: A study file larger than this (bytes) is some other file.
 LARGEST_FILE = 10_000_000
@@ -40,6 +42,8 @@ class Study:
     probes: all [[probe]]s, positions in the cell of ``crystal``.
     sample: the Sample; N = 0 and no applied field where [sample] is left out.
     moments: sizes in µB as [moments] gives them, by site label or element.
+    susceptibility: of the magnetic ions in the paramagnetic state, by site label or element.
+    abundances: fractions of an element's atoms that are an isotope, by its name, where not the natural ones.
     files: every file that was read, by the part it plays: "study", "crystal", "ordering 1".
     notes: sentences a report must repeat.
     """
@@ -53,6 +57,8 @@ class Study:
     moments: Mapping[str, float] = field(default_factory=dict)
     files: Mapping[str, Path] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+    susceptibility: Mapping[str, Susceptibility] = field(default_factory=dict)
+    abundances: Mapping[str, float] = field(default_factory=dict)
 
 
 def read_study(path: str | os.PathLike[str]) -> Study:
@@ -83,7 +89,19 @@ def read_study(path: str | os.PathLike[str]) -> Study:
     orderings = read_orderings(table.get("ordering"), crystal, sizes, where.parent, files)
     probes = read_probes(table.get("probe"), crystal)
     sample = read_sample(table.get("sample"), crystal)
-    return Study(title, where, crystal, orderings, probes, sample, sizes.by_name, files, crystal.notes)
+    return Study(
+        title,
+        where,
+        crystal,
+        orderings,
+        probes,
+        sample,
+        sizes.by_name,
+        files,
+        crystal.notes,
+        susceptibility=read_susceptibility(table.get("susceptibility"), crystal),
+        abundances=read_abundances(table.get("abundances"), crystal),
+    )
 
 
 def _load(path: Path, shown: str) -> dict[str, Any]:

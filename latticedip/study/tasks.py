@@ -2,17 +2,22 @@
 
 from __future__ import annotations
 
+import dataclasses
 import logging
 import os
 from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, TypeVar
 
-from latticedip.errors import InputError, StudyError
+from latticedip.errors import InputError, StudyError, near_match
 
 if TYPE_CHECKING:
     from latticedip.study.fields import Axes, Unit
+    from latticedip.ordering.model import Ordering
+    from latticedip.probe import Probe
     from latticedip.study.schema import Study
+
+T = TypeVar("T", "Ordering", "Probe")
 
 _STRUCTURE_SUFFIXES = {".cif", ".mcif", ".magcif", ".xyz", ".extxyz", ".vasp", ".poscar", ".res", ".pdb"}
 
@@ -99,38 +104,51 @@ def show(path: Path, *, block: str | None = None) -> dict[str, Any]:
     return describe_structure(path, read_file(path, block=block))
 
 
-def field(study: Study, *, axes: Axes = "cartesian", unit: Unit = "T", tol: float = 1e-10) -> dict[str, Any]:
+def field(
+    study: Study,
+    *,
+    axes: Axes = "cartesian",
+    unit: Unit = "T",
+    orderings: Sequence[str] = (),
+    probes: Sequence[str] = (),
+    tol: float = 1e-10,
+) -> dict[str, Any]:
     """The document of `field`: the local field at every probe of a study under every ordering.
 
-    Raises StudyError for a study without orderings or without probes, and what `local_field` raises.
+    orderings, probes: names of those that count; none: all.
+
+    Raises StudyError for a study without orderings or without probes, InputError for an unknown name, and what
+    `local_field` raises.
     """
     from latticedip.physics.field import local_field
     from latticedip.study.fields import field_document
 
     _need_orderings(study)
-    if not study.probes:
-        raise StudyError(
-            f"{str(study.path)!r} has no [[probe]], so there is no place to ask for a field. "
-            "Add one with a position or a site, for example: [[probe]] position = [0.5, 0.5, 0.25]"
-        )
+    _need_probes(study, "a field")
+    study = choose(study, orderings=orderings, probes=probes)
     fields = []
     for ordering in study.orderings:
         _log.info("field under %s", ordering.name)
         fields.append(local_field(ordering, study.probes, sample=study.sample, tol=tol))
-    return field_document(study, fields, axes=axes, unit=unit, tol=tol)
+    return field_document(study, fields, axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol)
 
 
-def rank(study: Study, *, rotate: bool = False, tol: float = 1e-10) -> dict[str, Any]:
+def rank(
+    study: Study, *, rotate: bool = False, orderings: Sequence[str] = (), tol: float = 1e-10
+) -> dict[str, Any]:
     """The document of `rank`: the orderings of a study by their energy per magnetic ion, lowest first.
 
-    Raises StudyError for a study without orderings, and what `latticedip.rank` raises.
+    orderings: names of those that count; none: all.
+
+    Raises StudyError for a study without orderings, InputError for an unknown name, and what `latticedip.rank` raises.
     """
     from latticedip.analysis.rank import rank as rank_orderings
     from latticedip.study.rankings import rank_document
 
     _need_orderings(study)
+    study = choose(study, orderings=orderings)
     ranking = rank_orderings(study.orderings, sample=study.sample, rotate=rotate, probes=study.probes, tol=tol)
-    return rank_document(study, ranking, rotate=rotate, tol=tol)
+    return rank_document(study, ranking, rotate=rotate, orderings=orderings, tol=tol)
 
 
 def demag(kind: str, lengths: Sequence[float] = ()) -> dict[str, Any]:
@@ -141,6 +159,35 @@ def demag(kind: str, lengths: Sequence[float] = ()) -> dict[str, Any]:
     from latticedip.study.bodies import body_of, demag_document
 
     return demag_document(body_of(kind, lengths))
+
+
+def choose(study: Study, *, orderings: Sequence[str] = (), probes: Sequence[str] = ()) -> Study:
+    """A study with the orderings and probes of these names only, in the order of the file; no names: all of them.
+
+    Raises InputError for a name that the study does not have, with the nearest that it has.
+    """
+    kept_orderings = _named("ordering", study.orderings, orderings)
+    kept_probes = _named("probe", study.probes, probes)
+    return dataclasses.replace(study, orderings=kept_orderings, probes=kept_probes)
+
+
+def _named(kind: str, items: tuple[T, ...], names: Sequence[str]) -> tuple[T, ...]:
+    known = [item.name for item in items]
+    for name in names:
+        if name not in known:
+            listed = ", ".join(repr(other) for other in known) or "none"
+            raise InputError(
+                f"the study has no {kind} named {name!r}. Those it has: {listed}.{near_match(name, known)}"
+            )
+    return tuple(item for item in items if not names or item.name in names)
+
+
+def _need_probes(study: Study, what: str) -> None:
+    if not study.probes:
+        raise StudyError(
+            f"{str(study.path)!r} has no [[probe]], so there is no place to ask for {what}. "
+            "Add one with a position or a site, for example: [[probe]] position = [0.5, 0.5, 0.25]"
+        )
 
 
 def _need_orderings(study: Study) -> None:

@@ -27,8 +27,9 @@ from latticedip.kernels.radial import U_MAX
 
 def surface_terms(lengths: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """1/(b₁b₂b₃), Σ 1/(b_i b_j) and Σ 1/b_i of layer distances (last axis of length 3)."""
-    b1, b2, b3 = np.moveaxis(np.asarray(lengths, dtype=float), -1, 0)
-    return 1 / (b1 * b2 * b3), 1 / (b1 * b2) + 1 / (b1 * b3) + 1 / (b2 * b3), 1 / b1 + 1 / b2 + 1 / b3
+    inverse = 1 / np.asarray(lengths, dtype=float)
+    c1, c2, c3 = inverse[..., 0], inverse[..., 1], inverse[..., 2]
+    return c1 * c2 * c3, c1 * c2 + c1 * c3 + c2 * c3, c1 + c2 + c3
 
 
 def count_bounds(lengths: FloatArray, radius: FloatArray | float) -> tuple[FloatArray, FloatArray]:
@@ -46,8 +47,10 @@ def gaussian_tail(lengths: FloatArray, cutoff: FloatArray, factor: FloatArray) -
     lengths: layer distances in the unit in which the Gaussian has exponent −|x|²; shapes broadcast.
     """
     volume, area, line = surface_terms(lengths)
-    low, high = count_bounds(lengths, cutoff)
-    boundary = high - low
+    inside = 4 * np.pi / 3 * cutoff**3 * volume
+    spread = np.pi * cutoff**2 * area + 2 * cutoff * line + 1
+    # Largest minus least number of points inside, as in `count_bounds`.
+    boundary = spread + np.minimum(spread, inside)
     # ∫ 4πu² e^(−u²), ∫ 2πu e^(−u²), ∫ 2 e^(−u²) from the cut-off on, each divided by e^(−cutoff²).
     beyond = 4 * np.pi * volume * (cutoff / 2 + 1 / (4 * cutoff)) + np.pi * area + line / cutoff
     return factor * np.exp(-(cutoff**2)) * (boundary + beyond)
@@ -79,11 +82,14 @@ def reciprocal_tail(alpha: FloatArray, cutoff: FloatArray, lengths: FloatArray) 
 def _solve(tail: object, alpha: FloatArray, scale: FloatArray, lengths: FloatArray, wanted: float) -> FloatArray:
     """Smallest reduced cut-off u (times ``scale`` gives the cut-off) with tail ≤ wanted, for every α at once."""
     u = np.full(alpha.shape, 3.0)
-    for _ in range(12):
+    for _ in range(30):
         bound = tail(alpha, u * scale, lengths)  # type: ignore[operator]
         # The bound is exp(−u²) times a slowly varying factor: solve for u with the factor held.
-        u = np.sqrt(np.maximum(u**2 + np.log(bound / wanted), 1.0))
-    # The iteration ends within a few parts in 10⁶ of the root; step out until the bound holds.
+        last, u = u, np.sqrt(np.maximum(u**2 + np.log(bound / wanted), 1.0))
+        if np.abs(u - last).max() < 1e-4:
+            break
+    # What is left of the way is some parts in 10⁵; step out until the bound holds.
+    u = u * (1 + 2e-5)
     for _ in range(60):
         short = tail(alpha, u * scale, lengths) > wanted  # type: ignore[operator]
         if not np.any(short):
@@ -118,7 +124,7 @@ def choose_splitting(
 
     Raises AccuracyError when no splitting keeps the bound.
     """
-    alpha = np.sqrt(np.pi) / volume ** (1 / 3) * np.geomspace(0.25, 4.0, 25)
+    alpha = np.sqrt(np.pi) / volume ** (1 / 3) * np.geomspace(0.25, 4.0, 21)
     r_c = real_cutoffs(alpha, lengths, wanted)
     q_c = reciprocal_cutoffs(alpha, lengths, wanted)
     # Expected numbers here, not bounds: only speed depends on them. The images that must be looked at lie in a

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from fractions import Fraction
+from functools import cached_property
 
 import numpy as np
 
@@ -26,22 +27,22 @@ class ReducedLattice:
     cell: FloatArray
     steps: FloatArray
 
-    @property
+    @cached_property
     def inverse(self) -> FloatArray:
         """Shape (3, 3) float in 1/Å. Cartesian to fractional: x @ inverse."""
         return stable_inverse(self.cell)
 
-    @property
+    @cached_property
     def waves(self) -> FloatArray:
         """Shape (3, 3) float in 1/Å. Rows are the reciprocal vectors, 2π included."""
         return np.ascontiguousarray(2 * np.pi * stable_inverse(self.cell).T)
 
-    @property
+    @cached_property
     def volume(self) -> float:
         """Cell volume in Å³."""
         return float(abs(np.dot(self.cell[0], np.cross(self.cell[1], self.cell[2]))))
 
-    @property
+    @cached_property
     def layer_distances(self) -> FloatArray:
         """Shape (3,) float in Å. Gram–Schmidt lengths of the basis, shortest vector first; their product is V."""
         return np.abs(np.diag(np.linalg.qr(self.cell.T, mode="r")))
@@ -49,7 +50,7 @@ class ReducedLattice:
 
 def stable_inverse(cell: FloatArray) -> FloatArray:
     """Inverse of a cell by cross products: each column keeps its relative accuracy in cells of any aspect."""
-    normal = np.stack([np.cross(cell[1], cell[2]), np.cross(cell[2], cell[0]), np.cross(cell[0], cell[1])])
+    normal = np.cross(cell[[1, 2, 0]], cell[[2, 0, 1]])
     return np.ascontiguousarray((normal / np.einsum("ij,ij->i", normal, cell)[:, None]).T)
 
 

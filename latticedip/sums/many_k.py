@@ -117,7 +117,7 @@ def many_k(cell: FloatArray, places_cart: FloatArray, tol: float = 1e-10, alpha:
     """Prepare the tensors between sites at many k.
 
     cell: Shape (3, 3), rows in Å. places_cart: Shape (n, 3) Å, at least one; sites that share a place do not feel each
-    other. tol: bound of the error of every tensor, as in `lattice_sum`. alpha: splitting in 1/Å, chosen by cost if None.
+    other. tol: bound of the error of every tensor, as in `lattice_sum`. alpha: splitting in 1/Å, by cost if None.
 
     Raises InputError for a singular cell or a tol out of range, AccuracyError where the bound cannot be kept,
     LimitError where the tables would not fit.

@@ -1,0 +1,140 @@
+"""The [susceptibility] and [abundances] tables of a study, and which ions of its crystal are magnetic."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from latticedip.crystal.model import Crystal
+from latticedip.errors import StudyError
+from latticedip.observables.isotopes import isotopes_by_element
+from latticedip.observables.susceptibility import UNITS, Susceptibility
+from latticedip.study.keys import Key
+
+if TYPE_CHECKING:
+    from latticedip.study.schema import Study
+
+SUSCEPTIBILITY_KEYS = ("chi", "unit", "temperatures_K", "local")
+_EXAMPLE = '{ chi = 0.012, unit = "cm3/mol" }'
+_CHI = "a number, a tensor (three lists of three numbers, Cartesian), or a list of them over temperatures_K"
+_TEMPERATURES = "a list of temperatures in K, each larger than 0"
+
+
+def read_susceptibility(key: Key | None, crystal: Crystal) -> dict[str, Susceptibility]:
+    """The [susceptibility] table: one entry per site label or element, in the order of the file.
+
+    Each holds chi with its unit and, where chi is a list over temperatures, temperatures_K. No two of them may mean
+    one atom.
+    """
+    found: dict[str, Susceptibility] = {}
+    taken: dict[int, str] = {}
+    for name, child in ({} if key is None else key.table(header="one table, headed [susceptibility]")).items():
+        with child.located():
+            sites = crystal.find(name)
+        for site in sites:
+            if site in taken:
+                raise child.refuse(
+                    f"means atom {crystal.labels[site]}, which {taken[site]!r} means already. Name each atom once."
+                )
+            taken[site] = name
+        found[name] = _susceptibility(child)
+        with child.located():
+            # Tensors are matched with the atoms and their symmetry here, so that a misfit is told with its key.
+            table = found[name].temperatures_K
+            found[name].of_atoms(crystal, name, None if table is None else float(table[0]))
+    return found
+
+
+def _susceptibility(item: Key) -> Susceptibility:
+    table = item.table(SUSCEPTIBILITY_KEYS, header=f"a table, such as {_EXAMPLE}")
+    if "chi" not in table:
+        raise item.missing("chi", _CHI)
+    if "unit" not in table:
+        raise item.missing("unit", f"{', '.join(repr(unit) for unit in UNITS)} (per mole of ions, or per ion)")
+    arguments: dict[str, Any] = {"unit": table["unit"].one_of(tuple(UNITS))}
+    if "local" in table:
+        table["local"].true()
+        arguments["local"] = True
+    if "temperatures_K" in table:
+        what = "a temperature in K, larger than 0"
+        temperatures = [entry.number(what, above=0.0) for entry in table["temperatures_K"].items(_TEMPERATURES)]
+        arguments["temperatures_K"] = temperatures
+        chi: Any = [_number_or_tensor(entry) for entry in table["chi"].items("a list, one entry per temperature")]
+        if len(chi) != len(temperatures):
+            raise table["chi"].refuse(f"has {len(chi)} entries, expected {len(temperatures)}, one per temperature.")
+        if len({np.ndim(value) for value in chi}) > 1:
+            raise table["chi"].refuse("mixes numbers and tensors, expected one kind at all temperatures.")
+    else:
+        if isinstance(table["chi"].value, list) and not any(isinstance(v, list) for v in table["chi"].value):
+            raise item.missing("temperatures_K", f"{_TEMPERATURES}, since chi is a list of numbers")
+        chi = _number_or_tensor(table["chi"])
+    with item.located():
+        return Susceptibility(chi, **arguments)
+
+
+def _number_or_tensor(key: Key) -> Any:
+    what = "a number or three lists of three numbers (Cartesian)"
+    return key.matrix(what) if isinstance(key.value, list) else key.number(what)
+
+
+def read_abundances(key: Key | None, crystal: Crystal) -> dict[str, float]:
+    """The [abundances] table: fractions of the atoms of an element that are an isotope, by the name of the isotope."""
+    found: dict[str, float] = {}
+    if key is None:
+        return found
+    for name, child in key.table(header='one table, headed [abundances], such as "7Li" = 0.05').items():
+        found[name] = child.number("a fraction from 0 to 1", low=0.0)
+        with child.located():
+            isotopes_by_element(crystal, None, {name: found[name]})
+    with key.located():
+        isotopes_by_element(crystal, None, found)
+    return found
+
+
+def magnetic_groups(study: Study) -> tuple[dict[str, list[int]], str]:
+    """Sites of the crystal that carry a moment, by the label or element that names them, and which table names them.
+
+    [susceptibility] goes first, then [moments] (a label goes before its element), then what the orderings hold.
+
+    Raises StudyError where none of them names any.
+    """
+    names, source = _magnetic_names(study)
+    groups: dict[str, list[int]] = {name: [] for name in names}
+    taken: set[int] = set()
+    for by_label in (True, False):
+        for name in names:
+            if (name in study.crystal.labels) is by_label:
+                groups[name] = [site for site in study.crystal.find(name) if site not in taken]
+                taken.update(groups[name])
+    return {name: sites for name, sites in groups.items() if sites}, source
+
+
+def _magnetic_names(study: Study) -> tuple[list[str], str]:
+    if study.susceptibility:
+        return list(study.susceptibility), "[susceptibility]"
+    stated = [name for name, size in study.moments.items() if size > 0]
+    if stated:
+        return stated, "[moments]"
+    names: dict[str, None] = {}
+    for ordering in study.orderings:
+        own = ordering.crystal
+        # Labels of a cell of its own need not be those of [crystal]; elements are.
+        words = own.labels if ordering.reference is None else own.symbols
+        names.update(dict.fromkeys(words[int(i)] for i in np.flatnonzero(ordering.is_magnetic)))
+    if not names:
+        raise StudyError(
+            f"{str(study.path)!r} does not say which ions are magnetic. Give them a size in [moments], such as "
+            f'[moments] Mn = 4.6, or a susceptibility, such as [susceptibility] Mn = {_EXAMPLE}'
+        )
+    return list(names), "the orderings"
+
+
+def common_temperatures(susceptibility: Mapping[str, Susceptibility]) -> list[float]:
+    """Temperatures in K of all tables, within the range that all of them cover; empty where none is a table."""
+    tables = [chi.temperatures_K for chi in susceptibility.values() if chi.temperatures_K is not None]
+    if not tables:
+        return []
+    low, high = max(float(table[0]) for table in tables), min(float(table[-1]) for table in tables)
+    return sorted({float(t) for table in tables for t in table if low <= t <= high})
