@@ -102,7 +102,16 @@ def write_csv(rows: Iterable[Mapping[str, Any]], path: str | os.PathLike[str]) -
 
 
 def write_text_atomically(path: str | os.PathLike[str], text: str) -> None:
-    """Write UTF-8 text under a temporary name beside the target, then rename: no reader sees half a file.
+    """Write UTF-8 text as `write_bytes_atomically` writes bytes; FileError also for text that is no valid Unicode."""
+    try:
+        data = text.encode("utf-8")
+    except UnicodeEncodeError:
+        raise FileError(f"cannot write {os.fspath(path)!r}: it holds a name that is not valid Unicode.") from None
+    write_bytes_atomically(path, data)
+
+
+def write_bytes_atomically(path: str | os.PathLike[str], data: bytes) -> None:
+    """Write bytes under a temporary name beside the target, then rename: no reader sees half a file.
 
     A link is followed; a device or pipe is written to directly; an existing file keeps its permissions.
 
@@ -111,7 +120,6 @@ def write_text_atomically(path: str | os.PathLike[str], text: str) -> None:
     shown = os.fspath(path)
     target = Path(os.path.realpath(shown))
     try:
-        data = text.encode("utf-8")
         mode = target.stat().st_mode if target.exists() else None
         if mode is not None and not stat.S_ISREG(mode) and not stat.S_ISDIR(mode):
             target.write_bytes(data)
@@ -133,5 +141,3 @@ def write_text_atomically(path: str | os.PathLike[str], text: str) -> None:
             raise
     except OSError as error:
         raise FileError(f"cannot write {shown!r}: {error.strerror or error}.") from None
-    except UnicodeEncodeError:
-        raise FileError(f"cannot write {shown!r}: it holds a name that is not valid Unicode.") from None

@@ -1,4 +1,4 @@
-"""Probe and Contact: where a field is asked for, and which contact coupling acts there."""
+"""Probe and Contact: where a field is asked for, how the probe moves, and which contact coupling acts there."""
 
 from __future__ import annotations
 
@@ -9,6 +9,8 @@ from typing import Any
 import numpy as np
 
 from latticedip.checks import FloatArray, as_float, as_floats, frozen
+from latticedip.crystal.displace import Displaced
+from latticedip.crystal.spread import as_spread
 from latticedip.errors import InputError
 
 #: Neighbours whose distances differ by less than this (Å) belong to one shell.
@@ -81,9 +83,15 @@ class Probe:
     particle: "muon" or an isotope such as "19F".
     name: what tables call it; defaults to the particle with the site or position.
     contact: Contacts whose fields add up.
-    spread: reserved for the motion of the probe; only None is taken.
+    spread: rms displacement along each Cartesian axis in Å (a number), or a (3, 3) Cartesian covariance in Å²: fields
+        are averages over this Gaussian cloud. An isotropic one changes nothing until it reaches an ion; there the
+        traceless (principal-value) part is meant, and the rest is contact. On a site a covariance is that of its first
+        atom, carried to the others by the operations of the crystal.
+    displaced: Displaced neighbours. Shells of contact terms are those of the undisturbed crystal.
+    position_su: Shape (3,) float, fractional. Standard uncertainties of the coordinates, taken as independent.
 
-    Raises InputError for both or neither of position and site, and for unknown particles (with a near match).
+    Raises InputError for both or neither of position and site, for unknown particles (with a near match), and for a
+    spread, neighbours or uncertainties that are not as described.
     """
 
     position: Any = None
@@ -91,7 +99,9 @@ class Probe:
     particle: str = "muon"
     name: str = ""
     contact: tuple[Contact, ...] = ()
-    spread: None = None
+    spread: Any = None
+    displaced: tuple[Displaced, ...] = ()
+    position_su: Any = None
 
     def __init__(
         self,
@@ -101,7 +111,9 @@ class Probe:
         particle: str = "muon",
         name: str = "",
         contact: Any = (),
-        spread: None = None,
+        spread: Any = None,
+        displaced: Any = (),
+        position_su: Any = None,
     ) -> None:
         from latticedip.particles import particle_named
 
@@ -115,8 +127,16 @@ class Probe:
         for term in terms:
             if not isinstance(term, Contact):
                 raise InputError(f"contact must hold Contact objects, got {term!r}.")
-        if spread is not None:
-            raise InputError("spread: averaging over the motion of the probe is not available; leave it out.")
+        moved = tuple(displaced) if isinstance(displaced, Iterable) else (displaced,)
+        for neighbour in moved:
+            if not isinstance(neighbour, Displaced):
+                raise InputError(f"displaced must hold Displaced objects, got {neighbour!r}.")
+        if position_su is not None:
+            if site is not None:
+                raise InputError("position_su goes with position; a probe on a site has the uncertainty of that site.")
+            position_su = frozen(as_floats("position_su", position_su, (3,)))
+            if np.any(position_su < 0):
+                raise InputError(f"position_su must hold numbers of at least 0, got {position_su.tolist()}.")
         known = particle_named(particle)
         where = site if site is not None else "(" + ", ".join(f"{x:.4g}" for x in position) + ")"
         object.__setattr__(self, "position", position)
@@ -124,7 +144,9 @@ class Probe:
         object.__setattr__(self, "particle", known.name)
         object.__setattr__(self, "name", name or f"{known.name} at {where}")
         object.__setattr__(self, "contact", terms)
-        object.__setattr__(self, "spread", None)
+        object.__setattr__(self, "spread", as_spread("spread", spread))
+        object.__setattr__(self, "displaced", moved)
+        object.__setattr__(self, "position_su", position_su)
 
     @property
     def MHz_per_T(self) -> float:

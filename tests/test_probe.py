@@ -70,8 +70,8 @@ REFUSED = {
         "contact must hold Contact objects, got {'shell': 1}.",
     ),
     "spread": (
-        lambda: ld.Probe((0, 0, 0), spread=0.1),
-        "spread: averaging over the motion of the probe is not available; leave it out.",
+        lambda: ld.Probe((0, 0, 0), spread=-0.1),
+        "spread (rms displacement along each axis in Å) must lie between 0.0 and 5.0, got -0.1.",
     ),
     "no coupling": (
         lambda: ld.Contact(shell=1),

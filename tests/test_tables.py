@@ -133,7 +133,9 @@ def test_numbers_on_screen() -> None:
     assert short(3.40000000001) == "3.4"
     assert [fraction(x) for x in (0.5, 1 / 3, -0.25, 1.0, 0.213, 0.0)] == ["1/2", "1/3", "-1/4", "1", "0.213", "0"]
     assert vector([-1e-19, 0.0, 5.0]) == "(0, 0, 5)"
-    assert direction([-1e-19, 0.25, 1.0]) == "[0 0.25 1]"
+    assert direction([-1e-19, 0.25, 1.0]) == "[0 1 4]"
+    assert direction([0.5**0.5, -(0.5**0.5), 1e-17]) == "[1 -1 0]"
+    assert direction([-0.7538, 1.0, 0.0]) == "[-0.7538 1.0000 0.0000]"
     assert direction(None) == "-"
 
 

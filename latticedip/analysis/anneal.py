@@ -8,7 +8,7 @@ number of threads.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,7 +16,7 @@ from scipy.optimize import minimize
 from scipy.spatial.transform import Rotation
 
 from latticedip.analysis.exhaustive import best_axis
-from latticedip.analysis.problem import Found, SearchProblem
+from latticedip.analysis.problem import Found, Hold, SearchProblem
 from latticedip.checks import FloatArray
 from latticedip.errors import InputError
 from latticedip.kernels.annealing import anneal_signs, anneal_vectors, descend_best_axis
@@ -48,7 +48,7 @@ class Schedule:
             return cls(64, 400)
         if n_units <= 2000:
             return cls(16, 400)
-        return cls(4 if vectors else 8, 200 if vectors else 300)
+        return cls(4, 60) if vectors else cls(8, 300)
 
 
 @dataclass(frozen=True, eq=False)
@@ -75,8 +75,8 @@ def anneal(problem: SearchProblem, kind: str, schedule: Schedule, seed: int, kee
     admitted = sorted((s for s in states if problem.admits(problem.spread(s[1]))), key=lambda state: state[0])
     if not admitted:
         raise InputError(
-            f"none of {schedule.restarts} annealing restarts ended without a net moment; the sizes or the supercell may "
-            "not allow it. Take another supercell, or more restarts."
+            f"none of {schedule.restarts} annealing restarts ended without a net moment; the sizes or the supercell "
+            "may not allow it. Take another supercell, or more restarts."
         )
     lowest = admitted[0][0]
     close = SAME_ENERGY * max(abs(lowest), 1e-300)
@@ -150,8 +150,8 @@ def _anneal_along(
     signs = np.zeros((len(seeds), n), dtype=np.int8)
     energies = np.zeros(len(seeds))
     over_rows(
-        anneal_signs, len(seeds), doubled(table / scale, problem.repeat)[0], problem.n_sites, *problem.repeat, linear, free, start,
-        weights, temperatures, penalties, held, seeds, signs, energies, at_least=1,
+        anneal_signs, len(seeds), doubled(table / scale, problem.repeat)[0], problem.n_sites, *problem.repeat, linear,
+        free, start, weights, temperatures, penalties, held, seeds, signs, energies, at_least=1,
     )  # fmt: skip
     return signs, energies * scale
 
@@ -216,14 +216,14 @@ def _vectors(problem: SearchProblem, planar: bool, schedule: Schedule, seeds: np
     vectors = np.zeros((schedule.restarts, n, 3))
     energies = np.zeros(schedule.restarts)
     over_rows(
-        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), problem.n_sites, *problem.repeat,
-        np.ascontiguousarray(problem.linear / scale), planes, problem.weights, temperatures, penalties, seeds, vectors,
-        energies, at_least=1,
+        anneal_vectors, schedule.restarts, doubled(problem.table / scale, problem.repeat), problem.n_sites,
+        *problem.repeat, np.ascontiguousarray(problem.linear / scale), planes, problem.weights, temperatures, penalties,
+        seeds, vectors, energies, at_least=1,
     )  # fmt: skip
     return [(*settle(problem, units, planes), None, ()) for units in vectors]
 
 
-def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArray] | FloatArray) -> tuple[float, FloatArray]:
+def settle(problem: SearchProblem, units: FloatArray, planes: FloatArray) -> tuple[float, FloatArray]:
     """The bottom of the valley of unit vectors (n_units, 3): energy in eV per supercell, and the vectors there.
 
     planes: Shape (n_units, 2, 3), or (0, 2, 3) where vectors are free. With ``net_zero`` the net moment is brought to
@@ -231,34 +231,31 @@ def settle(problem: SearchProblem, units: FloatArray, planes: Sequence[FloatArra
     """
     form = problem.form_of
     scale = max(abs(form(units)[0]), 1e-300)
-    plane = np.asarray(planes)
-    multiplier = np.zeros(3)
     held = problem.net_zero and problem.has_uniform_part
-    stiffness = 10.0 / max(float((problem.weights**2).sum()), 1e-300) if held else 0.0
+    hold = Hold(problem.weights, held)
+    most = 3000 if len(units) <= 1000 else 500
     current = units
-    for _ in range(40 if held else 1):
+    for _ in range(hold.rounds):
         base = current
 
         def value(x: FloatArray, base: FloatArray = base) -> tuple[float, FloatArray]:
-            vectors, back = _unit_vectors(x, plane, base)
+            vectors, back = _unit_vectors(x, planes, base)
             energy, slope = form(vectors)
-            net = problem.weights @ vectors
-            total = energy / scale + multiplier @ net + 0.5 * stiffness * net @ net
-            slope = slope / scale + problem.weights[:, None] * (multiplier + stiffness * net)
-            return float(total), back(slope)
+            extra, pull = hold.penalty(vectors)
+            return energy / scale + extra, back(slope / scale + pull)
 
-        x0 = np.zeros(len(base)) if len(plane) else np.array(base).ravel()
-        result = minimize(value, x0, jac=True, method="L-BFGS-B", options={"maxiter": 3000 if len(base) <= 1000 else 500, "gtol": 1e-10, "ftol": 1e-15})
-        current = _unit_vectors(result.x, plane, base)[0]
-        net = problem.weights @ current
-        if not held or np.linalg.norm(net) < 1e-9:
+        x0 = np.zeros(len(base)) if len(planes) else np.array(base).ravel()
+        options = {"maxiter": most, "gtol": 1e-10, "ftol": 1e-15}
+        result = minimize(value, x0, jac=True, method="L-BFGS-B", options=options)
+        current = _unit_vectors(result.x, planes, base)[0]
+        if hold.is_done(current):
             break
-        multiplier = multiplier + stiffness * net
-        stiffness *= 1.5
     return form(current)[0], current
 
 
-def _unit_vectors(x: FloatArray, planes: FloatArray, base: FloatArray):  # type: ignore[no-untyped-def]
+def _unit_vectors(
+    x: FloatArray, planes: FloatArray, base: FloatArray
+) -> tuple[FloatArray, Callable[[FloatArray], FloatArray]]:
     """Unit vectors (n, 3) from free coordinates, and what turns a slope in them into one in the coordinates.
 
     planes given: x (n,) turns ``base`` in its plane by angles; else x (3n,) is scaled to length one.
@@ -267,7 +264,7 @@ def _unit_vectors(x: FloatArray, planes: FloatArray, base: FloatArray):  # type:
         angles = np.arctan2(np.einsum("pa,pa->p", base, planes[:, 1]), np.einsum("pa,pa->p", base, planes[:, 0])) + x
         vectors = np.cos(angles)[:, None] * planes[:, 0] + np.sin(angles)[:, None] * planes[:, 1]
         across = -np.sin(angles)[:, None] * planes[:, 0] + np.cos(angles)[:, None] * planes[:, 1]
-        return vectors, lambda slope: np.einsum("pa,pa->p", slope, across)
+        return vectors, lambda slope: np.asarray(np.einsum("pa,pa->p", slope, across))
     raw = x.reshape(-1, 3)
     lengths = np.linalg.norm(raw, axis=1)[:, None]
     vectors = raw / lengths

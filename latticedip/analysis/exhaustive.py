@@ -91,7 +91,7 @@ def along_form(problem: SearchProblem) -> tuple[FloatArray, FloatArray]:
 
 
 def _net_weights(problem: SearchProblem) -> FloatArray:
-    """Shape (n_c, n_units) float. What must vanish for a pattern without net moment; (0, n_units) where nothing need."""
+    """Shape (n_c, n_units) float. What must vanish where no net moment is wanted; n_c = 0 where nothing must."""
     if not problem.net_zero or not problem.has_uniform_part:
         return np.zeros((0, problem.n_units))
     axes = problem.unit_axes
@@ -210,7 +210,8 @@ def best_axis(problem: SearchProblem, signs: np.ndarray) -> tuple[FloatArray, tu
 
 def _neat_direction(problem: SearchProblem, space: FloatArray) -> FloatArray:
     """A unit vector in the span of the columns: a short lattice direction where one lies there."""
-    steps = sorted(itertools.product((0, 1, -1, 2, -2), repeat=3), key=lambda v: (sum(x * x for x in v), *(-x for x in v)))
+    steps = list(itertools.product((0, 1, -1, 2, -2), repeat=3))
+    steps.sort(key=lambda v: (sum(x * x for x in v), *(-x for x in v)))
     directions = np.array(steps[1:]) @ problem.supercell.crystal.cell
     directions /= np.linalg.norm(directions, axis=1)[:, None]
     # The c axis first, as a free choice of one direction usually goes.

@@ -95,9 +95,10 @@ def lowest_mode(
 ) -> LowestMode:
     """The dipolar mode of lowest energy over all k: no ordering with moments of these sizes lies below it.
 
-    sizes: label or element to moment size in µB. sample: changes k = 0 itself alone, where it adds the energy of its
-    demagnetizing field; transverse waves with k → 0 keep the N = 0 value, so that the energy may be approached only.
-    An applied field plays no part. Where several k are equally low, one with equal moments comes first.
+    crystal: periodic in three directions. sizes: label or element to moment size in µB, above zero; sites not named
+    carry none. sample: changes k = 0 itself alone, where it adds the energy of its demagnetizing field; transverse
+    waves with k → 0 keep the N = 0 value, so that the energy may be approached only. An applied field plays no part.
+    tol: as `dipole_tensor`, for the tensors. Where several k are equally low, one with equal moments comes first.
 
     The minimum over k is searched from a mesh, not proved. Raises InputError and LimitError as `eigenvalues` does.
     """

@@ -1,8 +1,8 @@
 """The best lower bound that site weights give, where the magnetic sites are not all equivalent.
 
 For numbers u_i that add up to zero, an ordering with |s_i| = 1 has the energy (1/S) s†(H − u)s whatever u, so the
-lowest eigenvalue of H(k) − u over all k is a lower bound for every u; it is a concave function of u, and the highest
-one is sought (Lyons and Kaplan, Phys. Rev. 120, 1580 (1960): weights of the sites). At its maximum the level holds sites in
+lowest eigenvalue of H(k) − u over all k is a lower bound for every u. It is a concave function of u, and its maximum
+is sought (Lyons and Kaplan, Phys. Rev. 120, 1580 (1960): weights of the sites); there the level holds all sites in
 equal amounts. Sites that symmetry makes equivalent share one u.
 """
 
@@ -14,16 +14,17 @@ import numpy as np
 from scipy.optimize import minimize
 
 from latticedip.analysis.modes_bands import MagneticSites
-from latticedip.analysis.modes_search import MESH_LEAST, magnetic_lattice
+from latticedip.analysis.modes_search import magnetic_lattice
 from latticedip.checks import FloatArray
 from latticedip.crystal.kpoints import symmetric_mesh, wave_rotations
 from latticedip.crystal.symmetry import find_operations
 
+#: Points of the whole mesh on which the weights are sought.
+MESH = 512
 #: Propagation vectors with which the weights are sought at one time, and how often others are added.
 WORKING, ROUNDS = 8, 5
 #: Sharpness of the smooth minimum over all eigenvalues, in units of 1/scale; each stage starts where the last ended.
 SHARPNESS = (30.0, 300.0, 3000.0, 30000.0)
-
 #: When a stage of the search ends.
 STOP: dict[str, Any] = {"maxiter": 40, "ftol": 1e-14, "gtol": 1e-9}
 
@@ -36,7 +37,7 @@ def balance(sites: MagneticSites) -> FloatArray | None:
     if len(heads) == 1:
         return None
     counts = np.bincount(kinds)
-    mesh, _ = symmetric_mesh(lattice, MESH_LEAST, wave_rotations(lattice))
+    mesh, _ = symmetric_mesh(lattice, MESH, wave_rotations(lattice))
     matrices = np.concatenate([sites.matrices(part) for part in _blocks(mesh, sites.plan.block)])
     scale = sites.scale_eV
     # Columns span the u of the kinds that add up to zero over the sites.

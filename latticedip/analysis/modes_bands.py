@@ -32,6 +32,9 @@ from latticedip.sample import Sample
 from latticedip.sums.many_k import ManyK, many_k
 from latticedip.units import EV_PER_MUB_T, MU0_T_A3_PER_MUB
 
+#: Eigenvalues of matrices up to this size are found on several threads, some k each.
+THREADED = 64
+
 
 @dataclass(frozen=True, eq=False)
 class MagneticSites:
@@ -100,12 +103,16 @@ class MagneticSites:
         out = np.empty((len(vectors), 3 * len(self.ions)))
         block = self.plan.block
 
-        def fill(first: int, last: int) -> None:
-            for start in range(first, last, block):
-                stop = min(last, start + block)
-                out[start:stop] = np.linalg.eigvalsh(self.matrices(vectors[start:stop]))
+        for start in range(0, len(vectors), block):
+            matrices = self.matrices(vectors[start : start + block])
+            part = out[start : start + block]
 
-        over_rows(fill, len(vectors), at_least=max(1, 200_000 // out.shape[1] ** 3))
+            def fill(first: int, last: int, matrices: ComplexArray = matrices, part: FloatArray = part) -> None:
+                part[first:last] = np.linalg.eigvalsh(matrices[first:last])
+
+            # Large matrices are shared between threads by the linear algebra library; two levels of threads get in
+            # each other's way.
+            over_rows(fill, len(part), at_least=16 if out.shape[1] <= THREADED else len(part) + 1)
         return out
 
     @cached_property

@@ -18,10 +18,10 @@ from latticedip.crystal.kpoints import star, symmetric_mesh, symmetrized, wave_r
 from latticedip.crystal.model import Crystal
 from latticedip.errors import InputError
 
-#: Points of the whole mesh times magnetic sites, and the smallest and largest mesh.
-MESH_WORK, MESH_LEAST, MESH_MOST = 8192, 512, 2197
-#: Mesh points from which a descent starts.
-STARTS = 12
+#: Points of the whole mesh times magnetic sites, and the smallest and largest mesh: many sites make a small zone.
+MESH_WORK, MESH_LEAST, MESH_MOST = 8192, 64, 2197
+#: Mesh points from which a descent starts, for up to MANY magnetic sites and for more.
+STARTS, FEW_STARTS, MANY = 12, 5, 16
 #: Energies closer than this part of their scale count as equal.
 EQUAL = 1e-9
 #: A descent that ends this close to k = 0 (in mesh steps), and not below it, went to the limit k → 0.
@@ -63,7 +63,7 @@ def local_minima(sites: MagneticSites) -> tuple[list[Minimum], np.ndarray]:
     energies = sites.lowest(points)
     at_zero = float(sites.lowest(np.zeros((1, 3)))[0])
     scale = sites.scale_eV
-    starts = _spread(points, energies, step)
+    starts = _spread(points, energies, step, STARTS if len(sites.ions) <= MANY else FEW_STARTS)
     k, found = descend(sites.lowest, starts, step, scale)
     best: list[Minimum] = []
     for index in np.argsort(found, kind="stable"):
@@ -92,15 +92,15 @@ def _special(lattice: Crystal) -> FloatArray:
     return vectors[np.any(np.abs(vectors - np.round(vectors)) > 1e-9, axis=1)]
 
 
-def _spread(points: FloatArray, energies: FloatArray, step: FloatArray) -> FloatArray:
-    """The lowest points, none within a mesh step and a half of a lower one."""
+def _spread(points: FloatArray, energies: FloatArray, step: FloatArray, count: int) -> FloatArray:
+    """The ``count`` lowest points, none within a mesh step and a half of a lower one."""
     chosen: list[int] = []
     for i in np.argsort(energies, kind="stable"):
         gaps = points[chosen] - points[i]
         gaps -= np.round(gaps)
         if not np.any(np.all(np.abs(gaps) <= 1.5 * step, axis=1)):
             chosen.append(int(i))
-        if len(chosen) == STARTS:
+        if len(chosen) == count:
             break
     return points[chosen]
 

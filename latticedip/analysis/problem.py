@@ -10,15 +10,14 @@ form         the energy of unit signs or vectors as ½ s·Q·s + g·s, in eV per
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
 import numpy as np
 
-from latticedip.checks import FloatArray, as_float, as_floats, frozen
-from latticedip.crystal.model import Crystal
+from latticedip.checks import FloatArray, as_floats
 from latticedip.errors import InputError
 from latticedip.ordering.model import snap_k
 from latticedip.ordering.symmetry import SupercellSymmetry, pattern_orbit
@@ -26,7 +25,6 @@ from latticedip.physics.boundary import NET_MOMENT_MUB
 from latticedip.physics.supercell import Supercell, SupercellField
 from latticedip.sample import Sample
 from latticedip.units import EV_PER_MUB_T
-
 
 #: Longest lists of permutations that are written out; beyond, copies are counted by correlations.
 MOST_NUMBERS = 30_000_000
@@ -247,26 +245,37 @@ class SearchProblem:
         return not self.net_zero or bool(np.linalg.norm(self.net_moment(moments)) <= limit)
 
 
-def moment_sizes(crystal: Crystal, sizes: Any) -> tuple[tuple[int, ...], FloatArray]:
-    """Magnetic sites (ascending) and their moments in µB, from sizes by label or element.
+class Hold:
+    """Brings the net moment of unit vectors to zero in a descent (augmented Lagrangian: Hestenes 1969, Powell 1969).
 
-    A label wins over an element; a size of zero leaves a site without moment.
-    Raises InputError for names no site has, sizes below zero or not finite, and where no moment is left.
+    weights: Shape (n_units,), µB. active: False where nothing is held, so that one round is all.
     """
-    if not isinstance(sizes, Mapping):
-        raise InputError(f"sizes must map labels or elements to Bohr magnetons, got {type(sizes).__name__}.")
-    given = np.full(crystal.n_sites, np.nan)
-    by_label = {name for name in sizes if name in crystal.labels}
-    for name in sorted(sizes, key=lambda name: name in by_label):
-        value = as_float(f"the moment of {name}", sizes[name])
-        if value < 0:
-            raise InputError(f"the moment of {name} is {value:g} µB; a size is not negative.")
-        given[list(crystal.find(str(name)))] = value
-    sites = np.flatnonzero(given > 0)
-    if not len(sites):
-        what = "every size given is zero" if len(sizes) else "sizes is empty"
-        raise InputError(f"no site of the crystal carries a moment ({what}); give one above zero, in Bohr magnetons.")
-    return tuple(int(i) for i in sites), frozen(given[sites])
+
+    def __init__(self, weights: FloatArray, active: bool) -> None:
+        self.weights = weights
+        self.rounds = 30 if active else 1
+        self._multiplier = np.zeros(3)
+        self._stiffness = 10.0 / max(float((weights**2).sum()), 1e-300) if active else 0.0
+        self._last = np.inf
+
+    def penalty(self, units: FloatArray) -> tuple[float, FloatArray]:
+        """What is added to an energy of order one, and its slope (n_units, 3)."""
+        net = self.weights @ units
+        value = self._multiplier @ net + 0.5 * self._stiffness * net @ net
+        return float(value), self.weights[:, None] * (self._multiplier + self._stiffness * net)
+
+    def is_done(self, units: FloatArray) -> bool:
+        """True once the net moment is zero, or where it will not become so; prepares the next round otherwise."""
+        net = self.weights @ units
+        size = float(np.linalg.norm(net))
+        if size < 1e-9 * float(self.weights.sum()) or self._stiffness == 0.0:
+            return True
+        # Multipliers bring a net moment that can vanish down by a factor per round; else there is no such state here.
+        stuck = self._last < np.inf and size > 0.9 * self._last and size > 1e-3 * float(self.weights.sum())
+        self._multiplier = self._multiplier + self._stiffness * net
+        self._stiffness *= 2.0
+        self._last = size
+        return stuck
 
 
 def sign_list(name: str, value: Any, n_sites: int, n_units: int) -> np.ndarray | None:

@@ -56,9 +56,7 @@ def field(
     from latticedip.study import tasks
     from latticedip.study.fields import field_table
 
-    document = tasks.field(
-        tasks.open_study(study), axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol
-    )
+    document = tasks.field(tasks.open_study(study), axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol)
     deliver(
         document,
         rows=lambda: field_table(document),

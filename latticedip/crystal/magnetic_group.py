@@ -1,4 +1,4 @@
-"""The magnetic space group of an arrangement of moments, by its number in the tables of Belov, Neronova and Smirnova."""
+"""The magnetic space group of an arrangement of moments, by its number (Belov, Neronova and Smirnova)."""
 
 from __future__ import annotations
 

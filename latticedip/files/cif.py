@@ -115,12 +115,17 @@ def expand(block: Block, name: str, cell: FloatArray, group: Group, *, magnetic:
     return Structure(crystal, sites, group, orbits)
 
 
-def refuse_modulated(block: Block) -> None:
-    """Raise FileError for modulated structures in superspace, which are not read."""
-    dimension = block.value("_cell_modulation_dimension")
+def modulated_items(block: Block) -> list[str]:
+    """The items of a block that belong to modulated structures in superspace, as the file spells them."""
     found = block.starting_with(*_MODULATED_TAGS)
-    if dimension not in (None, "0"):
+    if block.value("_cell_modulation_dimension") not in (None, "0"):
         found.insert(0, "_cell_modulation_dimension")
+    return found
+
+
+def refuse_modulated(block: Block) -> None:
+    """Raise FileError for modulated structures in superspace, which are not read as ordinary ones."""
+    found = modulated_items(block)
     if found:
         raise block.error(
             f"this is a modulated structure in superspace ({found[0]}), which is not read. Give a commensurate "

@@ -23,9 +23,9 @@ MAX_OPERATIONS = 20_000
 
 @dataclass(frozen=True, eq=False)
 class Group:
-    """All operations of a structure, centrings multiplied in.
+    """All operations of a structure, centrings multiplied in; d is 3, or 4 in superspace.
 
-    rotations: Shape (n, 3, 3) int. translations: Shape (n, 3) float in [0, 1). times: Shape (n,) int, +1 or −1.
+    rotations: Shape (n, d, d) int. translations: Shape (n, d) float in [0, 1). times: Shape (n,) int, +1 or −1.
     """
 
     rotations: np.ndarray
@@ -35,8 +35,14 @@ class Group:
     @property
     def axial(self) -> np.ndarray:
         """Shape (n, 3, 3) float. θ det(R) R: how the lattice components of a moment change."""
-        handedness = np.round(np.linalg.det(self.rotations))
-        return np.asarray((self.times * handedness)[:, None, None] * self.rotations)
+        rotations = self.rotations[:, :3, :3]
+        handedness = np.round(np.linalg.det(rotations))
+        return np.asarray((self.times * handedness)[:, None, None] * rotations)
+
+    @property
+    def basic(self) -> Group:
+        """What the operations do in three dimensions, one for one."""
+        return Group(self.rotations[:, :3, :3], self.translations[:, :3], self.times)
 
     @property
     def is_trivial(self) -> bool:
@@ -117,7 +123,8 @@ def _check_metric(block: Block, operations: Sequence[Operation], cell: FloatArra
     metric = cell @ cell.T
     lengths = np.sqrt(np.diag(metric))
     for operation in operations:
-        change = (operation.rotation.T @ metric @ operation.rotation - metric) / np.outer(lengths, lengths)
+        rotation = operation.rotation[:3, :3]
+        change = (rotation.T @ metric @ rotation - metric) / np.outer(lengths, lengths)
         if np.abs(change).max() > METRIC_TOLERANCE:
             raise block.error(
                 f"{tag} {operation.text!r} does not fit the cell: it would change its lengths or angles. "
@@ -129,9 +136,11 @@ def _check_closed(
     block: Block, members: list[tuple[np.ndarray, FloatArray, int]], texts: list[str], index: _Index, tag: str
 ) -> None:
     """A finite set with the identity is a group where multiplying by a set of generators never leaves it."""
-    identity = (np.eye(3, dtype=np.int64), np.zeros(3), 1)
+    d = len(members[0][1])
+    identity = (np.eye(d, dtype=np.int64), np.zeros(d), 1)
     if not index.holds(*identity):
-        raise block.error(f"the operations of {tag} do not hold the identity x,y,z.")
+        words = "x,y,z" if d == 3 else ",".join(f"x{i + 1}" for i in range(d))
+        raise block.error(f"the operations of {tag} do not hold the identity {words}.")
     reached = _Index()
     reached.add(*identity)
     elements, generators = [identity], list[tuple[np.ndarray, FloatArray, int]]()

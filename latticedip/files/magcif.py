@@ -41,7 +41,7 @@ SILENT_MUB = 1e-6
 
 
 @dataclass(frozen=True, eq=False)
-class _AtomMoments:
+class AtomMoments:
     """Crystal-axis components and standard uncertainties (m, 3) in µB of the atoms of one listed site."""
 
     components: FloatArray
@@ -62,7 +62,7 @@ def read_magnetic_ordering(block: Block, name: str) -> Ordering:
     """The ordering (k = 0 in the magnetic cell) that a block describes.
 
     Raises FileError naming file, item and value where something is missing, contradicts itself, or has no model
-    here (superspace, the OG setting).
+    here (the OG setting; structures in superspace have a reader of their own).
     """
     structure = _structure(block, name)
     if not has_moments(block):
@@ -73,14 +73,14 @@ def read_magnetic_ordering(block: Block, name: str) -> Ordering:
     components: list[FloatArray] = []
     su: list[FloatArray] = []
     for i, site in enumerate(structure.sites):
-        atoms = _expand_moment(block, structure, i, moments.get(site.label), notes)
+        atoms = expand_moment(block, structure, i, moments.get(site.label), notes)
         components.append(atoms.components)
         su.append(atoms.su)
     crystal_axes = np.concatenate(components)
     if not np.any(crystal_axes):
         notes.append("every moment of the file is zero")
-    parent = _read_parent(block)
-    notes.extend(_propagation_notes(block, parent))
+    parent = read_parent(block)
+    notes.extend(propagation_notes(block, parent))
     return Ordering(
         structure.crystal,
         structure.crystal.to_cartesian(crystal_axes),
@@ -149,14 +149,14 @@ def _check_moment_images(block: Block, column: Column, operations: list[Operatio
             )
 
 
-def _expand_moment(
+def expand_moment(
     block: Block, structure: Structure, index: int, moment: SiteMoment | None, notes: list[str]
-) -> _AtomMoments:
+) -> AtomMoments:
     """Moments of all atoms of a site: projected onto what the site allows, then carried by the operations."""
     orbit, site, crystal = structure.orbits[index], structure.sites[index], structure.crystal
     n = len(orbit.positions)
     if moment is None:
-        return _AtomMoments(np.zeros((n, 3)), np.full((n, 3), np.nan))
+        return AtomMoments(np.zeros((n, 3)), np.full((n, 3), np.nan))
     lengths = np.linalg.norm(crystal.cell, axis=1)
     # θ det(R) L R L⁻¹ for every operation of the group.
     turns = structure.group.axial * lengths[:, None] / lengths[None, :]
@@ -173,10 +173,10 @@ def _expand_moment(
         notes.append(f"the moment of {site.label} misses what its site allows by {miss:.2g} µB; it is put right")
     components = turns[orbit.carriers] @ allowed
     su = np.array([combine_su(turn, moment.su) for turn in turns[orbit.carriers]])
-    return _AtomMoments(components, su)
+    return AtomMoments(components, su)
 
 
-def _read_parent(block: Block) -> ParentTransform | None:
+def read_parent(block: Block) -> ParentTransform | None:
     """The change from the parent's basis to the present one, where the file states it."""
     found: list[tuple[str, ParentTransform]] = []
     for tag in _PARENT_TAGS:
@@ -194,8 +194,12 @@ def _read_parent(block: Block) -> ParentTransform | None:
     return found[0][1] if found else None
 
 
-def _propagation_notes(block: Block, parent: ParentTransform | None) -> list[str]:
-    """The propagation vectors of the file in words, and whether the magnetic cell holds whole waves of each."""
+def propagation_notes(block: Block, parent: ParentTransform | None, waves: FloatArray | None = None) -> list[str]:
+    """The propagation vectors of the file in words, and whether the magnetic cell holds whole waves of each.
+
+    waves: Shape (n, 3). Wave vectors, in the reciprocal magnetic cell, that the structure has beyond that cell.
+    """
+    present = np.zeros((1, 3)) if waves is None else np.concatenate([np.zeros((1, 3)), waves, -waves])
     notes = []
     for tag in _K_TAGS:
         column = block.column(tag)
@@ -211,8 +215,8 @@ def _propagation_notes(block: Block, parent: ParentTransform | None) -> list[str
             except InputError:
                 note += " (kept as text; it is no triple of numbers)"
             else:
-                turns = k @ parent.P if parent is not None else np.zeros(3)
-                if np.abs(turns - np.round(turns)).max() > 1e-3:
+                left = (k @ parent.P if parent is not None else np.zeros(3)) - present
+                if np.abs(left - np.round(left)).max(axis=1).min() > 1e-3:
                     note += "; it does not fit the magnetic cell that the file states"
             if note not in notes:
                 notes.append(note)

@@ -30,7 +30,8 @@ _NUMBER = r"(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:/[0-9]+(?:\.[0-9]*)?)?"
 class Operation:
     """x' = R x + t in fractional coordinates, with time reversal.
 
-    rotation: Shape (3, 3) int. translation: Shape (3,) float, as written. time: +1, −1, or 0 where not stated.
+    rotation: Shape (d, d) int. translation: Shape (d,) float, as written. time: +1, −1, or 0 where not stated.
+    d is 3, or 4 in superspace.
     """
 
     rotation: np.ndarray
@@ -57,17 +58,42 @@ def parse_operation(text: str, *, time: bool) -> Operation:
             raise InputError("its fourth part, time reversal +1 or -1, is missing")
         if len(parts) != 4:
             raise InputError(f"it has {len(parts)} parts, not x, y, z and time reversal")
-        if parts[3] not in ("+1", "1", "-1"):
-            raise InputError(f"its time reversal is {parts[3]!r}, not +1 or -1")
-        reversal = -1 if parts[3] == "-1" else 1
+        reversal = _reversal(parts[3])
     elif len(parts) != 3:
         raise InputError(f"it has {len(parts)} parts, not 3")
-    rows = [parse_expression(part, ("x", "y", "z")) for part in parts[:3]]
-    matrix = np.array([[float(c) for c in row[:3]] for row in rows])
+    return _operation(parts[:3], ("x", "y", "z"), reversal, text)
+
+
+def parse_superspace_operation(text: str) -> Operation:
+    """Read ``-x1+1/2,x2,-x3,-x4+1/2,-1``: an operation of (3+1)D superspace with time reversal, rotation (4, 4).
+
+    Parts may be separated by blanks alone. Raises InputError as `parse_operation` does, and where x1, x2 or x3 would
+    become a mixture with x4, or x4 other than ±x4 plus whole numbers of x1, x2, x3.
+    """
+    parts = _split(text if "," in text else ",".join(text.split()), ",")
+    if len(parts) == 4:
+        raise InputError("it has 4 parts, not x1, x2, x3, x4 and time reversal +1 or -1")
+    if len(parts) != 5:
+        raise InputError(f"it has {len(parts)} parts, not x1, x2, x3, x4 and time reversal")
+    operation = _operation(parts[:4], ("x1", "x2", "x3", "x4"), _reversal(parts[4]), text)
+    if np.any(operation.rotation[:3, 3]) or abs(operation.rotation[3, 3]) != 1:
+        raise InputError("x4 must become x4 or -x4, and must not enter the parts of x1, x2, x3")
+    return operation
+
+
+def _reversal(text: str) -> int:
+    if text not in ("+1", "1", "-1"):
+        raise InputError(f"its time reversal is {text!r}, not +1 or -1")
+    return -1 if text == "-1" else 1
+
+
+def _operation(parts: list[str], variables: tuple[str, ...], reversal: int, text: str) -> Operation:
+    rows = [parse_expression(part, variables) for part in parts]
+    matrix = np.array([[float(c) for c in row[:-1]] for row in rows])
     rotation = np.round(matrix).astype(np.int64)
     if np.any(matrix != rotation) or abs(round(np.linalg.det(rotation))) != 1:
         raise InputError("its rotation part is not a matrix of whole numbers with determinant 1 or -1")
-    return Operation(rotation, np.array([float(row[3]) for row in rows]), reversal, text)
+    return Operation(rotation, np.array([float(row[-1]) for row in rows]), reversal, text)
 
 
 def parse_moment_image(text: str) -> np.ndarray:

@@ -4,7 +4,7 @@ A move is judged from the field at one moment, at a cost that does not depend on
 costs a pass over all fields. That pass reads the table of couplings in order: its last but one axis holds the
 differences of cells along z from −(n_z − 1) to n_z − 1, so that the row for any cell is one unbroken stretch.
 
-Energies: E = ½ Σ s_p Q_pq s_q + Σ g_p s_p (+ penalty · |Σ w_p s_p|²); fields: h_p = Σ_q Q_pq s_q, with the moment itself.
+Energies: E = ½ Σ s_p Q_pq s_q + Σ g_p s_p (+ penalty · |Σ w_p s_p|²); fields h_p = Σ_q Q_pq s_q hold p itself.
 Every restart has a random sequence of its own, given by its seed, so results do not depend on the number of threads.
 """
 
@@ -124,13 +124,13 @@ def penalty_change(penalty, net, weights, place, change):
 
 @kernel()
 def anneal_signs(
-    first, last, table, m, nx, ny, nz, linear, free, start, weights, temperatures, penalties, exchange, seeds, out_signs,
-    out_energies,
+    first, last, table, m, nx, ny, nz, linear, free, start, weights, temperatures, penalties, exchange, seeds,
+    out_signs, out_energies,
 ):  # fmt: skip
     """Anneal signs along given axes; restarts first..last.
 
-    table: Q, flat, of shape (m, nx, ny, 2 nz − 1, m) with m sites in a cell. linear (n_moments,): g. free (n_free,): places of the signs that may change;
-    start (n_moments,) int8: the fixed ones, 0 where free. weights (n_c, n_moments): net moment, c components, held at
+    table: Q, flat, of shape (m, nx, ny, 2 nz − 1, m) with m sites in a cell. linear (n_moments,): g. free (n_free,):
+    places of the signs that may change; start (n_moments,) int8: the fixed ones, 0 where free. weights (n_c, n_moments): net moment, c components, held at
     zero by penalties (n_sweeps,). exchange: whether pairs are exchanged too.
     out_signs (n_restarts, n_moments) int8; out_energies (n_restarts,), penalty left out.
     """
@@ -159,8 +159,8 @@ def anneal_signs(
                     other = free[int(next_random(state) * n_free)]
                     if signs[other] * signs[place] < 0:
                         exchange_signs(
-                            place, other, table, m, nx, ny, nz, linear, weights, penalty, temperature, state, signs, fields,
-                            net,
+                            place, other, table, m, nx, ny, nz, linear, weights, penalty, temperature, state, signs,
+                            fields, net,
                         )  # fmt: skip
                     continue
                 sign = signs[place]
@@ -235,8 +235,8 @@ def sum_fields(table, m, nx, ny, nz, signs, fields):
 def descend_best_axis(tables, m, nx, ny, nz, free, weights, pull, signs):
     """Turn single signs round while that lowers the energy along the pattern's own best axis; changes ``signs``.
 
-    tables (6, …), flat as in `anneal_signs`: the form of the axis, xx, yy, zz, yz, xz, xy. weights (n_moments,): net moment
-    along the axis. pull (3,): energy −(net moment) pull·u in the applied field. Returns that energy.
+    tables (6, …), flat as in `anneal_signs`: the form of the axis, xx, yy, zz, yz, xz, xy. weights (n_moments,): net
+    moment along the axis. pull (3,): energy −(net moment) pull·u in the applied field. Returns that energy.
     """
     n = signs.shape[0]
     fields = np.empty((6, n))
@@ -281,7 +281,8 @@ def descend_best_axis(tables, m, nx, ny, nz, free, weights, pull, signs):
 
 @kernel()
 def anneal_vectors(
-    first, last, tables, m, nx, ny, nz, linear, planes, weights, temperatures, penalties, seeds, out_vectors, out_energies
+    first, last, tables, m, nx, ny, nz, linear, planes, weights, temperatures, penalties, seeds, out_vectors,
+    out_energies,
 ):  # fmt: skip
     """Anneal unit vectors, free or each in a plane; restarts first..last.
 
@@ -337,7 +338,11 @@ def anneal_vectors(
                     add_vector_field(tables, m, nx, ny, nz, place, step, fields)
             # Keep about half of the moves: short steps when it is cold.
             rate = accepted / n
-            reach = min(1e9 if rate > 0.9 else 3.0, max(1e-4, reach * (0.7 if rate < 0.4 else 1.4 if rate > 0.6 else 1.0)))
+            if rate < 0.4:
+                reach *= 0.7
+            elif rate > 0.6:
+                reach *= 1.4
+            reach = min(1e9 if rate > 0.9 else 3.0, max(1e-4, reach))
         sum_vector_fields(tables, m, nx, ny, nz, moments, fields)
         energy = 0.0
         for p in range(n):

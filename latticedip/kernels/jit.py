@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import os
 import tempfile
-from collections.abc import Callable
+import threading
+from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
+from contextlib import contextmanager
 from functools import cache
 from itertools import pairwise
 from typing import Any
@@ -54,8 +56,24 @@ def _cache_is_usable() -> bool:
     return True
 
 
+_in_this_thread = threading.local()
+
+
+@contextmanager
+def one_thread() -> Iterator[None]:
+    """Let kernels called by this thread use no other: for work that is already spread over processes or threads."""
+    before = getattr(_in_this_thread, "single", False)
+    _in_this_thread.single = True
+    try:
+        yield
+    finally:
+        _in_this_thread.single = before
+
+
 def thread_count() -> int:
     """Threads to use: what the user set (numba.set_num_threads, NUMBA_NUM_THREADS, OMP_NUM_THREADS), else all cores."""
+    if getattr(_in_this_thread, "single", False):
+        return 1
     try:
         numba.threading_layer()
     except ValueError:

@@ -1,7 +1,7 @@
 """Exhaustive search over sign patterns, and the 3×3 forms that give a pattern its best axis.
 
-A pattern s of n free signs is a whole number: bit i set means s_i = −1. The bits fall into three groups: ``a`` and ``b``
-(the low ones) and the high ones. For one setting of the high bits the fields h on the low signs are summed once, and
+A pattern s of n free signs is a whole number: bit i set means s_i = −1. The bits fall into three groups: ``a`` and
+``b`` (the low ones) and the high ones. For one setting of the high bits the fields h on the low signs are summed, and
 
     E(s) = E_high + [½ s_L Q s_L + g_L s_L] + Σ_a h_i s_i + Σ_b h_i s_i,
 

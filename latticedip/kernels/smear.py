@@ -17,7 +17,7 @@ import math
 
 import numpy as np
 
-from latticedip.kernels.jit import ORDERED, kernel
+from latticedip.kernels.jit import kernel
 from latticedip.kernels.radial import TWO_OVER_SQRT_PI
 from latticedip.kernels.real import nearest_image
 

@@ -1,7 +1,8 @@
 """Distributions of the size of a field: lines, waves, powders and samples, each by its cumulative function.
 
-The density of |B| is infinite at the edges of a wave (Overhauser, J. Phys. Chem. Solids 13, 71 (1960)), so that bins are
-filled by differences of the cumulative function, never by the density at a point. Then every histogram adds up to one.
+The density of |B| is infinite at the edges of a wave (Overhauser, J. Phys. Chem. Solids 13, 71 (1960)), so that bins
+are filled by differences of the cumulative function, never by the density at a point. Then every histogram adds up to
+one.
 
     line      one size
     wave      B(φ) = Re Σ_h C_h exp(−ihφ), every φ alike. For one ellipse around zero with half axes b ≤ a
@@ -88,28 +89,39 @@ class Sampled:
         return self.sizes
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Shell:
-    """A powder in an applied field. internal, applied: sizes in T of the two fields."""
+    """A powder in an applied field. internal: Shape (n,) sizes of the internal field in T, equally likely.
 
-    internal: float
+    applied: size of the applied field in T. reach: lowest and highest internal field, where the sizes stand for all
+        between them.
+    """
+
+    internal: FloatArray
     applied: float
+    reach: tuple[float, float] | None = None
 
     @property
     def edges(self) -> tuple[float, ...]:
-        return abs(self.internal - self.applied), self.internal + self.applied
+        low, high = (float(self.internal.min()), float(self.internal.max())) if self.reach is None else self.reach
+        return max(0.0, low - self.applied, self.applied - high), high + self.applied
 
     def cumulative(self, size: FloatArray) -> FloatArray:
-        low, high = self.edges
-        if low == high:
-            return Line(low).cumulative(size)
-        # The square is not formed of the difference: that keeps the digits where one field is far the larger.
-        return np.asarray(np.clip((size - low) * (size + low) / (4 * self.internal * self.applied), 0.0, 1.0))
+        low, high = np.abs(self.internal - self.applied), self.internal + self.applied
+        total = np.zeros(len(size))
+        for a, b in zip(low, high, strict=True):
+            if a == b:
+                total += size >= a
+            else:
+                # The square is not formed of a difference: that keeps the digits where one field is far the larger.
+                total += np.clip((size - a) * (size + a) / ((b - a) * (b + a)), 0.0, 1.0)
+        return total / len(low)
 
     def nodes(self, n: int) -> FloatArray:
-        low, high = self.edges
-        middle = (np.arange(n) + 0.5) / n
-        return np.asarray(np.sqrt(low**2 + middle * (high - low) * (high + low)))
+        low, high = np.abs(self.internal - self.applied), self.internal + self.applied
+        each = max(1, -(-n // len(low)))
+        middle = (np.arange(each) + 0.5) / each
+        return np.asarray(np.sqrt(low[:, None] ** 2 + middle * ((high - low) * (high + low))[:, None]).ravel())
 
 
 @dataclass(frozen=True, eq=False)
@@ -142,8 +154,9 @@ class Wave:
             return None
         mean, one, two = (complex(x) for x in np.pad(self.square, (0, 3 - len(self.square))))
         scale = max(mean.real, 1e-300)
-        invariants = (mean.real / scale, abs(one) / scale, abs(two) / scale, (two * one.conjugate() ** 2).real / scale**3)
-        # A square of a field is exact to a part of itself only: where the invariants agree to eight digits they are one.
+        both = (two * one.conjugate() ** 2).real / scale**3
+        invariants = (abs(one) / scale, abs(two) / scale, both)
+        # Where the invariants agree to eight digits the distributions do.
         return (round(float(np.log(scale)) * 1e8), *(round(x * 1e8) for x in invariants))
 
     def size_squared(self, phase: FloatArray) -> FloatArray:
@@ -154,21 +167,14 @@ class Wave:
                 total = total + (part * np.exp(1j * m * phase)).real
         return np.asarray(total)
 
-    def slope(self, phase: FloatArray) -> FloatArray:
-        """d|B|²/dφ in T² at phases of any shape, in radians."""
-        total = np.zeros(np.shape(phase))
-        for m, part in enumerate(self.square[1:], start=1):
-            if part:
-                total = total + (1j * m * part * np.exp(1j * m * phase)).real
-        return np.asarray(total)
-
     @cached_property
     def single(self) -> tuple[float, float] | None:
         """(lowest, highest) |B|² where |B|² has one harmonic only, as on an ellipse around zero; None elsewhere."""
         there = np.flatnonzero(self.square[1:])
         if len(there) > 1:
             return None
-        if len(self.square) == 3 and not np.any(self.coefficients[0]):
+        steady, moving = np.abs(self.coefficients[0]).max(), np.abs(self.coefficients[1:]).max(initial=0.0)
+        if len(self.square) == 3 and steady <= 1e-14 * moving:
             # Half axes from the singular values keep a small one, and a linear wave touches zero exactly.
             u = self.coefficients[1]
             a, b = np.linalg.svd(np.array([u.real, u.imag]), compute_uv=False)
@@ -184,13 +190,15 @@ class Wave:
         polynomial = np.concatenate([positive[::-1], positive[1:].conj()])
         roots = np.roots(polynomial)
         angles = np.angle(roots[np.abs(np.abs(roots) - 1) < NEAR_CIRCLE])
+        bending = 1j * orders
         for _ in range(3):
             # Newton steps where the curvature allows; a point that is no turning point does no harm.
-            curvature = sum(
-                ((1j * m) ** 2 * part * np.exp(1j * m * angles)).real for m, part in enumerate(self.square) if m
-            )
-            step = np.divide(self.slope(angles), curvature, out=np.zeros_like(angles), where=np.abs(curvature) > 1e-6 * self.square[0].real)
-            angles = angles - np.clip(step, -1e-2, 1e-2)
+            curvature = (np.exp(1j * np.outer(angles, orders)) @ (bending**2 * self.square)).real
+            slope = (np.exp(1j * np.outer(angles, orders)) @ (bending * self.square)).real
+            steep = np.abs(curvature) > 1e-6 * self.square[0].real
+            angles = angles - np.clip(np.divide(slope, curvature, out=np.zeros(len(angles)), where=steep), -0.01, 0.01)
+        if not len(angles):
+            angles = np.linspace(0.0, 2 * np.pi, 8, endpoint=False)
         return np.sort(angles % (2 * np.pi))
 
     @cached_property
@@ -309,7 +317,9 @@ class FieldDistribution:
         else:
             first, last = (float(x) for x in as_floats("span", span, (2,)))
             if not first < last or first > low or last < high:
-                raise InputError(f"span must go upwards and hold the whole spectrum, {low!r} to {high!r} T, got {span!r}.")
+                raise InputError(
+                    f"span must go upwards and hold the whole spectrum, {low!r} to {high!r} T, got {span!r}."
+                )
         limits = np.linspace(first, last, bins + 1)
         counted = self.cumulative(limits)
         # A line at zero lies in the first bin.
@@ -330,7 +340,7 @@ class FieldDistribution:
             return size, weight_of
         cells, place = np.unique(np.floor(size * (GRID_PER_WIDTH / width)), return_inverse=True)
         total = np.bincount(place, weight_of, len(cells))
-        return np.bincount(place, weight_of * size, len(cells)) / total, total
+        return np.asarray(np.bincount(place, weight_of * size, len(cells)) / total, dtype=float), total.astype(float)
 
     def _smeared(self, x: FloatArray, size: FloatArray) -> FloatArray:
         """Cumulative function at x of one size, smeared."""

@@ -130,19 +130,26 @@ def orbit_field(
     ordering: periodic in three directions; its non-magnetic structure is that of ``ordering.reference`` where there is
     one. probe: at a position or on a site (then every atom that is equivalent to one of that label). sample: None
     means N = 0 and no applied field. equivalent: False takes the probe's own position or site alone. tol: as
-    `local_field`. A contact tensor is carried to the other positions by the operation that leads there.
+    `local_field`. What a probe has of tensors and vectors is turned with its position (`equivalent_probes`).
 
     Raises what `local_field` raises, and InputError for a moment density where the orbit has several positions, or a
-    contact tensor without the symmetry of its position.
+    contact tensor of a site that lacks its symmetry.
     """
     home = ordering.crystal if ordering.reference is None else ordering.reference.crystal
-    probes, reached, count = _probes(home, dataclasses.replace(probe, contact=()), equivalent)
+    probes, reached, count = _probes(home, probe, equivalent)
+    terms = [found.contact for found in probes]
+    probes = [dataclasses.replace(found, contact=()) for found in probes]
     whole = local_field(ordering, probes, sample=sample, tol=tol)
     chosen = _on_sites(home, whole, reached)
     places = whole.reference_points[chosen]
     k = ordering.k
     waves = np.array([_wave(ordering, i, probes, whole, tol)[chosen] for i in range(len(k))])
-    contact, constant = _contact(ordering, probe, home, whole.points[chosen], places)
+    if probe.site is None:
+        # Every probe gives the same number of rows.
+        by_row = [terms[i * len(terms) // len(places)] for i in range(len(places))]
+    else:
+        by_row = _site_terms(probe, home, places)
+    contact, constant = _contact(ordering, probe.name, whole.points[chosen], by_row)
     waves = waves + contact
     still = np.all(k == np.round(k), axis=1)
     steady = (whole.lorentz + whole.demagnetizing + whole.applied)[chosen] + constant + waves[still].real.sum(axis=0)
@@ -178,8 +185,8 @@ def _probes(home: Crystal, probe: Probe, equivalent: bool) -> tuple[list[Probe],
     A probe on a site stays one, so that a site carried into another cell still finds its atom.
     """
     if probe.site is None:
-        points = orbit(home, probe.position) if equivalent else np.asarray(probe.position)[None]
-        return [dataclasses.replace(probe, position=point) for point in points], [], len(points)
+        found = equivalent_probes(home, probe) if equivalent else [probe]
+        return found, [], len(found)
     sites = list(home.find(probe.site))
     if not equivalent:
         return [probe], sites, len(sites)
@@ -219,54 +226,157 @@ def _wave(ordering: Ordering, i: int, probes: list[Probe], whole: LocalField, to
 
 
 def _contact(
-    ordering: Ordering, probe: Probe, home: Crystal, points: FloatArray, places: FloatArray
+    ordering: Ordering, name: str, points: FloatArray, terms: list[tuple[Contact, ...]]
 ) -> tuple[ComplexArray, FloatArray]:
     """Contact field at points of the ordering's cell: waves (n_k, n, 3) complex and what is constant (3,), in T."""
     waves = np.zeros((len(ordering.k), len(points), 3), dtype=complex)
     constant = np.zeros(3)
-    for term in probe.contact:
-        if term.moment_density_muB_per_A3 is not None:
-            if len(points) > 1 or np.any(ordering.k != np.round(ordering.k)):
-                raise InputError(
-                    f"{probe.name}: a moment density is that of one position in one cell, and the probe has "
-                    f"{len(points)} under this ordering. Give a coupling with shell or within instead."
-                )
-            constant += 2 / 3 * MU0_T_A3_PER_MUB * term.moment_density_muB_per_A3
-            continue
-        tensors = _carried(term, probe, home, places)
-        for row, point in enumerate(points):
+    for row, point in enumerate(points):
+        for term in terms[row]:
+            if term.moment_density_muB_per_A3 is not None:
+                if len(points) > 1 or np.any(ordering.k != np.round(ordering.k)):
+                    raise InputError(
+                        f"{name}: a moment density holds at one position in one cell, and under this ordering the "
+                        "probe feels different fields in several. Give a coupling with shell or within instead."
+                    )
+                constant = constant + 2 / 3 * MU0_T_A3_PER_MUB * term.moment_density_muB_per_A3
+                continue
             sites, cells, _ = shell_neighbours(ordering, point, term)
             phases = np.exp(-2j * np.pi * ((cells @ ordering.k.T) % 1.0))
-            moments = np.einsum("nk,kna->ka", phases, ordering.mean_components[:, sites])
-            waves[:, row] += moments @ tensors[row].T
+            moments = np.einsum("nk,nka->ka", phases, ordering.mean_components[:, sites].transpose(1, 0, 2))
+            waves[:, row] += moments @ term.coupling_T_per_muB.T
     return waves, constant
 
 
-def _carried(term: Contact, probe: Probe, home: Crystal, places: FloatArray) -> FloatArray:
-    """Shape (n, 3, 3) in T/µB. The coupling of a contact term at equivalent places."""
-    tensor = term.coupling_T_per_muB
-    scale = float(np.abs(tensor).max(initial=0.0))
-    if np.abs(tensor - tensor[0, 0] * np.eye(3)).max() <= 1e-12 * scale:
-        return np.tile(tensor, (len(places), 1, 1))
-    starts = home.positions[list(home.find(probe.site))[:1]] if probe.site is not None else probe.position[None]
+def equivalent_probes(crystal: Crystal, probe: Probe) -> list[Probe]:
+    """The probes that the operations of a crystal make of one at a position, each once.
+
+    A contact tensor, a covariance and displaced neighbours are turned with the position. Where they lack its symmetry
+    one position carries several probes: the distortion round it may lie in as many ways.
+
+    Raises InputError where no operation leads to a position of the orbit.
+    """
+    points = orbit(crystal, probe.position)
+    if not _has_direction(probe):
+        return [dataclasses.replace(probe, position=point) for point in points]
+    operations = operations_of(crystal)
+    found: list[Probe] = []
+    names: list[FloatArray] = []
+    reached = np.zeros(len(points), dtype=bool)
+    for rotation, translation in zip(operations.rotations, operations.translations, strict=True):
+        image = rotation @ probe.position + translation
+        gaps = points - image
+        cells = np.round(gaps)
+        distance = np.linalg.norm((gaps - cells) @ crystal.cell, axis=1)
+        i = int(np.argmin(distance))
+        if distance[i] > SAME_POSITION_A:
+            continue
+        reached[i] = True
+        turned = _turned(crystal, probe, rotation, translation + cells[i], points[i])
+        name = _name_of(turned)
+        if not any(np.allclose(name, other, rtol=SAME_TENSOR, atol=1e-9) for other in names):
+            found.append(turned)
+            names.append(name)
+    if not np.all(reached):
+        place = ", ".join(f"{x:.5g}" for x in points[~reached][0])
+        raise InputError(
+            f"{probe.name}: no operation of the cell given carries its tensors or vectors to the equivalent position "
+            f"({place}). Give numbers instead, or take the primitive cell."
+        )
+    return found
+
+
+def _has_direction(probe: Probe) -> bool:
+    """True where something of the probe must be turned with its position."""
+    return (
+        any(term.coupling_T_per_muB is not None and not _isotropic(term.coupling_T_per_muB) for term in probe.contact)
+        or (probe.spread is not None and np.ndim(probe.spread) == 2)
+        or any(moved.vector_A is not None or moved.atom is not None for moved in probe.displaced)
+    )
+
+
+def _isotropic(tensor: FloatArray) -> bool:
+    return bool(np.abs(tensor - tensor[0, 0] * np.eye(3)).max() <= 1e-12 * np.abs(tensor).max(initial=0.0))
+
+
+def _turned(
+    crystal: Crystal, probe: Probe, rotation: np.ndarray, translation: FloatArray, position: FloatArray
+) -> Probe:
+    """A probe carried by an operation, to a position that is its image."""
+    turn = orthogonal(crystal, rotation)
+    spread = probe.spread
+    if spread is not None and np.ndim(spread) == 2:
+        spread = turn @ spread @ turn.T
+    moved = []
+    for neighbour in probe.displaced:
+        changes: dict[str, Any] = {}
+        if neighbour.vector_A is not None:
+            changes["vector_A"] = turn @ neighbour.vector_A
+        if neighbour.atom is not None:
+            site, cell = neighbour.atom
+            changes["atom"] = _carried_atom(crystal, site, cell, rotation, translation)
+        moved.append(dataclasses.replace(neighbour, **changes))
+    contact = tuple(_turned_term(term, turn) for term in probe.contact)
+    # Uncertainties are of the coordinates as given; the size of the field on an orbit needs none.
+    return dataclasses.replace(
+        probe, position=position, contact=contact, spread=spread, displaced=tuple(moved), position_su=None
+    )
+
+
+def _turned_term(term: Contact, turn: FloatArray) -> Contact:
+    if term.coupling_T_per_muB is None or _isotropic(term.coupling_T_per_muB):
+        return term
+    return dataclasses.replace(term, coupling_T_per_muB=turn @ term.coupling_T_per_muB @ turn.T)
+
+
+def _carried_atom(
+    crystal: Crystal, site: int, cell: tuple[int, int, int], rotation: np.ndarray, translation: FloatArray
+) -> tuple[int, tuple[int, int, int]]:
+    place = rotation @ (crystal.positions[site] + np.array(cell)) + translation
+    gaps = place - crystal.positions
+    whole = np.round(gaps)
+    alike = np.array([symbol == crystal.symbols[site] for symbol in crystal.symbols])
+    distance = np.where(alike, np.linalg.norm((gaps - whole) @ crystal.cell, axis=1), np.inf)
+    other = int(np.argmin(distance))
+    return other, (int(whole[other, 0]), int(whole[other, 1]), int(whole[other, 2]))
+
+
+def _name_of(probe: Probe) -> FloatArray:
+    """Numbers that are the same for probes that are."""
+    parts = [np.asarray(probe.position)]
+    parts += [t.coupling_T_per_muB.ravel() for t in probe.contact if t.coupling_T_per_muB is not None]
+    if probe.spread is not None:
+        parts.append(np.ravel(probe.spread))
+    for moved in probe.displaced:
+        parts += [moved.vector_A] if moved.vector_A is not None else []
+        parts += [np.array([moved.atom[0], *moved.atom[1]], dtype=float)] if moved.atom is not None else []
+    return np.concatenate([np.asarray(part, dtype=float) for part in parts])
+
+
+def _site_terms(probe: Probe, home: Crystal, places: FloatArray) -> list[tuple[Contact, ...]]:
+    """Contact terms at the atoms of a site, where they are stated for the first of them."""
+    assert probe.site is not None
+    first = home.positions[home.find(probe.site)[0]]
     operations = operations_of(home)
-    images = operations.rotations @ starts[0] + operations.translations
-    turns = np.array([orthogonal(home, rotation) for rotation in operations.rotations])
-    turned = turns @ tensor @ turns.transpose(0, 2, 1)
-    out = np.empty((len(places), 3, 3))
-    for row, place in enumerate(places):
-        gap = images - place
-        leads = np.linalg.norm((gap - np.round(gap)) @ home.cell, axis=1) < SAME_POSITION_A
-        if not np.any(leads):
-            raise InputError(
-                f"{probe.name}: no operation of the crystal carries its contact tensor to the equivalent position "
-                f"({', '.join(f'{x:.5g}' for x in place)}). Give a number, or name each position as a probe."
-            )
-        found = turned[leads]
-        if np.abs(found - found[0]).max() > SAME_TENSOR * scale:
-            raise InputError(
-                f"{probe.name}: its contact tensor does not have the symmetry of its position, so that equivalent "
-                "positions have no tensor of their own. Give one that has, or a number."
-            )
-        out[row] = found[0]
-    return out
+    images = operations.rotations @ first + operations.translations
+    found: list[tuple[Contact, ...]] = []
+    for place in places:
+        gaps = images - place
+        leads = np.linalg.norm((gaps - np.round(gaps)) @ home.cell, axis=1) < SAME_POSITION_A
+        terms = []
+        for term in probe.contact:
+            if term.coupling_T_per_muB is None or _isotropic(term.coupling_T_per_muB):
+                terms.append(term)
+                continue
+            turned = [_turned_term(term, orthogonal(home, rotation)) for rotation in operations.rotations[leads]]
+            scale = SAME_TENSOR * float(np.abs(term.coupling_T_per_muB).max())
+            if not turned or any(
+                np.abs(other.coupling_T_per_muB - turned[0].coupling_T_per_muB).max() > scale for other in turned
+            ):
+                raise InputError(
+                    f"{probe.name}: its contact tensor is stated for the first atom and does not have the symmetry of "
+                    "that site, so that the other atoms have none of their own. Symmetrize it, or give a number."
+                )
+            terms.append(turned[0])
+        found.append(tuple(terms))
+    return found

@@ -88,6 +88,19 @@ class Susceptibility:
             object.__setattr__(self, "temperatures_K", frozen(temperatures))
         object.__setattr__(self, "chi", frozen(chi))
 
+    def words(self) -> str:
+        """What is stated, for reports."""
+        table = self.temperatures_K
+        depth = np.ndim(self.chi) - (0 if table is None else 1)
+        kind = {0: "isotropic", 2: "tensor", 3: "one tensor per atom"}[depth]
+        kind += " of the first atom, turned for the others" if self.local else ""
+        mean = np.atleast_1d(self.chi if depth == 0 else np.einsum("...aa->...", self.chi) / 3)
+        mean = mean if depth < 3 else mean.reshape(-1, np.shape(self.chi)[-3]).mean(axis=1)
+        if table is None:
+            return f"{float(mean[0]):.6g} {self.unit}, {kind}"
+        first, last = (f"{float(mean[i]):.6g} {self.unit} at {float(table[i]):g} K" for i in (0, -1))
+        return f"{first} to {last}, {len(table)} temperatures, {kind}" if len(table) > 1 else f"{first}, {kind}"
+
     def at(self, temperature_K: float | None = None) -> FloatArray:
         """Shape (), (3, 3) or (n_atoms, 3, 3) float in µB/T per ion, at a temperature where chi is a table.
 

@@ -274,9 +274,10 @@ class _PrimitiveLattice:
         names: dict[tuple[int, ...], FloatArray] = {}
         n = len(self.centrings)
         # Whole reciprocal vectors of the cell, one of each class modulo those of the primitive lattice.
-        for step in np.ndindex(n, n, n):
-            q = np.array(step, dtype=float) @ self.basis.T
-            names.setdefault(tuple(int(x) for x in np.round(q % 1.0 * n) % n), np.array(step, dtype=float))
+        for whole in np.ndindex(n, n, n):
+            step = np.array(whole, dtype=float)
+            q = step @ self.basis.T
+            names.setdefault(tuple(int(x) for x in np.round(q % 1.0 * n) % n), step)
             if len(names) == n:
                 break
         size = float(np.abs(ordering.components).max(initial=0.0))

@@ -128,8 +128,10 @@ def _relations(k: FloatArray, reach: int) -> list[list[int]]:
     Tried are pairs of k with whole numbers up to MOST_CELLS, and all k together up to ``reach``.
     """
     basis: list[list[int]] = []
-    pairs = list(itertools.combinations(range(len(k)), 2)) or [(0,)]
-    for members, most in [*((pair, MOST_CELLS) for pair in pairs), (tuple(range(len(k))), reach)]:
+    groups: list[tuple[tuple[int, ...], int]] = [
+        (pair, MOST_CELLS) for pair in itertools.combinations(range(len(k)), 2)
+    ]
+    for members, most in [*groups, (tuple(range(len(k))), reach)]:
         for row in _whole_sums(k[list(members)], most):
             whole = [0] * len(k)
             for place, value in zip(members, row, strict=True):

@@ -227,9 +227,7 @@ class SupercellSymmetry:
         """True where an operation carries one arrangement (n_moments, 3) into the other."""
         size = 0.5 * (float(np.vdot(first, first)) + float(np.vdot(second, second)))
         overlaps = self._overlaps(first, second)
-        best = max(
-            overlaps[self.signs[:, 0]].max(initial=-np.inf), (-overlaps[self.signs[:, 1]]).max(initial=-np.inf)
-        )
+        best = max(overlaps[self.signs[:, 0]].max(initial=-np.inf), (-overlaps[self.signs[:, 1]]).max(initial=-np.inf))
         return bool(best >= size * (1 - 0.5 * SAME_MOMENTS**2))
 
     def orbit_size(self, moments: FloatArray) -> int:
@@ -237,7 +235,7 @@ class SupercellSymmetry:
         bar = float(np.vdot(moments, moments)) * (1 - 0.5 * SAME_MOMENTS**2)
         overlaps = self._overlaps(moments, moments)
         fixing = np.sum(overlaps[self.signs[:, 0]] >= bar) + np.sum(-overlaps[self.signs[:, 1]] >= bar)
-        return int(round(self.signs.sum() * self.n_cells / fixing))
+        return round(float(self.signs.sum()) * self.n_cells / float(fixing))
 
 
 def pattern_orbit(signs: np.ndarray, inverse: np.ndarray, factors: np.ndarray) -> int:

@@ -146,8 +146,9 @@ class Supercell:
         """Shape (n_k, 3) float in [0, 1). The k that the supercell allows, one of each pair ±k."""
         numbers = self.cells
         opposite = (-numbers) % np.array(self.repeat)
-        first = np.ravel_multi_index(tuple(numbers.T), self.repeat)
-        return np.asarray((numbers / np.array(self.repeat))[first <= np.ravel_multi_index(tuple(opposite.T), self.repeat)])
+        here = np.ravel_multi_index(tuple(numbers.T), self.repeat)
+        there = np.ravel_multi_index(tuple(opposite.T), self.repeat)
+        return np.asarray((numbers / np.array(self.repeat))[here <= there])
 
     def ordering(self, moments: FloatArray, name: str = "", notes: Sequence[str] = ()) -> Ordering:
         """The Ordering, on the crystal's own cell, of moments (n_moments, 3) in µB: components at commensurate k."""
@@ -208,17 +209,13 @@ class SupercellField:
         t = self._spectrum
         out = np.empty(spectrum.shape, dtype=complex)
         for a, columns in enumerate(((0, 5, 4), (5, 1, 3), (4, 3, 2))):
-            out[..., a] = sum(
-                np.matmul(t[..., c], spectrum[..., b, None])[..., 0] for b, c in enumerate(columns)
-            )
+            out[..., a] = sum(np.matmul(t[..., c], spectrum[..., b, None])[..., 0] for b, c in enumerate(columns))
         return np.asarray(fft.irfftn(out, s=shape, axes=(0, 1, 2)).reshape(-1, 3))
 
     def energy_eV(self, moments: FloatArray) -> float:
         """Energy of the supercell in eV: −½ Σ m·B − M·B_applied."""
         mean = moments * self.supercell.occupancies[:, None]
-        return float(
-            EV_PER_MUB_T * (-0.5 * np.vdot(mean, self.fields(moments)) - mean.sum(axis=0) @ self.applied_T)
-        )
+        return float(EV_PER_MUB_T * (-0.5 * np.vdot(mean, self.fields(moments)) - mean.sum(axis=0) @ self.applied_T))
 
 
 def _apply(tensors: FloatArray, moments: FloatArray) -> FloatArray:

@@ -38,6 +38,11 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         parts += ["", "Contact terms", "", bullets(contacts, width=width)] if contacts else []
     if document["sample"] is not None:
         parts += ["", "Sample", "", _sample(document["sample"], width)]
+    if document["susceptibility"]:
+        parts += ["", "Susceptibility", "", pairs(document["susceptibility"].items(), width=width)]
+    if document["abundances"]:
+        listed = [(name, short(share)) for name, share in document["abundances"].items()]
+        parts += ["", "Abundances stated", "", pairs(listed, width=width)]
     notes = [*document["crystal"]["notes"], *(n for entry in document["orderings"] for n in entry["notes"])]
     if notes:
         parts += ["", "Notes", "", bullets(notes, width=width)]

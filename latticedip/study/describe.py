@@ -71,6 +71,8 @@ def describe_study(study: Study) -> dict[str, Any]:
                 describe_probe(probe, study.crystal, set(sizes), own[0] if own else None) for probe in study.probes
             ],
             "sample": study.sample.to_dict(),
+            "susceptibility": {name: chi.words() for name, chi in study.susceptibility.items()},
+            "abundances": dict(study.abundances),
             "warnings": _study_warnings(study, sizes),
         },
     )
@@ -94,6 +96,8 @@ def describe_structure(path: Path, found: Crystal | Ordering) -> dict[str, Any]:
             "neighbours": magnetic_neighbours(crystal, sizes),
             "probes": [],
             "sample": None,
+            "susceptibility": {},
+            "abundances": {},
             "warnings": _crystal_warnings(crystal),
         },
     )
@@ -369,6 +373,7 @@ def _contact(term: Contact, point: FloatArray, ordering: Ordering | None) -> dic
 def _study_warnings(study: Study, sizes: Mapping[str, float]) -> list[str]:
     warnings = _crystal_warnings(study.crystal)
     known = set(sizes)
+    known |= {study.crystal.labels[i] for name in study.susceptibility for i in study.crystal.find(name)}
     for ordering in study.orderings:
         known |= {ordering.crystal.labels[i] for i in np.flatnonzero(ordering.is_magnetic)}
     magnetic_elements = {o.crystal.symbols[i] for o in study.orderings for i in np.flatnonzero(o.is_magnetic)}

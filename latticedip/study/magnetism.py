@@ -126,7 +126,7 @@ def _magnetic_names(study: Study) -> tuple[list[str], str]:
     if not names:
         raise StudyError(
             f"{str(study.path)!r} does not say which ions are magnetic. Give them a size in [moments], such as "
-            f'[moments] Mn = 4.6, or a susceptibility, such as [susceptibility] Mn = {_EXAMPLE}'
+            f"[moments] Mn = 4.6, or a susceptibility, such as [susceptibility] Mn = {_EXAMPLE}"
         )
     return list(names), "the orderings"
 

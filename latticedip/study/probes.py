@@ -13,8 +13,9 @@ from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
 from latticedip.study.directions import named_directions
 from latticedip.study.keys import Key
+from latticedip.study.probe_rules import RULE_KEYS, probes_by_rule
 
-PROBE_KEYS = ("name", "particle", "position", "site", "contact")
+PROBE_KEYS = ("name", "particle", "position", "site", "rule", "contact")
 CONTACT_KEYS = ("coupling_T_per_muB", "shell", "within", "moment_density_muB_per_A3")
 SHAPES = ("ellipsoid", "prism", "cylinder", "sphere", "plate", "needle", "tensor")
 SAMPLE_KEYS = (*SHAPES, "axes", "applied_T")
@@ -28,16 +29,22 @@ def read_probes(key: Key | None, crystal: Crystal) -> tuple[Probe, ...]:
     if key is None:
         return ()
     probes: list[Probe] = []
+    taken: dict[str, str] = {}
     for item in key.items("a list of tables, each headed [[probe]]"):
-        table = item.table(PROBE_KEYS)
-        probe = _probe(item, table, crystal)
-        names = [other.name for other in probes]
-        if probe.name in names:
-            where = f"probe[{names.index(probe.name) + 1}]"
-            if "name" in table:
-                raise table["name"].expected(f"a name of its own ({where} has this one)")
-            raise item.refuse(f"without `name` it is called {probe.name!r}, as {where} is already. Give it a name.")
-        probes.append(probe)
+        if isinstance(item.value, dict) and "rule" in item.value:
+            table = item.table(RULE_KEYS)
+            found = probes_by_rule(item, table, crystal)
+        else:
+            table = item.table(PROBE_KEYS)
+            found = [_probe(item, table, crystal)]
+        for probe in found:
+            if probe.name in taken:
+                where = taken[probe.name]
+                if "name" in table:
+                    raise table["name"].expected(f"a name of its own ({where} has this one)")
+                raise item.refuse(f"without `name` it is called {probe.name!r}, as {where} is already. Give it a name.")
+            taken[probe.name] = item.path
+            probes.append(probe)
     return tuple(probes)
 
 

@@ -1,8 +1,8 @@
 """The study file: a crystal, orderings, probes and a sample, read from TOML into the objects the calls take.
 
-Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample], [susceptibility], [abundances]. A key that is not known, a value of another type
-and a value that is missing are refused with the path of the key, the value, what was expected and the nearest
-known word. Items are counted from 1. Paths are relative to the study file.
+Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample], [susceptibility], [abundances]. A key that is
+not known, a value of another type and a value that is missing are refused with the path of the key, the value, what
+was expected and the nearest known word. Items are counted from 1. Paths are relative to the study file.
 """
 
 from __future__ import annotations
@@ -72,7 +72,7 @@ def read_study(path: str | os.PathLike[str]) -> Study:
     from latticedip.files.read import read_crystal
 
     where = Path(path)
-    root = Key(os.fspath(path), "", _load(where, os.fspath(path)))
+    root = Key(os.fspath(path), "", parse_tables(load_bytes(where, os.fspath(path)), os.fspath(path)))
     table = root.table(STUDY_KEYS)
     title = table["title"].text("a title in one line") if "title" in table else where.stem
     if "crystal" not in table:
@@ -84,14 +84,24 @@ def read_study(path: str | os.PathLike[str]) -> Study:
     block = read_block(source)
     with source["block" if block is not None else "file"].located():
         crystal = read_crystal(structure, block=block)
+    return assemble(table, crystal, title=title, path=where, files={"study": where, "crystal": structure})
+
+
+def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Path, files: dict[str, Path]) -> Study:
+    """The study of a crystal that was read already, from the other tables of a study file.
+
+    table: its keys, [crystal] and title left aside. path: the file that the paths in it are relative to.
+    files: what was read so far, by role; the files of orderings are added.
+
+    Raises StudyError as `read_study`.
+    """
     sizes = read_moments(table.get("moments"), crystal)
-    files = {"study": where, "crystal": structure}
-    orderings = read_orderings(table.get("ordering"), crystal, sizes, where.parent, files)
+    orderings = read_orderings(table.get("ordering"), crystal, sizes, path.parent, files)
     probes = read_probes(table.get("probe"), crystal)
     sample = read_sample(table.get("sample"), crystal)
     return Study(
         title,
-        where,
+        path,
         crystal,
         orderings,
         probes,
@@ -104,7 +114,8 @@ def read_study(path: str | os.PathLike[str]) -> Study:
     )
 
 
-def _load(path: Path, shown: str) -> dict[str, Any]:
+def load_bytes(path: Path, shown: str) -> bytes:
+    """The bytes of a study file; raises StudyError where it cannot be read or is too large to be one."""
     try:
         with path.open("rb") as stream:
             raw = stream.read(LARGEST_FILE + 1)
@@ -114,6 +125,11 @@ def _load(path: Path, shown: str) -> dict[str, Any]:
         raise StudyError(f"{shown!r}: is no path: {error}.") from None
     if len(raw) > LARGEST_FILE:
         raise StudyError(f"{shown}: is larger than 10 MB and so no study file.")
+    return raw
+
+
+def parse_tables(raw: bytes, shown: str) -> dict[str, Any]:
+    """The tables in the bytes of a study file; raises StudyError where they are not UTF-8 or not TOML."""
     try:
         # Some editors put a byte order mark in front of UTF-8.
         text = raw.decode("utf-8-sig")

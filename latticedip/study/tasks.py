@@ -12,10 +12,11 @@ from typing import TYPE_CHECKING, Any, TypeVar
 from latticedip.errors import InputError, StudyError, near_match
 
 if TYPE_CHECKING:
-    from latticedip.study.fields import Axes, Unit
     from latticedip.ordering.model import Ordering
     from latticedip.probe import Probe
+    from latticedip.study.fields import Axes, Unit
     from latticedip.study.schema import Study
+    from latticedip.study.spectra import SpectrumOptions
 
 T = TypeVar("T", "Ordering", "Probe")
 
@@ -133,9 +134,7 @@ def field(
     return field_document(study, fields, axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol)
 
 
-def rank(
-    study: Study, *, rotate: bool = False, orderings: Sequence[str] = (), tol: float = 1e-10
-) -> dict[str, Any]:
+def rank(study: Study, *, rotate: bool = False, orderings: Sequence[str] = (), tol: float = 1e-10) -> dict[str, Any]:
     """The document of `rank`: the orderings of a study by their energy per magnetic ion, lowest first.
 
     orderings: names of those that count; none: all.
@@ -149,6 +148,70 @@ def rank(
     study = choose(study, orderings=orderings)
     ranking = rank_orderings(study.orderings, sample=study.sample, rotate=rotate, probes=study.probes, tol=tol)
     return rank_document(study, ranking, rotate=rotate, orderings=orderings, tol=tol)
+
+
+def shift(
+    study: Study,
+    *,
+    temperatures_K: Sequence[float] = (),
+    rotate_about: str | None = None,
+    probes: Sequence[str] = (),
+    all_equivalent: bool = False,
+    tol: float = 1e-10,
+) -> dict[str, Any]:
+    """The document of `shift`: coupling tensors of every probe and, with a susceptibility, its shifts.
+
+    Arguments and errors as `shift_document`; StudyError for a study without probes.
+    """
+    from latticedip.study.shifts import shift_document
+
+    _need_probes(study, "a shift")
+    return shift_document(
+        choose(study, probes=probes),
+        temperatures_K=temperatures_K,
+        rotate_about=rotate_about,
+        probes=probes,
+        all_equivalent=all_equivalent,
+        tol=tol,
+    )
+
+
+def linewidth(
+    study: Study,
+    *,
+    direction: str | None = None,
+    nuclei: Sequence[str] = (),
+    probes: Sequence[str] = (),
+    all_equivalent: bool = False,
+) -> dict[str, Any]:
+    """The document of `linewidth`: static dipolar second moments and widths of every probe.
+
+    Arguments and errors as `linewidth_document`; StudyError for a study without probes.
+    """
+    from latticedip.study.linewidths import linewidth_document
+
+    _need_probes(study, "a linewidth")
+    return linewidth_document(
+        choose(study, probes=probes), direction=direction, nuclei=nuclei, probes=probes, all_equivalent=all_equivalent
+    )
+
+
+def spectrum(
+    study: Study, options: SpectrumOptions, *, orderings: Sequence[str] = (), probes: Sequence[str] = ()
+) -> dict[str, Any]:
+    """The document of `spectrum`: lines, bands, histograms and polarizations at every probe under every ordering.
+
+    orderings, probes: names of those that count; none: all.
+
+    Raises StudyError for a study without orderings or without probes, InputError for an unknown name, and what
+    `spectrum_document` raises.
+    """
+    from latticedip.study.spectra import spectrum_document
+
+    _need_orderings(study)
+    _need_probes(study, "a spectrum")
+    chosen = choose(study, orderings=orderings, probes=probes)
+    return spectrum_document(chosen, options, orderings=orderings, probes=probes)
 
 
 def demag(kind: str, lengths: Sequence[float] = ()) -> dict[str, Any]:

@@ -1,0 +1,236 @@
+"""Polarization of a spin that starts along one direction and turns about a static local field.
+
+The spin S of a particle with gyromagnetic ratio γ obeys dS/dt = γ S × B. With b = B/|B| and ω = γ|B| a signal along d
+that starts along p is
+
+    P(t) = (d·b)(p·b) + [d·p − (d·b)(p·b)] cos ωt − d·(b × p) sin ωt
+
+averaged over all fields that occur. In a powder without applied field every direction of b is alike, and the signal
+along p is 1/3 + 2/3 cos ωt. Nuclear moments add a static random field, taken as Gaussian with the same width Δ/γ in
+every component: Kubo and Toyabe (1967) without a field, Hayano et al., Phys. Rev. B 20, 850 (1979) along a field B,
+Kornilov and Pomjakushin, Phys. Lett. A 153, 364 (1991) in a powder.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from scipy.special import spherical_jn, wofz
+
+from latticedip.checks import FloatArray, as_float, as_floats, as_unit_vector, frozen
+from latticedip.errors import InputError
+from latticedip.observables.orbits import OrbitField
+from latticedip.observables.spectrum import Spectrum, free_turns
+from latticedip.particles import particle_named
+
+#: Below this ratio of frequency and width the closed form along a field loses digits and is integrated instead.
+SLOW = 0.1
+#: Points of that integral, and the time in units of 1/Δ beyond which nothing is added.
+GAUSS_POINTS, LONGEST = 48, 9.0
+#: Phases that stand for a wave: at least, at most, and beyond twice the largest angle ωt that is turned.
+LEAST_PHASES, MOST_PHASES = 128, 2**16
+#: Phases drawn where several waves run independently.
+SAMPLES = 2**14
+#: Fields times moments in time evaluated together.
+BLOCK = 2_000_000
+
+
+@dataclass(frozen=True, eq=False)
+class Polarization:
+    """A polarization against time. time_us: Shape (n,) in µs. values: Shape (n,), 1 for a spin along the detector.
+
+    powder: True for a powder. initial, detector: Shape (3,) unit vectors, Cartesian; None in a powder.
+    nuclear_width_per_us: Δ in 1/µs, 0 without nuclear moments. notes: sentences a report must repeat.
+    """
+
+    time_us: FloatArray
+    values: FloatArray
+    powder: bool
+    initial: FloatArray | None
+    detector: FloatArray | None
+    nuclear_width_per_us: float
+    notes: tuple[str, ...] = ()
+
+
+def polarization(
+    spectrum: Spectrum, time_us: Any, *, initial: Any = None, detector: Any = None, nuclear_width_per_us: float = 0.0
+) -> Polarization:
+    """Polarization against time in the fields of a spectrum.
+
+    spectrum: its positions, cells and domains are averaged over; its own smearing is not used. time_us: Shape (n,) in
+    µs, not below zero. initial: for a crystal, Shape (3,) Cartesian, the direction the spin starts along. detector:
+    the direction it is observed along; None: the initial one. nuclear_width_per_us: Δ in 1/µs of a static Gaussian
+    random field.
+
+    Raises InputError for a crystal without an initial direction, directions for a powder, a powder in an applied
+    field, or negative times and widths.
+    """
+    time = as_floats("time_us", time_us, (None,))
+    if np.any(time < 0):
+        raise InputError(f"time_us must not be below zero, got {float(time.min())!r}.")
+    delta = as_float("nuclear_width_per_us", nuclear_width_per_us, low=0.0)
+    if spectrum.powder:
+        if initial is not None or detector is not None:
+            raise InputError("initial and detector are directions in a crystal; a powder has none. Leave them out.")
+        if np.any(spectrum.applied_T):
+            raise InputError(
+                "the polarization of a powder is that without an applied field. Set the applied field to zero, or ask "
+                "for a crystal."
+            )
+        values = _powder(spectrum, time, delta)
+        return Polarization(frozen(time), frozen(values), True, None, None, delta, spectrum.notes)
+    if initial is None:
+        raise InputError("the polarization in a crystal needs the initial direction of the spin (Cartesian).")
+    start = as_unit_vector("initial", initial)
+    seen = start if detector is None else as_unit_vector("detector", detector)
+    values = _crystal(spectrum, time, start, seen, delta)
+    return Polarization(frozen(time), frozen(values), False, frozen(start), frozen(seen), delta, spectrum.notes)
+
+
+def kubo_toyabe(time_us: Any, width_per_us: float) -> FloatArray:
+    """Shape (n,) float. Static Gaussian Kubo–Toyabe function, 1/3 + 2/3 (1 − Δ²t²) exp(−Δ²t²/2).
+
+    time_us: Shape (n,) in µs. width_per_us: Δ in 1/µs.
+    """
+    time = as_floats("time_us", time_us, (None,))
+    return _powder_signal(time, np.zeros(1), as_float("width_per_us", width_per_us, low=0.0))[:, 0]
+
+
+def kubo_toyabe_along(time_us: Any, width_per_us: float, frequency_per_us: float) -> FloatArray:
+    """Shape (n,) float. The same along a field: Kubo–Toyabe function in a longitudinal field (Hayano et al. 1979).
+
+    time_us: Shape (n,) in µs. width_per_us: Δ in 1/µs. frequency_per_us: γB of the field in 1/µs (angular).
+    """
+    time = as_floats("time_us", time_us, (None,))
+    omega = np.array([abs(as_float("frequency_per_us", frequency_per_us))])
+    return _along(time, omega, as_float("width_per_us", width_per_us, low=0.0))[:, 0]
+
+
+# --- averages over the random field -----------------------------------------------------------------------
+
+
+def _cosine(time: FloatArray, omega: FloatArray, delta: float) -> FloatArray:
+    """Shape (n_t, n). ⟨cos |ω + δ| t⟩ over the random field δ: exp(−Δ²t²/2) (cos ωt − Δ²t sin(ωt)/ω)."""
+    angle = time[:, None] * omega
+    if not delta:
+        return np.asarray(np.cos(angle))
+    reach = (delta * time[:, None]) ** 2
+    return np.asarray(np.exp(-0.5 * reach) * (np.cos(angle) - reach * np.sinc(angle / np.pi)))
+
+
+def _sine(time: FloatArray, omega: FloatArray, delta: float) -> FloatArray:
+    """Shape (n_t, n). ⟨(b·ω/|ω|) sin |ω + δ| t⟩ = −(1/t) ∂⟨cos⟩/∂ω."""
+    angle = time[:, None] * omega
+    if not delta:
+        return np.asarray(np.sin(angle))
+    reach = (delta * time[:, None]) ** 2
+    # (sin x − x cos x)/x² is the spherical Bessel function j₁.
+    return np.asarray(np.exp(-0.5 * reach) * (np.sin(angle) - reach * spherical_jn(1, angle)))
+
+
+def _along(time: FloatArray, omega: FloatArray, delta: float) -> FloatArray:
+    """Shape (n_t, n). Polarization along the steady field, ⟨cos²θ + sin²θ cos |ω + δ| t⟩."""
+    if not delta:
+        return np.ones((len(time), len(omega)))
+    out = np.empty((len(time), len(omega)))
+    slow = omega < SLOW * delta
+    if np.any(~slow):
+        w = omega[~slow]
+        turn = np.exp(-0.5 * (delta * time[:, None]) ** 2 + 1j * time[:, None] * w)
+        # ∫₀ᵗ exp(−Δ²τ²/2) sin ωτ dτ by the Faddeeva function, which neither overflows nor cancels.
+        scale = delta * np.sqrt(2.0)
+        later = turn * wofz((w + 1j * delta**2 * time[:, None]) / scale)
+        integral = np.sqrt(np.pi / 2) / delta * (wofz(w / scale) - later).imag
+        out[:, ~slow] = 1 - 2 * (delta / w) ** 2 * (1 - turn.real) + 2 * delta**4 / w**3 * integral
+    if np.any(slow):
+        # The same written as 1 − 2Δ² ∫ τ exp(−Δ²τ²/2) [j₀(ωτ) − Δ²τ² j₁(ωτ)/(ωτ)] dτ, in which nothing cancels.
+        x, weight = np.polynomial.legendre.leggauss(GAUSS_POINTS)
+        end = np.minimum(time, LONGEST / delta)
+        tau = 0.5 * end[:, None] * (x + 1)
+        reach = (delta * tau) ** 2
+        angle = tau[:, :, None] * omega[slow]
+        divisor = np.where(angle > 1e-4, angle, 1.0)
+        small = np.where(angle > 1e-4, spherical_jn(1, angle) / divisor, 1 / 3 - angle**2 / 30)
+        kernel = np.sinc(angle / np.pi) - reach[:, :, None] * small
+        factor = tau * np.exp(-0.5 * reach) * (0.5 * end[:, None] * weight)
+        out[:, slow] = 1 - 2 * delta**2 * np.einsum("tg,tgn->tn", factor, kernel)
+    return out
+
+
+def _powder_signal(time: FloatArray, omega: FloatArray, delta: float) -> FloatArray:
+    return np.asarray(1 / 3 + 2 / 3 * _cosine(time, omega, delta))
+
+
+# --- averages over positions, cells and domains --------------------------------------------------------------
+
+
+def _powder(spectrum: Spectrum, time: FloatArray, delta: float) -> FloatArray:
+    gamma = 2 * np.pi * spectrum.MHz_per_T
+    found = spectrum.distribution
+    total = np.zeros(len(time))
+    for part, weight in zip(found.parts, found.weights, strict=True):
+        sizes = part.nodes(_phases_needed(gamma * part.edges[-1] * float(time.max(initial=0.0))))
+        for block in _blocks(len(sizes), len(time)):
+            total += weight / len(sizes) * _powder_signal(time, gamma * sizes[block], delta).sum(axis=1)
+    return total
+
+
+def _crystal(
+    spectrum: Spectrum, time: FloatArray, start: FloatArray, seen: FloatArray, delta: float
+) -> FloatArray:
+    gamma = 2 * np.pi * spectrum.MHz_per_T
+    sign = particle_named(spectrum.probe.particle).gamma_sign
+    total = np.zeros(len(time))
+    count = 0
+    for orbit in spectrum.orbits:
+        for vectors in _vectors(orbit, gamma * float(time.max(initial=0.0))):
+            count += len(vectors)
+            for block in _blocks(len(vectors), len(time)):
+                total += _turned(time, vectors[block], start, seen, gamma, sign, delta).sum(axis=1)
+    return total / count
+
+
+def _turned(
+    time: FloatArray, vectors: FloatArray, start: FloatArray, seen: FloatArray, gamma: float, sign: int, delta: float
+) -> FloatArray:
+    """Shape (n_t, n). Signals in fields (n, 3)."""
+    size = np.linalg.norm(vectors, axis=1)
+    # Without a field the direction does not matter: nothing turns, or the random field has no axis.
+    unit = np.divide(vectors, size[:, None], out=np.tile([0.0, 0.0, 1.0], (len(size), 1)), where=size[:, None] > 0)
+    omega = gamma * size
+    both = (unit @ seen) * (unit @ start)
+    crossed = np.cross(unit, start) @ seen
+    along = _along(time, omega, delta)
+    # The three signals along and across the field add up to 1 + 2⟨cos⟩, the trace of a rotation.
+    across = 0.5 * (1 + 2 * _cosine(time, omega, delta) - along)
+    return np.asarray(both * along + (seen @ start - both) * across - sign * crossed * _sine(time, omega, delta))
+
+
+def _vectors(orbit: OrbitField, angle_per_T: float) -> Iterator[FloatArray]:
+    """Fields (m, 3) that stand for all on an orbit, the same number for each position."""
+    phases = orbit.phases
+    if phases.n_free == 0:
+        turns = phases.listed
+    elif phases.n_free == 1:
+        largest = float((np.linalg.norm(orbit.steady, axis=1) + np.abs(orbit.waves).sum(axis=(0, 2))).max())
+        n = _phases_needed(angle_per_T * largest * int(np.abs(phases.free).max()))
+        steps = np.arange(n)[:, None] / n * phases.free[0]
+        turns = (phases.listed[:, None] + steps[None]).reshape(-1, phases.listed.shape[1])
+    else:
+        turns = free_turns(orbit, SAMPLES, 0)
+    for row in range(len(orbit.steady)):
+        yield np.asarray(orbit.steady[row] + (np.exp(-2j * np.pi * turns) @ orbit.waves[:, row]).real)
+
+
+def _phases_needed(angle: float) -> int:
+    """The average of a function that turns by ``angle`` over equally spaced phases converges beyond twice as many."""
+    return int(np.clip(2 * angle + 64, LEAST_PHASES, MOST_PHASES))
+
+
+def _blocks(n: int, n_times: int) -> Iterator[slice]:
+    step = max(1, BLOCK // max(1, n_times))
+    for start in range(0, n, step):
+        yield slice(start, min(n, start + step))

@@ -1,0 +1,221 @@
+"""Spectra and polarizations as documents: per ordering and probe its lines, bands, histogram and P(t)."""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any, Literal
+
+import numpy as np
+
+from latticedip.errors import InputError
+from latticedip.observables.linewidth import linewidth
+from latticedip.observables.polarization import polarization
+from latticedip.observables.spectrum import Spectrum, spectrum
+from latticedip.ordering.domains import domains
+from latticedip.study.directions import direction_of
+from latticedip.study.documents import document, ordering_head
+from latticedip.study.fields import common_boundary
+
+if TYPE_CHECKING:
+    from latticedip.probe import Probe
+    from latticedip.study.schema import Study
+
+DomainChoice = Literal["given", "list", "average"]
+
+#: Most bins of a histogram and moments in time of a polarization.
+MOST_BINS, MOST_POINTS = 100_000, 100_000
+
+
+@dataclass(frozen=True)
+class SpectrumOptions:
+    """What is asked of the spectra of a study.
+
+    powder: True for a powder. domains: the ordering as given, each of its domains, or their average. applied_T: in
+    place of the study's applied field, Cartesian. bins: of the histogram. width_T: standard deviation of a Gaussian.
+    nuclear_per_us: Δ of the static field of nuclear moments in 1/µs, or "auto" to work it out. time_us: the last
+    moment of P(t), with `points` moments; None: no P(t). initial, detector: directions in a crystal, as `direction_of`
+    takes them. seed: of the quasi-random phases.
+    """
+
+    powder: bool = False
+    domains: DomainChoice = "given"
+    applied_T: tuple[float, float, float] | None = None
+    bins: int = 200
+    width_T: float = 0.0
+    nuclear_per_us: float | Literal["auto"] = 0.0
+    time_us: float | None = None
+    points: int = 401
+    initial: str | None = None
+    detector: str | None = None
+    seed: int = 0
+    tol: float = 1e-10
+
+
+def spectrum_document(
+    study: Study, options: SpectrumOptions, *, orderings: Sequence[str] = (), probes: Sequence[str] = ()
+) -> dict[str, Any]:
+    """The document of `spectrum` for all orderings and probes of a study.
+
+    orderings, probes: the names that were asked for; none: all.
+
+    Raises InputError for options that do not fit, and what the spectra raise.
+    """
+    _check(options)
+    directions = {
+        name: None if text is None else direction_of(study.crystal, text, f"--{name}")
+        for name, text in (("initial", options.initial), ("detector", options.detector))
+    }
+    widths = {probe.name: _nuclear_width(study, probe, options) for probe in study.probes}
+    entries, boundaries = [], []
+    for ordering in study.orderings:
+        found: list[dict[str, Any]] = []
+        notes: list[str] = []
+        listed = domains(ordering) if options.domains == "list" else ()
+        for probe in study.probes:
+            for domain in listed or (None,):
+                placed = ordering if domain is None else domain.ordering
+                result = spectrum(
+                    placed,
+                    probe,
+                    sample=study.sample,
+                    applied_T=options.applied_T,
+                    powder=options.powder,
+                    average_domains=options.domains == "average",
+                    width_T=options.width_T,
+                    nuclear_width_T=widths[probe.name] / (2 * math.pi * probe.MHz_per_T),
+                    seed=options.seed,
+                    tol=options.tol,
+                )
+                entry = _entry(result, options, widths[probe.name], directions)
+                if domain is not None:
+                    entry["domain"] = {
+                        "number": domain.number,
+                        "kind": domain.kind,
+                        "operation": domain.operation,
+                        "k": domain.ordering.k.tolist(),
+                    }
+                found.append(entry)
+                notes += result.notes
+        placed_by = "" if ordering.reference is None else ordering.reference.how
+        boundaries.append(found[0]["boundary"])
+        entries.append(
+            {
+                **ordering_head(ordering),
+                "boundary": found[0]["boundary"],
+                "spectra": found,
+                "notes": [note for note in dict.fromkeys(notes) if note not in placed_by],
+            }
+        )
+    return document(
+        "spectrum",
+        files=study.files,
+        options={
+            **dataclasses.asdict(options),
+            "orderings": list(orderings) or None,
+            "probes": list(probes) or None,
+        },
+        boundary=common_boundary(boundaries),
+        results={
+            "title": study.title,
+            "specimen": "powder" if options.powder else "crystal",
+            "applied_T": list(study.sample.applied_T.tolist() if options.applied_T is None else options.applied_T),
+            "sample": study.sample.to_dict(),
+            "orderings": entries,
+        },
+    )
+
+
+def spectrum_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
+    """The rows of a spectrum document for CSV: P(t) where it was asked for, else the histogram."""
+    rows = []
+    for entry in doc["orderings"]:
+        for found in entry["spectra"]:
+            lead = {"ordering": entry["ordering"], "k": entry["k"], "probe": found["probe"]}
+            if found["domain"] is not None:
+                lead |= {"domain": found["domain"]["number"]}
+            if found["polarization"] is not None:
+                signal = found["polarization"]
+                columns = {"time_us": signal["time_us"], "polarization": signal["polarization"]}
+            else:
+                bins = found["histogram"]
+                field, frequency = bins["field_limits_T"], bins["frequency_limits_MHz"]
+                columns = {
+                    "field_from_T": field[:-1],
+                    "field_to_T": field[1:],
+                    "frequency_from_MHz": frequency[:-1],
+                    "frequency_to_MHz": frequency[1:],
+                    "share": bins["share"],
+                    "density_per_T": bins["density_per_T"],
+                    "density_per_MHz": bins["density_per_MHz"],
+                }
+            for values in zip(*columns.values(), strict=True):
+                rows.append({**lead, **dict(zip(columns, values, strict=True)), "boundary": entry["boundary"]})
+    return rows
+
+
+def _entry(
+    result: Spectrum, options: SpectrumOptions, nuclear_per_us: float, directions: Mapping[str, Any]
+) -> dict[str, Any]:
+    limits, share = result.binned(options.bins)
+    width = float(limits[1] - limits[0])
+    factor = result.MHz_per_T
+    entry: dict[str, Any] = {
+        **result.to_dict(),
+        "nuclear_width_per_us": nuclear_per_us,
+        "domain": None,
+        "histogram": {
+            "field_limits_T": limits.tolist(),
+            "frequency_limits_MHz": (limits * factor).tolist(),
+            "share": share.tolist(),
+            "density_per_T": (share / width).tolist(),
+            "density_per_MHz": (share / (width * factor)).tolist(),
+        },
+        "polarization": None,
+    }
+    if options.time_us is not None:
+        time = np.linspace(0.0, options.time_us, options.points)
+        signal = polarization(
+            result,
+            time,
+            initial=directions["initial"],
+            detector=directions["detector"],
+            nuclear_width_per_us=nuclear_per_us,
+        )
+        entry["polarization"] = {"time_us": time.tolist(), "polarization": signal.values.tolist()}
+    return entry
+
+
+def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> float:
+    """Δ of the nuclear moments round a probe in 1/µs."""
+    if options.nuclear_per_us != "auto":
+        return options.nuclear_per_us
+    if probe.particle != "muon":
+        raise InputError(
+            f"{probe.name}: the static width of nuclear moments is worked out for muons only, and the probe is "
+            f"{probe.particle}. Give the width as a number, or name the probes to take."
+        )
+    position = probe.position
+    if probe.site is not None:
+        position = study.crystal.positions[study.crystal.find(probe.site)[0]]
+    found = linewidth(study.crystal, position, particle="muon", displaced=probe.displaced).zero_field_width_per_us
+    assert found is not None
+    return found
+
+
+def _check(options: SpectrumOptions) -> None:
+    for name, value, most in (("bins", options.bins, MOST_BINS), ("points", options.points, MOST_POINTS)):
+        if not 2 <= value <= most:
+            raise InputError(f"{name} must lie between 2 and {most}, got {value}.")
+    if options.time_us is not None and not (math.isfinite(options.time_us) and options.time_us > 0):
+        raise InputError(f"the time must be a finite number of µs above 0, got {options.time_us}.")
+    if options.time_us is None and (options.initial is not None or options.detector is not None):
+        raise InputError("an initial direction or a detector belongs to a polarization: ask for one with a time.")
+    if options.time_us is not None and not options.powder and options.initial is None:
+        raise InputError(
+            "the polarization in a crystal needs the direction in which the spin starts (--initial c, for "
+            "example); "
+            "for a powder say so (--powder)."
+        )
