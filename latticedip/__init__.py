@@ -36,6 +36,7 @@ _HOMES = {
     "orbit_field": "latticedip.observables.orbits",
     "paramagnetic_shift": "latticedip.observables.shift",
     "polarization": "latticedip.observables.polarization",
+    "propose": "latticedip.analysis.propose",
     "rank": "latticedip.analysis.rank",
     "read_crystal": "latticedip.files.read",
     "read_ordering": "latticedip.files.read",

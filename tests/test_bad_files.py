@@ -243,41 +243,38 @@ MAGCIF = {
     ),
     "modulated operations": (
         change(("_space_group_symop_magn_operation.xyz", "_space_group_symop_magn_ssg_operation.algebraic")),
-        "bad.mcif: this is a modulated structure in superspace "
-        "(_space_group_symop_magn_ssg_operation.algebraic), which is not read. Give a commensurate "
-        "description in the magnetic cell, or the average structure as [crystal] and the modulation as "
-        "k, cosine and sine in a study.",
+        "bad.mcif: it describes a modulation (_space_group_symop_magn_ssg_operation.algebraic), but gives no "
+        "modulation wave vector (_cell_wave_vector.x, .y and .z).",
     ),
     "modulated, prototype": (
         change(("_space_group_symop_magn_operation.xyz", "_space_group_symop.magn_ssg_operation_algebraic")),
-        "bad.mcif: this is a modulated structure in superspace "
-        "(_space_group_symop.magn_ssg_operation_algebraic), which is not read. Give a commensurate "
-        "description in the magnetic cell, or the average structure as [crystal] and the modulation as "
-        "k, cosine and sine in a study.",
+        "bad.mcif: it describes a modulation (_space_group_symop.magn_ssg_operation_algebraic), but gives no "
+        "modulation wave vector (_cell_wave_vector.x, .y and .z).",
     ),
     "modulated cell": (
         change(("loop_\n_space_group_symop_magn_operation.id", "_cell_wave_vector_x 0.2\nloop_\n_id")),
-        "bad.mcif: this is a modulated structure in superspace (_cell_wave_vector_x), which is not read. "
-        "Give a commensurate description in the magnetic cell, or the average structure as [crystal] and "
-        "the modulation as k, cosine and sine in a study.",
+        "bad.mcif: _cell_wave_vector.y is missing beside _cell_wave_vector_x.",
     ),
     "modulation by dimension": (
         change(("_cell_length_a 6", "_cell_length_a 6\n_cell_modulation_dimension 1")),
-        "bad.mcif: this is a modulated structure in superspace (_cell_modulation_dimension), which is "
-        "not read. Give a commensurate description in the magnetic cell, or the average structure as "
-        "[crystal] and the modulation as k, cosine and sine in a study.",
+        "bad.mcif: it describes a modulation (_cell_modulation_dimension), but gives no modulation "
+        "wave vector (_cell_wave_vector.x, .y and .z).",
+    ),
+    "modulation without its operations": (
+        change(("_cell_length_a 6", "_cell_length_a 6\n_cell_wave_vector.xyz [0 0 0.2]")),
+        "bad.mcif: it describes a modulation (_cell_wave_vector.xyz), and _space_group_symop_magn_operation.xyz alone "
+        "does not say how that changes. Give _space_group_symop_magn_ssg_operation.algebraic; where all atoms of the "
+        "cell are listed: 'x1,x2,x3,x4,+1'.",
     ),
     "Fourier moments alone": (
         GOOD[: GOOD.index("loop_\n_atom_site_moment")] + "loop_\n_atom_site_moment_Fourier_param.cos\n1.0\n",
-        "bad.mcif: this is a modulated structure in superspace (_atom_site_moment_Fourier_param.cos), "
-        "which is not read. Give a commensurate description in the magnetic cell, or the average "
-        "structure as [crystal] and the modulation as k, cosine and sine in a study.",
+        "bad.mcif: it describes a modulation (_atom_site_moment_Fourier_param.cos), but gives no modulation "
+        "wave vector (_cell_wave_vector.x, .y and .z).",
     ),
     "Fourier moments": (
         GOOD + "loop_\n_atom_site_moment_Fourier_param_cos\n1.0\n",
-        "bad.mcif: this is a modulated structure in superspace (_atom_site_moment_Fourier_param_cos), "
-        "which is not read. Give a commensurate description in the magnetic cell, or the average "
-        "structure as [crystal] and the modulation as k, cosine and sine in a study.",
+        "bad.mcif: it describes a modulation (_atom_site_moment_Fourier_param_cos), but gives no modulation "
+        "wave vector (_cell_wave_vector.x, .y and .z).",
     ),
     "OG setting": (
         change(("_symop_magn_centering.xyz", "_symop_magn_OG_centering.xyz")),

@@ -147,6 +147,78 @@ def test_rank_on_screen(folder: Path) -> None:
     assert "boundary  net moment without a stated shape: N = 0" in result.stdout
 
 
+def test_tied_rows_keep_the_order_of_the_file(folder: Path) -> None:
+    assert [row["ordering"] for row in document("rank", "study.toml")["rows"][:2]] == ["=rods", "rods turned over"]
+    head, rest = STUDY.split("[[ordering]]", 1)
+    ferromagnet, rods, turned = rest.split("[[probe]]", 1)[0].split("[[ordering]]")
+    Path("study.toml").write_text("[[ordering]]".join([head, turned, rods, ferromagnet]), encoding="utf-8")
+    assert [row["ordering"] for row in document("rank", "study.toml")["rows"][:2]] == ["rods turned over", "=rods"]
+
+
+def test_parts_of_the_energy_that_are_zero_are_left_out_with_a_reason(folder: Path) -> None:
+    shape = "no energy of the shape: no demagnetizing field for any of these orderings"
+    applied = "no energy in an applied field: no field is applied, or no ordering has a net moment"
+    assert document("rank", "study.toml")["zero_parts"] == {"shape": shape, "applied": applied}
+    text = " ".join(run("rank", "study.toml").stdout.split())
+    assert shape in text and applied in text and "Parts of the energy" not in text
+    Path("study.toml").write_text(STUDY + "[sample]\nsphere = true\n", encoding="utf-8")
+    assert document("rank", "study.toml")["zero_parts"] == {"applied": applied}
+    lines = run("rank", "study.toml").stdout.split("Parts of the energy")[1].splitlines()
+    assert lines[2].split() == ["rank", "ordering", "dipolar", "shape"]
+    Path("study.toml").write_text(STUDY + "[sample]\nsphere = true\napplied_T = [0, 0, 1]\n", encoding="utf-8")
+    assert document("rank", "study.toml")["zero_parts"] == {}
+
+
+def test_fields_that_vanish_are_one_row(folder: Path) -> None:
+    """Two points between antiparallel moments: both fields are rounding errors of different size."""
+    moments = "loop_\n_atom_site_moment.label\n" + "".join(f"_atom_site_moment.crystalaxis_{x}\n" for x in "xyz")
+    doubled = CUBE.replace("_cell_length_c 4.0", "_cell_length_c 8.0") + "Mn2 Mn 0 0 0.5\n"
+    Path("doubled.mcif").write_text(doubled + moments + "Mn1 0 0 2\nMn2 0 0 -2\n", encoding="utf-8")
+    Path("study.toml").write_text(STUDY + '[[ordering]]\nname = "doubled"\nfile = "doubled.mcif"\n', encoding="utf-8")
+    result = run("rank", "study.toml", "--ordering", "doubled")
+    assert result.exit_code == 0, result.stderr
+    (line,) = [line for line in result.stdout.splitlines() if "muon A" in line]
+    assert line.split()[-1] == "2" and float(line.split()[-3]) == 0
+    rows = list(csv.DictReader(run("rank", "study.toml", "--ordering", "doubled", "--csv", "-").stdout.splitlines()))
+    assert rows[0]["muon A: points"] == "2"
+
+
+def test_an_ordering_in_its_own_cell_says_where_it_was_evaluated(folder: Path) -> None:
+    moments = "loop_\n_atom_site_moment.label\n" + "".join(f"_atom_site_moment.crystalaxis_{x}\n" for x in "xyz")
+    doubled = CUBE.replace("_cell_length_c 4.0", "_cell_length_c 8.0") + "Mn2 Mn 0 0 0.5\n"
+    Path("doubled.mcif").write_text(doubled + moments + "Mn1 0 0 2\nMn2 0 0 -2\n", encoding="utf-8")
+    Path("study.toml").write_text(STUDY + '[[ordering]]\nname = "doubled"\nfile = "doubled.mcif"\n', encoding="utf-8")
+    (entry,) = document("field", "study.toml", "--ordering", "doubled", "--probe", "muon A")["orderings"]
+    assert entry["own_cell_placed"].startswith("matched to [crystal] by lattice and sites (a,b,2c;0,0,0; ")
+    positions = [(row["position_in_reference_cell"], row["position"], row["multiplicity"]) for row in entry["rows"]]
+    assert positions == [([0.5, 0.5, 0.5], [0.5, 0.5, 0.25], 2), ([0.5, 0.5, 0.5], [0.5, 0.5, 0.75], 2)]
+    ranked = document("rank", "study.toml")["rows"]
+    placed = {row["ordering"]: row["own_cell_placed"] for row in ranked}
+    assert placed == {"ferromagnet": None, "=rods": None, "rods turned over": None, "doubled": entry["own_cell_placed"]}
+    point = next(row for row in ranked if row["ordering"] == "doubled")["fields"]["muon A"][0]
+    assert (point["position"], point["position_in_reference_cell"]) == ([0.5, 0.5, 0.25], [0.5, 0.5, 0.5])
+    words = "doubled: has a cell of its own, matched to [crystal] by lattice and sites (a,b,2c;0,0,0;"
+    assert words in " ".join(run("rank", "study.toml").stdout.split())
+    text = " ".join(run("field", "study.toml", "--ordering", "doubled").stdout.split())
+    assert "its own cell matched to [crystal] by lattice and sites (a,b,2c;0,0,0;" in text
+    assert "muon A, 1 of 2" in text and "in its own cell" in text
+
+
+def test_only_the_orderings_and_probes_that_are_named(folder: Path) -> None:
+    doc = document("rank", "study.toml", "--ordering", "rods turned over", "--ordering", "ferromagnet")
+    assert [row["ordering"] for row in doc["rows"]] == ["rods turned over", "ferromagnet"]
+    assert doc["inputs"]["options"]["orderings"] == ["rods turned over", "ferromagnet"]
+    doc = document("field", "study.toml", "--ordering", "=rods", "--probe", "on site")
+    assert [(o["ordering"], [row["probe"] for row in o["rows"]]) for o in doc["orderings"]] == [("=rods", ["on site"])]
+    assert refused("rank", "study.toml", "--ordering", "ferromagnt") == (
+        "Error: the study has no ordering named 'ferromagnt'. "
+        "Those it has: 'ferromagnet', '=rods', 'rods turned over'. Did you mean 'ferromagnet'?\n"
+    )
+    assert refused("field", "study.toml", "--probe", "muon B") == (
+        "Error: the study has no probe named 'muon B'. Those it has: 'muon A', 'on site'. Did you mean 'muon A'?\n"
+    )
+
+
 def test_rotate_finds_the_cubic_directions(folder: Path) -> None:
     doc = document("rank", "study.toml", "--rotate")
     by_name = {row["ordering"]: row for row in doc["rows"]}
@@ -233,6 +305,12 @@ def test_field_axes_and_units(folder: Path, axes: str, unit: str) -> None:
     else:
         key = f"field_{unit}" if axes == "cartesian" else f"field_abc_{unit}"
         assert row[key] == pytest.approx([0, 0, field], rel=1e-6, abs=1e-8 * field)
+
+
+def test_a_field_within_its_error_has_no_direction(folder: Path) -> None:
+    row = document("field", "study.toml", "--ordering", "=rods", "--axes", "polar")["orderings"][0]["rows"][0]
+    assert row["field_size_T"] == pytest.approx(0, abs=1e-9)
+    assert row["field_theta_deg"] is None and row["dipolar_phi_deg"] is None
 
 
 def test_crystal_axes_of_an_oblique_cell(folder: Path) -> None:
@@ -454,6 +532,9 @@ def test_verbose_reports_on_stderr(folder: Path) -> None:
     assert result.stderr.startswith("read study.toml: 1 sites, 3 orderings, 2 probes\ndone in ")
     assert run("rank", "study.toml").stderr == ""
     assert run("rank", "study.toml").stdout == result.stdout
+    behind = run("rank", "study.toml", "-v")
+    assert behind.stderr.startswith("read study.toml: 1 sites, 3 orderings, 2 probes\ndone in ")
+    assert run("rank", "study.toml").stderr == ""
 
 
 def test_version() -> None:

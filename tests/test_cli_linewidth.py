@@ -174,5 +174,7 @@ def test_wrong_input() -> None:
     result = run("--direction", "x")
     assert (result.exit_code, result.stdout) == (2, "")
     assert result.stderr.startswith("Error: --direction: got 'x', expected a crystal direction: a, b, c,")
+    write("[abundances]\n1H = 0.9\n2H = 0.3\n")
+    assert run().stderr == "Error: study.toml: `abundances`: abundances of 1H, 2H add up to 1.2, more than 1.\n"
     Path("study.toml").write_text(STUDY.split("[[probe]]")[0], encoding="utf-8")
     assert "'study.toml' has no [[probe]], so there is no place to ask for a linewidth." in run().stderr

@@ -10,6 +10,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import latticedip as ld
+from latticedip.report.show import show_text
+from latticedip.study.tasks import show
 
 DATA = Path(__file__).parent / "data" / "study"
 
@@ -120,6 +122,39 @@ def test_a_byte_order_mark_and_windows_line_ends_are_taken(tmp_path):
     assert ld.read_study(str(path)).title == "café"
 
 
+def test_susceptibilities_and_abundances(tmp_path):
+    study = study_of(
+        tmp_path,
+        """
+[susceptibility]
+Mn1 = { chi = [[1, 0, 0], [0, 1, 0], [0, 0, 2]], unit = "muB/T", local = true }
+O = { chi = [0.02, 0.01], unit = "cm3/mol", temperatures_K = [100, 50] }
+[abundances]
+17O = 0.4
+""",
+        crystal="tetragonal.cif",
+    )
+    manganese, oxygen = study.susceptibility.values()
+    assert list(study.susceptibility) == ["Mn1", "O"]
+    assert (manganese.unit, manganese.local) == ("muB/T", True)
+    np.testing.assert_array_equal(manganese.at(), np.diag([1, 1, 2]))
+    np.testing.assert_array_equal(oxygen.temperatures_K, [50, 100])
+    np.testing.assert_array_equal(oxygen.chi, [0.01, 0.02])
+    assert study.abundances == {"17O": 0.4}
+    assert manganese.words() == "1.33333 muB/T, tensor of the first atom, turned for the others"
+    assert oxygen.words() == "0.01 cm3/mol at 50 K to 0.02 cm3/mol at 100 K, 2 temperatures, isotropic"
+
+
+def test_what_show_says_of_susceptibilities_and_abundances(tmp_path):
+    text = '[susceptibility]\nMn = { chi = 0.01, unit = "cm3/mol" }\n[abundances]\n17O = 0.4\n'
+    shown = show(study_of(tmp_path, text, crystal="tetragonal.cif").path)
+    assert shown["susceptibility"] == {"Mn": "0.01 cm3/mol, isotropic"}
+    assert shown["abundances"] == {"17O": 0.4}
+    assert not any("often carries a moment" in warning for warning in shown["warnings"])
+    words = " ".join(show_text(shown).split())
+    assert "Susceptibility Mn 0.01 cm3/mol, isotropic Abundances stated 17O 0.4" in words
+
+
 # Signs
 
 
@@ -173,7 +208,7 @@ def test_a_size_of_zero_takes_a_label_out(tmp_path):
 def test_directions_by_label(tmp_path):
     study = study_of(
         tmp_path,
-        '[moments]\nCo1 = 2\nCo2 = 1\n[[ordering]]\nk = [0, 0, 0]\nalong = { Co1 = [0, 0, 2], Co2 = [3, 0, 0] }\n',
+        "[moments]\nCo1 = 2\nCo2 = 1\n[[ordering]]\nk = [0, 0, 0]\nalong = { Co1 = [0, 0, 2], Co2 = [3, 0, 0] }\n",
     )
     crystal, ordering = study.crystal, study.orderings[0]
     np.testing.assert_array_equal(ordering.moments()[0, list(crystal.find("Co1"))], [[0, 0, 2]] * 4)
@@ -236,7 +271,7 @@ def test_phase_cell_counts_cells(tmp_path):
     [("[[1, 0, 0], [0, 2, 0]]", {0.16: 1, 0.66: 1, 0.84: 2, 0.34: 2}), ("[[1,0,0],[2,0,0],[3,0,0],[4,0,0]]", None)],
 )
 def test_a_triple_per_atom(tmp_path, entries, values):
-    study = study_of(tmp_path, f'[[ordering]]\nk = [0, 0, 0]\ncosine = {{ Co1 = {entries} }}\n')
+    study = study_of(tmp_path, f"[[ordering]]\nk = [0, 0, 0]\ncosine = {{ Co1 = {entries} }}\n")
     sizes = np.linalg.norm(study.orderings[0].moments()[0], axis=1)
     heights = {round(float(z), 2): float(s) for z, s in zip(study.crystal.positions[:, 2], sizes, strict=True) if s}
     assert heights == (values or {0.16: 1, 0.84: 2, 0.34: 3, 0.66: 4})
@@ -277,7 +312,7 @@ def test_orientations(tmp_path):
     straight = np.diag(ld.Sample.ellipsoid([2, 1, 0.3]).demagnetizing_tensor)
     # The first axis lies along c, the second along a, the third along b.
     np.testing.assert_allclose(np.diag(flat.demagnetizing_tensor), straight[[1, 2, 0]], atol=1e-12)
-    prism = study_of(tmp_path, '[sample]\nprism = [2, 1, 0.3]\naxes = [[1, 0, 0], [1, 1, 0]]\n').sample
+    prism = study_of(tmp_path, "[sample]\nprism = [2, 1, 0.3]\naxes = [[1, 0, 0], [1, 1, 0]]\n").sample
     np.testing.assert_allclose(
         prism.demagnetizing_tensor, ld.Sample.prism([2, 1, 0.3]).demagnetizing_tensor, atol=1e-12
     )

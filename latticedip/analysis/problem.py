@@ -130,11 +130,6 @@ class SearchProblem:
             return np.zeros((self.n_units, 3))
         return -EV_PER_MUB_T * self.copies * self.weights[:, None] * self.sample.applied_T[None]
 
-    @property
-    def has_field(self) -> bool:
-        """True where an applied field tells a pattern from its reverse."""
-        return bool(self.has_uniform_part and np.any(self.sample.applied_T))
-
     @cached_property
     def dense(self) -> FloatArray:
         """Shape (n_units, n_units, 6) float in eV. The form between all units; for few of them."""

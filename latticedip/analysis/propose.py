@@ -56,8 +56,8 @@ class ProposalRow(RankingRow):
     multiplicity: arrangements that are the same by symmetry, itself included: sign patterns of the searched set for a
         ± pattern (reversal counts), else arrangements of moments over the supercell.
     origins: which searches found it, of "exhaustive", "symmetry", "mode" and "annealing".
-    bns_number: number of its magnetic space group (Belov, Neronova and Smirnova), or None where the magnetic cell is too
-        large (more than 256 atoms) or k does not repeat within twelve cells.
+    bns_number: number of its magnetic space group (Belov, Neronova and Smirnova), or None where the magnetic cell is
+        too large (more than 256 atoms), k does not repeat within twelve cells, or spglib does not recognise the group.
     """
 
     multiplicity: int = 1
@@ -78,7 +78,7 @@ class ProposalRow(RankingRow):
 class Proposal(Ranking):
     """A Ranking of proposed orderings, all on the crystal given; rows are `ProposalRow`.
 
-    mode: the lowest dipolar mode, whose energy no ordering of these moments can undercut (None where it was not sought).
+    mode: the lowest dipolar mode, whose energy no ordering of these moments can undercut, or None (not sought).
     restarts, restarts_at_best: of the annealing; 0 where there was none.
     """
 
@@ -119,13 +119,13 @@ def propose(
 
     sizes: label or element to moment in µB. supercell: three whole numbers; every pattern that repeats with it is
     searched. along: Cartesian direction of all moments; None: each ± pattern on its own best axis, and then also what
-    symmetry allows at every k of the supercell with 2k a lattice vector (collinear or not), and the lowest dipolar mode.
+    symmetry allows at every k of the supercell with 2k a lattice vector (collinear or not), and the lowest mode.
     net_zero: only orderings without net moment. sample: shape and applied field; None means N = 0.
     keep: number of rows, counted after symmetry-equivalent arrangements are merged. seed: of everything random.
 
-    axes: Shape (n_magnetic, 3), one direction per magnetic site (in the order of the crystal) instead of ``along``; for
-    planar moments ``along`` and ``axes`` are the normals. fixed: signs 1 or -1, 0 where free, one per magnetic site (the
-    same in every cell) or one per moment of the supercell (cells with the last index fastest, sites inside).
+    axes: Shape (n_magnetic, 3), one direction per magnetic site (in the order of the crystal) instead of ``along``;
+    for planar moments ``along`` and ``axes`` are the normals. fixed: signs 1 or -1, 0 where free, one per magnetic site
+    (the same in every cell) or one per moment of the supercell (cells with the last index fastest, sites inside).
     k: one or several wave vectors with 2k whole, instead of a supercell; moments then follow cos 2πk·R.
     moments: "ising", "planar" or "heisenberg"; the last two are annealed. method: "exhaustive" or "annealing" for ±
     patterns; "auto" tries all of them up to 2³³ (2³⁰ with own axes). restarts, sweeps: of the annealing.
@@ -187,9 +187,9 @@ class _Options:
     def __post_init__(self) -> None:
         for name, value, least in (("keep", self.keep, 1), ("seed", self.seed, 0)):
             _whole(name, value, least)
-        for name, value in (("restarts", self.restarts), ("sweeps", self.sweeps)):
-            if value is not None:
-                _whole(name, value, 1)
+        for name, count in (("restarts", self.restarts), ("sweeps", self.sweeps)):
+            if count is not None:
+                _whole(name, count, 1)
         for name, word, known in (("moments", self.kind, KINDS), ("method", self.method, METHODS)):
             if word not in known:
                 raise InputError(f"{name} must be one of {', '.join(known)}; got {word!r}.")

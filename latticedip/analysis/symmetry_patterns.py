@@ -1,14 +1,14 @@
 """Orderings that the symmetry of the crystal allows at a k with 2k a lattice vector, and their lowest energies.
 
-The little group of k acts on the moments of the cell by D(g); the product of two operations may differ from a third by a
-translation of the lattice, under which the moments change sign with k: D(a) D(b) = ω(a, b) D(ab), ω = ±1. A magnetic
+The little group of k acts on the moments of the cell by D(g); the product of two operations may differ from a third by
+a translation of the lattice, under which the moments change sign with k: D(a) D(b) = ω(a, b) D(ab), ω = ±1. A magnetic
 space group with this k is a subgroup H and a sign χ for each of its operations (− : taken with time reversal) with
 χ(a) χ(b) = ω(a, b) χ(ab); its moments are those with χ(h) D(h) S = S for all h (Bertaut, Acta Cryst. A24, 217 (1968);
 Opechowski and Guccione 1965). All sign characters of the whole little group are tried, then those of its subgroups,
 larger ones first, as long as they are not part of a group whose moments were found before: the maximal groups of k.
 
-In each space of moments the equal-moment ordering of lowest energy is sought. Scaling the moments of a space site by site
-to their sizes does not lead out of it, because sites that H exchanges have moments of one length.
+In each space of moments the equal-moment ordering of lowest energy is sought. Scaling the moments of a space site by
+site to their sizes does not lead out of it, because sites that H exchanges have moments of one length.
 """
 
 from __future__ import annotations
@@ -87,12 +87,13 @@ def commensurate_waves(problem: SearchProblem) -> list[FloatArray]:
         for rotation in operations.rotations:
             whole = np.round(basis @ rotation.T @ np.linalg.inv(basis)).astype(int)
             seen.add(tuple(int(x) for x in (whole @ bits) % 2))
-        found.append(_shortest(problem, np.linalg.solve(basis, np.array(bits) / 2), np.linalg.inv(basis).T))
+        found.append(_shortest(problem, np.array(bits) / 2 @ np.linalg.inv(basis).T, basis))
     return found
 
 
-def _shortest(problem: SearchProblem, k: FloatArray, reciprocal: FloatArray) -> FloatArray:
-    """The shortest k that differs by a vector of the reciprocal lattice (rows, in the crystal's own coordinates)."""
+def _shortest(problem: SearchProblem, k: FloatArray, basis: FloatArray) -> FloatArray:
+    """The shortest k that differs by a reciprocal vector of the lattice with these primitive vectors (rows)."""
+    reciprocal = np.linalg.inv(basis).T
     choices = k + np.array(list(itertools.product(range(-2, 3), repeat=3))) @ reciprocal
     choices = np.round(2 * choices) / 2
     lengths = np.linalg.norm(choices @ np.linalg.inv(problem.supercell.crystal.cell).T, axis=1)
@@ -278,7 +279,7 @@ def _at(problem: SearchProblem, k: FloatArray) -> SearchProblem:
 
 
 def _space(group: LittleGroup, characters: dict[int, int], rng: np.random.Generator) -> FloatArray | None:
-    """Shape (n_sites, 3, d) float. An orthonormal basis of the moments with χ(h) D(h) S = S; None where there are none."""
+    """Shape (n_sites, 3, d) float. An orthonormal basis of the moments with χ(h) D(h) S = S; None without any."""
     n = group.operations.targets.shape[1]
 
     def projected(moments: FloatArray) -> FloatArray:

@@ -44,6 +44,7 @@ def linewidth(
     \b
     Example:
       latticedip linewidth study.toml --direction c
+
     \b
     In the study:
       [abundances]

@@ -56,6 +56,7 @@ def shift(
     \b
     Example:
       latticedip shift study.toml --temperature 100 --rotate-about c
+
     \b
     In the study:
       [susceptibility]

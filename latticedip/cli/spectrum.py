@@ -67,7 +67,7 @@ class NuclearWidth(click.ParamType):
     help="Add the static random field of nuclear moments, of this width in 1/µs; auto works it out for a muon.",
 )
 @click.option("--time", type=float, metavar="US", help="Also the polarization P(t) up to this time in µs.")
-@click.option("--points", type=int, default=401, show_default=True, help="Moments in time of P(t).")
+@click.option("--points", type=int, help="Moments in time of P(t); enough for the fastest precession if left out.")
 @click.option(
     "--initial",
     metavar="AXIS",
@@ -92,7 +92,7 @@ def spectrum(
     width: float,
     nuclear: float | Literal["auto"],
     time: float | None,
-    points: int,
+    points: int | None,
     initial: str | None,
     detector: str | None,
     seed: int,

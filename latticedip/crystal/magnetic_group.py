@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import os
 import warnings
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 
 import numpy as np
@@ -40,15 +42,28 @@ def magnetic_group(
     if size == 0.0:
         return None
     atoms = (cell, positions, list(kinds), moments / size)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", DeprecationWarning)
+    with _quiet():
         try:
             data = spglib.get_magnetic_symmetry_dataset(
                 atoms, is_axial=True, symprec=tolerance_A, mag_symprec=MOMENT_TOLERANCE
             )
-            if data is None:
-                return None
-            kind = spglib.get_magnetic_spacegroup_type(data.uni_number)
+            kind = None if data is None else spglib.get_magnetic_spacegroup_type(data.uni_number)
         except spglib.SpglibError:
             return None
     return None if kind is None else MagneticGroup(str(kind.bns_number), int(kind.type))
+
+
+@contextmanager
+def _quiet() -> Iterator[None]:
+    """Keep the library from writing to the terminal: a failed search is an answer here."""
+    before = os.environ.get("SPGLIB_WARNING")
+    os.environ["SPGLIB_WARNING"] = "OFF"
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", DeprecationWarning)
+            yield
+    finally:
+        if before is None:
+            del os.environ["SPGLIB_WARNING"]
+        else:
+            os.environ["SPGLIB_WARNING"] = before

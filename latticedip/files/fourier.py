@@ -14,6 +14,7 @@ import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray
 from latticedip.errors import InputError, near_match
+from latticedip.files.cif import modulated_items
 from latticedip.files.cifsyntax import Block, Column, parse_number
 from latticedip.files.moments import AGREE_FRACTION, AGREE_MUB, LARGEST
 from latticedip.files.symop import parse_vector
@@ -39,6 +40,11 @@ class Series:
     notes: tuple[str, ...]
 
 
+def has_series(block: Block) -> bool:
+    """True where the block holds an amplitude of a modulated moment."""
+    return bool(block.starting_with(f"{_LOOP}_param"))
+
+
 def wave_vector(block: Block) -> FloatArray:
     """Shape (3,) float. The modulation wave vector of a (3+1)D structure, in the reciprocal cell of the file.
 
@@ -46,7 +52,10 @@ def wave_vector(block: Block) -> FloatArray:
     """
     found = _triples(block, "_cell_wave_vector")
     if found is None:
-        raise block.error("it gives no modulation wave vector (_cell_wave_vector.x, .y and .z).")
+        raise block.error(
+            f"it describes a modulation ({modulated_items(block)[0]}), but gives no modulation wave vector "
+            "(_cell_wave_vector.x, .y and .z)."
+        )
     tag, rows = found
     if len(rows) > 1:
         refuse_more_waves(block, len(rows), f"{len(rows)} rows of {tag}")
@@ -98,11 +107,14 @@ def _order(block: Block, key: str, vector: FloatArray | None, order: int | None,
     if n is None:
         n = round(float(vector @ q / (q @ q))) if np.any(q) else 0
     if np.abs(vector - n * q).max() > WAVE_TOLERANCE * max(1, abs(n)):
-        words = f"{order} times the" if order is not None else "no multiple of the"
-        contrary = "although its coefficient says so, " if order is not None else ""
+        if order is None:
+            raise block.error(
+                f"Fourier wave vector {key}, {triple(vector)}, is no multiple of the modulation wave vector "
+                f"{triple(q)}."
+            )
         raise block.error(
-            f"Fourier wave vector {key}, {_triple(vector)}, is {contrary}"
-            f"{'not ' if order is not None else ''}{words} modulation wave vector {_triple(q)}."
+            f"Fourier wave vector {key} is given as {triple(vector)}, but also as {order} times the modulation wave "
+            f"vector {triple(q)}. Keep the right one."
         )
     return n
 
@@ -153,6 +165,11 @@ def _triples(block: Block, prefix: str, beside: Column | None = None) -> tuple[s
     return first.tag, rows
 
 
+def triple(vector: FloatArray) -> str:
+    """Three numbers in words."""
+    return "(" + ", ".join(f"{x + 0.0:.6g}" for x in vector) + ")"
+
+
 def _list(block: Block, column: Column, row: int) -> FloatArray | None:
     text = column.text(row)
     if not text:
@@ -175,6 +192,9 @@ def read_series(block: Block, cell: FloatArray, labels: list[str], orders: dict[
     """
     site = block.column(f"{_LOOP}_atom_site_label")
     if site is None:
+        stray = block.starting_with(_LOOP)
+        if stray:
+            raise block.error(f"{stray[0]} stands without labels ({_LOOP}.atom_site_label).")
         return Series({}, ())
     axis, wave = (_needed(block, site, f"{_LOOP}.{name}") for name in ("axis", "wave_vector_seq_id"))
     values = _Values(block, site)
@@ -229,8 +249,8 @@ def _axis_words(axis: Column, label: str, row: int) -> str:
         "own": "an axis that the file describes in words (_atom_sites_moment_Fourier.axes_description)",
     }.get(kind or "", "no axis")
     return (
-        f"{axis.tag} of {label} is {axis.values[row]!r}, {what}; it is not read. Give components along x, y, z (crystal "
-        "axes) or Cx, Cy, Cz (Cartesian)."
+        f"{axis.tag} of {label} is {axis.values[row]!r}, {what}; it is not read. Give components along x, y, z "
+        "(crystal axes) or Cx, Cy, Cz (Cartesian)."
     )
 
 
@@ -257,7 +277,9 @@ class _Values:
             if name in self.columns and partner not in self.columns:
                 raise block.error(f"{_LOOP}_param.{partner} is missing beside {self.columns[name].tag}.")
         if not self.columns:
-            raise block.error(f"{site.tag} stands without amplitudes ({_LOOP}_param.cos and .sin, or .modulus and .phase).")
+            raise block.error(
+                f"{site.tag} stands without amplitudes ({_LOOP}_param.cos and .sin, or .modulus and .phase)."
+            )
         first = next(iter(self.columns.values()))
         if any(column.loop != first.loop for column in self.columns.values()):
             raise block.error(f"{first.tag} and its sister parameters stand in different loops.")
@@ -277,7 +299,9 @@ class _Values:
         for row in _rows(here):
             key = here.text(row)
             if key is None or known.count(key) != 1:
-                raise self._block.error(f"{here.tag} {here.values[row]!r} stands {known.count(key)} times in {there.tag}.")
+                raise self._block.error(
+                    f"{here.tag} {here.values[row]!r} stands {known.count(key)} times in {there.tag}."
+                )
             places.append(known.index(key))
         if len(set(places)) != len(known):
             spare = next(key for i, key in enumerate(known) if i not in places)
@@ -291,8 +315,6 @@ class _Values:
         for first, second in (("cos", "sin"), ("modulus", "phase")):
             pair = [self.columns[name] for name in (first, second) if name in self.columns]
             if not pair or not any(column.text(place) for column in pair):
-                if any(column.is_unknown(place) for column in pair) and len(self.columns) == 2:
-                    raise self._block.error(f"{pair[0].tag} of {label} is unknown (?). Give the amplitude, or 0.")
                 continue
             numbers = []
             for column in pair:
@@ -312,8 +334,8 @@ class _Values:
             raise self._block.error(f"the amplitude of {label} in row {row + 1} of its Fourier loop is not given.")
         if abs(given[-1] - given[0]) > max(AGREE_MUB, AGREE_FRACTION * abs(given[0])):
             raise self._block.error(
-                f"cosine and sine of {label} in row {row + 1} of its Fourier loop contradict modulus and phase. Keep the "
-                "right ones."
+                f"cosine and sine of {label} in row {row + 1} of its Fourier loop contradict modulus and phase. Keep "
+                "the right ones."
             )
         return given[0]
 
@@ -340,7 +362,8 @@ class _Forms:
         for name, value in (("cos", amplitude.real), ("sin", amplitude.imag)):
             text = "".join((values.form(name, row) or "").lower().split())
             match = _SYMMFORM.fullmatch(text)
-            if parse_number(text) == (0.0, float("nan")) or text in ("0", "0.0"):
+            number = parse_number(text)
+            if number is not None and number[0] == 0:
                 expected = 0.0
             elif match is not None and float(match[2] or 1) != 0:
                 factor = float(match[2] or 1) * (-1 if match[1] == "-" else 1)

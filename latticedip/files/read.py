@@ -18,7 +18,9 @@ from latticedip.crystal.model import Crystal
 from latticedip.errors import FileError, LatticedipError
 from latticedip.files.cif import occupancy_notes, read_structure
 from latticedip.files.cifsyntax import Block, choose_block, decode, parse_blocks
+from latticedip.files.fourier import has_series
 from latticedip.files.magcif import is_magnetic, read_magnetic_crystal, read_magnetic_ordering
+from latticedip.files.modulated import is_modulated, read_modulated_crystal, read_modulated_ordering
 from latticedip.files.moments import has_moments
 from latticedip.ordering.model import Ordering
 
@@ -41,17 +43,15 @@ def read_crystal(path: str | os.PathLike[str], *, block: str | int | None = None
     path: the file. block: the data block of a CIF, or the number of the image (1 is the first, −1 the last) of a
     format that holds several; a file that holds several structures is refused without it.
 
-    A magCIF gives all atoms of the magnetic cell. Sites of a CIF keep their labels, and their coordinates are
-    brought into [0, 1); a lies along x, b in the xy plane.
+    A magCIF gives all atoms of the magnetic cell (in superspace: of the average one). Sites of a CIF keep their labels,
+    and their coordinates are brought into [0, 1); a lies along x, b in the xy plane.
 
     Raises FileError, with one message that names file, item and value, for whatever cannot be understood.
     """
     name, data = _load(path)
     if _is_cif(name, data):
         chosen = choose_block(parse_blocks(data, name), name, None if block is None else str(block))
-        if is_magnetic(chosen):
-            return read_magnetic_crystal(chosen, _title(name))
-        return read_structure(chosen, _title(name)).crystal
+        return _crystal_in(chosen, _title(name))
     return _crystal_of(name, _read_ase(name, block))
 
 
@@ -60,18 +60,19 @@ def read_ordering(path: str | os.PathLike[str], *, block: str | int | None = Non
 
     path, block: as for `read_crystal`. Moments come in µB; those of a magCIF are turned from its crystal-axis,
     Cartesian or spherical components, its standard uncertainties are kept in ``moment_su``, and the change of
-    cell from the parent structure in ``parent``.
+    cell from the parent structure in ``parent``. A magCIF in (3+1)D superspace gives an ordering of the average cell,
+    with components at the multiples of its wave vector.
 
     Raises FileError, with one message that names file, item and value, for whatever cannot be understood: no
-    moments, moments that the symmetry of their site forbids, structures in superspace or in the OG setting.
+    moments, moments that the symmetry of their site forbids, several independent wave vectors, modulated positions or
+    occupancies, the OG setting.
     """
     name, data = _load(path)
     if _is_cif(name, data):
         chosen = choose_block(parse_blocks(data, name), name, None if block is None else str(block))
-        if not is_magnetic(chosen) and not has_moments(chosen):
-            # A structure in superspace carries its moments in items of its own; it is refused under its own name.
+        if not (is_modulated(chosen) or is_magnetic(chosen) or has_moments(chosen)):
             _structure_only(chosen)
-        return read_magnetic_ordering(chosen, _title(name))
+        return _ordering_in(chosen, _title(name))
     return _ordering_of(name, _read_ase(name, block))
 
 
@@ -80,16 +81,26 @@ def read_file(path: str | os.PathLike[str], *, block: str | int | None = None) -
     name, data = _load(path)
     if _is_cif(name, data):
         chosen = choose_block(parse_blocks(data, name), name, None if block is None else str(block))
-        if has_moments(chosen):
-            return read_magnetic_ordering(chosen, _title(name))
-        if is_magnetic(chosen):
-            return read_magnetic_crystal(chosen, _title(name))
-        return read_structure(chosen, _title(name)).crystal
+        if has_moments(chosen) or has_series(chosen):
+            return _ordering_in(chosen, _title(name))
+        return _crystal_in(chosen, _title(name))
     atoms = _read_ase(name, block)
     results = getattr(atoms.calc, "results", {})
     if atoms.get_initial_magnetic_moments().any() or "magmoms" in results:
         return _ordering_of(name, atoms)
     return _crystal_of(name, atoms)
+
+
+def _crystal_in(block: Block, title: str) -> Crystal:
+    if is_modulated(block):
+        return read_modulated_crystal(block, title)
+    if is_magnetic(block):
+        return read_magnetic_crystal(block, title)
+    return read_structure(block, title).crystal
+
+
+def _ordering_in(block: Block, title: str) -> Ordering:
+    return read_modulated_ordering(block, title) if is_modulated(block) else read_magnetic_ordering(block, title)
 
 
 def _structure_only(block: Block) -> None:

@@ -129,8 +129,7 @@ def _periods(k: FloatArray, name: str) -> list[int]:
     return counts
 
 
-def _as_mcif(ordering: Ordering, name: str) -> str:
-    crystal = ordering.crystal
+def _refuse_as_cif(crystal: Crystal, name: str) -> None:
     if not all(crystal.pbc):
         raise FileError(f"{name}: a CIF repeats in three directions, this crystal does not. Write it as .xyz.")
     if np.linalg.det(crystal.cell) < 0:
@@ -138,60 +137,30 @@ def _as_mcif(ordering: Ordering, name: str) -> str:
             f"{name}: the cell vectors are left-handed, which a CIF cannot say. Write it as .xyz, "
             "or exchange two cell vectors."
         )
+
+
+def _as_mcif(ordering: Ordering, name: str) -> str:
     magnetic = _magnetic_cell(ordering, name)
-    names = _distinct(magnetic.labels)
-    lengths, angles = _cell_parameters(magnetic.cell)
-    axes = magnetic.cell / lengths[:, None]
+    axes = magnetic.cell / np.linalg.norm(magnetic.cell, axis=1)[:, None]
     components = magnetic.moments_cart @ np.linalg.inv(axes)
-    lines = ["# Magnetic structure in P 1, written by latticedip", f"data_{_block_name(ordering.name)}"]
-    lines += [f"_cell_length_{axis} {_digits(value)}" for axis, value in zip("abc", lengths, strict=True)]
-    lines += [f"_cell_angle_{a} {_digits(value)}" for a, value in zip(("alpha", "beta", "gamma"), angles, strict=True)]
+    lines = ["# Magnetic structure in P 1, written by latticedip", f"data_{block_name(ordering.name)}"]
+    lines += cell_lines(magnetic.cell)
     lines += ["_space_group_magn.number_BNS '1.1'", "_space_group_magn.name_BNS 'P1'"]
-    if magnetic.parent is not None:
-        lines.append(f"_parent_space_group.child_transform_Pp_abc '{format_transform(magnetic.parent)}'")
-    lines += _loop(
+    lines += parent_lines(magnetic.parent)
+    lines += loop(
         ["_space_group_symop_magn_operation.id", "_space_group_symop_magn_operation.xyz"], [["1", "x,y,z,+1"]]
     )
-    # Where several atoms share a label, each gets one of its own, and the shared one stands in a column beside it.
-    shared = names != list(magnetic.labels)
-    lines += _loop(
-        [
-            *(f"_atom_site_{tag}" for tag in ("label", "type_symbol", "fract_x", "fract_y", "fract_z", "occupancy")),
-            *(["_latticedip_site_label"] if shared else []),
-        ],
-        [
-            [
-                _quoted(label, name),
-                magnetic.symbols[i],
-                *map(_digits, magnetic.positions[i]),
-                _digits(magnetic.occupancies[i]),
-                *([_quoted(magnetic.labels[i], name)] if shared else []),
-            ]
-            for i, label in enumerate(names)
-        ],
+    atoms, names = atom_lines(
+        magnetic.labels, magnetic.symbols, magnetic.positions, magnetic.occupancies, name
     )
-    has_su = not np.all(np.isnan(magnetic.moment_su))
-    lines += _loop(
-        [
-            "_atom_site_moment.label",
-            *(f"_atom_site_moment.crystalaxis_{x}" for x in "xyz"),
-            *([f"_atom_site_moment.crystalaxis_{x}_su" for x in "xyz"] if has_su else []),
-        ],
-        [
-            [
-                _quoted(label, name),
-                *map(_digits, components[i]),
-                *(map(_digits, magnetic.moment_su[i]) if has_su else []),
-            ]
-            for i, label in enumerate(names)
-            if magnetic.magnetic[i] or not magnetic.magnetic.any()
-        ],
+    lines += atoms
+    lines += moment_lines(
+        [names[i] for i in np.flatnonzero(shown := magnetic.magnetic | (not magnetic.magnetic.any()))],
+        components[shown],
+        magnetic.moment_su[shown],
+        all_su=magnetic.moment_su,
     )
     return "\n".join(lines) + "\n"
-
-
-def _loop(tags: list[str], rows: Sequence[list[str]]) -> list[str]:
-    return ["loop_", *tags, *(" ".join(row) for row in rows)]
 
 
 def _as_xyz(ordering: Ordering, name: str) -> str:
@@ -223,67 +192,3 @@ def _as_xyz(ordering: Ordering, name: str) -> str:
     return "\n".join([str(len(rows)), head, *rows]) + "\n"
 
 
-def _digits(value: float) -> str:
-    """A number with 17 significant digits (enough for any double), ``.`` for NaN; minus zero becomes zero."""
-    return "." if np.isnan(value) else f"{value + 0.0:.17g}"
-
-
-def _quoted(text: str, name: str) -> str:
-    for quote in "'\"":
-        if text == text.strip() and text and text.isprintable() and f"{quote} " not in text:
-            return f"{quote}{text}{quote}"
-    raise FileError(f"{name}: the label {text!r} cannot be written in a CIF. Rename the site.")
-
-
-def _block_name(text: str) -> str:
-    return re.sub(r"[^A-Za-z0-9_.+-]+", "_", text).strip("_")[:60] or "ordering"
-
-
-def _distinct(labels: Sequence[str]) -> list[str]:
-    """The labels, those of several atoms with a running number that no other label has."""
-    counts = Counter(labels)
-    taken = set(labels)
-    numbers: Counter[str] = Counter()
-    names = []
-    for label in labels:
-        name = label
-        while counts[label] > 1 and name in taken:
-            numbers[label] += 1
-            name = f"{label}_{numbers[label]}"
-        taken.add(name)
-        names.append(name)
-    return names
-
-
-def _cell_parameters(cell: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Lengths (Å) and angles (degrees) of a cell; angles within rounding of 60, 90 and 120 are those."""
-    lengths = np.linalg.norm(cell, axis=1)
-    angles = []
-    for i, j in ((1, 2), (0, 2), (0, 1)):
-        first, second = cell[i] / lengths[i], cell[j] / lengths[j]
-        angle = float(np.degrees(np.arctan2(np.linalg.norm(np.cross(first, second)), first @ second)))
-        angles.append(next((exact for exact in (60.0, 90.0, 120.0) if abs(angle - exact) < 1e-12), angle))
-    return lengths, np.array(angles)
-
-
-def format_transform(transform: ParentTransform) -> str:
-    """A change of cell as the dictionaries write it, ``a-b,a+b,2c;1/4,0,0``."""
-    vectors = []
-    for column in np.asarray(transform.P).T:
-        terms = [_term(value, axis) for value, axis in zip(column, "abc", strict=True) if abs(value) > 1e-12]
-        vectors.append("".join(terms).removeprefix("+"))
-    shift = ",".join(_fraction(value) for value in transform.p)
-    return f"{','.join(vectors)};{shift}"
-
-
-def _term(value: float, axis: str) -> str:
-    size = _fraction(abs(value))
-    return ("-" if value < 0 else "+") + ("" if size == "1" else size) + axis
-
-
-def _fraction(value: float) -> str:
-    """A simple fraction where the number is one, else its decimals (no exponent: the grammar has none)."""
-    nearest = Fraction(float(value)).limit_denominator(48)
-    if abs(float(nearest) - value) < 1e-12:
-        return str(nearest)
-    return f"{value:.17f}"

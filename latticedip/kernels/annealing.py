@@ -129,9 +129,10 @@ def anneal_signs(
 ):  # fmt: skip
     """Anneal signs along given axes; restarts first..last.
 
-    table: Q, flat, of shape (m, nx, ny, 2 nz − 1, m) with m sites in a cell. linear (n_moments,): g. free (n_free,):
-    places of the signs that may change; start (n_moments,) int8: the fixed ones, 0 where free. weights (n_c, n_moments): net moment, c components, held at
-    zero by penalties (n_sweeps,). exchange: whether pairs are exchanged too.
+    table: Q, flat, of shape (m, nx, ny, 2 nz − 1, m) with m sites in a cell. linear (n_moments,): g.
+    free (n_free,): places of the signs that may change; start (n_moments,) int8: the fixed ones, 0 where free.
+    weights (n_c, n_moments): net moment, c components, held at zero by penalties (n_sweeps,).
+    exchange: whether pairs are exchanged too.
     out_signs (n_restarts, n_moments) int8; out_energies (n_restarts,), penalty left out.
     """
     n = start.shape[0]

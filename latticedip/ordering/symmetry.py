@@ -127,17 +127,18 @@ class SupercellSymmetry:
         found = site_operations(crystal, sites, sizes)
         counts = np.array(repeat)
         scaled = found.rotations * counts[None, None, :] / counts[None, :, None]
-        keeps = np.all(scaled == np.round(scaled), axis=(1, 2))
+        keeps: np.ndarray = np.asarray(np.all(scaled == np.round(scaled), axis=(1, 2)))
         if tensor is not None:
             turned = found.axial @ tensor @ found.axial.transpose(0, 2, 1)
-            keeps &= np.abs(turned - tensor).max(axis=(1, 2)) <= SAME_VECTOR * max(1.0, float(np.abs(tensor).max()))
+            slack = SAME_VECTOR * max(1.0, float(np.abs(tensor).max()))
+            keeps = np.asarray(keeps & (np.abs(turned - tensor).max(axis=(1, 2)) <= slack))
         found = found.chosen(keeps)
         signs = np.ones((len(found), 2), dtype=bool)
         if field is not None and np.any(field):
             turned = found.axial @ field
             size = SAME_VECTOR * float(np.linalg.norm(field))
             signs = np.stack([np.linalg.norm(turned - s * field, axis=1) <= size for s in (1, -1)], axis=1)
-            allowed = signs.any(axis=1)
+            allowed = np.asarray(signs.any(axis=1))
             found, signs = found.chosen(allowed), signs[allowed]
         return cls(repeat, found, signs)
 
@@ -179,7 +180,8 @@ class SupercellSymmetry:
         for operation in range(len(self.operations)):
             moved = self.moved(operation)
             if axes is None:
-                factor, allowed = np.ones(n, dtype=np.int8), (1, -1)
+                factor = np.ones(n, dtype=np.int8)
+                allowed: tuple[int, ...] = (1, -1)
             else:
                 along = np.einsum("pa,pa->p", axes[moved], axes @ self.operations.axial[operation].T)
                 if np.any(np.abs(np.abs(along) - 1) > SAME_VECTOR):

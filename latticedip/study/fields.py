@@ -84,7 +84,10 @@ def field_row(row: dict[str, Any], crystal: Crystal, axes: Axes, unit: Unit) -> 
         if not suffix:
             turned[key] = value
         elif isinstance(value, list):
-            turned.update(vector_keys(base, np.array(value) * factor, crystal, axes, suffix.replace("_T", f"_{unit}")))
+            vector = np.array(value) * factor
+            # The bound holds for each of three components; below it a vector has no direction.
+            zero = 3**0.5 * row["error_bound_T"] * factor if base in ("dipolar", "field") else 0.0
+            turned.update(vector_keys(base, vector, crystal, axes, suffix.replace("_T", f"_{unit}"), zero))
         else:
             turned[f"{base}_{unit}"] = value * factor
     slope = float(np.linalg.norm(row["gradient_of_size_T_per_A"])) * factor
@@ -92,27 +95,37 @@ def field_row(row: dict[str, Any], crystal: Crystal, axes: Axes, unit: Unit) -> 
     return turned
 
 
-def vector_keys(name: str, vector: FloatArray, crystal: Crystal, axes: Axes, suffix: str) -> dict[str, Any]:
-    """A vector as keys of a document: components, or its size with the angles from z and, in the xy plane, from x."""
+def vector_keys(
+    name: str, vector: FloatArray, crystal: Crystal, axes: Axes, suffix: str, zero: float = 0.0
+) -> dict[str, Any]:
+    """A vector as keys of a document: components, or its size with the angles from z and, in the xy plane, from x.
+
+    zero: up to this size it has no direction.
+    """
     if axes == "cartesian":
         return {f"{name}{suffix}": vector.tolist()}
     if axes == "crystal":
         return {f"{name}_abc{suffix}": crystal.to_crystal_axes(vector).tolist()}
-    size, theta, phi = polar(vector)
+    size, theta, phi = polar(vector, zero)
     return {f"{name}_size{suffix}": size, f"{name}_theta_deg": theta, f"{name}_phi_deg": phi}
 
 
-def polar(vector: FloatArray) -> tuple[float, float | None, float | None]:
-    """Size, angle from Cartesian z and angle of the projection from x (degrees); None where it has no meaning."""
+def polar(vector: FloatArray, zero: float = 0.0) -> tuple[float, float | None, float | None]:
+    """Size, angle from Cartesian z and angle of the projection from x (degrees); None where it has no meaning.
+
+    zero: up to this size the vector has no direction.
+    """
     x, y, z = (float(v) for v in vector)
     size = float(np.linalg.norm(vector))
-    if not size > 0.0:
+    if not size > zero:
         return size, None, None
     across = float(np.hypot(x, y))
     theta = float(np.degrees(np.arctan2(across, z)))
     if across <= 1e-9 * size:
         return size, theta, None
-    return size, theta, float(np.degrees(np.arctan2(y, x))) % 360.0
+    phi = float(np.degrees(np.arctan2(y, x))) % 360.0
+    # A rounding error below 0 is not a whole turn.
+    return size, theta, phi if phi < 360.0 - 1e-7 else 0.0
 
 
 def common_boundary(boundaries: Sequence[str]) -> str:

@@ -18,6 +18,7 @@ if TYPE_CHECKING:
 
 SUSCEPTIBILITY_KEYS = ("chi", "unit", "temperatures_K", "local")
 _EXAMPLE = '{ chi = 0.012, unit = "cm3/mol" }'
+_UNITS = '"cm3/mol" (cgs, the same as emu/mol; per mole of ions), "m3/mol" (SI) or "muB/T" (per ion)'
 _CHI = "a number, a tensor (three lists of three numbers, Cartesian), or a list of them over temperatures_K"
 _TEMPERATURES = "a list of temperatures in K, each larger than 0"
 
@@ -52,8 +53,10 @@ def _susceptibility(item: Key) -> Susceptibility:
     if "chi" not in table:
         raise item.missing("chi", _CHI)
     if "unit" not in table:
-        raise item.missing("unit", f"{', '.join(repr(unit) for unit in UNITS)} (per mole of ions, or per ion)")
-    arguments: dict[str, Any] = {"unit": table["unit"].one_of(tuple(UNITS))}
+        raise item.missing("unit", _UNITS)
+    if table["unit"].value not in UNITS:
+        raise table["unit"].expected(_UNITS)
+    arguments: dict[str, Any] = {"unit": table["unit"].value}
     if "local" in table:
         table["local"].true()
         arguments["local"] = True

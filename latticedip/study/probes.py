@@ -13,9 +13,10 @@ from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
 from latticedip.study.directions import named_directions
 from latticedip.study.keys import Key
+from latticedip.study.motion import MOTION_KEYS, read_motion
 from latticedip.study.probe_rules import RULE_KEYS, probes_by_rule
 
-PROBE_KEYS = ("name", "particle", "position", "site", "rule", "contact")
+PROBE_KEYS = ("name", "particle", "position", "site", "rule", "contact", *MOTION_KEYS)
 CONTACT_KEYS = ("coupling_T_per_muB", "shell", "within", "moment_density_muB_per_A3")
 SHAPES = ("ellipsoid", "prism", "cylinder", "sphere", "plate", "needle", "tensor")
 SAMPLE_KEYS = (*SHAPES, "axes", "applied_T")
@@ -67,6 +68,7 @@ def _probe(item: Key, table: dict[str, Key], crystal: Crystal) -> Probe:
     if "contact" in table:
         terms = table["contact"].items("a list of contact terms, such as [{ shell = 1, coupling_T_per_muB = 0.06 }]")
         arguments["contact"] = tuple(_contact(term) for term in terms)
+    arguments |= read_motion(item, table, crystal)
     if "particle" not in table:
         with item.located():
             return Probe(**arguments)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import logging
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
@@ -10,16 +11,18 @@ from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
+from latticedip.checks import FloatArray
 from latticedip.errors import InputError
 from latticedip.observables.linewidth import linewidth
 from latticedip.observables.polarization import polarization
 from latticedip.observables.spectrum import Spectrum, spectrum
-from latticedip.ordering.domains import domains
+from latticedip.ordering.domains import Domain, domains
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import document, ordering_head
 from latticedip.study.fields import common_boundary
 
 if TYPE_CHECKING:
+    from latticedip.ordering.model import Ordering
     from latticedip.probe import Probe
     from latticedip.study.schema import Study
 
@@ -27,6 +30,10 @@ DomainChoice = Literal["given", "list", "average"]
 
 #: Most bins of a histogram and moments in time of a polarization.
 MOST_BINS, MOST_POINTS = 100_000, 100_000
+#: Moments in time where their number is not given: so many in a turn of the fastest precession, but at least.
+POINTS_PER_TURN, LEAST_POINTS = 12, 401
+
+_log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -36,8 +43,8 @@ class SpectrumOptions:
     powder: True for a powder. domains: the ordering as given, each of its domains, or their average. applied_T: in
     place of the study's applied field, Cartesian. bins: of the histogram. width_T: standard deviation of a Gaussian.
     nuclear_per_us: Δ of the static field of nuclear moments in 1/µs, or "auto" to work it out. time_us: the last
-    moment of P(t), with `points` moments; None: no P(t). initial, detector: directions in a crystal, as `direction_of`
-    takes them. seed: of the quasi-random phases.
+    moment of P(t); None: no P(t). points: moments in time; None: enough for the fastest precession. initial, detector:
+    directions in a crystal, as `direction_of` takes them. seed: of the quasi-random phases.
     """
 
     powder: bool = False
@@ -47,7 +54,7 @@ class SpectrumOptions:
     width_T: float = 0.0
     nuclear_per_us: float | Literal["auto"] = 0.0
     time_us: float | None = None
-    points: int = 401
+    points: int | None = None
     initial: str | None = None
     detector: str | None = None
     seed: int = 0
@@ -69,44 +76,21 @@ def spectrum_document(
         for name, text in (("initial", options.initial), ("detector", options.detector))
     }
     widths = {probe.name: _nuclear_width(study, probe, options) for probe in study.probes}
-    entries, boundaries = [], []
-    for ordering in study.orderings:
-        found: list[dict[str, Any]] = []
-        notes: list[str] = []
-        listed = domains(ordering) if options.domains == "list" else ()
-        for probe in study.probes:
-            for domain in listed or (None,):
-                placed = ordering if domain is None else domain.ordering
-                result = spectrum(
-                    placed,
-                    probe,
-                    sample=study.sample,
-                    applied_T=options.applied_T,
-                    powder=options.powder,
-                    average_domains=options.domains == "average",
-                    width_T=options.width_T,
-                    nuclear_width_T=widths[probe.name] / (2 * math.pi * probe.MHz_per_T),
-                    seed=options.seed,
-                    tol=options.tol,
-                )
-                entry = _entry(result, options, widths[probe.name], directions)
-                if domain is not None:
-                    entry["domain"] = {
-                        "number": domain.number,
-                        "kind": domain.kind,
-                        "operation": domain.operation,
-                        "k": domain.ordering.k.tolist(),
-                    }
-                found.append(entry)
-                notes += result.notes
+    found = [_spectra(study, ordering, options, widths) for ordering in study.orderings]
+    time = _times(options, [result for results in found for _, result in results])
+    entries = []
+    for ordering, results in zip(study.orderings, found, strict=True):
         placed_by = "" if ordering.reference is None else ordering.reference.how
-        boundaries.append(found[0]["boundary"])
+        notes = dict.fromkeys(note for _, result in results for note in result.notes)
         entries.append(
             {
                 **ordering_head(ordering),
-                "boundary": found[0]["boundary"],
-                "spectra": found,
-                "notes": [note for note in dict.fromkeys(notes) if note not in placed_by],
+                "boundary": results[0][1].boundary,
+                "spectra": [
+                    _entry(result, domain, options, widths[result.probe.name], time, directions)
+                    for domain, result in results
+                ],
+                "notes": [note for note in notes if note not in placed_by],
             }
         )
     return document(
@@ -117,7 +101,7 @@ def spectrum_document(
             "orderings": list(orderings) or None,
             "probes": list(probes) or None,
         },
-        boundary=common_boundary(boundaries),
+        boundary=common_boundary([entry["boundary"] for entry in entries]),
         results={
             "title": study.title,
             "specimen": "powder" if options.powder else "crystal",
@@ -156,16 +140,78 @@ def spectrum_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
     return rows
 
 
+def _spectra(
+    study: Study, ordering: Ordering, options: SpectrumOptions, widths: Mapping[str, float]
+) -> list[tuple[Domain | None, Spectrum]]:
+    """The spectra of all probes under an ordering, where asked for in each of its domains."""
+    listed: Sequence[Domain | None] = domains(ordering) if options.domains == "list" else (None,)
+    found: list[tuple[Domain | None, Spectrum]] = []
+    for probe in study.probes:
+        for domain in listed:
+            _log.info("spectrum of %s under %s", probe.name, ordering.name)
+            result = spectrum(
+                ordering if domain is None else domain.ordering,
+                probe,
+                sample=study.sample,
+                applied_T=options.applied_T,
+                powder=options.powder,
+                average_domains=options.domains == "average",
+                width_T=options.width_T,
+                nuclear_width_T=widths[probe.name] / (2 * math.pi * probe.MHz_per_T),
+                seed=options.seed,
+                tol=options.tol,
+            )
+            found.append((domain, result))
+    return found
+
+
+def _times(options: SpectrumOptions, found: Sequence[Spectrum]) -> FloatArray | None:
+    """Moments in time: as many as asked for, else enough for the fastest precession."""
+    if options.time_us is None:
+        return None
+    points = options.points
+    if points is None:
+        fastest = max(result.distribution.support[1] * result.MHz_per_T for result in found)
+        points = int(np.clip(POINTS_PER_TURN * fastest * options.time_us + 1, LEAST_POINTS, MOST_POINTS))
+    return np.linspace(0.0, options.time_us, points)
+
+
 def _entry(
-    result: Spectrum, options: SpectrumOptions, nuclear_per_us: float, directions: Mapping[str, Any]
+    result: Spectrum,
+    domain: Domain | None,
+    options: SpectrumOptions,
+    nuclear_per_us: float,
+    time: FloatArray | None,
+    directions: Mapping[str, FloatArray | None],
 ) -> dict[str, Any]:
     limits, share = result.binned(options.bins)
     width = float(limits[1] - limits[0])
     factor = result.MHz_per_T
-    entry: dict[str, Any] = {
-        **result.to_dict(),
+    placed = None
+    if domain is not None:
+        placed = {
+            "number": domain.number,
+            "kind": domain.kind,
+            "operation": domain.operation,
+            "k": domain.ordering.k.tolist(),
+        }
+    signal = None
+    if time is not None:
+        values = polarization(
+            result,
+            time,
+            initial=directions["initial"],
+            detector=directions["detector"],
+            nuclear_width_per_us=nuclear_per_us,
+        ).values
+        signal = {"time_us": time.tolist(), "polarization": values.tolist()}
+    plain = result.to_dict()
+    # The boundary and the notes are those of the ordering, and stand beside it.
+    del plain["boundary"], plain["notes"]
+    return {
+        **plain,
         "nuclear_width_per_us": nuclear_per_us,
-        "domain": None,
+        "domain": placed,
         "histogram": {
             "field_limits_T": limits.tolist(),
             "frequency_limits_MHz": (limits * factor).tolist(),
@@ -173,19 +219,8 @@ def _entry(
             "density_per_T": (share / width).tolist(),
             "density_per_MHz": (share / (width * factor)).tolist(),
         },
-        "polarization": None,
+        "polarization": signal,
     }
-    if options.time_us is not None:
-        time = np.linspace(0.0, options.time_us, options.points)
-        signal = polarization(
-            result,
-            time,
-            initial=directions["initial"],
-            detector=directions["detector"],
-            nuclear_width_per_us=nuclear_per_us,
-        )
-        entry["polarization"] = {"time_us": time.tolist(), "polarization": signal.values.tolist()}
-    return entry
 
 
 def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> float:
@@ -207,7 +242,7 @@ def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> floa
 
 def _check(options: SpectrumOptions) -> None:
     for name, value, most in (("bins", options.bins, MOST_BINS), ("points", options.points, MOST_POINTS)):
-        if not 2 <= value <= most:
+        if value is not None and not 2 <= value <= most:
             raise InputError(f"{name} must lie between 2 and {most}, got {value}.")
     if options.time_us is not None and not (math.isfinite(options.time_us) and options.time_us > 0):
         raise InputError(f"the time must be a finite number of µs above 0, got {options.time_us}.")

@@ -121,7 +121,7 @@ class SmearedSum:
     """Sums over one lattice at one k for one cloud; see `smeared_sum`.
 
     plan: the LatticeSum that gives waves and splitting. cutoff: Å. images (3, n) Å in the principal axes of the cloud,
-    with phase (2, n). curvatures (n_nodes, 3) 1/Å² and weights (n_nodes,) 1/Å of the quadrature, none for a closed form.
+    with phase (2, n). curvatures (n_nodes, 3) 1/Å² and weights (n_nodes,) 1/Å: the quadrature, none for a closed form.
     self_term (3,) 1/Å³. scale (n_q,) Å³/Å³: −(4π/V) exp(...)/q² of every wave, twice that where −q is left out.
     """
 
@@ -146,7 +146,8 @@ class SmearedSum:
 
         Returns shape (n_t, n_s, 3, 3) complex in T/µB, Σ_R ⟨T(x_t − x_s − R)⟩ exp(−2πi k·R), a source on its target
         (within 1e-6 Å) left out; shape (n_t, n_s, 3, 3, 3) complex in T/µB/Å, its derivative by x_t along the last
-        axis, or None; and shape (n_t, n_s) float: the smallest x·U⁻¹·x/2 of the images of a source, infinite without a cloud.
+        axis, or None; and shape (n_t, n_s) float: the smallest x·U⁻¹·x/2 of the images of a source, infinite without a
+        cloud.
         """
         n_t, n_s = len(targets), len(sources)
         out = np.zeros((n_t, n_s, 6), dtype=complex)
