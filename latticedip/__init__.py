@@ -41,6 +41,7 @@ _HOMES = {
     "read_crystal": "latticedip.files.read",
     "read_ordering": "latticedip.files.read",
     "read_study": "latticedip.study.schema",
+    "run_batch": "latticedip.study.batch",
     "shift_curve": "latticedip.observables.shift",
     "spectrum": "latticedip.observables.spectrum",
     "weighted_field": "latticedip.physics.weighted",

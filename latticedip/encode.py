@@ -69,13 +69,14 @@ def to_csv(rows: Iterable[Mapping[str, Any]]) -> str:
     columns = list(dict.fromkeys(key for row in table for key in row))
     buffer = io.StringIO()
     writer = csv.writer(buffer, lineterminator="\n")
-    writer.writerow([_cell(column) for column in columns])
+    writer.writerow([csv_cell(column) for column in columns])
     for row in table:
-        writer.writerow([_cell(row.get(column)) for column in columns])
+        writer.writerow([csv_cell(row.get(column)) for column in columns])
     return buffer.getvalue()
 
 
-def _cell(value: Any) -> str:
+def csv_cell(value: Any) -> str:
+    """Return the text of one cell of a CSV table; rules and errors as `to_csv`."""
     if hasattr(value, "item") and getattr(value, "shape", None) == ():
         value = value.item()
     if value is None:

@@ -46,7 +46,10 @@ def test_domains_are_counted(crystal, components, k, counts):
 
 
 def test_time_reversed_domains_can_be_left_out():
-    assert len(domains(ld.Ordering(SC, [[0, 0, 1]]), reversed_too=False)) == 3
+    oblique = ld.Crystal([[4, 0, 0], [0.3, 4.5, 0], [0.2, 0.4, 5]], [[0, 0, 0]], ["Mn"])
+    ferromagnet = ld.Ordering(oblique, [[0, 0, 1]])
+    assert [d.kind for d in domains(ferromagnet)] == ["as given", "time-reversed"]
+    assert len(domains(ferromagnet, reversed_too=False)) == 1
 
 
 def test_a_domain_is_the_image_in_its_fields():

@@ -10,8 +10,8 @@ from hypothesis import strategies as st
 
 import latticedip as ld
 from latticedip.errors import FileError
+from latticedip.files.ciftext import format_transform
 from latticedip.files.symop import parse_transform
-from latticedip.files.write import format_transform
 from latticedip.ordering.model import ParentTransform
 
 DATA = Path(__file__).parent / "data"
@@ -171,13 +171,13 @@ def test_what_cannot_be_written_is_refused(tmp_path):
     refuses(ordering, tmp_path / "no" / "a.xyz", "the file cannot be written (No such file or directory).")
     refuses(
         skew_ordering((0.2137, 0, 0)),
-        tmp_path / "a.mcif",
-        "k = (0.2137, 0, 0) repeats in no supercell of up to 64 cells along an axis. Incommensurate orderings are not "
-        "written; take a commensurate k nearby.",
+        tmp_path / "a.xyz",
+        "k = (0.2137, 0, 0) repeats in no supercell of up to 64 cells along an axis. Write it as .mcif, in superspace, "
+        "or take a commensurate k nearby.",
     )
     refuses(
         skew_ordering((1 / 61, 1 / 59, 1 / 2)),
-        tmp_path / "a.mcif",
+        tmp_path / "a.xyz",
         "the magnetic cell of 61 × 59 × 2 cells would hold 21594 atoms; at most 20000 are written.",
     )
     left = ld.Crystal(np.diag([3.0, 4.0, -5.0]), [[0, 0, 0]], ("Mn",))

@@ -236,7 +236,8 @@ def turn(start: FloatArray, end: FloatArray) -> FloatArray:
     return np.asarray(np.eye(3) + (cosine - 1) * plane + sine * swap)
 
 
-def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray | None) -> Orientation:
+def rotation_form(ordering: Ordering, sample: Sample, tol: float) -> tuple[FloatArray, FloatArray]:
+    """K (9, 9) and g (9,) in eV per cell of any pattern turned by R: E(R) = vec(R)·K·vec(R) − g·vec(R)."""
     kernel = np.zeros((9, 9))
     for weight, mean, tensors in weighted_couplings(ordering, tol):
         # E = Σ R_ac R_bd K[ac, bd] with K = −w Re Σ_ij S*_ic T_ij,ab S_jd.
@@ -246,7 +247,11 @@ def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray 
     stray = 0.5 * MU0_T_A3_PER_MUB / ordering.crystal.volume_A3 * sample.demagnetizing_tensor
     kernel += np.einsum("ab,c,d->acbd", stray, net, net).reshape(9, 9)
     kernel = 0.5 * (kernel + kernel.T) * EV_PER_MUB_T
-    linear = np.outer(sample.applied_T, net).ravel() * EV_PER_MUB_T
+    return kernel, np.outer(sample.applied_T, net).ravel() * EV_PER_MUB_T
+
+
+def _general(ordering: Ordering, sample: Sample, tol: float, normal: FloatArray | None) -> Orientation:
+    kernel, linear = rotation_form(ordering, sample, tol)
     scale = max(float(np.abs(kernel).max()), float(np.abs(linear).max()), 1e-300)
 
     def search(sign: float) -> tuple[FloatArray, float]:

@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import itertools
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from scipy.optimize import minimize
@@ -137,11 +138,17 @@ def little_group(problem: SearchProblem, k: FloatArray) -> LittleGroup:
     return LittleGroup(k, group, product, cocycle, centrings, centring_signs)
 
 
-def subgroups(product: np.ndarray) -> list[frozenset[int]]:
+def subgroups(product: np.ndarray) -> tuple[frozenset[int], ...]:
     """All subgroups of a group given by its table of products, one of each class of conjugates, larger first."""
-    n = len(product)
+    return _subgroups(np.ascontiguousarray(product, dtype=np.int64).tobytes(), len(product))
+
+
+@lru_cache(maxsize=16)
+def _subgroups(table: bytes, n: int) -> tuple[frozenset[int], ...]:
+    product = np.frombuffer(table, dtype=np.int64).reshape(n, n)
     unit = int(np.flatnonzero(np.all(product == np.arange(n), axis=1))[0])
     inverse = np.argmax(product == unit, axis=1)
+    rows = product.tolist()
 
     def closed(generators: frozenset[int]) -> frozenset[int]:
         elements = set(generators)
@@ -149,7 +156,7 @@ def subgroups(product: np.ndarray) -> list[frozenset[int]]:
         while fresh:
             one = fresh.pop()
             for other in list(elements):
-                for two in (int(product[one, other]), int(product[other, one])):
+                for two in (rows[one][other], rows[other][one]):
                     if two not in elements:
                         elements.add(two)
                         fresh.append(two)
@@ -174,7 +181,7 @@ def subgroups(product: np.ndarray) -> list[frozenset[int]]:
         kept.append(group)
         for g in range(n):
             seen.add(frozenset(int(product[product[g, h], inverse[g]]) for h in group))
-    return kept
+    return tuple(kept)
 
 
 def sign_characters(group: LittleGroup, members: list[int]) -> list[np.ndarray]:

@@ -108,6 +108,17 @@ def probe_option(function: F) -> F:
     )(function)
 
 
+def plot_option(function: F) -> F:
+    """--plot FILE, a picture beside the table."""
+    return click.option(
+        "--plot",
+        "plot_path",
+        type=click.Path(path_type=Path),
+        metavar="FILE",
+        help="Also draw it: .png, .svg or .pdf.",
+    )(function)
+
+
 def orbit_option(function: F) -> F:
     """Whether a position stands for all that are equivalent to it."""
     return click.option(

@@ -64,6 +64,22 @@ def atom_lines(
     return lines, quoted_names
 
 
+def moment_lines(names: Sequence[str], components: FloatArray, su: FloatArray) -> list[str]:
+    """The loop of moments: crystal-axis components (n, 3) and, where any is known, their standard uncertainties."""
+    has_su = not np.all(np.isnan(su))
+    return loop(
+        [
+            "_atom_site_moment.label",
+            *(f"_atom_site_moment.crystalaxis_{x}" for x in "xyz"),
+            *([f"_atom_site_moment.crystalaxis_{x}_su" for x in "xyz"] if has_su else []),
+        ],
+        [
+            [label, *map(digits, components[i]), *(map(digits, su[i]) if has_su else [])]
+            for i, label in enumerate(names)
+        ],
+    )
+
+
 def digits(value: float) -> str:
     """A number with 17 significant digits (enough for any double), ``.`` for NaN; minus zero becomes zero."""
     return "." if np.isnan(value) else f"{value + 0.0:.17g}"

@@ -1,12 +1,10 @@
-"""Orderings out: magCIF in P 1 and extended XYZ, with 17 digits, so that what was written can be read again."""
+"""Orderings out: magCIF (in P 1, or in superspace) and extended XYZ, with 17 digits, so that they can be read again."""
 
 from __future__ import annotations
 
 import itertools
 import os
 import re
-from collections import Counter
-from collections.abc import Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from pathlib import Path
@@ -14,7 +12,10 @@ from pathlib import Path
 import numpy as np
 
 from latticedip.checks import FloatArray
+from latticedip.crystal.model import Crystal
 from latticedip.errors import FileError
+from latticedip.files.ciftext import atom_lines, block_name, cell_lines, digits, loop, moment_lines, parent_lines
+from latticedip.files.write_modulated import modulated_text
 from latticedip.ordering.model import K_SNAP, Ordering, ParentTransform, is_self_conjugate
 
 #: An ordering whose k repeats only beyond this many cells along an axis counts as incommensurate.
@@ -44,24 +45,32 @@ class _MagneticCell:
     parent: ParentTransform | None
 
 
-def write_ordering(ordering: Ordering, path: str | os.PathLike[str], *, overwrite: bool = False) -> None:
+def write_ordering(
+    ordering: Ordering, path: str | os.PathLike[str], *, overwrite: bool = False, superspace: bool | None = None
+) -> None:
     """Write an ordering as magCIF (.mcif, .cif) or extended XYZ (.xyz, .extxyz).
 
-    A commensurate k other than 0 is written in the supercell that holds whole waves. The magCIF lists all atoms
-    in P 1 with crystal-axis components in µB, standard uncertainties and the change of cell from the parent where
-    they are known; it fixes lengths and angles, so that a turned cell comes back in the standard orientation.
-    The extended XYZ keeps the cell vectors, labels, occupancies and Cartesian moments, but no uncertainties.
+    A commensurate k other than 0 is written in the supercell that holds whole waves; in a magCIF one wave of any k,
+    with its harmonics and a part at k = 0, can also be written in its own cell as a modulation in (3+1)D superspace.
+    The magCIF lists all atoms in P 1 with crystal-axis components in µB, standard uncertainties and the change of cell
+    from the parent where they are known; it fixes lengths and angles, so that a turned cell comes back in the standard
+    orientation. The extended XYZ keeps the cell vectors, labels, occupancies and Cartesian moments, but no
+    uncertainties.
 
     path: its suffix chooses the format. overwrite: whether an existing file is replaced. The file appears whole
-    or not at all.
+    or not at all. superspace: None writes a magCIF in superspace where there is no supercell of allowed size.
 
-    Raises FileError where the suffix is unknown, the file exists (unless overwrite), k is incommensurate, the
-    supercell is too large, or the format cannot hold the ordering.
+    Raises FileError where the suffix is unknown, the file exists (unless overwrite), there is no supercell of allowed
+    size and no superspace description in (3+1)D, or the format cannot hold the ordering.
     """
     name = os.fspath(path)
     suffix = Path(name).suffix.lower()
     if suffix in MCIF_SUFFIXES:
-        text = _as_mcif(ordering, name)
+        _refuse_as_cif(ordering.crystal, name)
+        modulated = not _fits_supercell(ordering) if superspace is None else superspace
+        text = modulated_text(ordering, name) if modulated else _as_mcif(ordering, name)
+    elif superspace:
+        raise FileError(f"{name}: only a magCIF ({', '.join(MCIF_SUFFIXES)}) can hold a modulation in superspace.")
     elif suffix in XYZ_SUFFIXES:
         text = _as_xyz(ordering, name)
     else:
@@ -87,7 +96,12 @@ def _save(text: str, name: str, overwrite: bool) -> None:
 def _magnetic_cell(ordering: Ordering, name: str) -> _MagneticCell:
     """The ordering in the smallest multiple of its cell in which every k is a reciprocal lattice vector."""
     crystal = ordering.crystal
-    counts = _periods(ordering.k, name)
+    counts = _periods(ordering.k)
+    if isinstance(counts, np.ndarray):
+        raise FileError(
+            f"{name}: k = ({', '.join(f'{x:.6g}' for x in counts)}) repeats in no supercell of up to {MAX_PERIOD} "
+            "cells along an axis. Write it as .mcif, in superspace, or take a commensurate k nearby."
+        )
     cells = list(itertools.product(*(range(n) for n in counts)))
     if len(cells) * crystal.n_sites > MAX_ATOMS:
         raise FileError(
@@ -114,17 +128,20 @@ def _magnetic_cell(ordering: Ordering, name: str) -> _MagneticCell:
     )
 
 
-def _periods(k: FloatArray, name: str) -> list[int]:
+def _fits_supercell(ordering: Ordering) -> bool:
+    """True where a supercell that may be written holds whole waves."""
+    counts = _periods(ordering.k)
+    return not isinstance(counts, np.ndarray) and int(np.prod(counts)) * ordering.crystal.n_sites <= MAX_ATOMS
+
+
+def _periods(k: FloatArray) -> list[int] | FloatArray:
+    """Cells along each axis that hold whole waves, or the first k (3,) that repeats in no supercell."""
     counts = [1, 1, 1]
     for vector in k:
         for axis, value in enumerate(vector):
             nearest = Fraction(float(value)).limit_denominator(MAX_PERIOD)
             if abs(float(nearest) - value) > K_SNAP:
-                raise FileError(
-                    f"{name}: k = ({', '.join(f'{x:.6g}' for x in vector)}) repeats in no supercell of up to "
-                    f"{MAX_PERIOD} cells along an axis. Incommensurate orderings are not written; take a "
-                    "commensurate k nearby."
-                )
+                return np.asarray(vector)
             counts[axis] = int(np.lcm(counts[axis], nearest.denominator))
     return counts
 
@@ -150,16 +167,9 @@ def _as_mcif(ordering: Ordering, name: str) -> str:
     lines += loop(
         ["_space_group_symop_magn_operation.id", "_space_group_symop_magn_operation.xyz"], [["1", "x,y,z,+1"]]
     )
-    atoms, names = atom_lines(
-        magnetic.labels, magnetic.symbols, magnetic.positions, magnetic.occupancies, name
-    )
-    lines += atoms
-    lines += moment_lines(
-        [names[i] for i in np.flatnonzero(shown := magnetic.magnetic | (not magnetic.magnetic.any()))],
-        components[shown],
-        magnetic.moment_su[shown],
-        all_su=magnetic.moment_su,
-    )
+    atoms, names = atom_lines(magnetic.labels, magnetic.symbols, magnetic.positions, magnetic.occupancies, name)
+    shown = np.flatnonzero(magnetic.magnetic | (not magnetic.magnetic.any()))
+    lines += [*atoms, *moment_lines([names[i] for i in shown], components[shown], magnetic.moment_su[shown])]
     return "\n".join(lines) + "\n"
 
 
@@ -171,17 +181,17 @@ def _as_xyz(ordering: Ordering, name: str) -> str:
                 f"{name}: the label {label!r} is empty or holds a blank, which extended XYZ cannot keep. "
                 "Write it as .mcif."
             )
-    lattice = " ".join(_digits(value) for value in magnetic.cell.ravel())
+    lattice = " ".join(digits(value) for value in magnetic.cell.ravel())
     pbc = " ".join("T" if periodic else "F" for periodic in ordering.crystal.pbc)
     positions = magnetic.positions @ magnetic.cell
     rows = [
         " ".join(
             [
                 magnetic.symbols[i],
-                *map(_digits, positions[i]),
-                *map(_digits, magnetic.moments_cart[i]),
+                *map(digits, positions[i]),
+                *map(digits, magnetic.moments_cart[i]),
                 magnetic.labels[i],
-                _digits(magnetic.occupancies[i]),
+                digits(magnetic.occupancies[i]),
             ]
         )
         for i in range(len(magnetic.symbols))
@@ -190,5 +200,3 @@ def _as_xyz(ordering: Ordering, name: str) -> str:
         f'Lattice="{lattice}" Properties=species:S:1:pos:R:3:initial_magmoms:R:3:labels:S:1:occupancies:R:1 pbc="{pbc}"'
     )
     return "\n".join([str(len(rows)), head, *rows]) + "\n"
-
-

@@ -234,7 +234,8 @@ class Wave:
             share = (below - a) if rising else (b - below)
             share = np.where(x >= max(first, last), b - a, np.where(x < min(first, last), 0.0, share))
             total += share / (2 * np.pi)
-        return np.clip(total, 0.0, 1.0)
+        low, high = self.edges[0], self.edges[-1]
+        return np.where(size >= high, 1.0, np.where(size < low, 0.0, np.clip(total, 0.0, 1.0)))
 
     def nodes(self, n: int) -> FloatArray:
         phase = 2 * np.pi * (np.arange(n) + 0.5) / n

@@ -155,7 +155,10 @@ def orbit_field(
     steady = (whole.lorentz + whole.demagnetizing + whole.applied)[chosen] + constant + waves[still].real.sum(axis=0)
     moving = k[~still]
     phases = phase_space(moving)
-    notes = list(whole.notes)
+    # Displacements are turned with the position; the one that was stated is told, not each of its images.
+    turned = {f"{probe.name}: displaced {term.words()}" for found in probes[1:] for term in found.displaced}
+    stated = {f"{probe.name}: displaced {term.words()}" for term in probe.displaced}
+    notes = [note for note in whole.notes if note not in turned - stated]
     for value, fraction in nearly_commensurate(moving):
         notes.append(
             f'the coordinate {value:.6g} of k is taken as it stands; for a commensurate ordering write "{fraction}"'

@@ -27,6 +27,8 @@ from latticedip.sample import Sample
 
 #: Phases drawn where several waves run independently (a power of two).
 SAMPLES = 2**16
+#: Most sizes kept of one orbit: with many positions each takes fewer phases.
+MOST_SIZES = 2**22
 #: Phases of a wave whose powder is taken in an applied field.
 POWDER_PHASES = 2048
 
@@ -38,7 +40,8 @@ class Spectrum:
     ordering, probe: what was asked. powder: True for a powder. applied_T: Shape (3,), the applied field.
     domains: those that were averaged, equally large; one where the ordering is taken as given.
     orbits: the fields at all equivalent positions, one for each domain.
-    distribution: of |B|. boundary: assumed, in words. notes: sentences a report must repeat.
+    distribution: of |B|. boundary: assumed, in words. samples: quasi-random phases for each position, where several run
+        freely. notes: sentences a report must repeat.
     """
 
     ordering: Ordering
@@ -49,6 +52,7 @@ class Spectrum:
     orbits: tuple[OrbitField, ...]
     distribution: FieldDistribution
     boundary: str
+    samples: int = SAMPLES
     notes: tuple[str, ...] = ()
 
     @property
@@ -73,7 +77,7 @@ class Spectrum:
             return f"repeats after {len(phases.listed)} cells"
         if phases.n_free == 1:
             return "incommensurate: every phase of one wave, in closed form"
-        return f"incommensurate: {phases.n_free} independent phases, {SAMPLES} quasi-random ones"
+        return f"incommensurate: {phases.n_free} independent phases, {self.samples} quasi-random ones for each position"
 
     def binned(self, bins: int = 200, span: Any = None) -> tuple[FloatArray, FloatArray]:
         """Return (edges of bins (bins + 1,) in T, share in each (bins,)); the shares add up to one.
@@ -167,7 +171,16 @@ def spectrum(
     if powder and np.any(orbits[0].applied):
         notes.append("powder in an applied field: the moments keep their arrangement in every grain")
     return Spectrum(
-        ordering, probe, powder, orbits[0].applied, found, orbits, distribution, orbits[0].boundary, tuple(notes)
+        ordering=ordering,
+        probe=probe,
+        powder=powder,
+        applied_T=orbits[0].applied,
+        domains=found,
+        orbits=orbits,
+        distribution=distribution,
+        boundary=orbits[0].boundary,
+        samples=kept_samples(orbits[0], samples),
+        notes=tuple(notes),
     )
 
 
@@ -189,8 +202,7 @@ def field_parts(
         vectors = internal[:, None] + moving_fields(fields, fields.phases.listed)
         sizes = np.linalg.norm(vectors, axis=2).ravel()
         if not fields.phases.complete:
-            part: Part = Shell(sizes[:POWDER_PHASES], applied) if in_field else Sampled(sizes)
-            return [(part, 1.0)]
+            return [(_shell_of(sizes, applied) if in_field else Sampled(sizes), 1.0)]
         return [(Shell(np.array([s]), applied) if in_field else Line(float(s)), 1 / n) for s in sizes]
     same = same_size_T(fields)
     if fields.phases.n_free == 1:
@@ -204,14 +216,35 @@ def field_parts(
             else:
                 found.append((Shell(wave.nodes(POWDER_PHASES), applied, (low, high)) if in_field else wave, 1 / n))
         return found
-    turns = free_turns(fields, samples, seed)
-    sizes = np.linalg.norm(internal[:, None] + moving_fields(fields, turns), axis=2).ravel()
-    return [(Shell(sizes[: 8 * POWDER_PHASES], applied) if in_field else Sampled(sizes), 1.0)]
+    turns = free_turns(fields, kept_samples(fields, samples), seed)
+    phases = np.exp(-2j * np.pi * turns)
+    sizes = np.concatenate(
+        [
+            np.linalg.norm(steady + (phases @ fields.waves[:, row]).real, axis=1)
+            for row, steady in enumerate(internal)
+        ]
+    )
+    return [(_shell_of(sizes, applied) if in_field else Sampled(sizes), 1.0)]
+
+
+def _shell_of(sizes: FloatArray, applied: float) -> Shell:
+    """A powder of many internal fields, which a smaller number of their quantiles stands for."""
+    ordered = np.sort(sizes)
+    reach = float(ordered[0]), float(ordered[-1])
+    if len(ordered) > POWDER_PHASES:
+        ordered = ordered[((np.arange(POWDER_PHASES) + 0.5) / POWDER_PHASES * len(ordered)).astype(int)]
+    return Shell(ordered, applied, reach)
 
 
 def moving_fields(fields: OrbitField, turns: FloatArray) -> FloatArray:
     """Shape (n, m, 3) float in T. The waves at every position at phases (m, n_k), in turns."""
     return np.asarray(np.einsum("mk,kna->nma", np.exp(-2j * np.pi * turns), fields.waves).real)
+
+
+def kept_samples(fields: OrbitField, samples: int) -> int:
+    """How many of so many quasi-random phases (a power of two) each position of an orbit takes."""
+    most = MOST_SIZES // max(1, len(fields.steady) * len(fields.phases.listed))
+    return min(samples, 2 ** max(1, int(most).bit_length() - 1))
 
 
 def free_turns(fields: OrbitField, samples: int, seed: int) -> FloatArray:

@@ -106,6 +106,32 @@ def domains(ordering: Ordering, *, reversed_too: bool = True) -> tuple[Domain, .
     return tuple(domain for _, _, domain in kept)
 
 
+def which_domain(ordering: Ordering, other: Ordering) -> Domain | None:
+    """The domain of ``ordering`` that ``other`` is, up to a lattice vector; None where it is none of them.
+
+    None also where the two have no common non-magnetic structure: then no operation leads from one to the other.
+
+    Raises InputError as `domains` does.
+    """
+    first, second = in_reference_cell(ordering), in_reference_cell(other)
+    if not _same_structure(first.crystal, second.crystal):
+        return None
+    lattice = _PrimitiveLattice.of(first.crystal)
+    wanted = lattice.waves(second)
+    for domain in domains(first):
+        found = lattice.waves(domain.ordering)
+        if _same_up_to_translation(wanted, found, phase_space(found.k)):
+            return domain
+    return None
+
+
+def _same_structure(one: Crystal, two: Crystal) -> bool:
+    if one is two:
+        return True
+    alike = one.symbols == two.symbols and one.pbc == two.pbc and np.allclose(one.cell, two.cell, rtol=0, atol=1e-6)
+    return alike and np.allclose(one.positions, two.positions, rtol=0, atol=1e-6)
+
+
 def in_reference_cell(ordering: Ordering) -> Ordering:
     """The same ordering on the sites of its reference crystal, as Fourier components at every k it takes there.
 

@@ -28,7 +28,7 @@ PAIRS = 100_000
 #: An atom of the ordering's own cell lies this close (Å) to the one of the reference crystal that it is.
 SAME_ATOM_A = 0.2
 #: A cloud with a density exp(−this) of its largest, or more, at an ion is said to reach it.
-REACHED = 20.0
+REACHED = 12.0
 #: So many of these are named.
 REACHED_SHOWN = 10
 

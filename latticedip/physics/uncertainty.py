@@ -78,6 +78,7 @@ class Tied:
 def field_uncertainty(result: LocalField, *, site_position_su: Any = None) -> FieldUncertainty:
     """Propagate the uncertainties of the moments (``ordering.moment_su``), of probe positions and of site positions.
 
+    result: what `local_field` returned; its moments and probes say what is uncertain.
     site_position_su: Shape (n_sites, 3) float, fractional; NaN or 0 where a coordinate is exact. None: all are.
 
     Raises InputError for a wrong shape or negative numbers.

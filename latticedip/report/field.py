@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from latticedip.report.su import format_su
 from latticedip.report.tables import (
     Column,
     bullets,
@@ -102,11 +103,21 @@ def _overview(entry: Mapping[str, Any], unit: str, width: int | None) -> str:
         counted[row["probe"]] = counted.get(row["probe"], 0) + 1
         name = row["probe"] + (f" ({row['site']})" if row["site"] and row["site"] not in row["probe"] else "")
         name += f", {counted[row['probe']]} of {row['multiplicity']}" if row["multiplicity"] > 1 else ""
-        line = [str(number), name, fixed(sizes[number - 1], digits), fixed(frequencies[number - 1], frequency_digits)]
+        line = [
+            str(number),
+            name,
+            _value(sizes[number - 1], digits, row.get(f"field_size_su_{unit}")),
+            _value(frequencies[number - 1], frequency_digits, row.get("frequency_su_MHz")),
+        ]
         line += [fixed(slopes[number - 1], slope_digits), coordinates(row["position_in_reference_cell"])]
         line += [coordinates(row["position"])] if elsewhere else []
         cells.append(line)
     return table(columns, cells, width=width, keys=1)
+
+
+def _value(value: float, decimals: int, su: float | None) -> str:
+    """A value with its standard uncertainty where there is one, as value(su), else with some decimals."""
+    return fixed(value, decimals) if su is None or not math.isfinite(su) else format_su(value, su)
 
 
 def _error_bound(rows: Sequence[Mapping[str, Any]], unit: str) -> float:

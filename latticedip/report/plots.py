@@ -152,6 +152,89 @@ def _time_panel(panel: Axes, found: Mapping[str, Any], document: Mapping[str, An
     panel.set_ylabel("polarization")
 
 
+def draw_modes(document: Mapping[str, Any], path: Path) -> None:
+    """Draw the energies of all dipolar modes of a document along the band path, the bound as a dashed line.
+
+    Every segment is drawn on its own: where one ends in k → 0 and the next begins, the energies jump.
+
+    Raises InputError as `check_plot`, and for a document without a path; FileError where the file cannot be written.
+    """
+    check_plot(path)
+    found = document["bands"]
+    if found is None:
+        raise InputError("there is no band path to draw modes along.")
+    from matplotlib import rc_context
+    from matplotlib.figure import Figure
+
+    distance, energies = np.array(found["distance_per_A"]), np.array(found["energies_ueV_per_ion"])
+    segment = np.array(found["segment"])
+    with rc_context(STYLE):
+        figure = Figure(figsize=(WIDTH_IN, 2 * ROW_IN), layout="constrained")
+        panel = figure.subplots()
+        panel.set_title(_plain(document["title"]), loc="left")
+        for number in np.unique(segment):
+            on = segment == number
+            panel.plot(distance[on], energies[on], color="0.0", linewidth=0.9)
+        bound = document["lowest"]["energy_ueV_per_ion"]
+        panel.axhline(bound, color="0.0", linestyle=(0, (5, 3)), linewidth=0.9)
+        panel.annotate(
+            f"lowest mode {bound:.5g}", (distance[-1], bound), xytext=(0, -3), textcoords="offset points", fontsize=7,
+            ha="right", va="top",
+        )  # fmt: skip
+        for tick in found["ticks"]:
+            panel.axvline(tick["distance_per_A"], color="0.7", linewidth=0.6, zorder=0)
+        panel.set_xticks([tick["distance_per_A"] for tick in found["ticks"]])
+        panel.set_xticklabels([_point_name(tick["name"]) for tick in found["ticks"]])
+        panel.set_xlim(distance[0], distance[-1])
+        span = float(energies.max()) - min(bound, float(energies.min())) or 1.0
+        panel.set_ylim(min(bound, float(energies.min())) - 0.1 * span, float(energies.max()) + 0.05 * span)
+        panel.set_ylabel("energy (µeV per ion)")
+        panel.set_xlabel("propagation vector")
+        _save(figure, path)
+
+
+def _point_name(name: str) -> str:
+    """A special point as it is printed, Γ for G."""
+    return _plain("|".join("Γ" if part == "G" else part for part in name.split("|")))
+
+
+def draw_directions(document: Mapping[str, Any], path: Path) -> None:
+    """Draw the energies of a document against direction, one row of panels for each ordering, one for each circle.
+
+    Raises InputError as `check_plot`, and for more than 12 orderings in one picture; FileError where the file cannot be
+    written.
+    """
+    check_plot(path)
+    entries = document["orderings"]
+    if len(entries) > MOST_PANELS:
+        raise InputError(
+            f"{len(entries)} orderings do not fit into one picture of at most {MOST_PANELS}. Name some with --ordering."
+        )
+    from matplotlib import rc_context
+    from matplotlib.figure import Figure
+
+    with rc_context(STYLE):
+        figure = Figure(figsize=(WIDTH_IN, ROW_IN * len(entries) + 0.5), layout="constrained")
+        figure.suptitle(_plain(document["title"]), fontsize=10)
+        panels = figure.subplots(len(entries), 3, squeeze=False, sharey="row")
+        for entry, row in zip(entries, panels, strict=True):
+            circles = list(dict.fromkeys((point["from"], point["towards"]) for point in entry["rows"]))
+            for panel, circle in zip(row, circles, strict=True):
+                points = [point for point in entry["rows"] if (point["from"], point["towards"]) == circle]
+                angle = [point["angle_deg"] for point in points]
+                panel.plot(angle, [point["energy_ueV_per_ion"] for point in points], "o-", color="0.0", markersize=2.5)
+                panel.set_xlim(0, angle[-1])
+                panel.set_xticks(np.arange(0, angle[-1] + 1, 45 if angle[-1] <= 180 else 90))
+                panel.set_xlabel(f"angle (degrees), {circle[0]} to {circle[1]}")
+            row[0].set_ylabel("energy (µeV per ion)")
+            row[0].set_title(_plain(entry["ordering"]), loc="left")
+            values = [point["energy_ueV_per_ion"] for point in entry["rows"]]
+            # What is flat but for rounding is drawn flat.
+            span = max(max(values) - min(values), 1e-3 * max(abs(value) for value in values), 1e-9)
+            row[0].set_ylim(min(values) - 0.08 * span, max(values) + 0.08 * span)
+        _save(figure, path)
+
+
 def _plain(text: str) -> str:
     """Text that no layout engine takes for a formula."""
     return clean(text).replace("$", r"\$")

@@ -7,7 +7,8 @@ from typing import Any
 
 import numpy as np
 
-from latticedip.report.field import placed_words
+from latticedip.report.energy_parts import made_of_text
+from latticedip.report.field import k_text, placed_words
 from latticedip.report.tables import (
     Column,
     bullets,
@@ -33,9 +34,13 @@ def rank_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         lead.append(("applied field", f"{vector(document['sample']['applied_T'])} T, Cartesian"))
     if rotate:
         lead.append(("orientation", "each pattern turned as a whole to its lowest energy"))
+    if document["bound"] is not None:
+        lead.append(("bound", bound_words(document["bound"])))
     parts = [heading(document["title"]), "", pairs(lead, width=width), "", _energies(rows, width)]
     if any(row["tie"] for row in rows):
         parts += ["", paragraph("= : a tie; the energies differ by less than the error bound.", width=width)]
+    if any(row.get("other_energy_meV_per_ion") is not None for row in rows):
+        parts += ["", "With the energies from elsewhere", "", _sums(rows, width)]
     zero = document["zero_parts"]
     if len(zero) < 2:
         parts += ["", "Parts of the energy", "", _energy_parts(rows, zero, width)]
@@ -47,6 +52,8 @@ def rank_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         parts += ["", bullets(remarks, width=width)] if remarks else []
     if any(row["fields"] for row in rows):
         parts += ["", "Field at the probes", "", _fields(rows, width)]
+    if document["inputs"]["options"]["parts"]:
+        parts += ["", made_of_text(rows, width=width)]
     placed = [
         f"{row['ordering']}: has a cell of its own, {placed_words(row['own_cell_placed'])}"
         for row in rows
@@ -60,7 +67,8 @@ def rank_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
     ]
     common = [note for row in rows for note in row["notes"] if all(note in other["notes"] for other in rows)]
     own = [line for line in notes if line.split(": ", 1)[1] not in common]
-    parts += ["", bullets([*common, *placed, *own, *document["notes"]], width=width)]
+    remarks = [*common, *placed, *own, *_equals(rows), *_bound_notes(document), *_sum_notes(rows)]
+    parts += ["", bullets([*remarks, *document["notes"]], width=width)]
     return "\n".join(parts)
 
 
@@ -70,7 +78,7 @@ def _column(rows: Sequence[Mapping[str, Any]], key: str, *, like: str = "", scal
     like: another key whose values set the digits. scale: turns the error bound in µeV into the unit of the column.
     """
     error = max((row["error_bound_ueV_per_ion"] for row in rows), default=0.0) * scale
-    values = [row[like or key] for row in rows]
+    values = [row[like or key] for row in rows if row[like or key] is not None]
     finest = decimals_for(values, significant=15, error=error)
     digits = min(finest, max(3, decimals_for(values, significant=5, error=error)))
     return [fixed(row[key], digits) for row in rows]
@@ -81,15 +89,18 @@ def _energies(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
     above = _column(rows, "above_lowest_ueV_per_ion", like="energy_ueV_per_ion")
     kelvin = _column(rows, "energy_K_per_ion", scale=K_PER_EV * 1e-6)
     net_digits = decimals_for([row["net_moment_muB_per_ion"] for row in rows], significant=4, error=1e-9)
+    bounded = any(row["above_bound_ueV_per_ion"] is not None for row in rows)
     columns = [
         Column("rank"),
         Column("ordering", words=True),
         Column("energy", "µeV/ion"),
         Column("energy", "K/ion"),
         Column("above\nlowest", "µeV/ion"),
+        *([Column("above\nbound", "µeV/ion")] if bounded else []),
         Column("tie", words=True),
         Column("net\nmoment", "µB/ion"),
     ]
+    height = _column(rows, "above_bound_ueV_per_ion", like="energy_ueV_per_ion")
     cells = [
         [
             str(row["rank"]),
@@ -97,12 +108,74 @@ def _energies(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
             micro[i],
             kelvin[i],
             above[i],
+            *([height[i]] if bounded else []),
             "=" if row["tie"] else "",
             fixed(row["net_moment_muB_per_ion"], min(net_digits, 4)),
         ]
         for i, row in enumerate(rows)
     ]
     return table(columns, cells, width=width, keys=2)
+
+
+def bound_words(bound: Mapping[str, Any]) -> str:
+    """The lowest dipolar mode in one line: its energy, where it is, whether an ordering reaches it."""
+    energy = bound["energy_ueV_per_ion"]
+    shown = fixed(energy, max(3, decimals_for([energy], significant=5, error=bound["error_bound_ueV_per_ion"])))
+    if bound["k"] is None:
+        return f"{shown} µeV/ion, approached as k → 0"
+    reached = "reached by equal moments" if bound["equal_moments"] else "no equal moments found that reach it"
+    return f"{shown} µeV/ion, at k = {k_text(bound['k'])}; {reached}"
+
+
+def _bound_notes(document: Mapping[str, Any]) -> list[str]:
+    if document["bound"] is not None:
+        return list(document["bound"]["notes"])
+    asked = document["inputs"]["options"]["bound"]
+    return [] if asked is False else [document["bound_note"]]
+
+
+def _equals(rows: Sequence[Mapping[str, Any]]) -> list[str]:
+    """Which candidates are the same by symmetry, and what may be turned without a change of energy."""
+    lines = [f"{row['ordering']}: {row['same_as']['words']}" for row in rows if row["same_as"] is not None]
+    for row in rows:
+        # A turn that was asked for says the same of its easy direction.
+        told = row.get("orientation_notes") or row["same_as"] is not None
+        if row["free_turns"]["words"] and not told:
+            lines.append(f"{row['ordering']}: {row['free_turns']['words']}")
+    return lines
+
+
+def _sums(rows: Sequence[Mapping[str, Any]], width: int | None) -> str:
+    """The energies that the study gives from elsewhere beside the dipolar ones, lowest sum first."""
+    given = [row for row in rows if row["other_energy_meV_per_ion"] is not None]
+    given.sort(key=lambda row: row["sum_with_other_ueV_per_ion"])
+    columns = [
+        Column("order"),
+        Column("ordering", words=True),
+        Column("energy", "µeV/ion"),
+        Column("from\nelsewhere", "µeV/ion"),
+        Column("sum", "µeV/ion"),
+        Column("above\nlowest", "µeV/ion"),
+    ]
+    values = [{**row, "other": 1e3 * row["other_energy_meV_per_ion"]} for row in given]
+    shown = [
+        _column(values, key)
+        for key in ("energy_ueV_per_ion", "other", "sum_with_other_ueV_per_ion", "sum_above_lowest_ueV_per_ion")
+    ]
+    cells = [[str(row["rank_by_sum"]), row["ordering"], *(part[i] for part in shown)] for i, row in enumerate(given)]
+    return table(columns, cells, width=width, keys=2)
+
+
+def _sum_notes(rows: Sequence[Mapping[str, Any]]) -> list[str]:
+    if not any(row.get("other_energy_meV_per_ion") is not None for row in rows):
+        return []
+    notes = ["energies from elsewhere are as the study states them; the ranking and its ties leave them out"]
+    without = [row["ordering"] for row in rows if row["other_energy_meV_per_ion"] is None]
+    if without:
+        notes.append(f"the study states no other energy for {', '.join(without)}: not among the sums")
+    if any(row.get("rotation") for row in rows):
+        notes.append("energies from elsewhere are taken as the same for every orientation of a pattern")
+    return notes
 
 
 def _energy_parts(rows: Sequence[Mapping[str, Any]], zero: Mapping[str, str], width: int | None) -> str:

@@ -17,12 +17,11 @@ STRUCTURE_SUFFIXES = frozenset(
     (".cif", ".mcif", ".magcif", ".xyz", ".extxyz", ".vasp", ".poscar", ".res", ".pdb", ".xsf", ".cell", ".gen")
 )
 STRUCTURE_NAMES = ("POSCAR", "CONTCAR")
-#: Bytes of a file that its cost is guessed from.
-SCANNED = 1_000_000
+#: Bytes of a file that its cost is guessed from, and the longest line that counts.
+SCANNED, LONGEST_LINE = 1_000_000, 300
 
-#: A line with three decimal numbers, and one with three terms of an operation such as "-x+1/2,y,-z".
-_ATOM = re.compile(rb"^[^\n]*?\d\.\d+[^\n]*?\s-?\d*\.\d+[^\n]*?\s-?\d*\.\d+", re.MULTILINE)
-_OPERATION = re.compile(rb"^[^\n#_]*[xyzXYZ][^\n,]*,[^\n,]*[xyzXYZ][^\n,]*,[^\n,]*[xyzXYZ]", re.MULTILINE)
+_NUMBER = re.compile(rb"-?\d*\.?\d+(\(\d+\))?")
+_OPERATION = re.compile(rb"[^,]*[xyzXYZ][^,]*,[^,]*[xyzXYZ][^,]*,[^,]*[xyzXYZ]")
 
 
 @dataclass
@@ -110,8 +109,16 @@ def guess_cost(path: str) -> float:
         more = os.path.getsize(path) / max(1, len(head))
     except OSError:
         return 0.0
-    atoms = len(_ATOM.findall(head)) * max(1.0, more)
-    operations = max(1, len(_OPERATION.findall(head)))
+    atoms = operations = 0
+    for line in head.splitlines():
+        if len(line) > LONGEST_LINE:
+            continue
+        if b"," in line:
+            operations += _OPERATION.match(line) is not None
+        else:
+            atoms += sum(_NUMBER.fullmatch(word) is not None for word in line.split()) >= 3
+    atoms = round(atoms * max(1.0, more))
+    operations = max(1, operations)
     # Sites of a CIF lie on symmetry elements more often than not.
     sites = atoms * (1.0 + operations / 4)
     return 20.0 + sites + sites**2 / 100

@@ -14,9 +14,13 @@ from __future__ import annotations
 
 import csv
 import fcntl
+import io
 import json
+import logging
 import os
+import tempfile
 import time
+from array import array
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import suppress
 from pathlib import Path
@@ -26,11 +30,13 @@ from typing import Any
 from latticedip.encode import csv_cell
 from latticedip.errors import FileError, InputError
 
-RESULTS, TABLE, SUMMARY, LOCK = "results.jsonl", "results.csv", "summary.json", ".lock"
+RESULTS, TABLE, SUMMARY = "results.jsonl", "results.csv", "summary.json"
 #: Seconds between two calls of fsync.
 SYNC_S = 2.0
 
 Row = Mapping[str, Any]
+
+_log = logging.getLogger(__name__)
 
 
 class Journal:
@@ -54,20 +60,26 @@ class Journal:
         self._file = -1
         with _told(folder):
             folder.mkdir(parents=True, exist_ok=True)
-            self._lock = os.open(folder / LOCK, os.O_RDWR | os.O_CREAT, 0o666)
-            try:
-                fcntl.flock(self._lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
-            except BlockingIOError:
-                os.close(self._lock)
-                raise InputError(f"another batch is writing to {str(folder)!r}. Wait for it, or name another folder.") from None
+            # The folder itself is locked: no file of its own could be left behind by a killed run.
+            self._lock = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
         try:
+            self._take_lock()
             self._open(resume)
         except BaseException:
             self.close()
             raise
 
+    def _take_lock(self) -> None:
+        try:
+            fcntl.flock(self._lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError:
+            where = str(self.folder)
+            raise InputError(f"another batch is writing to {where!r}. Wait for it, or name another folder.") from None
+        except OSError:
+            _log.info("the file system of %s knows no locks: nothing keeps a second batch out", self.folder)
+
     def _open(self, resume: bool) -> None:
-        if not resume and self.path.exists():
+        if not resume and any(_holds_something(self.folder / name) for name in (RESULTS, TABLE, SUMMARY)):
             raise InputError(
                 f"{str(self.folder)!r} holds the results of an earlier run. Go on with it with --resume (resume=True), "
                 "or name another folder."
@@ -82,7 +94,7 @@ class Journal:
     def __enter__(self) -> Journal:
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(self, *_: object) -> None:
         self.close()
 
     def close(self) -> None:
@@ -93,8 +105,6 @@ class Journal:
             os.close(self._file)
             self._file = -1
         if self._lock >= 0:
-            with suppress(OSError):
-                os.unlink(self.folder / LOCK)
             os.close(self._lock)
             self._lock = -1
 
@@ -157,38 +167,41 @@ class Journal:
                 yield json.loads(stream.readline())
 
     def merge(self, rows_of: Callable[[dict[str, Any]], list[Row]]) -> None:
-        """Write results.csv: the rows of every record, in order of input, with every column that any of them has."""
-        columns: dict[str, None] = {}
-        for record in self.records():
-            for row in rows_of(record):
-                columns.update(dict.fromkeys(row))
+        """Write results.csv: the rows of every record, in order of input, with every column that any of them has.
 
-        def lines() -> Iterator[bytes]:
-            sink = _Line()
-            writer = csv.writer(sink, lineterminator="\n")
-            writer.writerow([csv_cell(column) for column in columns])
-            yield sink.taken()
+        Rows wait in a temporary file until all columns are known, so that memory does not grow with their number.
+        """
+        columns: dict[str, int] = {}
+        sizes, widths = array("Q"), array("Q")
+        with _told(self.folder / TABLE), tempfile.TemporaryFile(dir=self.folder) as spool:
             for record in self.records():
                 for row in rows_of(record):
-                    writer.writerow([csv_cell(row.get(column)) for column in columns])
-                yield sink.taken()
+                    for column in row:
+                        columns.setdefault(column, len(columns))
+                    line = _csv_line(row.get(column) for column in columns)
+                    sizes.append(len(line))
+                    widths.append(len(columns))
+                    spool.write(line)
+            spool.seek(0)
 
-        replace_file(self.folder / TABLE, lines())
+            def lines() -> Iterator[bytes]:
+                yield _csv_line(columns) + b"\n"
+                for size, width in zip(sizes, widths, strict=True):
+                    yield spool.read(size) + b"," * (len(columns) - width) + b"\n"
+
+            replace_file(self.folder / TABLE, lines())
 
 
-class _Line:
-    """Collects what a csv writer writes, as bytes; names that are no valid Unicode are written with escapes."""
+def _holds_something(path: Path) -> bool:
+    with _told(path):
+        return path.exists() and path.stat().st_size > 0
 
-    def __init__(self) -> None:
-        self._parts: list[str] = []
 
-    def write(self, text: str) -> None:
-        self._parts.append(text)
-
-    def taken(self) -> bytes:
-        text = "".join(self._parts)
-        self._parts.clear()
-        return text.encode("utf-8", "backslashreplace")
+def _csv_line(values: Iterable[Any]) -> bytes:
+    """One row as CSV without its end; names that are no valid Unicode are written with escapes."""
+    text = io.StringIO()
+    csv.writer(text, lineterminator="").writerow([csv_cell(value) for value in values])
+    return text.getvalue().encode("utf-8", "backslashreplace")
 
 
 def replace_file(path: Path, pieces: Iterable[bytes]) -> None:
@@ -237,6 +250,6 @@ class _told:
     def __enter__(self) -> None:
         return None
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, _: TracebackType | None) -> None:
         if isinstance(error, OSError):
             raise FileError(f"{str(self.path)!r}: {error.strerror or error}.") from None

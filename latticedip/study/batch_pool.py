@@ -224,7 +224,9 @@ class Pool:
                 error = f"it took longer than {self.timeout_s:g} s and was stopped. Allow more, or leave it out."
                 yield self._replace(worker, waiting, error, TIMEOUT)
             elif self.memory_MB is not None and worker.memory_MB() > self.memory_MB:
-                error = f"it took more than {self.memory_MB:g} MB of memory and was stopped. Allow more, or leave it out."
+                error = (
+                    f"it took more than {self.memory_MB:g} MB of memory and was stopped. Allow more, or leave it out."
+                )
                 if not self._try_again(worker, waiting):
                     yield self._replace(worker, waiting, error, MEMORY)
 

@@ -4,7 +4,7 @@ Tables beside those of a study:
 
 [batch]    do = ["rank", "field"] (names of commands that take a study), orderings = ["template", "file", "propose"]
            (where candidates come from; without it all that there are), rotate (for rank), axes (for field), tol
-[propose]  supercell = [2, 2, 1], along = [0, 0, 1] (crystal axes), net_zero = true, keep = 10, seed = 0
+[propose]  as in a study; here the orderings it finds are candidates
 
 Names in [moments] and [susceptibility] that a structure does not have are passed over, as long as it has one of them:
 a template lists the elements of a whole family of compounds.
@@ -29,14 +29,14 @@ from latticedip.study.orderings import ORDERING_KEYS, existing_file
 from latticedip.study.probe_rules import RULE_KEYS, check_rule
 from latticedip.study.probes import PROBE_KEYS, SAMPLE_KEYS
 from latticedip.study.schema import STUDY_KEYS, Study, assemble, load_bytes, parse_tables
+from latticedip.study.search import SEARCH_KEYS, stated_sizes
 
 if TYPE_CHECKING:
     from latticedip.crystal.model import Crystal
     from latticedip.ordering.model import Ordering
 
-TEMPLATE_KEYS = ("title", "batch", "propose", *(key for key in STUDY_KEYS if key not in ("title", "crystal")))
+TEMPLATE_KEYS = ("title", "batch", *(key for key in STUDY_KEYS if key not in ("title", "crystal")))
 BATCH_KEYS = ("do", "orderings", "rotate", "axes", "tol")
-PROPOSE_KEYS = ("supercell", "along", "net_zero", "keep", "seed")
 DEFAULT_TASKS = ("rank", "field")
 SOURCES = ("template", "file", "propose")
 #: What the ordering that an input file itself holds is called, the same for every file.
@@ -161,28 +161,6 @@ class Template:
                 raise self.batch["tol"].expected(what)
         return given
 
-    @cached_property
-    def proposal(self) -> dict[str, Any]:
-        """The arguments of `propose` that need no crystal."""
-        if "propose" not in self.table:
-            return {}
-        table = self.table["propose"].table(PROPOSE_KEYS, header="one table, headed [propose]")
-        given: dict[str, Any] = {}
-        if "supercell" in table:
-            items = table["supercell"].items("three whole numbers, such as [2, 2, 1]")
-            if len(items) != 3:
-                raise table["supercell"].expected("three whole numbers, such as [2, 2, 1]")
-            given["supercell"] = tuple(item.whole("a whole number, at least 1") for item in items)
-        if "along" in table:
-            given["along"] = table["along"].direction("a direction in crystal axes a, b, c, such as [0, 0, 1]")
-        if "net_zero" in table:
-            table["net_zero"].true()
-            given["net_zero"] = True
-        for name, low in (("keep", 1), ("seed", 0)):
-            if name in table:
-                given[name] = table[name].whole(f"a whole number, at least {low}", low=low)
-        return given
-
     def check(self) -> None:
         """Refuse what is wrong whatever the structure: unknown keys, tasks, rules and files that are not there."""
         for item in self._items("ordering"):
@@ -194,7 +172,9 @@ class Template:
                 check_rule(table)
         if "sample" in self.table:
             self.table["sample"].table(SAMPLE_KEYS, header="one table, headed [sample]")
-        for part in ("title", "do", "sources", "options", "proposal", "digest"):
+        if "propose" in self.table:
+            self.table["propose"].table(SEARCH_KEYS, header="one table, headed [propose]")
+        for part in ("title", "do", "sources", "options", "digest"):
             getattr(self, part)
 
     def study_for(self, crystal: Crystal, own: Ordering | None, path: Path) -> Study:
@@ -202,7 +182,7 @@ class Template:
 
         Raises StudyError where the template does not fit the structure.
         """
-        table = {name: key for name, key in self.table.items() if name not in ("title", "batch", "propose")}
+        table = {name: key for name, key in self.table.items() if name not in ("title", "batch")}
         for name in ("moments", "susceptibility"):
             if name in table:
                 table[name] = _present_names(table[name], crystal)
@@ -224,16 +204,9 @@ class Template:
 
     def _proposed(self, study: Study, taken: list[Ordering]) -> list[Ordering]:
         from latticedip.analysis.propose import propose
-        from latticedip.ordering.patterns import unit_direction
 
-        key = self.table["propose"]
-        if not study.moments:
-            raise key.refuse("no site has a moment size, expected a table [moments], such as Mn = 4.6.")
-        arguments = dict(self.proposal)
-        if "along" in arguments:
-            arguments["along"] = unit_direction(study.crystal, arguments["along"])
-        with key.located():
-            ranking = propose(study.crystal, study.moments, sample=study.sample, **arguments)
+        with self.table["propose"].located():
+            ranking = propose(study.crystal, stated_sizes(study), sample=study.sample, **study.search.arguments())
         found: list[Ordering] = []
         for number, row in enumerate(ranking.rows, start=1):
             name = _free_name(row.ordering.name or f"proposed {number}", [*taken, *found])
@@ -282,7 +255,7 @@ def _free_name(name: str, taken: list[Ordering]) -> str:
     return free
 
 
-def check_sizes(name: str, value: float | None) -> float | None:
+def check_limit(name: str, value: float | None) -> float | None:
     """A limit that a user sets: a positive number, or None; raises InputError otherwise."""
     if value is not None and not (isinstance(value, (int, float)) and 0 < value < float("inf")):
         raise InputError(f"{name} must be a number larger than 0, got {value!r}.")

@@ -14,17 +14,17 @@ import sys
 from typing import Any, BinaryIO
 
 #: One thread each: the processes fill the cores.
-ONE_THREAD = {
-    name: "1"
-    for name in (
+ONE_THREAD = dict.fromkeys(
+    (
         "OMP_NUM_THREADS",
         "OPENBLAS_NUM_THREADS",
         "MKL_NUM_THREADS",
         "BLIS_NUM_THREADS",
         "VECLIB_MAXIMUM_THREADS",
         "NUMBA_NUM_THREADS",
-    )
-}
+    ),
+    "1",
+)
 #: What the worker says when it can take jobs.
 READY = b"ready\n"
 #: The program text that starts a worker with the module search path of its parent.

@@ -30,7 +30,8 @@ from latticedip.study.keys import Key
 FILE_KEYS = ("file", "block", "domain")
 SIGN_KEYS = ("along", "signs")
 WAVE_KEYS = ("cosine", "sine", "phase")
-ORDERING_KEYS = ("name", "k", *SIGN_KEYS, *WAVE_KEYS, *FILE_KEYS)
+OTHER_KEY = "other_energy_meV_per_ion"
+ORDERING_KEYS = ("name", "k", *SIGN_KEYS, *WAVE_KEYS, *FILE_KEYS, OTHER_KEY)
 
 _DIRECTION = "a direction in crystal axes a, b, c, such as [0, 0, 1]"
 _K = 'three reduced coordinates, such as [0, 0, 0.5] or [0, 0, "1/3"]'
@@ -60,9 +61,18 @@ def read_moments(key: Key | None, crystal: Crystal) -> Sizes:
 
 
 def read_orderings(
-    key: Key | None, crystal: Crystal, sizes: Sizes, folder: Path, files: dict[str, Path]
+    key: Key | None,
+    crystal: Crystal,
+    sizes: Sizes,
+    folder: Path,
+    files: dict[str, Path],
+    other_energies: dict[str, float],
 ) -> tuple[Ordering, ...]:
-    """All [[ordering]] tables, in order; the paths of the files they name are added to ``files``."""
+    """All [[ordering]] tables, in order.
+
+    The paths of the files they name are added to ``files``; what they state of other energies (meV per ion), by the
+    name of the ordering, to ``other_energies``.
+    """
     if key is None:
         return ()
     orderings: list[Ordering] = []
@@ -79,6 +89,8 @@ def read_orderings(
             name = name or f"ordering {number}"
             ordering = _from_pattern(item, table, crystal, sizes)
         _refuse_taken(item, table, name, [other.name for other in orderings])
+        if OTHER_KEY in table:
+            other_energies[name] = table[OTHER_KEY].number("an energy in meV per magnetic ion")
         orderings.append(dataclasses.replace(ordering, name=name))
     return tuple(orderings)
 
@@ -177,9 +189,9 @@ def _sign_components(table: dict[str, Key], setting: Setting, sizes: Sizes) -> C
                 if np.isnan(sizes.of_site[i]):
                     label = crystal.labels[i]
                     raise key.refuse(f"{label} has no moment size, expected it or its element in [moments].")
-            return _read_sign_list(key, setting, sites)
+            return read_sign_list(key, setting, sites)
 
-        listed = _fill(table["signs"], crystal, signs, one)
+        listed = fill_by_site(table["signs"], crystal, signs, one)
     rest = tuple(i for i in site_order(crystal.positions) if i in sized and not listed[i])
     if rest:
         signs[list(rest)] = setting.spread(rest, np.ones(setting.counts(rest)[0]))
@@ -187,7 +199,8 @@ def _sign_components(table: dict[str, Key], setting: Setting, sizes: Sizes) -> C
     return np.asarray(np.nan_to_num(sizes.of_site)[:, None] * signs[:, None] * directions)
 
 
-def _read_sign_list(key: Key, setting: Setting, sites: tuple[int, ...]) -> ComplexArray:
+def read_sign_list(key: Key, setting: Setting, sites: tuple[int, ...]) -> ComplexArray:
+    """Shape (n_sites,) complex: the signs of a string, one per atom of the primitive or of the whole cell."""
     primitive, whole = setting.counts(sites)
     what = f"a string of {expected_entries(primitive, whole)} of the signs +, -, 0"
     if not isinstance(key.value, str):
@@ -211,7 +224,7 @@ def _directions(key: Key, crystal: Crystal, used: np.ndarray) -> FloatArray:
     def one(child: Key, sites: tuple[int, ...]) -> FloatArray:
         return np.tile(unit_direction(crystal, child.direction(_DIRECTION)), (len(sites), 1))
 
-    given = _fill(key, crystal, directions, one)
+    given = fill_by_site(key, crystal, directions, one)
     for i in np.flatnonzero(used & ~given):
         raise key.missing(crystal.labels[i], f"{_DIRECTION} (it has a size in [moments] and a sign)")
     return directions
@@ -227,7 +240,7 @@ def _wave_components(table: dict[str, Key], setting: Setting) -> ComplexArray:
         part = np.zeros_like(components)
 
         def one(key: Key, sites: tuple[int, ...], factor: complex = factor) -> ComplexArray:
-            entries = factor * _read_triples(key, setting, sites)
+            entries = factor * read_triples(key, setting, sites)
             if follow:
                 # A list for the primitive cell holds amplitudes, which centring leaves as they are; the position
                 # carries the whole phase.
@@ -242,7 +255,7 @@ def _wave_components(table: dict[str, Key], setting: Setting) -> ComplexArray:
                 )
             return np.asarray(values @ crystal.axes_unit)
 
-        _fill(table[name], crystal, part, one)
+        fill_by_site(table[name], crystal, part, one)
         components += part
     return components
 
@@ -252,7 +265,7 @@ def _has_no_real_part(values: ComplexArray) -> bool:
     return size > 0 and float(np.abs(values.real).max()) <= VANISHING_FRACTION * size
 
 
-def _read_triples(key: Key, setting: Setting, sites: tuple[int, ...]) -> FloatArray:
+def read_triples(key: Key, setting: Setting, sites: tuple[int, ...]) -> FloatArray:
     """Shape (m, 3) float: one triple for every atom alike, or a list of them."""
     primitive, whole = setting.counts(sites)
     what = f"a triple of µB along a, b, c, or a list of {expected_entries(primitive, whole)} such triples"
@@ -264,7 +277,7 @@ def _read_triples(key: Key, setting: Setting, sites: tuple[int, ...]) -> FloatAr
     return np.tile(as_floats("triple", key.numbers(3, what), (3,)), (primitive, 1))
 
 
-def _fill(
+def fill_by_site(
     key: Key, crystal: Crystal, into: np.ndarray, one: Callable[[Key, tuple[int, ...]], np.ndarray]
 ) -> np.ndarray:
     """Read a table by site label or element into an array over all sites; returns which sites it covers."""

@@ -89,7 +89,7 @@ def probes_by_rule(item: Key, table: dict[str, Key], crystal: Crystal) -> list[P
 def _labels(rule: str, crystal: Crystal) -> list[tuple[str, str]]:
     """Site labels that a rule means, with their elements."""
     element = _ELEMENT.fullmatch(rule)
-    chosen = range(crystal.n_sites)
+    chosen = list(range(crystal.n_sites))
     if element is None:
         _, first = find_operations(crystal)
         chosen = sorted(set(first))

@@ -9,6 +9,14 @@ import numpy as np
 
 from latticedip.checks import FloatArray
 from latticedip.study.documents import document, home_cell_notes, ordering_head
+from latticedip.study.rank_options import (
+    RankOptions,
+    anisotropy_field_T,
+    bound_results,
+    other_results,
+    part_results,
+    relation_results,
+)
 
 if TYPE_CHECKING:
     from latticedip.analysis.rank import Ranking, RankingRow
@@ -19,6 +27,8 @@ if TYPE_CHECKING:
 UEV_PER_EV = 1e6
 #: Fields at equivalent points that differ by less than this (relative to the largest) are listed once.
 SAME_FIELD = 1e-6
+#: Keys of a row that a flat table cannot hold, or holds otherwise.
+NOT_IN_TABLE = ("fields", "rotation", "boundary", "same_as", "free_turns", "parts")
 #: Parts of an energy that may be zero for every ordering, and why.
 ZERO_PARTS = {
     "shape": "no energy of the shape: no demagnetizing field for any of these orderings",
@@ -26,27 +36,38 @@ ZERO_PARTS = {
 }
 
 
-def rank_document(
-    study: Study,
-    ranking: Ranking,
-    *,
-    rotate: bool = False,
-    orderings: Sequence[str] = (),
-    tol: float = 1e-10,
-) -> dict[str, Any]:
+def rank_document(study: Study, ranking: Ranking, options: RankOptions) -> dict[str, Any]:
     """The document of `rank`: one row per ordering, lowest first, with the field at every probe.
 
-    orderings: the names that were asked for; none: all.
+    Raises what the bound, the relations and the parts raise.
     """
-    rows = [_rank_row(number, row, study.crystal) for number, row in enumerate(ranking.rows, start=1)]
+    rows = [_rank_row(number, row, study) for number, row in enumerate(ranking.rows, start=1)]
+    bound, heights = bound_results(study, ranking, options)
+    blocks = [
+        heights,
+        other_results(study, ranking),
+        relation_results(study, ranking, options),
+        part_results(study, ranking, options),
+    ]
+    for block in blocks:
+        for row, keys in zip(rows, block, strict=True):
+            row |= keys
     return document(
         "rank",
         files=study.files,
-        options={"rotate": rotate, "orderings": list(orderings) or None, "tol": tol},
+        options={
+            "rotate": options.rotate,
+            "bound": options.bound,
+            "parts": options.parts,
+            "shells": options.shells if options.parts else None,
+            "orderings": list(options.orderings) or None,
+            "tol": options.tol,
+        },
         boundary=ranking.boundary,
         results={
             "title": study.title,
             "sample": study.sample.to_dict(),
+            **bound,
             "rows": rows,
             "zero_parts": {
                 part: reason for part, reason in ZERO_PARTS.items() if not any(r[f"{part}_ueV_per_ion"] for r in rows)
@@ -56,8 +77,8 @@ def rank_document(
     )
 
 
-def _rank_row(number: int, row: RankingRow, crystal: Crystal) -> dict[str, Any]:
-    energy = row.energy
+def _rank_row(number: int, row: RankingRow, study: Study) -> dict[str, Any]:
+    energy, crystal = row.energy, study.crystal
     per_ion = UEV_PER_EV / energy.n_ions
     plain: dict[str, Any] = {
         "rank": number,
@@ -83,6 +104,7 @@ def _rank_row(number: int, row: RankingRow, crystal: Crystal) -> dict[str, Any]:
         plain["rotation"] = row.orientation.easy_rotation.tolist()
         plain["anisotropy_ueV_per_ion"] = (row.anisotropy_eV_per_ion or 0.0) * UEV_PER_EV
         plain["anisotropy_J_per_m3"] = row.anisotropy_J_per_m3
+        plain["anisotropy_field_T"] = anisotropy_field_T(row, bool(np.any(study.sample.applied_T)))
         plain["orientation_notes"] = list(row.orientation.notes)
     plain["fields"] = {name: _brief_field(result) for name, result in row.fields.items()}
     return plain
@@ -130,10 +152,16 @@ def axis_in_crystal(direction: FloatArray, crystal: Crystal) -> FloatArray:
 
 
 def rank_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
-    """The rows of a rank document with the field levels of each probe spread over columns, for CSV."""
+    """The rows of a rank document with the field levels of each probe spread over columns, for CSV.
+
+    What each energy is made of is left to the document.
+    """
     table = []
     for row in doc["rows"]:
-        spread = {key: value for key, value in row.items() if key not in ("fields", "rotation", "boundary")}
+        spread = {key: value for key, value in row.items() if key not in NOT_IN_TABLE}
+        same, free = row["same_as"], row["free_turns"]
+        spread["same_as"] = None if same is None else f"{same['ordering']}: {same['domain'] or same['kind']}"
+        spread["free_turns"] = free["kind"]
         for i, line in enumerate(row.get("rotation", [])):
             spread.update({f"rotation_{i + 1}{j + 1}": value for j, value in enumerate(line)})
         for name, points in row["fields"].items():

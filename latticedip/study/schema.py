@@ -1,8 +1,8 @@
 """The study file: a crystal, orderings, probes and a sample, read from TOML into the objects the calls take.
 
-Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample], [susceptibility], [abundances]. A key that is
-not known, a value of another type and a value that is missing are refused with the path of the key, the value, what
-was expected and the nearest known word. Items are counted from 1. Paths are relative to the study file.
+Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample], [susceptibility], [abundances], [propose]. A key
+that is not known, a value of another type and a value that is missing are refused with the path of the key, the value,
+what was expected and the nearest known word. Items are counted from 1. Paths are relative to the study file.
 """
 
 from __future__ import annotations
@@ -24,8 +24,9 @@ from latticedip.study.keys import Key
 from latticedip.study.magnetism import read_abundances, read_susceptibility
 from latticedip.study.orderings import existing_file, read_block, read_moments, read_orderings
 from latticedip.study.probes import read_probes, read_sample
+from latticedip.study.search import Search, read_search
 
-STUDY_KEYS = ("title", "crystal", "moments", "ordering", "probe", "sample", "susceptibility", "abundances")
+STUDY_KEYS = ("title", "crystal", "moments", "ordering", "probe", "sample", "susceptibility", "abundances", "propose")
 CRYSTAL_KEYS = ("file", "block")
 #: A study file larger than this (bytes) is some other file.
 LARGEST_FILE = 10_000_000
@@ -44,6 +45,8 @@ class Study:
     moments: sizes in µB as [moments] gives them, by site label or element.
     susceptibility: of the magnetic ions in the paramagnetic state, by site label or element.
     abundances: fractions of an element's atoms that are an isotope, by its name, where not the natural ones.
+    other_energies_meV_per_ion: energies from elsewhere (exchange, single ion) by the name of the ordering.
+    search: what [propose] asks for.
     files: every file that was read, by the part it plays: "study", "crystal", "ordering 1".
     notes: sentences a report must repeat.
     """
@@ -59,6 +62,8 @@ class Study:
     notes: tuple[str, ...] = ()
     susceptibility: Mapping[str, Susceptibility] = field(default_factory=dict)
     abundances: Mapping[str, float] = field(default_factory=dict)
+    other_energies_meV_per_ion: Mapping[str, float] = field(default_factory=dict)
+    search: Search = field(default_factory=Search)
 
 
 def read_study(path: str | os.PathLike[str]) -> Study:
@@ -96,7 +101,8 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
     Raises StudyError as `read_study`.
     """
     sizes = read_moments(table.get("moments"), crystal)
-    orderings = read_orderings(table.get("ordering"), crystal, sizes, path.parent, files)
+    others: dict[str, float] = {}
+    orderings = read_orderings(table.get("ordering"), crystal, sizes, path.parent, files, others)
     probes = read_probes(table.get("probe"), crystal)
     sample = read_sample(table.get("sample"), crystal)
     return Study(
@@ -111,6 +117,8 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
         crystal.notes,
         susceptibility=read_susceptibility(table.get("susceptibility"), crystal),
         abundances=read_abundances(table.get("abundances"), crystal),
+        other_energies_meV_per_ion=others,
+        search=read_search(table.get("propose"), crystal, sizes),
     )
 
 

@@ -12,10 +12,13 @@ from typing import TYPE_CHECKING, Any, TypeVar
 from latticedip.errors import InputError, StudyError, near_match
 
 if TYPE_CHECKING:
+    from latticedip.analysis.propose import Proposal
     from latticedip.ordering.model import Ordering
     from latticedip.probe import Probe
     from latticedip.study.fields import Axes, Unit
+    from latticedip.study.rank_options import RankOptions
     from latticedip.study.schema import Study
+    from latticedip.study.search import Search
     from latticedip.study.spectra import SpectrumOptions
 
 T = TypeVar("T", "Ordering", "Probe")
@@ -134,20 +137,62 @@ def field(
     return field_document(study, fields, axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol)
 
 
-def rank(study: Study, *, rotate: bool = False, orderings: Sequence[str] = (), tol: float = 1e-10) -> dict[str, Any]:
+def rank(study: Study, options: RankOptions | None = None) -> dict[str, Any]:
     """The document of `rank`: the orderings of a study by their energy per magnetic ion, lowest first.
+
+    Raises StudyError for a study without orderings, or without moment sizes where the bound is asked for; InputError
+    for an unknown name, and what `latticedip.rank` raises.
+    """
+    from latticedip.analysis.rank import rank as rank_orderings
+    from latticedip.study.rank_options import RankOptions, check_bound
+    from latticedip.study.rankings import rank_document
+
+    options = RankOptions() if options is None else options
+    _need_orderings(study)
+    check_bound(study, options)
+    study = choose(study, orderings=options.orderings)
+    ranking = rank_orderings(
+        study.orderings, sample=study.sample, rotate=options.rotate, probes=study.probes, tol=options.tol
+    )
+    return rank_document(study, ranking, options)
+
+
+def directions(
+    study: Study, *, steps: int = 18, orderings: Sequence[str] = (), tol: float = 1e-10
+) -> dict[str, Any]:
+    """The document of `directions`: the energy of every collinear ordering against the direction of its moments.
 
     orderings: names of those that count; none: all.
 
-    Raises StudyError for a study without orderings, InputError for an unknown name, and what `latticedip.rank` raises.
+    Raises StudyError for a study without orderings, InputError for an unknown name or where none is collinear, and what
+    `energy_against_direction` raises.
     """
-    from latticedip.analysis.rank import rank as rank_orderings
-    from latticedip.study.rankings import rank_document
+    from latticedip.study.turns import directions_document
 
     _need_orderings(study)
-    study = choose(study, orderings=orderings)
-    ranking = rank_orderings(study.orderings, sample=study.sample, rotate=rotate, probes=study.probes, tol=tol)
-    return rank_document(study, ranking, rotate=rotate, orderings=orderings, tol=tol)
+    return directions_document(choose(study, orderings=orderings), steps=steps, orderings=orderings, tol=tol)
+
+
+def modes(
+    study: Study, *, points: int = 200, keep: int = 6, need_path: bool = False, tol: float = 1e-10
+) -> dict[str, Any]:
+    """The document of `modes`: the lowest dipolar modes of a study, and all of them along the band path.
+
+    Arguments and errors as `modes_document`.
+    """
+    from latticedip.study.modes import modes_document
+
+    return modes_document(study, points=points, keep=keep, need_path=need_path, tol=tol)
+
+
+def propose(study: Study, search: Search, *, tol: float = 1e-10) -> tuple[dict[str, Any], Proposal]:
+    """The document of `propose` and what it was made of.
+
+    Errors as `propose_document`.
+    """
+    from latticedip.study.proposals import propose_document
+
+    return propose_document(study, search, tol=tol)
 
 
 def shift(

@@ -291,7 +291,7 @@ def _cutoff(
     while u < 30.0:
         r2 = (u / gauss) ** 2
         y = v2 * r2
-        if y[0] >= 9.5:
+        if stretched**2 * r2 >= 9.5:
             factor = float(np.sum(weights * 2 * w**2 * (2 * y + 1) * np.exp(u**2 - y)))
             factor += cloud.density * float(np.exp(u**2 - r2 / (2 * cloud.variances[2])))
             if gaussian_tail(gauss * lattice.layer_distances, np.asarray(u), np.asarray(factor)) <= wanted:

@@ -1,0 +1,255 @@
+"""``latticedip spectrum`` from end to end, with its pictures, on an invented compound."""
+
+from __future__ import annotations
+
+import csv
+import io
+import json
+import subprocess
+import sys
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from click.testing import CliRunner, Result
+
+import latticedip as ld
+from latticedip.cli.main import main
+from latticedip.errors import InputError
+from latticedip.report import plots
+
+CRYSTAL = """1
+Lattice="4.2 0 0 0 4.2 0 0 0 5.1" Properties=species:S:1:pos:R:3 pbc="T T T"
+Mn 0 0 0
+"""
+STUDY = """title = "Spiral or $wave$?"
+[crystal]
+file = "layer.xyz"
+[[ordering]]
+name = "wave"
+k = [0.213, 0, 0]
+cosine = { Mn = [0, 0, 2.0] }
+[[ordering]]
+name = "third"
+k = ["1/3", 0, 0]
+cosine = { Mn = [0, 0, 2.0] }
+[[probe]]
+name = "muon A"
+position = [0.5, 0.5, 0.12]
+[[probe]]
+name = "nucleus"
+particle = "55Mn"
+site = "Mn"
+"""
+
+
+@pytest.fixture
+def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    (tmp_path / "layer.xyz").write_text(CRYSTAL, encoding="utf-8")
+    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
+    monkeypatch.chdir(tmp_path)
+    return tmp_path
+
+
+def run(*arguments: str) -> Result:
+    result = CliRunner().invoke(main, ["spectrum", "study.toml", *arguments])
+    if result.exception is not None and not isinstance(result.exception, SystemExit):
+        raise result.exception
+    return result
+
+
+def document(*arguments: str) -> dict[str, Any]:
+    result = run(*arguments, "--json")
+    assert result.exit_code == 0, result.stderr
+    loaded = json.loads(result.stdout)
+    assert isinstance(loaded, dict)
+    return loaded
+
+
+def spectra(doc: dict[str, Any]) -> list[dict[str, Any]]:
+    return [found for entry in doc["orderings"] for found in entry["spectra"]]
+
+
+@pytest.mark.usefixtures("folder")
+def test_the_document_holds_lines_bands_and_histograms_that_add_up() -> None:
+    doc = document("--bins", "50")
+    assert doc["schema"] == "latticedip/spectrum/1"
+    assert (doc["title"], doc["specimen"], doc["applied_T"]) == ("Spiral or $wave$?", "crystal", [0, 0, 0])
+    assert doc["inputs"]["options"]["bins"] == 50
+    for found in spectra(doc):
+        bins = found["histogram"]
+        assert len(bins["share"]) == 50
+        assert sum(bins["share"]) == pytest.approx(1.0, abs=1e-12)
+        widths = np.diff(bins["field_limits_T"])
+        assert np.array(bins["density_per_T"]) @ widths == pytest.approx(1.0)
+        assert np.array(bins["density_per_MHz"]) @ np.diff(bins["frequency_limits_MHz"]) == pytest.approx(1.0)
+        total = sum(row["share"] for row in [*found["lines"], *found["bands"]])
+        assert total == pytest.approx(1.0)
+    wave, third = doc["orderings"]
+    assert not wave["spectra"][0]["lines"] and len(wave["spectra"][0]["bands"]) == 1
+    assert [line["share"] for line in third["spectra"][0]["lines"]] == pytest.approx([1 / 3, 2 / 3])
+    # The nucleus sits on the moment itself: a wave that passes zero.
+    assert wave["spectra"][1]["bands"][0]["edges_T"][0] == 0.0
+
+
+@pytest.mark.usefixtures("folder")
+def test_the_screen_shows_them_with_units() -> None:
+    result = run("--probe", "muon A")
+    assert result.exit_code == 0
+    assert result.stderr == ""
+    lines = result.stdout.splitlines()
+    assert lines[0] == "Spiral or $wave$?"
+    assert "  field          incommensurate: every phase of one wave, in closed form" in lines
+    assert "  field          repeats after 3 cells" in lines
+    assert any(line.split() == ["T", "T", "MHz", "MHz", "%"] for line in lines)
+    assert any(line.split() == ["T", "MHz", "%"] for line in lines)
+    assert max(len(line) for line in lines) <= 80
+
+
+@pytest.mark.usefixtures("folder")
+def test_the_polarization_is_that_of_the_api(folder: Path) -> None:
+    doc = document("--ordering", "third", "--probe", "muon A", "--time", "2", "--points", "21", "--initial", "c",
+                   "--detector", "1 0 1", "--nuclear", "0.3")  # fmt: skip
+    signal = spectra(doc)[0]["polarization"]
+    study = ld.read_study(folder / "study.toml")
+    expected = ld.polarization(
+        ld.spectrum(study.orderings[1], study.probes[0]),
+        np.linspace(0, 2, 21),
+        initial=[0, 0, 1],
+        detector=[1, 0, 1],
+        nuclear_width_per_us=0.3,
+    )
+    assert signal["time_us"] == pytest.approx(np.linspace(0, 2, 21))
+    assert signal["polarization"] == pytest.approx(expected.values, abs=1e-12)
+    text = run("--ordering", "third", "--probe", "muon A", "--time", "2", "--powder").stdout
+    assert "Polarization in a powder" in text
+    # Enough moments for the fastest precession: 12 in a turn.
+    shown = document("--time", "200", "--powder", "--ordering", "third", "--probe", "muon A")
+    fastest = spectra(shown)[0]["histogram"]["frequency_limits_MHz"][-1]
+    assert len(spectra(shown)[0]["polarization"]["time_us"]) > 10 * fastest * 200 / 1.1
+
+
+@pytest.mark.usefixtures("folder")
+def test_the_width_of_nuclear_moments_is_worked_out(folder: Path) -> None:
+    found = spectra(document("--nuclear", "auto", "--probe", "muon A", "--ordering", "third"))[0]
+    study = ld.read_study(folder / "study.toml")
+    expected = ld.linewidth(study.crystal, [0.5, 0.5, 0.12], particle="muon").zero_field_width_per_us
+    assert found["nuclear_width_per_us"] == pytest.approx(expected)
+    assert found["nuclear_width_T"] == pytest.approx(expected / (2 * np.pi * 135.53881), rel=1e-7)
+
+
+@pytest.mark.usefixtures("folder")
+def test_the_csv_file_holds_the_histogram_or_the_polarization() -> None:
+    rows = list(csv.DictReader(io.StringIO(run("--csv", "-", "--bins", "10").stdout)))
+    assert len(rows) == 4 * 10
+    assert list(rows[0]) == [
+        "ordering", "k", "probe", "field_from_T", "field_to_T", "frequency_from_MHz", "frequency_to_MHz", "share",
+        "density_per_T", "density_per_MHz", "boundary",
+    ]  # fmt: skip
+    assert sum(float(row["share"]) for row in rows) == pytest.approx(4.0)
+    rows = list(csv.DictReader(io.StringIO(run("--csv", "-", "--powder", "--time", "1", "--points", "5").stdout)))
+    assert list(rows[0]) == ["ordering", "k", "probe", "time_us", "polarization", "boundary"]
+    assert [float(row["time_us"]) for row in rows[:5]] == [0, 0.25, 0.5, 0.75, 1.0]
+
+
+@pytest.mark.usefixtures("folder")
+def test_domains_are_listed_or_averaged() -> None:
+    listed = spectra(document("--domains", "list", "--ordering", "third", "--probe", "muon A"))
+    assert [found["domain"]["kind"] for found in listed] == ["as given", "time-reversed", "k-domain", "k-domain"]
+    text = run("--domains", "list", "--ordering", "third", "--probe", "muon A").stdout
+    assert "(0, 1/3, 0)" in text
+    averaged = spectra(document("--domains", "average", "--ordering", "third", "--probe", "muon A"))
+    assert averaged[0]["domains"] == 4
+    assert [line["field_T"] for line in averaged[0]["lines"]] == pytest.approx(
+        [line["field_T"] for line in listed[0]["lines"]]
+    )
+
+
+@pytest.mark.usefixtures("folder")
+@pytest.mark.parametrize(
+    ("arguments", "message"),
+    [
+        (["--time", "2"], "Error: the polarization in a crystal needs the direction in which the spin starts "
+         "(--initial c, for example); for a powder say so (--powder).\n"),
+        (["--initial", "c"], "Error: an initial direction or a detector belongs to a polarization: ask for one with a "
+         "time.\n"),
+        (["--time", "-1", "--powder"], "Error: the time must be a finite number of µs above 0, got -1.0.\n"),
+        (["--bins", "1"], "Error: bins must lie between 2 and 100000, got 1.\n"),
+        (["--points", "1", "--time", "1", "--powder"], "Error: points must lie between 2 and 100000, got 1.\n"),
+        (["--nuclear", "auto"], "Error: nucleus: the static width of nuclear moments is worked out for muons only, and "
+         "the probe is 55Mn. Give the width as a number, or name the probes to take.\n"),
+        (["--plot", "x.gif"], "Error: a picture ends in .png, .svg, .pdf, got 'x.gif'.\n"),
+        (["--time", "1", "--initial", "up"], "Error: --initial: got 'up', expected a crystal direction: a, b, c, a*, b*, "
+         "c*, or three components along the axes a, b, c, such as \"1 1 0\".\n"),
+        (["--probe", "muon"], "Error: the study has no probe named 'muon'. Those it has: 'muon A', 'nucleus'. Did you "
+         "mean 'muon A'?\n"),
+        (["--width", "0.1", "--nuclear", "1"], "Error: give either a width or a nuclear width, not both: one broadening "
+         "is applied.\n"),
+    ],
+)  # fmt: skip
+def test_what_does_not_fit_is_refused(arguments: list[str], message: str) -> None:
+    result = run(*arguments)
+    assert (result.exit_code, result.stdout, result.stderr) == (2, "", message)
+
+
+@pytest.mark.usefixtures("folder")
+def test_a_width_that_is_no_number_is_refused() -> None:
+    result = run("--nuclear", "wide")
+    assert result.exit_code == 2
+    assert "'wide' is neither a number nor auto." in result.stderr
+
+
+def test_a_study_without_probes_is_refused(folder: Path) -> None:
+    (folder / "study.toml").write_text(STUDY[: STUDY.index("[[probe]]")], encoding="utf-8")
+    assert run().stderr == (
+        "Error: 'study.toml' has no [[probe]], so there is no place to ask for a spectrum. Add one with a position or a "
+        "site, for example: [[probe]] position = [0.5, 0.5, 0.25]\n"
+    )
+
+
+@pytest.mark.parametrize(("suffix", "start"), [("png", b"\x89PNG"), ("svg", b"<?xml"), ("pdf", b"%PDF")])
+def test_pictures_are_drawn(folder: Path, suffix: str, start: bytes) -> None:
+    pytest.importorskip("matplotlib")
+    name = f"picture.{suffix}"
+    result = run("--time", "1", "--powder", "--plot", name)
+    assert result.exit_code == 0, result.stderr
+    assert result.stderr == f"Wrote {name}.\n"
+    first = (folder / name).read_bytes()
+    assert first.startswith(start)
+    run("--time", "1", "--powder", "--plot", name)
+    assert (folder / name).read_bytes() == first
+
+
+@pytest.mark.usefixtures("folder")
+def test_axes_carry_units() -> None:
+    """Text is kept as text in an SVG whose fonts are not outlined."""
+    matplotlib = pytest.importorskip("matplotlib")
+    with matplotlib.rc_context({"svg.fonttype": "none"}):
+        plots.draw_spectrum(document("--time", "1", "--initial", "c", "--width", "0.001"), Path("picture.svg"))
+    text = Path("picture.svg").read_text(encoding="utf-8")
+    for words in ("|B| (T)", "frequency (MHz)", "density (1/T)", "time (µs)", "polarization", "Spiral or $wave$?"):
+        assert words in text
+
+
+@pytest.mark.usefixtures("folder")
+def test_too_many_panels_are_refused() -> None:
+    pytest.importorskip("matplotlib")
+    doc = document()
+    doc["orderings"] = doc["orderings"] * 4
+    with pytest.raises(InputError) as caught:
+        plots.draw_spectrum(doc, Path("picture.png"))
+    assert str(caught.value) == (
+        "16 spectra do not fit into one picture of at most 12. Name an ordering or a probe."
+    )
+
+
+def test_without_matplotlib_the_message_says_what_to_install(folder: Path) -> None:
+    code = (
+        "import sys; sys.modules['matplotlib'] = None\n"
+        "from latticedip.cli.main import main\n"
+        "main(['spectrum', 'study.toml', '--plot', 'x.png'])"
+    )
+    result = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, cwd=folder)
+    assert result.returncode == 2
+    assert result.stderr == "Error: pictures need matplotlib. Install it with: pip install 'latticedip[plot]'\n"
