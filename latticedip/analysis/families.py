@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -18,7 +19,7 @@ from scipy.spatial.transform import Rotation
 from latticedip.analysis.rank import RankingRow
 from latticedip.analysis.rotate import DEGENERATE, SHAPE_TOLERANCE, rotation_form, turn
 from latticedip.checks import FloatArray, frozen
-from latticedip.ordering.domains import Domain, in_reference_cell, which_domain
+from latticedip.ordering.domains import Domain, domains, in_reference_cell, which_domain
 from latticedip.ordering.model import Ordering
 from latticedip.physics.energy import dipolar_energy
 from latticedip.sample import Sample
@@ -90,8 +91,8 @@ def freedom(ordering: Ordering, *, sample: Sample | None = None, tol: float = 1e
         return Freedom("axis", frozen(fixed[0]), words)
     if len(own) == 1 and axis is None:
         words = f"continuously degenerate: the pattern may be turned about its own axis, {_axis_words(own[0])} now"
-        moved = which_domain(ordering, ordering.rotated(Rotation.from_rotvec(0.1 * own[0]).as_matrix()))
-        if moved is not None and moved.kind == "as given":
+        turned = ordering.rotated(Rotation.from_rotvec(0.1 * own[0]).as_matrix())
+        if which_domain((Domain(ordering, 1, "as given", "x,y,z"),), turned) is not None:
             words += "; that only shifts it along k"
         return Freedom("own axis", frozen(own[0]), words)
     return Freedom("none", None, "")
@@ -106,10 +107,14 @@ def _null_space(torques: FloatArray, same: float) -> FloatArray:
 
 
 def common_axis(ordering: Ordering) -> FloatArray | None:
-    """Shape (3,) unit vector along which all moments of a collinear pattern lie, or None for other patterns."""
+    """Shape (3,) unit vector along which all moments of a collinear pattern lie, the first one up; else None."""
     stacked = np.concatenate([ordering.components.real, ordering.components.imag]).reshape(-1, 3)
     _, values, axes = np.linalg.svd(stacked, full_matrices=False)
-    return None if values[1] > SHAPE_TOLERANCE * values[0] else np.asarray(axes[0])
+    if values[1] > SHAPE_TOLERANCE * values[0]:
+        return None
+    along = stacked @ axes[0]
+    first = int(np.argmax(np.abs(along) > 1e-6 * np.abs(along).max()))
+    return np.asarray(axes[0] * np.sign(along[first]))
 
 
 def _axis_words(axis: FloatArray) -> str:
@@ -146,24 +151,37 @@ class Relation:
 def relations(rows: Sequence[RankingRow], *, sample: Sample | None = None, tol: float = 1e-10) -> tuple[Relation, ...]:
     """Ties of a ranking that are no accident: domains of one ordering, and members of one continuous family.
 
-    rows: of a Ranking, in its order. Each row of a tie is compared with the earlier ones of it (the first 50 that are
-    not themselves explained). Operations are those of the crystal; orderings on different crystals share none.
+    rows: of a Ranking, in its order. Each row of a tie is compared with the first 50 of it that come earlier.
+    Operations are those of the crystal; orderings on different crystals share none.
 
     Raises InputError as `domains` does.
     """
     found = []
-    heads: list[int] = []
+    earlier: list[_Candidate] = []
     for place, row in enumerate(rows):
         if not row.tie or (place and not _tied(rows[place - 1], row)):
-            heads = []
-        relation = next(
-            (r for r in (_relation(rows, place, head, sample, tol) for head in heads) if r is not None), None
-        )
+            earlier = []
+        if not row.tie:
+            continue
+        relation = _as_domain(place, row.ordering, earlier) or _as_family(place, row.ordering, earlier, sample, tol)
         if relation is not None:
             found.append(relation)
-        elif len(heads) < MOST_COMPARED:
-            heads.append(place)
+        if len(earlier) < MOST_COMPARED:
+            earlier.append(_Candidate(place, row.ordering, relation is None))
     return tuple(found)
+
+
+@dataclass(frozen=True, eq=False)
+class _Candidate:
+    """An earlier row of a tie. alone: True where no relation leads to it from one before."""
+
+    place: int
+    ordering: Ordering
+    alone: bool
+
+    @cached_property
+    def domains(self) -> tuple[Domain, ...]:
+        return domains(in_reference_cell(self.ordering))
 
 
 def _tied(one: RankingRow, two: RankingRow) -> bool:
@@ -172,27 +190,39 @@ def _tied(one: RankingRow, two: RankingRow) -> bool:
     return one.tie and two.tie and two.above_lowest_eV - one.above_lowest_eV <= bound
 
 
-def _relation(
-    rows: Sequence[RankingRow], place: int, head: int, sample: Sample | None, tol: float
+def _as_domain(place: int, ours: Ordering, earlier: Sequence[_Candidate]) -> Relation | None:
+    for other in earlier:
+        domain = which_domain(other.domains, ours)
+        if domain is not None:
+            words = f"the same ordering as {other.ordering.name} up to symmetry: {_domain_words(domain)}"
+            return Relation(place, other.place, "domain", words, domain)
+    return None
+
+
+def _domain_words(domain: Domain) -> str:
+    how = "" if domain.kind == "as given" else f" (by {domain.operation})"
+    return DOMAIN_WORDS[domain.kind] + how
+
+
+def _as_family(
+    place: int, ours: Ordering, earlier: Sequence[_Candidate], sample: Sample | None, tol: float
 ) -> Relation | None:
-    ours, theirs = rows[place].ordering, rows[head].ordering
-    domain = which_domain(theirs, ours)
-    if domain is not None:
-        words = f"the same ordering as {theirs.name} up to symmetry: {DOMAIN_WORDS[domain.kind]}"
-        if domain.kind != "as given":
-            words += f" (by {domain.operation})"
-        return Relation(place, head, "domain", words, domain)
-    rotation = turn_between(theirs, ours)
-    if rotation is None:
-        return None
-    free = freedom(theirs, sample=sample, tol=tol)
-    vector = Rotation.from_matrix(rotation).as_rotvec()
-    angle = float(np.degrees(np.linalg.norm(vector)))
-    if free.kind == "none" or not _leads(free, rotation, theirs):
-        return None
-    about = f" by {angle:.4g}° about {_axis_words(vector / np.linalg.norm(vector))}" if angle > 1e-4 else ""
-    words = f"the same pattern as {theirs.name}, turned{about} within a continuous family of equal energy"
-    return Relation(place, head, "family", words)
+    """The same pattern, or a domain of it, turned where that costs nothing."""
+    for other in (candidate for candidate in earlier if candidate.alone):
+        for domain in other.domains:
+            rotation = turn_between(domain.ordering, ours)
+            if rotation is None:
+                continue
+            free = freedom(domain.ordering, sample=sample, tol=tol)
+            if free.kind == "none" or not _leads(free, rotation, domain.ordering):
+                continue
+            vector = Rotation.from_matrix(rotation).as_rotvec()
+            angle = float(np.linalg.norm(vector))
+            about = f" by {np.degrees(angle):.4g}° about {_axis_words(vector / angle)}" if angle > 1e-6 else ""
+            which = other.ordering.name + ("" if domain.kind == "as given" else f" ({_domain_words(domain)})")
+            words = f"the same pattern as {which}, turned{about} within a continuous family of equal energy"
+            return Relation(place, other.place, "family", words, None if domain.kind == "as given" else domain)
+    return None
 
 
 def _leads(free: Freedom, rotation: FloatArray, ordering: Ordering) -> bool:

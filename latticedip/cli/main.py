@@ -23,7 +23,9 @@ from latticedip.cli.options import report_progress
 from latticedip.errors import LatticedipError, near_match
 
 #: Subcommands in the order in which a user meets them; each is found in the module of its name.
-COMMANDS = ("start", "show", "field", "rank", "directions", "propose", "modes", "batch", "shift", "linewidth", "spectrum", "demag")
+COMMANDS = (
+    "start", "show", "field", "rank", "directions", "propose", "modes", "batch", "shift", "linewidth", "spectrum", "demag",
+)  # fmt: skip
 
 EPILOG = """\b
 Example:

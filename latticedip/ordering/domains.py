@@ -11,6 +11,7 @@ non-magnetic lattice alone are one. Under (R, t) the component of site j at k be
 from __future__ import annotations
 
 import dataclasses
+from collections.abc import Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 
@@ -106,20 +107,20 @@ def domains(ordering: Ordering, *, reversed_too: bool = True) -> tuple[Domain, .
     return tuple(domain for _, _, domain in kept)
 
 
-def which_domain(ordering: Ordering, other: Ordering) -> Domain | None:
-    """The domain of ``ordering`` that ``other`` is, up to a lattice vector; None where it is none of them.
+def which_domain(listed: Sequence[Domain], other: Ordering) -> Domain | None:
+    """The domain that an ordering is, up to a lattice vector; None where it is none of them.
 
-    None also where the two have no common non-magnetic structure: then no operation leads from one to the other.
+    listed: what `domains` gives for one ordering. None also where the two have no common non-magnetic structure.
 
     Raises InputError as `domains` does.
     """
-    first, second = in_reference_cell(ordering), in_reference_cell(other)
-    if not _same_structure(first.crystal, second.crystal):
+    second = in_reference_cell(other)
+    if not listed or not _same_structure(in_reference_cell(listed[0].ordering).crystal, second.crystal):
         return None
-    lattice = _PrimitiveLattice.of(first.crystal)
+    lattice = _PrimitiveLattice.of(second.crystal)
     wanted = lattice.waves(second)
-    for domain in domains(first):
-        found = lattice.waves(domain.ordering)
+    for domain in listed:
+        found = lattice.waves(in_reference_cell(domain.ordering))
         if _same_up_to_translation(wanted, found, phase_space(found.k)):
             return domain
     return None

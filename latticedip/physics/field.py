@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
@@ -200,7 +200,7 @@ class LocalField:
         }
 
 
-@dataclass(frozen=True, eq=False)
+@dataclass(eq=False, slots=True)
 class _Row:
     """One point to evaluate: where it is, what it was called and which contact terms act there.
 
@@ -253,7 +253,7 @@ def local_field(
     rows = _rows(ordering, points, as_spread("spread", spread))
     crystal = ordering.crystal
     placed, sites = _snap(ordering, rows)
-    clouds = np.array([covariance_of(row.spread) for row in rows]).reshape(-1, 3, 3)
+    clouds = _filled(rows, (3, 3), lambda i, row: None if row.spread is None else covariance_of(row.spread))
     extended = moment_clouds(ordering, moment_spread)
     targets = _targets_cart(crystal, placed, sites)
     smeared = _is_smeared(clouds, extended)
@@ -272,7 +272,9 @@ def local_field(
             whole[i] += np.einsum("nab,nb->a", change, moments_of(ordering, pairs))
     magnetization = magnetization_T(ordering)
     n = len(rows)
-    contact = [contact_field(ordering, point, row.contact) for point, row in zip(placed, rows, strict=True)]
+    contact = _filled(
+        rows, (3,), lambda i, row: contact_field(ordering, placed[i], row.contact) if row.contact else None
+    )
     notes = [*crystal.notes, *ordering.notes, *_spread_notes(rows, moment_spread), *reached]
     if ordering.reference is not None and any(row.particle for row in rows):
         notes.append(ordering.reference.how)
@@ -288,7 +290,7 @@ def local_field(
         dipolar=frozen(whole - magnetization / 3),
         lorentz=frozen(np.tile(magnetization / 3, (n, 1))),
         demagnetizing=frozen(np.tile(-specimen.demagnetizing_tensor @ magnetization, (n, 1))),
-        contact=frozen(np.array(contact).reshape(-1, 3)),
+        contact=frozen(contact),
         applied=frozen(np.tile(specimen.applied_T, (n, 1))),
         error_bound_T=frozen(bound),
         boundary=boundary_words(ordering, sample),
@@ -298,7 +300,7 @@ def local_field(
         moved=moved,
         clouds_A2=frozen(clouds),
         moment_clouds_A2=extended,
-        position_su_cart=frozen(np.array([_position_su(ordering, row) for row in rows]).reshape(-1, 3, 3)),
+        position_su_cart=frozen(_filled(rows, (3, 3), lambda i, row: _position_su(ordering, row))),
         notes=tuple(dict.fromkeys(note for note in notes if note)),
     )
 
@@ -314,10 +316,20 @@ def _moved(ordering: Ordering, row: _Row, point: FloatArray) -> MovedPairs | Non
     return exchanged(ordering, point, row.reference, row.probe)
 
 
-def _position_su(ordering: Ordering, row: _Row) -> FloatArray:
+def _filled(rows: list[_Row], shape: tuple[int, ...], value: Callable[[int, _Row], FloatArray | None]) -> FloatArray:
+    """Shape (n, *shape) float. One value per row, zero where there is none, as for most of a million points."""
+    out = np.zeros((len(rows), *shape))
+    for i, row in enumerate(rows):
+        found = value(i, row)
+        if found is not None:
+            out[i] = found
+    return out
+
+
+def _position_su(ordering: Ordering, row: _Row) -> FloatArray | None:
     """Shape (3, 3) float in Å. Rows: the cell vectors times the standard uncertainties of the coordinates."""
     if row.probe is None or row.probe.position_su is None:
-        return np.zeros((3, 3))
+        return None
     home = ordering.crystal if ordering.reference is None else ordering.reference.crystal
     return np.asarray(row.probe.position_su[:, None] * home.cell)
 

@@ -138,21 +138,18 @@ def _levels(document: Mapping[str, Any], width: int | None) -> str:
         Column("", words=True),
     ]
     digits = decimals_for([float(np.abs(energies).max())], significant=6)
-    seen, cells = set(), []
+    cells = []
     for name, point in bands["special_points"].items():
-        at = np.flatnonzero(np.abs(k - np.array(point)).max(axis=1) < 1e-9)
         # One point may be reached along several segments, and then k → 0 differs.
-        for i in at:
-            line = (
-                name,
-                k_text([point]),
-                fixed(float(energies[i, 0]), digits),
-                fixed(float(energies[i, -1]), digits),
-                f"limit along the path{_towards(bands, distance, int(i))}" if bands["limit_k_to_0"][i] else "",
-            )
-            if line not in seen:
-                seen.add(line)
-                cells.append(list(line))
+        levels: dict[tuple[str, str], list[str]] = {}
+        for i in np.flatnonzero(np.abs(k - np.array(point)).max(axis=1) < 1e-9):
+            ends = fixed(float(energies[i, 0]), digits), fixed(float(energies[i, -1]), digits)
+            levels.setdefault(ends, [])
+            if bands["limit_k_to_0"][i]:
+                levels[ends].append(_towards(bands, distance, int(i)))
+        for (low, high), limits in levels.items():
+            towards = ", ".join(dict.fromkeys(limits))
+            cells.append([name, k_text([point]), low, high, f"limit along the path to {towards}" if limits else ""])
     return table(columns, cells, width=width, keys=1)
 
 
@@ -166,6 +163,6 @@ def _towards(bands: Mapping[str, Any], distance: np.ndarray, i: int) -> str:
     here = int(np.argmin(np.abs(np.array(places) - at)))
     other = here - 1 if before else here + 1
     if not 0 <= other < len(ticks):
-        return ""
+        return "its end"
     names = ticks[other]["name"].split("|")
-    return f" to {names[-1] if before else names[0]}"
+    return str(names[-1] if before else names[0])
