@@ -30,6 +30,7 @@ _HOMES = {
     "dipole_tensor": "latticedip.sums",
     "field_uncertainty": "latticedip.physics.uncertainty",
     "linewidth": "latticedip.observables.linewidth",
+    "field_ellipse": "latticedip.physics.ellipse",
     "local_field": "latticedip.physics.field",
     "lowest_mode": "latticedip.analysis.modes",
     "orbit": "latticedip.crystal.orbit",

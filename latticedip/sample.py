@@ -19,6 +19,8 @@ TENSOR_TOLERANCE = 1e-9
 ORIENTATION_TOLERANCE = 1e-6
 #: A body longer than this in proportion is a needle or a plate in every digit.
 LARGEST_RATIO = 1e15
+#: No applied field is larger (T); a larger number is a slip of units.
+LARGEST_FIELD_T = 1e6
 
 
 @dataclass(frozen=True, eq=False)
@@ -35,7 +37,8 @@ class Sample:
     ``Sample.sphere()``, ``.needle(axis)``, ``.plate(normal)``, ``.ellipsoid(semi_axes)``, ``.prism(edges)``
     and ``.cylinder(diameter, height)`` build one from a shape.
 
-    Raises InputError for a tensor that no body has, and for values that are not finite numbers.
+    Raises InputError for a tensor that no body has, for values that are not finite numbers, and for an applied field
+    beyond 1e6 T.
     """
 
     demagnetizing_tensor: Any = None
@@ -50,7 +53,10 @@ class Sample:
             tensor = _checked_tensor(self.demagnetizing_tensor)
             words = "demagnetizing tensor given" + ("" if np.any(tensor) else " as zero (N = 0)")
         object.__setattr__(self, "demagnetizing_tensor", frozen(tensor))
-        object.__setattr__(self, "applied_T", frozen(as_floats("applied_T", self.applied_T, (3,))))
+        applied = as_floats("applied_T", self.applied_T, (3,))
+        if np.abs(applied).max() > LARGEST_FIELD_T:
+            raise InputError(f"applied_T holds {applied.tolist()}, beyond {LARGEST_FIELD_T:g} T. Give it in tesla.")
+        object.__setattr__(self, "applied_T", frozen(applied))
         object.__setattr__(self, "shape", words)
 
     @classmethod

@@ -44,9 +44,9 @@ def test_finds_the_exhaustive_minimum_along_best_axes(n, net_zero):
     assert successes(problem, 100) >= 95
 
 
-def test_finds_the_exhaustive_minimum_along_best_axes_sometimes_tried():
+def test_finds_the_exhaustive_minimum_along_best_axes_in_a_few_runs():
     problem = problem_of(random_crystal(20, 20), np.ones(20))
-    assert successes(problem, 10) >= 9
+    assert successes(problem, 5) >= 4
 
 
 @pytest.mark.parametrize("kind", ["ising", "best axis", "planar", "heisenberg"])
@@ -101,7 +101,7 @@ def test_net_moment_held_at_zero(kind):
     crystal = ld.Crystal(4 * vectors, [[0, 0, 0]], ["Mn"])
     axes = np.array([[1.0, -1, 0]]) / np.sqrt(2) if kind == "ising" else None
     problem = problem_of(crystal, [1.0], repeat=(2, 2, 2), axes=axes, net_zero=True)
-    result = anneal(problem, "heisenberg" if kind == "heisenberg" else "ising", Schedule(16, 100), 0, 1)
+    result = anneal(problem, "heisenberg" if kind == "heisenberg" else "ising", Schedule(6, 100), 0, 1)
     best = result.found[0].moments
     assert np.abs(best.sum(axis=0)).max() < 1e-7
     assert problem.field.energy_eV(best) / 16 / UNIT == pytest.approx(-1.9859209288, abs=1e-7)
@@ -141,13 +141,16 @@ def test_multiplicity_is_that_of_the_exhaustive_search():
         assert one.multiplicity == two.multiplicity
 
 
+@pytest.mark.slow
 def test_many_moments():
     """A larger supercell only adds patterns: 512 moments along z reach what 8 do."""
     axes = np.array([[0, 0, 1.0]])
     problem = problem_of(CUBE, [1.0], repeat=(8, 8, 8), axes=axes)
-    best = anneal(problem, "ising", Schedule(8, 300), 0, 1).found[0]
-    assert problem.field.energy_eV(best.moments) / 512 / UNIT == pytest.approx(-2.6767886844, abs=1e-8)
-    assert best.multiplicity == 2
+    result = anneal(problem, "ising", Schedule.usual(512, False), 0, 1)
+    assert result.restarts == 16
+    energy = problem.field.energy_eV(result.found[0].moments) / 512
+    assert energy / UNIT == pytest.approx(-2.6767886844, abs=1e-8)
+    assert result.found[0].multiplicity == 2
 
 
 @pytest.mark.parametrize("repeat", [(1, 1, 1), (2, 3, 4), (3, 1, 2)])

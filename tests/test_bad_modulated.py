@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import dataclasses
+import re
 from pathlib import Path
 
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 import latticedip as ld
 from latticedip.errors import FileError
@@ -109,6 +112,24 @@ BAD = {
         bad(("1 +1*x1,+1*x2,+1*x3,+1*x4,+1\n2", "1 x1,x2,x3+x4,x4,+1\n2")),
         "_space_group_symop_magn_ssg_operation.algebraic 'x1,x2,x3+x4,x4,+1' in row 1 is not understood: x4 must "
         "become x4 or -x4, and must not enter the parts of x1, x2, x3.",
+    ),
+    "large coefficient": (
+        bad(("1 +1*x1,+1*x2,+1*x3,+1*x4,+1\n2", "1 1e9x1,x2,x3,x4,+1\n2")).replace("1e9", "1" + 9 * "0"),
+        "_space_group_symop_magn_ssg_operation.algebraic '1000000000x1,x2,x3,x4,+1' in row 1 is not understood: its "
+        "rotation part is not a matrix of whole numbers with determinant 1 or -1.",
+    ),
+    "long translation": (
+        bad(("1 +1*x1,+1*x2,+1*x3,+1*x4,+1\n2", "1 x1,x2+1001,x3,x4,+1\n2")),
+        "_space_group_symop_magn_ssg_operation.algebraic 'x1,x2+1001,x3,x4,+1' in row 1 is not understood: its "
+        "translation is longer than 1000 cells.",
+    ),
+    "wave vector without values": (
+        bad(("1 0 0 0.2137\nloop_", "loop_")),
+        "_cell_wave_vector.x holds no value, but the modulation wave vector is needed.",
+    ),
+    "wave vector not applicable": (
+        bad(("1 0 0 0.2137\nloop_", "1 . . .\nloop_")),
+        "_cell_wave_vector.x holds no value, but the modulation wave vector is needed.",
     ),
     "no group": (
         bad(("3 +1*x1,-1*x2,-1*x3,-1*x4+0.25,-1\n", "")),
@@ -282,3 +303,19 @@ def test_parameters_in_a_loop_of_their_own_need_matching_ids(tmp_path, monkeypat
             read_text(head + text, ".")
         assert str(caught.value) == f"a.mcif: {message}"
     assert read_text(head + rows + values + "a 1 0\n", ".").components[1].any()
+
+
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(
+    name=st.sampled_from(sorted(STRUCTURES)),
+    place=st.floats(0, 1, exclude_max=True),
+    word=st.sampled_from(["?", ".", "0", "-1", "nan", "1e400", "x4", "[1 2]", "''", "1/0", "9" * 30, "loop_", "", "é"]),
+)
+def test_any_word_exchanged_is_read_or_refused(name, place, word, tmp_path):
+    words = list(re.finditer(r"\S+", STRUCTURES[name].text))
+    chosen = words[int(place * len(words))]
+    text = STRUCTURES[name].text
+    try:
+        read_text(text[: chosen.start()] + word + text[chosen.end() :], tmp_path)
+    except FileError as error:
+        assert str(error).startswith(str(tmp_path))

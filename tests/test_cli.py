@@ -123,7 +123,14 @@ def test_rank_document_says_what_it_rests_on(folder: Path) -> None:
     assert list(doc)[:4] == ["schema", "version", "inputs", "boundary"]
     assert doc["schema"] == "latticedip/rank/1"
     assert doc["version"] == latticedip.__version__
-    assert doc["inputs"]["options"] == {"rotate": False, "orderings": None, "tol": 1e-6}
+    assert doc["inputs"]["options"] == {
+        "rotate": False,
+        "bound": None,
+        "parts": False,
+        "shells": None,
+        "orderings": None,
+        "tol": 1e-6,
+    }
     assert doc["inputs"]["files"] == [
         {"role": "study", "path": "study.toml", "sha256": hashlib.sha256(STUDY.encode()).hexdigest()},
         {"role": "crystal", "path": "cube.cif", "sha256": hashlib.sha256(CUBE.encode()).hexdigest()},

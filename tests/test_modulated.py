@@ -83,7 +83,7 @@ def test_spellings(tmp_path):
     blanks = re.sub(r"(?m)^(\d+) (\S*x1\S*)$", lambda m: f"{m[1]} '{m[2].replace(',', ' ').upper()}'", text)
     assert "'+1*X1 +1*X2 +1*X3 +1*X4 +1'" in blanks
     by_vector = text.replace("_atom_site_Fourier_wave_vector.q1_coeff", "_other.thing")
-    by_jana = text.replace("_atom_site_Fourier_wave_vector.q1_coeff", "_jana_atom_site_Fourier_wave_vector_q1_coeff")
+    by_alias = text.replace("_atom_site_Fourier_wave_vector.q1_coeff", "_older_atom_site_Fourier_wave_vector_q1_coeff")
     lists = "".join(
         "loop_\n_atom_site_Fourier_wave_vector.seq_id\n_atom_site_Fourier_wave_vector.q_coeff_seq_id\n"
         "_atom_site_Fourier_wave_vector.q_coeff\n1 [1] [1]\n3 [1] [3]\n"
@@ -126,7 +126,7 @@ def test_spellings(tmp_path):
     )
     backwards = re.sub(r"(?m)^(\d) 0 0 (\S+) (\d)$", r"\1 0 0 -\2 -\3", backwards)
     assert "1 0 0 -0.2137 -1\n" in backwards
-    for other in (flat, prototype, blanks, by_vector, by_jana, lists, apart, polar, backwards):
+    for other in (flat, prototype, blanks, by_vector, by_alias, lists, apart, polar, backwards):
         assert other != text
         same(read_text(other, tmp_path), reference)
 
@@ -171,7 +171,7 @@ def test_commensurate_waves_and_the_initial_phase(tmp_path):
     for tag, value in (
         ("_atom_sites_modulation.global_phase_t_1", "0.125"),
         ("_atom_sites_modulation_global_phase_list", "[0.125]"),
-        ("_jana_cell_commen_t_section_1", "0.125(1)"),
+        ("_older_cell_commen_t_section_1", "0.125(1)"),
     ):
         structure.extra = f"{tag} {value}\n"
         ordering = structure.read(tmp_path)

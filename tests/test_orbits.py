@@ -113,19 +113,15 @@ def test_a_moment_density_holds_at_one_position():
 
 def test_a_decimal_near_a_fraction_is_remarked_on():
     found = ld.orbit_field(ld.Ordering(CUBIC, [[0, 0, 1]], [0.3333, 0, 0]), ld.Probe([0.5, 0.5, 0.5]))
-    assert found.notes == (
-        'the coordinate 0.3333 of k is taken as it stands; for a commensurate ordering write "1/3"',
-    )
+    assert found.notes == ('the coordinate 0.3333 of k is taken as it stands; for a commensurate ordering write "1/3"',)
     assert not found.is_commensurate
     with pytest.raises(InputError) as caught:
         _ = found.levels
-    assert str(caught.value) == (
-        "the ordering is incommensurate: its fields fill curves and cannot be listed."
-    )
+    assert str(caught.value) == ("the ordering is incommensurate: its fields fill curves and cannot be listed.")
 
 
 def test_motion_and_displaced_neighbours_turn_with_the_position():
-    """On the z axis and on the x axis: the same tensor and push, seen from the position, so opposite orders of fields."""
+    """On the z axis and on the x axis: the same tensor and push, seen from the position."""
     stretched = np.diag([1e-2, 1e-2, 9e-2])
     push = ld.Displaced(atom=(0, (0, 0, 0)), vector_A=[0, 0, -0.2])
     probe = ld.Probe([0, 0, 0.5], spread=stretched, displaced=push)

@@ -68,9 +68,9 @@ def test_a_powder_is_a_crystal_averaged_over_all_directions(delta):
     """One third of the signals along three directions at right angles."""
     ordering, probe = ld.Ordering(CUBE, [[1, 0.3j, 0]], [Q, 0.1, 0]), ld.Probe([0.5, 0.5, 0.12])
     crystal, powder = ld.spectrum(ordering, probe), ld.spectrum(ordering, probe, powder=True)
-    mean = sum(
-        ld.polarization(crystal, TIME, initial=axis, nuclear_width_per_us=delta).values for axis in np.eye(3)
-    ) / 3
+    mean = (
+        sum(ld.polarization(crystal, TIME, initial=axis, nuclear_width_per_us=delta).values for axis in np.eye(3)) / 3
+    )
     found = ld.polarization(powder, TIME, nuclear_width_per_us=delta).values
     assert found == pytest.approx(mean, abs=1e-10)
     assert found[0] == pytest.approx(1.0)
@@ -136,3 +136,18 @@ def test_a_powder_in_a_field_and_negative_times_are_refused():
         with pytest.raises(InputError) as caught:
             ld.polarization(ld.spectrum(FERROMAGNET, probe, powder=True, applied_T=applied), time)
         assert str(caught.value) == message
+
+
+@pytest.mark.parametrize("delta", [0.0, 0.8])
+@pytest.mark.parametrize("powder", [False, True])
+def test_a_grid_of_frequencies_stands_for_many_fields(monkeypatch, powder, delta):
+    """The same signal from every field by itself."""
+    rng = np.random.default_rng(8)
+    components = rng.normal(size=(2, 1, 3)) + 1j * rng.normal(size=(2, 1, 3))
+    ordering = ld.Ordering(CUBE, 0.1 * components, [[Q, 0.1, 0], [0, Q, 0.2]])
+    found = ld.spectrum(ordering, ld.Probe([0.1, 0.2, 0.4]), powder=powder, equivalent=False, samples=2**12)
+    options = {"nuclear_width_per_us": delta} | ({} if powder else {"initial": [0, 1, 2], "detector": [1, 0, 1]})
+    time = np.linspace(0, 3, 41)
+    gridded = ld.polarization(found, time, **options).values
+    monkeypatch.setattr("latticedip.observables.polarization._fewer", lambda lines, time: lines)
+    assert gridded == pytest.approx(ld.polarization(found, time, **options).values, abs=1e-9)

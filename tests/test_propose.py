@@ -29,7 +29,8 @@ def test_is_a_ranking_of_orderings_on_the_crystal():
     assert isinstance(result, ld.Ranking)
     assert len(result.rows) == 6
     energies = [row.energy.per_ion_eV for row in result.rows]
-    assert energies == sorted(energies)
+    # Rows whose energies are equal within the error bounds are tied, in any order.
+    assert np.all(np.diff(energies) > -1e-9 * abs(energies[0]))
     names = [row.ordering.name for row in result.rows]
     assert len(set(names)) == 6
     for row in result.rows:
@@ -57,7 +58,7 @@ def test_what_is_said():
     assert result.notes[1] == "every sign pattern of 4 moments was tried (2^3)"
     assert result.notes[2].startswith("no ordering of these moments lies below ")
     assert result.notes[2].endswith(" µeV per ion, the lowest mode, at k = (1/2, 1/2, 0)")
-    assert result.boundary.startswith("net moment without a stated shape: N = 0 assumed")
+    assert result.boundary.startswith("no net moment")
     assert result.restarts == 0
     annealed = ld.propose(
         CUBE, {"Mn": 2.0}, supercell=(2, 2, 1), method="annealing", restarts=4, sweeps=20, along=(0, 0, 1)
@@ -90,7 +91,7 @@ def test_along_an_axis_nothing_else_is_proposed():
     result = ld.propose(RUTILE, {"Mn": 5.0}, along=(0, 0, 1))
     assert [row.origins for row in result.rows] == [("exhaustive",)] * 2
     assert all(np.all(row.ordering.components[..., :2] == 0) for row in result.rows)
-    # Antiferromagnet of MnF2: P4'2/mnm'... 136.499 in the tables; the ferromagnet along c 136.501.
+    # MnF2: P4₂'/mnm' (136.499) for the antiferromagnet, P4₂/mn'm' (136.501) for the ferromagnet along c.
     assert {row.bns_number for row in result.rows} == {"136.499", "136.501"}
 
 
@@ -99,7 +100,7 @@ def test_fixed_signs():
     assert len(result.rows) == 1
     assert result.rows[0].ordering.net_moment.tolist() == [0, 0, 10.0]
     doubled = ld.propose(RUTILE, {"Mn": 5.0}, along=(0, 0, 1), fixed=[1, -1, 0, 0], supercell=(1, 1, 2), keep=20)
-    assert len(doubled.rows) == 4
+    assert sum(row.multiplicity for row in doubled.rows) == 4
     for row in doubled.rows:
         assert row.ordering.moments([(0, 0, 0)])[0, :2, 2] == pytest.approx([5, -5], abs=1e-12)
     free = ld.propose(RUTILE, {"Mn": 5.0}, fixed=[1, -1])
@@ -123,12 +124,11 @@ def test_net_zero_and_shape():
     assert uniform.ordering.net_moment.tolist() == [0, 0, 1.0]
     result = ld.propose(CUBE, {"Mn": 1.0}, supercell=(2, 2, 2), net_zero=True, keep=30)
     assert all(np.linalg.norm(row.ordering.net_moment) < 1e-6 for row in result.rows)
-    plate = ld.Sample.plate((0, 0, 1), applied_T=(0, 0, 0.1))
+    plate = ld.Sample.plate((0, 0, 1), applied_T=(0, 0, 0.002))
     shaped = ld.propose(CUBE, {"Mn": 1.0}, supercell=(2, 1, 1), sample=plate, keep=30)
     for row in shaped.rows:
-        assert row.energy.per_cell_eV == pytest.approx(
-            ld.dipolar_energy(row.ordering, sample=plate).per_cell_eV, rel=1e-9
-        )
+        again = ld.dipolar_energy(row.ordering, sample=plate)
+        assert row.energy.per_cell_eV == pytest.approx(again.per_cell_eV, rel=1e-9)
     # Lowest of all with a moment: in the plane but for the turn that the field makes.
     with_moment = next(row for row in shaped.rows if np.linalg.norm(row.ordering.net_moment) > 0.5)
     assert abs(with_moment.ordering.net_moment[2]) < 0.2
@@ -169,7 +169,7 @@ def test_partial_occupancy():
 
 
 def test_characters_of_a_cubic_point_group():
-    """m-3m: 33 classes of subgroups and four real one-dimensional representations; 10 and 4 for 4/mmm ... by k."""
+    """m-3m: 33 classes of subgroups and four real one-dimensional representations; 4/mmm: eight."""
     supercell = Supercell(CUBE, (2, 2, 2), (0,))
     problem = SearchProblem(supercell, np.ones(1), ld.Sample(), supercell.tensors())
     waves = commensurate_waves(problem)

@@ -71,7 +71,9 @@ def test_a_powder_in_an_applied_field_is_uniform_in_the_square():
 
 def test_lines_within_the_error_are_one_and_equal_waves_are():
     one, other = wave([0, 0, 0], [0.3, 0.1j, 0]), wave([0, 0, 0], [0, 0.3j, 0.1])
-    found = mixture([(Line(0.2), 1.0), (Line(0.2 + 1e-9), 1.0), (one, 1.0), (other, 1.0), (Line(0.3), 2.0)], same_T=1e-8)
+    found = mixture(
+        [(Line(0.2), 1.0), (Line(0.2 + 1e-9), 1.0), (one, 1.0), (other, 1.0), (Line(0.3), 2.0)], same_T=1e-8
+    )
     assert found.lines == ((pytest.approx(0.2), pytest.approx(1 / 3)), (0.3, pytest.approx(1 / 3)))
     assert len(found.parts) == 3
     assert found.weights.sum() == pytest.approx(1.0)
@@ -100,8 +102,7 @@ def test_a_smeared_part_is_that_of_random_numbers(part, kind):
 def test_many_smeared_waves_are_put_on_a_grid_without_loss():
     parts = tuple(wave([0.1, 0, 0], [x, 0.02, 0.1j * x]) for x in np.linspace(0.1, 0.3, 7))
     found = FieldDistribution(parts, np.full(7, 1 / 7), width_T=1e-4)
-    size, weight = found._nodes
-    assert weight.sum() == pytest.approx(1.0)
+    assert found._nodes[1].sum() == pytest.approx(1.0)
     x = np.linspace(0, 0.4, 9)
     single = sum(FieldDistribution((part,), np.ones(1), width_T=1e-4).cumulative(x) for part in parts)
     assert found.cumulative(x) == pytest.approx(single / 7, abs=1e-5)

@@ -180,12 +180,12 @@ def test_domains_are_listed_or_averaged() -> None:
         (["--nuclear", "auto"], "Error: nucleus: the static width of nuclear moments is worked out for muons only, and "
          "the probe is 55Mn. Give the width as a number, or name the probes to take.\n"),
         (["--plot", "x.gif"], "Error: a picture ends in .png, .svg, .pdf, got 'x.gif'.\n"),
-        (["--time", "1", "--initial", "up"], "Error: --initial: got 'up', expected a crystal direction: a, b, c, a*, b*, "
-         "c*, or three components along the axes a, b, c, such as \"1 1 0\".\n"),
+        (["--time", "1", "--initial", "up"], "Error: --initial: got 'up', expected a crystal direction: a, b, c, a*, "
+         "b*, c*, or three components along the axes a, b, c, such as \"1 1 0\".\n"),
         (["--probe", "muon"], "Error: the study has no probe named 'muon'. Those it has: 'muon A', 'nucleus'. Did you "
          "mean 'muon A'?\n"),
-        (["--width", "0.1", "--nuclear", "1"], "Error: give either a width or a nuclear width, not both: one broadening "
-         "is applied.\n"),
+        (["--width", "0.1", "--nuclear", "1"], "Error: give either a width or a nuclear width, not both: one "
+         "broadening is applied.\n"),
     ],
 )  # fmt: skip
 def test_what_does_not_fit_is_refused(arguments: list[str], message: str) -> None:
@@ -203,8 +203,8 @@ def test_a_width_that_is_no_number_is_refused() -> None:
 def test_a_study_without_probes_is_refused(folder: Path) -> None:
     (folder / "study.toml").write_text(STUDY[: STUDY.index("[[probe]]")], encoding="utf-8")
     assert run().stderr == (
-        "Error: 'study.toml' has no [[probe]], so there is no place to ask for a spectrum. Add one with a position or a "
-        "site, for example: [[probe]] position = [0.5, 0.5, 0.25]\n"
+        "Error: 'study.toml' has no [[probe]], so there is no place to ask for a spectrum. Add one with a position or "
+        "a site, for example: [[probe]] position = [0.5, 0.5, 0.25]\n"
     )
 
 
@@ -239,9 +239,7 @@ def test_too_many_panels_are_refused() -> None:
     doc["orderings"] = doc["orderings"] * 4
     with pytest.raises(InputError) as caught:
         plots.draw_spectrum(doc, Path("picture.png"))
-    assert str(caught.value) == (
-        "16 spectra do not fit into one picture of at most 12. Name an ordering or a probe."
-    )
+    assert str(caught.value) == ("16 spectra do not fit into one picture of at most 12. Name an ordering or a probe.")
 
 
 def test_without_matplotlib_the_message_says_what_to_install(folder: Path) -> None:

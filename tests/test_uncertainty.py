@@ -9,7 +9,8 @@ import latticedip as ld
 from latticedip.crystal.model import Operations
 from latticedip.errors import InputError
 from latticedip.ordering.model import ParentTransform, Reference
-from latticedip.physics.uncertainty import field_uncertainty, tied_moments, tied_positions
+from latticedip.crystal.uncertain import carried_su, parameter_steps, position_moves, tied_positions
+from latticedip.physics.uncertainty import field_uncertainty, tied_moments
 from latticedip.report.su import format_su
 
 CELL = np.array([[5.0, 0, 0], [0.8, 5.6, 0], [-0.6, 0.9, 6.1]])
@@ -136,7 +137,7 @@ def test_atoms_of_one_label_change_together():
     assert list(tied.sites) == [0, 1, 2, 3]
     moments = ordering.crystal.to_crystal_axes(ordering.moments()[0])
     np.testing.assert_allclose(tied.turns @ moments[0], moments, atol=1e-12)
-    (places,) = tied_positions(ordering)
+    (places,) = tied_positions(ordering.crystal)
     np.testing.assert_allclose(places.turns[1] @ [1, 0, 0], [0, 1, 0])
     point = np.array([[0.1, 0.3, 0.2]])
     found = ld.local_field(ordering, point)

@@ -1,9 +1,9 @@
 """How far an ordering stands above the lowest dipolar energy that moments like its own could have.
 
 For moments with ⟨|m_i|²⟩ = r_i size_i² over cells (r = 1 at full size) the energy per cell is at least λ Σ_i r_i n/S,
-λ the lowest eigenvalue over all k per ion, n the ions per cell and S the magnetic sites (Luttinger and Tisza, Phys. Rev.
-70, 954 (1946)). With weights of the sites (Lyons and Kaplan, Phys. Rev. 120, 1580 (1960)) λ is higher, but the bound
-holds only where all r_i are equal.
+λ the lowest eigenvalue over all k per ion, n the ions per cell and S the magnetic sites (Luttinger and Tisza,
+Phys. Rev. 70, 954 (1946)). With weights of the sites (Lyons and Kaplan, Phys. Rev. 120, 1580 (1960)) λ is higher, but
+the bound holds only where all r_i are equal.
 """
 
 from __future__ import annotations

@@ -4,8 +4,8 @@ With all moments along ±û the energy per cell is E(û) = û·Q·û − g·û (
 the three great circles through two of the principal axes of Q each: easy, middle and hard.
 
 Anisotropy field: turned by θ from the easy axis towards another principal axis the energy is ΔE sin²θ. A field H along
-each moment's own direction (the staggered field of an antiferromagnet) gives −H Σ|m| cos θ, which has the same curvature
-at θ = 0 if
+each moment's own direction (the staggered field of an antiferromagnet) gives −H Σ|m| cos θ, which has the same
+curvature at θ = 0 if
 
     B_A = µ0 H_A = 2 ΔE / Σ|m|,
 

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from scipy.spatial.transform import Rotation
 
-from latticedip.analysis.rank import RankingRow
+from latticedip.analysis.rank import ROUNDING, RankingRow
 from latticedip.analysis.rotate import DEGENERATE, SHAPE_TOLERANCE, rotation_form, turn
 from latticedip.checks import FloatArray, frozen
 from latticedip.ordering.domains import Domain, domains, in_reference_cell, which_domain
@@ -186,7 +186,9 @@ class _Candidate:
 
 def _tied(one: RankingRow, two: RankingRow) -> bool:
     """Neighbours of a ranking belong to one tie where their energies differ by no more than their bounds."""
-    bound = sum(row.energy.error_bound_eV / row.energy.n_ions + 1e-13 * abs(row.energy.per_ion_eV) for row in (one, two))
+    bound = sum(
+        row.energy.error_bound_eV / row.energy.n_ions + ROUNDING * abs(row.energy.per_ion_eV) for row in (one, two)
+    )
     return one.tie and two.tie and two.above_lowest_eV - one.above_lowest_eV <= bound
 
 

@@ -128,7 +128,8 @@ def propose(
     (the same in every cell) or one per moment of the supercell (cells with the last index fastest, sites inside).
     k: one or several wave vectors with 2k whole, instead of a supercell; moments then follow cos 2πk·R.
     moments: "ising", "planar" or "heisenberg"; the last two are annealed. method: "exhaustive" or "annealing" for ±
-    patterns; "auto" tries all of them up to 2³³ (2³⁰ with own axes). restarts, sweeps: of the annealing.
+    patterns; "auto" tries all of them up to 2³³ (2³⁰ with own axes). restarts, sweeps: of the annealing. tol: as
+    `dipole_tensor`.
 
     Raises InputError for sizes that are zero or name no site, options that do not go together, and where no arrangement
     fits; LimitError for supercells of more than 10,000 moments and for too many patterns.

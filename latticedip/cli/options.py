@@ -151,15 +151,17 @@ def deliver(
 ) -> None:
     """Print the text or the document, and write the rows where a CSV file was asked for.
 
-    Raises click.UsageError where two documents would have to share stdout.
+    Raises click.UsageError where two documents would have to share stdout, InputError for a CSV file that is one of
+    the files read.
     """
     from latticedip.encode import to_csv, to_json, write_csv
-    from latticedip.study.documents import flat_rows
+    from latticedip.study.documents import flat_rows, spare_inputs
 
     csv_to_stdout = csv_path is not None and str(csv_path) == "-"
     if csv_to_stdout and as_json:
         raise click.UsageError("--json and --csv - cannot both go to stdout: name a file for the CSV.")
     if csv_path is not None and not csv_to_stdout:
+        spare_inputs(csv_path, document)
         write_csv(flat_rows(rows()), csv_path)
         click.echo(f"Wrote {csv_path}.", err=True)
     if csv_to_stdout:

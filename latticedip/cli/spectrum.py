@@ -25,9 +25,7 @@ class NuclearWidth(click.ParamType):
 
     name = "RATE|auto"
 
-    def convert(
-        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
-    ) -> float | Literal["auto"]:
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float | Literal["auto"]:
         if value == "auto":
             return "auto"
         try:

@@ -67,6 +67,7 @@ def start(
     from latticedip.encode import write_text_atomically
     from latticedip.errors import InputError
     from latticedip.study import tasks
+    from latticedip.study.documents import spare_inputs
 
     output = None if str(output) == "-" else output
     twice = [label for i, (label, _) in enumerate(moments) if label in dict(moments[:i])]
@@ -77,6 +78,7 @@ def start(
     document = tasks.start(file, output=output, sizes_muB=dict(moments), block=block)
     text = document["study"]
     if output is not None:
+        spare_inputs(output, document)
         write_text_atomically(output, text)
         click.echo(f"Wrote {output}.", err=True)
         if not as_json and csv_path is None:

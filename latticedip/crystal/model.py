@@ -19,6 +19,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from latticedip.checks import FloatArray, as_floats, check_cell, frozen
+from latticedip.crystal.uncertain import checked_su
 from latticedip.errors import InputError, near_match
 
 if TYPE_CHECKING:
@@ -65,9 +66,10 @@ class Crystal:
     pbc: three bools, the periodic directions.
     operations: of the non-magnetic structure, or None where they are not known.
     notes: sentences a report must repeat (partial occupancy and the like).
+    position_su: Shape (n_sites, 3) float, fractional. Standard uncertainties of the positions, NaN where none is known.
 
-    Raises InputError for a cell without volume, values that are not finite, lists of unequal length,
-    occupancies outside (0, 1] and atoms closer than 0.1 Å (unless their occupancies add up to at most 1).
+    Raises InputError for a cell without volume, values that are not finite, lists of unequal length, occupancies
+    outside (0, 1], uncertainties below 0 and atoms closer than 0.1 Å (unless their occupancies add up to at most 1).
     """
 
     cell: FloatArray
@@ -79,6 +81,7 @@ class Crystal:
     operations: Operations | None = field(default=None, repr=False)
     name: str = ""
     notes: tuple[str, ...] = field(default=(), repr=False)
+    position_su: FloatArray = field(default=None, repr=False)  # type: ignore[assignment]
 
     def __post_init__(self) -> None:
         if np.shape(self.pbc) != (3,):
@@ -105,6 +108,7 @@ class Crystal:
             ("cell", cell),
             ("positions", positions),
             ("occupancies", np.minimum(occupancies, 1.0)),
+            ("position_su", checked_su("position_su", self.position_su, (len(positions), 3))),
         ):
             object.__setattr__(self, key, frozen(value))
         object.__setattr__(self, "symbols", symbols)

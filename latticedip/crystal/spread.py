@@ -11,7 +11,7 @@ from latticedip.checks import FloatArray, as_float, as_floats, frozen
 from latticedip.errors import InputError
 
 if TYPE_CHECKING:
-    from latticedip.crystal.model import Crystal
+    from latticedip.crystal.model import Crystal, Operations
 
 #: Largest rms displacement (Å) along any direction that is taken for motion about one position.
 MAX_SPREAD_A = 5.0
@@ -79,11 +79,8 @@ def turned_covariance(crystal: Crystal, rotation: Any, covariance: FloatArray) -
     return np.asarray(turn @ covariance @ turn.T)
 
 
-def carriers(crystal: Crystal, first: int, other: int) -> np.ndarray:
-    """Indices of the operations of the crystal (`operations_of`) that carry one site onto another."""
-    from latticedip.crystal.symmetry import operations_of
-
-    operations = operations_of(crystal)
+def carriers(crystal: Crystal, operations: Operations, first: int, other: int) -> np.ndarray:
+    """Indices of the operations of a crystal (those of `operations_of`) that carry one site onto another."""
     gap = operations.rotations @ crystal.positions[first] + operations.translations - crystal.positions[other]
     gap -= np.round(gap)
     return np.flatnonzero(np.linalg.norm(gap @ crystal.cell, axis=1) < SITE_MATCH_A)
@@ -103,10 +100,10 @@ def carried_spreads(
 
     if spread is None or isinstance(spread, float):
         return [spread] * len(sites)
-    rotations = operations_of(crystal).rotations
+    operations = operations_of(crystal)
     found: list[float | FloatArray | None] = []
     for site in sites:
-        chosen = rotations[carriers(crystal, sites[0], site)]
+        chosen = operations.rotations[carriers(crystal, operations, sites[0], site)]
         if site == sites[0] and not len(chosen):
             chosen = np.eye(3)[None]
         turned = [turned_covariance(crystal, rotation, spread) for rotation in chosen]

@@ -11,6 +11,7 @@ import numpy as np
 
 from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal, Operations
+from latticedip.crystal.uncertain import carried_su
 from latticedip.errors import FileError, InputError
 from latticedip.files.cifsyntax import Block, Column
 from latticedip.files.expand import Group, Orbit, build_group, orbit_of
@@ -46,11 +47,15 @@ OCCUPANCY_SLACK = 1e-3
 
 @dataclass(frozen=True, eq=False)
 class Site:
-    """One row of the atom list: label, element, fractional position, occupancy, multiplicity where stated."""
+    """One row of the atom list: label, element, fractional position, occupancy, multiplicity where stated.
+
+    position_su: Shape (3,) float, standard uncertainties of the coordinates, NaN where none is stated.
+    """
 
     label: str
     symbol: str
     position: FloatArray
+    position_su: FloatArray
     occupancy: float
     multiplicity: int | None
     shown: str
@@ -107,12 +112,20 @@ def expand(block: Block, name: str, cell: FloatArray, group: Group, *, magnetic:
             operations=Operations(group.rotations, group.translations) if keep else None,
             name=name,
             notes=notes,
+            position_su=np.concatenate([_orbit_su(group, *pair) for pair in zip(sites, orbits, strict=True)]),
         )
     except FileError:
         raise
     except InputError as error:
         raise block.error(str(error)) from None
     return Structure(crystal, sites, group, orbits)
+
+
+def _orbit_su(group: Group, site: Site, orbit: Orbit) -> FloatArray:
+    """Shape (m, 3) float. Standard uncertainties of the positions of all atoms of a site."""
+    allowed = group.rotations[orbit.stabilizer].mean(axis=0)
+    turns = group.rotations[orbit.carriers].astype(float)
+    return np.array([carried_su(turn, allowed, site.position_su) for turn in turns])
 
 
 def modulated_items(block: Block) -> list[str]:
@@ -321,7 +334,7 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
             empty.append(label)
             continue
         symbol = _element(block, optional["type_symbol"], row, label)
-        position = np.array([block.number(column, row)[0] for column in coordinates])
+        position, su = np.array([read_with_su(block, column, row) for column in coordinates]).T
         if np.abs(position).max() > 1000:
             raise block.error(f"the fractional coordinates of {label} are {position.tolist()}, far outside any cell.")
         multiplicity = _optional(optional["symmetry_multiplicity"] or optional["site_symmetry_multiplicity"], row)
@@ -329,6 +342,7 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
             label,
             "H" if symbol == "D" else symbol,
             position,
+            su,
             occupancy,
             int(multiplicity) if multiplicity and multiplicity.isdecimal() else None,
             _optional(shown, row) or label,
@@ -343,6 +357,20 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
     if empty:
         notes.append(f"atoms of occupancy 0 are left out: {', '.join(empty)}")
     return tuple(sites.values()), tuple(notes)
+
+
+def read_with_su(block: Block, column: Column, row: int) -> tuple[float, float]:
+    """A number and its standard uncertainty, in brackets or in a column of its own (``_su``); NaN where there is none.
+
+    Raises FileError naming file, item and value where one is not a number, or an uncertainty is negative.
+    """
+    value, su = block.number(column, row)
+    separate = block.sibling(column, f"{column.tag}_su")
+    if separate is not None and separate.text(row) is not None:
+        su = block.number(separate, row)[0]
+        if su < 0:
+            raise block.error(f"{separate.tag} is {su:g} in row {row + 1}; an uncertainty is at least 0.")
+    return value, su
 
 
 def occupancy_notes(labels: Sequence[str], occupancies: Sequence[float]) -> tuple[str, ...]:

@@ -36,18 +36,25 @@ def parent_lines(parent: ParentTransform | None) -> list[str]:
 
 
 def atom_lines(
-    labels: Sequence[str], symbols: Sequence[str], positions: FloatArray, occupancies: FloatArray, name: str
+    labels: Sequence[str],
+    symbols: Sequence[str],
+    positions: FloatArray,
+    occupancies: FloatArray,
+    su: FloatArray,
+    name: str,
 ) -> tuple[list[str], list[str]]:
     """The loop of all atoms, and the name of each in it, quoted.
 
-    Where several atoms share a label, each gets one of its own, and the shared one stands in a column beside it.
+    su: Shape (n, 3), standard uncertainties of the positions; they get columns of their own where any is known. Where several atoms share a label, each gets one of its own, and the shared one stands in a column beside it.
     """
     names = distinct(labels)
     quoted_names = [quoted(label, name) for label in names]
     shared = names != list(labels)
+    has_su = not np.all(np.isnan(su))
     lines = loop(
         [
             *(f"_atom_site_{tag}" for tag in ("label", "type_symbol", "fract_x", "fract_y", "fract_z", "occupancy")),
+            *([f"_atom_site_fract_{x}_su" for x in "xyz"] if has_su else []),
             *(["_latticedip_site_label"] if shared else []),
         ],
         [
@@ -56,6 +63,7 @@ def atom_lines(
                 symbols[i],
                 *map(digits, positions[i]),
                 digits(occupancies[i]),
+                *(map(digits, su[i]) if has_su else []),
                 *([quoted(labels[i], name)] if shared else []),
             ]
             for i, label in enumerate(quoted_names)

@@ -15,7 +15,7 @@ import numpy as np
 from latticedip.checks import ComplexArray, FloatArray
 from latticedip.errors import InputError, near_match
 from latticedip.files.cif import modulated_items
-from latticedip.files.cifsyntax import Block, Column, parse_number
+from latticedip.files.cifsyntax import Block, Column, fold, parse_number
 from latticedip.files.moments import AGREE_FRACTION, AGREE_MUB, LARGEST
 from latticedip.files.symop import parse_vector
 
@@ -59,8 +59,8 @@ def wave_vector(block: Block) -> FloatArray:
     tag, rows = found
     if len(rows) > 1:
         refuse_more_waves(block, len(rows), f"{len(rows)} rows of {tag}")
-    if rows[0] is None:
-        raise block.error(f"{tag} is unknown or not applicable, but the modulation wave vector is needed.")
+    if not rows or rows[0] is None:
+        raise block.error(f"{tag} holds no value, but the modulation wave vector is needed.")
     return rows[0]
 
 
@@ -81,7 +81,7 @@ def harmonics(block: Block, q: FloatArray) -> dict[str, int]:
     if ids is None:
         raise block.error(f"it lists no Fourier wave vectors ({_WAVES}.seq_id and sisters).")
     for column in block.items.values():
-        second = re.fullmatch(rf"_(?:jana_)?{_WAVES[1:].lower()}_q([2-9])_coeff", column.tag.lower().replace(".", "_"))
+        second = re.search(rf"{_WAVES.lower()}_q([2-9])_coeff\Z", fold(column.tag))
         if second and any(_number(block, column, row) for row in range(len(column.values))):
             refuse_more_waves(block, int(second[1]), column.tag)
     listed = _triples(block, _WAVES, ids)
@@ -120,12 +120,9 @@ def _order(block: Block, key: str, vector: FloatArray | None, order: int | None,
 
 
 def _coefficients(block: Block, ids: Column) -> list[int | None] | None:
-    """Whole numbers from q1_coeff, or from lists such as ``[2]``; None where the file gives neither."""
-    column = (
-        block.sibling(ids, f"{_WAVES}_q1_coeff")
-        or block.sibling(ids, f"_jana{_WAVES}_q1_coeff")
-        or block.sibling(ids, f"{_WAVES}_q_coeff")
-    )
+    """Whole numbers from q1_coeff (older aliases put a prefix before it), or from lists such as ``[2]``, or None."""
+    prefixed = [column for key, column in block.items.items() if key.endswith(f"{_WAVES}_q1_coeff".lower())]
+    column = next((c for c in prefixed if c.loop == ids.loop), None) or block.sibling(ids, f"{_WAVES}_q_coeff")
     if column is None:
         return None
     found: list[int | None] = []

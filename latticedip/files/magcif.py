@@ -13,6 +13,7 @@ import numpy as np
 
 from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal
+from latticedip.crystal.uncertain import carried_su
 from latticedip.errors import InputError
 from latticedip.files.cif import (
     OPERATION_TAGS,
@@ -25,7 +26,7 @@ from latticedip.files.cif import (
 )
 from latticedip.files.cifsyntax import Block, Column
 from latticedip.files.expand import Group, build_group
-from latticedip.files.moments import SiteMoment, combine_su, has_moments, read_moments
+from latticedip.files.moments import SiteMoment, has_moments, read_moments
 from latticedip.files.symop import Operation, parse_moment_image, parse_operation, parse_transform, parse_vector
 from latticedip.ordering.model import Ordering, ParentTransform
 
@@ -160,7 +161,8 @@ def expand_moment(
     lengths = np.linalg.norm(crystal.cell, axis=1)
     # θ det(R) L R L⁻¹ for every operation of the group.
     turns = structure.group.axial * lengths[:, None] / lengths[None, :]
-    allowed = turns[orbit.stabilizer].mean(axis=0) @ moment.crystal_axes
+    projector = turns[orbit.stabilizer].mean(axis=0)
+    allowed = projector @ moment.crystal_axes
     miss = float(np.linalg.norm((moment.crystal_axes - allowed) @ crystal.axes_unit))
     size = float(np.linalg.norm(moment.crystal_axes @ crystal.axes_unit))
     if miss > max(ALLOWED_MUB, ALLOWED_FRACTION * size):
@@ -172,7 +174,7 @@ def expand_moment(
     if miss > SILENT_MUB:
         notes.append(f"the moment of {site.label} misses what its site allows by {miss:.2g} µB; it is put right")
     components = turns[orbit.carriers] @ allowed
-    su = np.array([combine_su(turn, moment.su) for turn in turns[orbit.carriers]])
+    su = np.array([carried_su(turn, projector, moment.su) for turn in turns[orbit.carriers]])
     return AtomMoments(components, su)
 
 

@@ -48,11 +48,9 @@ _OTHER_MODULATIONS = {
     "_atom_site_occ": "the occupancies of atoms",
     "_atom_site_rot_": "the orientation of groups of atoms",
 }
-_PHASE_TAGS = (
-    "_atom_sites_modulation_global_phase_t_1",
-    "_atom_sites_modulation_global_phase_list",
-    "_jana_cell_commen_t_section_1",
-)
+#: The initial phase; an older alias of the first, with a prefix of its own, ends as the last one does.
+_PHASE_TAGS = ("_atom_sites_modulation_global_phase_t_1", "_atom_sites_modulation_global_phase_list")
+_PHASE_ENDING = "_cell_commen_t_section_1"
 #: An operation may turn the wave vector away from what it must become by this much, rounded digits.
 WAVE_TOLERANCE = 2e-3
 #: Below this a correction of the wave vector is rounding.
@@ -338,8 +336,9 @@ def _fit(
 
 def _phase(block: Block) -> float:
     """The initial phase t in cycles; it tells commensurate structures apart, and only shifts incommensurate ones."""
-    column = block.column(*_PHASE_TAGS)
-    text = None if column is None else column.text(0)
+    older = next((key for key in block.items if key.endswith(_PHASE_ENDING)), _PHASE_ENDING)
+    column = block.column(*_PHASE_TAGS, older)
+    text = column.text(0) if column is not None and column.values else None
     if column is None or not text:
         return 0.0
     number = parse_number(text.strip("[] "))

@@ -22,6 +22,8 @@ from latticedip.errors import InputError
 MAX_LENGTH = 300
 #: Decimals with three digits or more are taken as the fraction with the smallest denominator up to this one.
 LARGEST_DENOMINATOR = 24
+#: Larger coefficients and translations (cells) than this are slips.
+LARGEST = 1000
 
 _NUMBER = r"(?:[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:/[0-9]+(?:\.[0-9]*)?)?"
 
@@ -89,10 +91,12 @@ def _reversal(text: str) -> int:
 
 def _operation(parts: list[str], variables: tuple[str, ...], reversal: int, text: str) -> Operation:
     rows = [parse_expression(part, variables) for part in parts]
-    matrix = np.array([[float(c) for c in row[:-1]] for row in rows])
-    rotation = np.round(matrix).astype(np.int64)
-    if np.any(matrix != rotation) or abs(round(np.linalg.det(rotation))) != 1:
+    whole = all(c.denominator == 1 and abs(c) <= LARGEST for row in rows for c in row[:-1])
+    rotation = np.array([[int(c) for c in row[:-1]] for row in rows]) if whole else np.zeros((1, 1), dtype=np.int64)
+    if abs(round(np.linalg.det(rotation))) != 1:
         raise InputError("its rotation part is not a matrix of whole numbers with determinant 1 or -1")
+    if any(abs(row[-1]) > LARGEST for row in rows):
+        raise InputError(f"its translation is longer than {LARGEST} cells")
     return Operation(rotation, np.array([float(row[-1]) for row in rows]), reversal, text)
 
 

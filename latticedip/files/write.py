@@ -31,7 +31,7 @@ XYZ_SUFFIXES = (".xyz", ".extxyz")
 class _MagneticCell:
     """An ordering in a cell that holds whole waves: every array runs over its atoms.
 
-    cell: Shape (3, 3) Å. positions: Shape (n, 3) fractional. moments_cart, moment_su: Shape (n, 3) µB.
+    cell: Shape (3, 3) Å. positions, position_su: Shape (n, 3) fractional. moments_cart, moment_su: Shape (n, 3) µB.
     """
 
     cell: FloatArray
@@ -39,6 +39,7 @@ class _MagneticCell:
     symbols: tuple[str, ...]
     labels: tuple[str, ...]
     occupancies: FloatArray
+    position_su: FloatArray
     moments_cart: FloatArray
     moment_su: FloatArray
     magnetic: np.ndarray
@@ -121,6 +122,7 @@ def _magnetic_cell(ordering: Ordering, name: str) -> _MagneticCell:
         crystal.symbols * len(cells),
         crystal.labels * len(cells),
         np.tile(crystal.occupancies, len(cells)),
+        np.tile(crystal.position_su / scale, (len(cells), 1)),
         ordering.moments(cells).reshape(-1, 3),
         np.tile(su, (len(cells), 1)),
         np.tile(ordering.is_magnetic, len(cells)),
@@ -167,7 +169,9 @@ def _as_mcif(ordering: Ordering, name: str) -> str:
     lines += loop(
         ["_space_group_symop_magn_operation.id", "_space_group_symop_magn_operation.xyz"], [["1", "x,y,z,+1"]]
     )
-    atoms, names = atom_lines(magnetic.labels, magnetic.symbols, magnetic.positions, magnetic.occupancies, name)
+    atoms, names = atom_lines(
+        magnetic.labels, magnetic.symbols, magnetic.positions, magnetic.occupancies, magnetic.position_su, name
+    )
     shown = np.flatnonzero(magnetic.magnetic | (not magnetic.magnetic.any()))
     lines += [*atoms, *moment_lines([names[i] for i in shown], components[shown], magnetic.moment_su[shown])]
     return "\n".join(lines) + "\n"

@@ -32,7 +32,9 @@ def modulated_text(ordering: Ordering, name: str) -> str:
     lines += loop([f"_cell_wave_vector_{x}" for x in ("seq_id", *"xyz")], [["1", *map(digits, q)]])
     tag = "_space_group_symop_magn_ssg_operation"
     lines += loop([f"{tag}.id", f"{tag}.algebraic"], [["1", "x1,x2,x3,x4,+1"]])
-    atoms, names = atom_lines(crystal.labels, crystal.symbols, crystal.positions, crystal.occupancies, name)
+    atoms, names = atom_lines(
+        crystal.labels, crystal.symbols, crystal.positions, crystal.occupancies, crystal.position_su, name
+    )
     lines += atoms
     still = [i for i in range(len(ordering.k)) if i not in moving]
     average = crystal.to_crystal_axes(ordering.components[still].real.sum(axis=0))

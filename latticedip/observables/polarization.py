@@ -23,7 +23,7 @@ from scipy.special import spherical_jn, wofz
 from latticedip.checks import FloatArray, as_float, as_floats, as_unit_vector, frozen
 from latticedip.errors import InputError
 from latticedip.observables.orbits import OrbitField
-from latticedip.observables.spectrum import Spectrum, free_turns
+from latticedip.observables.spectrum import Spectrum, free_turns, kept_samples
 from latticedip.particles import particle_named
 
 #: Below this ratio of frequency and width the closed form along a field loses digits and is integrated instead.
@@ -34,6 +34,10 @@ GAUSS_POINTS, LONGEST = 48, 9.0
 LEAST_PHASES, MOST_PHASES = 128, 2**16
 #: Phases drawn where several waves run independently.
 SAMPLES = 2**14
+#: Angle by which neighbours on a grid of frequencies differ at the longest time, and points of an interpolation on it.
+GRID_ANGLE, GRID_POINTS = 0.25, 10
+#: Lines kept before they are put on the grid.
+MOST_WAITING = 2**20
 #: Fields times moments in time evaluated together.
 BLOCK = 2_000_000
 
@@ -167,46 +171,107 @@ def _powder_signal(time: FloatArray, omega: FloatArray, delta: float) -> FloatAr
 # --- averages over positions, cells and domains --------------------------------------------------------------
 
 
+@dataclass(frozen=True, eq=False)
+class _Lines:
+    """Frequencies with weights: of signals even in the frequency (n_even, n), and of the odd one (n,)."""
+
+    omega: FloatArray
+    even: FloatArray
+    odd: FloatArray
+
+    @classmethod
+    def joined(cls, parts: list[_Lines]) -> _Lines:
+        return cls(
+            np.concatenate([part.omega for part in parts]),
+            np.concatenate([part.even for part in parts], axis=1),
+            np.concatenate([part.odd for part in parts]),
+        )
+
+
 def _powder(spectrum: Spectrum, time: FloatArray, delta: float) -> FloatArray:
     gamma = 2 * np.pi * spectrum.MHz_per_T
     found = spectrum.distribution
+
+    def parts() -> Iterator[_Lines]:
+        for part, weight in zip(found.parts, found.weights, strict=True):
+            nodes = part.nodes(_phases_needed(gamma * part.edges[-1] * float(time.max(initial=0.0))))
+            yield _Lines(gamma * nodes, np.full((1, len(nodes)), weight / len(nodes)), np.zeros(len(nodes)))
+
+    lines = _gathered(parts(), time)
     total = np.zeros(len(time))
-    for part, weight in zip(found.parts, found.weights, strict=True):
-        sizes = part.nodes(_phases_needed(gamma * part.edges[-1] * float(time.max(initial=0.0))))
-        for block in _blocks(len(sizes), len(time)):
-            total += weight / len(sizes) * _powder_signal(time, gamma * sizes[block], delta).sum(axis=1)
+    for block in _blocks(len(lines.omega), len(time)):
+        total += _powder_signal(time, lines.omega[block], delta) @ lines.even[0, block]
     return total
 
 
-def _crystal(
-    spectrum: Spectrum, time: FloatArray, start: FloatArray, seen: FloatArray, delta: float
-) -> FloatArray:
+def _crystal(spectrum: Spectrum, time: FloatArray, start: FloatArray, seen: FloatArray, delta: float) -> FloatArray:
     gamma = 2 * np.pi * spectrum.MHz_per_T
     sign = particle_named(spectrum.probe.particle).gamma_sign
+    longest = gamma * float(time.max(initial=0.0))
+    n_positions = sum(len(orbit.steady) for orbit in spectrum.orbits)
+
+    def parts() -> Iterator[_Lines]:
+        for vectors in (found for orbit in spectrum.orbits for found in _vectors(orbit, longest)):
+            size = np.linalg.norm(vectors, axis=1)[:, None]
+            # Without a field the direction does not matter: nothing turns, or the random field has no axis.
+            unit = np.divide(vectors, size, out=np.tile([0.0, 0.0, 1.0], (len(size), 1)), where=size > 0)
+            both = (unit @ seen) * (unit @ start)
+            # d·(b × p) = b·(p × d)
+            odd = -sign * unit @ np.cross(start, seen)
+            # Every position counts alike, however many fields stand for it.
+            share = 1 / (n_positions * len(vectors))
+            yield _Lines(gamma * size[:, 0], share * np.array([both, seen @ start - both]), share * odd)
+
+    lines = _gathered(parts(), time)
     total = np.zeros(len(time))
-    count = 0
-    for orbit in spectrum.orbits:
-        for vectors in _vectors(orbit, gamma * float(time.max(initial=0.0))):
-            count += len(vectors)
-            for block in _blocks(len(vectors), len(time)):
-                total += _turned(time, vectors[block], start, seen, gamma, sign, delta).sum(axis=1)
-    return total / count
+    for block in _blocks(len(lines.omega), len(time)):
+        omega = lines.omega[block]
+        along = _along(time, omega, delta)
+        # The three signals along and across the field add up to 1 + 2⟨cos⟩, the trace of a rotation.
+        across = 0.5 * (1 + 2 * _cosine(time, omega, delta) - along)
+        total += along @ lines.even[0, block] + across @ lines.even[1, block]
+        total += _sine(time, omega, delta) @ lines.odd[block]
+    return total
 
 
-def _turned(
-    time: FloatArray, vectors: FloatArray, start: FloatArray, seen: FloatArray, gamma: float, sign: int, delta: float
-) -> FloatArray:
-    """Shape (n_t, n). Signals in fields (n, 3)."""
-    size = np.linalg.norm(vectors, axis=1)
-    # Without a field the direction does not matter: nothing turns, or the random field has no axis.
-    unit = np.divide(vectors, size[:, None], out=np.tile([0.0, 0.0, 1.0], (len(size), 1)), where=size[:, None] > 0)
-    omega = gamma * size
-    both = (unit @ seen) * (unit @ start)
-    crossed = np.cross(unit, start) @ seen
-    along = _along(time, omega, delta)
-    # The three signals along and across the field add up to 1 + 2⟨cos⟩, the trace of a rotation.
-    across = 0.5 * (1 + 2 * _cosine(time, omega, delta) - along)
-    return np.asarray(both * along + (seen @ start - both) * across - sign * crossed * _sine(time, omega, delta))
+def _gathered(parts: Iterator[_Lines], time: FloatArray) -> _Lines:
+    """All lines together, put on the grid whenever there are many."""
+    kept: list[_Lines] = []
+    waiting = 0
+    for part in parts:
+        kept.append(part)
+        waiting += len(part.omega)
+        if waiting > MOST_WAITING:
+            kept, waiting = [_fewer(_Lines.joined(kept), time)], 0
+    return _fewer(_Lines.joined(kept), time)
+
+
+def _fewer(lines: _Lines, time: FloatArray) -> _Lines:
+    """The same lines, or fewer on a grid that stand for them at all these times.
+
+    Every signal is a sum of exp(iωt), so that on a grid whose steps turn by a quarter of a radian at the longest time
+    the interpolation of Lagrange through ten points is right to 1e-9; its weights are given to the points instead. The
+    grid runs past zero and is folded there.
+    """
+    step = GRID_ANGLE / max(float(time.max(initial=0.0)), 1e-300)
+    half = GRID_POINTS // 2
+    largest = float(lines.omega.max(initial=0.0)) / step
+    if largest + 2 * GRID_POINTS >= len(lines.omega):
+        return lines
+    size = int(largest) + 2 * GRID_POINTS
+    first = np.floor(lines.omega / step).astype(np.int64)
+    apart = lines.omega / step - first
+    weights = np.vstack([lines.even, lines.odd])
+    out = np.zeros((len(weights), size))
+    points = np.arange(1 - half, half + 1)
+    for point in points:
+        share = np.prod([(apart - other) / (point - other) for other in points if other != point], axis=0)
+        for total, weight in zip(out, weights, strict=True):
+            total += np.bincount(first + point + half, weight * share, size)
+    folded = out[:, half:].copy()
+    folded[:-1, 1 : half + 1] += out[:-1, half - 1 :: -1]
+    folded[-1, 1 : half + 1] -= out[-1, half - 1 :: -1]
+    return _Lines(step * np.arange(size - half, dtype=float), folded[:-1], folded[-1])
 
 
 def _vectors(orbit: OrbitField, angle_per_T: float) -> Iterator[FloatArray]:
@@ -220,7 +285,7 @@ def _vectors(orbit: OrbitField, angle_per_T: float) -> Iterator[FloatArray]:
         steps = np.arange(n)[:, None] / n * phases.free[0]
         turns = (phases.listed[:, None] + steps[None]).reshape(-1, phases.listed.shape[1])
     else:
-        turns = free_turns(orbit, SAMPLES, 0)
+        turns = free_turns(orbit, kept_samples(orbit, SAMPLES), 0)
     for row in range(len(orbit.steady)):
         yield np.asarray(orbit.steady[row] + (np.exp(-2j * np.pi * turns) @ orbit.waves[:, row]).real)
 

@@ -219,10 +219,7 @@ def field_parts(
     turns = free_turns(fields, kept_samples(fields, samples), seed)
     phases = np.exp(-2j * np.pi * turns)
     sizes = np.concatenate(
-        [
-            np.linalg.norm(steady + (phases @ fields.waves[:, row]).real, axis=1)
-            for row, steady in enumerate(internal)
-        ]
+        [np.linalg.norm(steady + (phases @ fields.waves[:, row]).real, axis=1) for row, steady in enumerate(internal)]
     )
     return [(_shell_of(sizes, applied) if in_field else Sampled(sizes), 1.0)]
 
@@ -273,5 +270,3 @@ def free_waves(fields: OrbitField, steady: FloatArray) -> list[Wave]:
                     coefficients[abs(order)] += amplitude if order > 0 else amplitude.conj()
             out.append(Wave(coefficients))
     return out
-
-

@@ -28,8 +28,10 @@ if TYPE_CHECKING:
 K_SNAP = 1e-9
 #: Carried points closer than this in every fractional coordinate are one.
 SAME_POINT = 1e-6
-#: Below this size (µB) a component counts as zero.
-ZERO_MOMENT_MUB = 1e-12
+#: Below this size (µB) a component counts as zero; beyond the second it is a slip of units.
+ZERO_MOMENT_MUB, LARGEST_MOMENT_MUB = 1e-12, 1e6
+#: Relative rounding left by moments that cancel.
+ROUNDING = 1e-13
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,6 +83,17 @@ class Reference:
 
 
 @dataclass(frozen=True, eq=False)
+class SizeUncertainty:
+    """Atoms whose moments were given one size with a standard uncertainty: all their components change by one factor.
+
+    sites: indices of the atoms. relative: standard uncertainty of the factor, which is 1.
+    """
+
+    sites: tuple[int, ...]
+    relative: float
+
+
+@dataclass(frozen=True, eq=False)
 class Ordering:
     """A named arrangement of moments over the sites of one Crystal; frozen, arrays read-only.
 
@@ -88,15 +101,18 @@ class Ordering:
     components: Shape (n, 3) or (n_k, n, 3), real or complex, Cartesian µB; stored as (n_k, n, 3).
     k: Shape (3,) or (n_k, 3) float. Stored as (n_k, 3).
     name: what tables call it.
-    moment_su: Shape (n, 3) float in µB. Standard uncertainties of the crystal-axis components, NaN where unknown.
+    moment_su: Shape (n, 3) float in µB. Standard uncertainties of the crystal-axis components, NaN where unknown; at
+        k ≠ 0 those of the amplitude.
     parent: how the cell derives from a parent cell, where a file states it.
     reference: the crystal in whose cell probes are given, where it is not ``crystal`` (set when a study is read).
     notes: sentences a report must repeat.
+    size_su: where a size is uncertain and its direction is not; it then counts in the place of moment_su.
 
     Components at k equal or opposite modulo 1 are merged (S_k + conj S_−k). Where k and −k are the same vector
     only the real part has a meaning.
 
-    Raises InputError for wrong shapes, values that are not finite, or an imaginary part at such a k.
+    Raises InputError for wrong shapes, values that are not finite, components beyond 1e6 µB, or an imaginary part at
+    such a k.
     """
 
     crystal: Crystal
@@ -107,6 +123,7 @@ class Ordering:
     parent: ParentTransform | None = None
     reference: Reference | None = field(default=None, repr=False)
     notes: tuple[str, ...] = field(default=(), repr=False)
+    size_su: tuple[SizeUncertainty, ...] = field(default=(), repr=False)
 
     def __post_init__(self) -> None:
         if not isinstance(self.crystal, Crystal):
@@ -117,6 +134,9 @@ class Ordering:
             raise InputError("an Ordering needs at least one propagation vector.")
         flat = _depth(self.components) == 2 and len(k) == 1
         components = as_complex("components", self.components, (n, 3) if flat else (len(k), n, 3)).reshape(-1, n, 3)
+        largest = float(np.abs(components).max(initial=0.0))
+        if largest > LARGEST_MOMENT_MUB:
+            raise InputError(f"a moment of {largest:.6g} µB is beyond {LARGEST_MOMENT_MUB:g} µB. Give Bohr magnetons.")
         for axis, periodic in enumerate(self.crystal.pbc):
             if not periodic and np.any(np.abs(k[:, axis]) > K_SNAP):
                 raise InputError(f"k has a component along direction {axis + 1}, in which the crystal is not periodic.")
@@ -168,9 +188,14 @@ class Ordering:
 
     @cached_property
     def net_moment(self) -> FloatArray:
-        """Shape (3,) float in µB per cell. Σ p m over the cell, averaged over cells (the k = 0 part)."""
+        """Shape (3,) float in µB per cell. Σ p m over the cell, averaged over cells (the k = 0 part).
+
+        Components that are no more than the rounding of the sum are zero.
+        """
         uniform = np.all(self.k == np.round(self.k), axis=1)
-        return frozen(self.mean_components[uniform].real.sum(axis=(0, 1)))
+        moments = self.mean_components[uniform].real
+        total = moments.sum(axis=(0, 1))
+        return frozen(np.where(np.abs(total) > ROUNDING * np.abs(moments).sum(), total, 0.0))
 
     def rotated(self, rotation: Any, name: str | None = None) -> Ordering:
         """The same pattern with every moment turned by a (3, 3) rotation matrix; sites stay.
@@ -188,6 +213,7 @@ class Ordering:
             parent=self.parent,
             reference=self.reference,
             notes=self.notes,
+            size_su=self.size_su,
         )
 
     @classmethod

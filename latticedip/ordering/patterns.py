@@ -22,7 +22,7 @@ from latticedip.checks import ComplexArray, FloatArray, as_floats
 from latticedip.crystal.lattice import centring_classes, label_centrings
 from latticedip.crystal.model import Crystal
 from latticedip.errors import InputError
-from latticedip.ordering.model import Ordering, is_self_conjugate, snap_k
+from latticedip.ordering.model import ZERO_MOMENT_MUB, Ordering, is_self_conjugate, snap_k
 
 #: A phase this close (in turns) to a quarter turn is taken as it.
 PHASE_SNAP = 1e-9
@@ -108,8 +108,8 @@ class Setting:
         if self.self_conjugate:
             final, remark = self._drop_imaginary(components)
             remarks += remark
-        if not np.any(final):
-            if np.any(components):
+        if not np.any(np.abs(final) > ZERO_MOMENT_MUB):
+            if np.any(np.abs(components) > ZERO_MOMENT_MUB):
                 raise InputError(
                     f"at k = {triple(self.k)} every moment vanishes: the phase of each atom is a quarter turn. "
                     'Shift the phase (swap cosine and sine) or count cells with phase = "cell".'

@@ -9,8 +9,8 @@ from latticedip.report.field import ordering_lines
 from latticedip.report.tables import Column, bullets, decimals_for, direction, fixed, heading, pairs, table, vector
 
 ANISOTROPY = (
-    "the anisotropy field is 2 ΔE/m: ΔE per ion from the easy axis to the axis named, m the mean size of a moment; a field "
-    "along each moment's own direction that holds it as stiffly"
+    "the anisotropy field is 2 ΔE/m: ΔE per ion from the easy axis to the axis named, m the mean size of a moment; a "
+    "field along each moment's own direction that holds it as stiffly"
 )
 
 

@@ -13,8 +13,8 @@ MOST_PAIRS = 36
 MOST_NAMED = 3
 
 BEYOND = (
-    "Each shell holds whole neighbour shells of every ion; beyond is all that lies farther, up to the full sum at N = 0. "
-    "The sum converges conditionally, so that it need not be small."
+    "Each shell holds all pairs of ions at its distance; beyond is all that lies farther, up to the full sum at N = 0. "
+    "The sum converges conditionally, so that the rest need not be small."
 )
 
 

@@ -178,8 +178,8 @@ def draw_modes(document: Mapping[str, Any], path: Path) -> None:
         bound = document["lowest"]["energy_ueV_per_ion"]
         panel.axhline(bound, color="0.0", linestyle=(0, (5, 3)), linewidth=0.9)
         panel.annotate(
-            f"lowest mode {bound:.5g}", (distance[-1], bound), xytext=(0, -3), textcoords="offset points", fontsize=7,
-            ha="right", va="top",
+            f"lowest mode {bound:.5g} µeV".replace("-", "−"), (distance[-1], bound), xytext=(0, -3),
+            textcoords="offset points", fontsize=7, ha="right", va="top",
         )  # fmt: skip
         for tick in found["ticks"]:
             panel.axvline(tick["distance_per_A"], color="0.7", linewidth=0.6, zorder=0)
@@ -225,7 +225,7 @@ def draw_directions(document: Mapping[str, Any], path: Path) -> None:
                 panel.plot(angle, [point["energy_ueV_per_ion"] for point in points], "o-", color="0.0", markersize=2.5)
                 panel.set_xlim(0, angle[-1])
                 panel.set_xticks(np.arange(0, angle[-1] + 1, 45 if angle[-1] <= 180 else 90))
-                panel.set_xlabel(f"angle (degrees), {circle[0]} to {circle[1]}")
+                panel.set_xlabel(f"{circle[0]} to {circle[1]} (degrees)")
             row[0].set_ylabel("energy (µeV per ion)")
             row[0].set_title(_plain(entry["ordering"]), loc="left")
             values = [point["energy_ueV_per_ion"] for point in entry["rows"]]

@@ -100,7 +100,12 @@ def _ordering(entry: Mapping[str, Any], width: int | None) -> str:
     if collinear:
         items.append(("moments along", f"{direction(entry['direction_abc'])} (components along a, b, c)"))
     items.append(("cells listed", entry["cells_are"]))
-    return pairs(items, width=width) + "\n\n" + (_collinear if collinear else _vectors)(entry, width)
+    return pairs(items, width=width) + "\n\n" + moments_table(entry, width=width)
+
+
+def moments_table(entry: Mapping[str, Any], *, width: int | None = None) -> str:
+    """Return the moments of an ordering over its first cells: sizes along a common direction, or components."""
+    return (_collinear if entry["direction_abc"] is not None else _vectors)(entry, width)
 
 
 def _collinear(entry: Mapping[str, Any], width: int | None) -> str:

@@ -3,7 +3,8 @@
 Tables beside those of a study:
 
 [batch]    do = ["rank", "field"] (names of commands that take a study), orderings = ["template", "file", "propose"]
-           (where candidates come from; without it all that there are), rotate (for rank), axes (for field), tol
+           (where candidates come from; without it all that there are), rotate and bound (for rank; the bound is
+           worked out only where it is asked for), axes (for field), tol
 [propose]  as in a study; here the orderings it finds are candidates
 
 Names in [moments] and [susceptibility] that a structure does not have are passed over, as long as it has one of them:
@@ -36,7 +37,7 @@ if TYPE_CHECKING:
     from latticedip.ordering.model import Ordering
 
 TEMPLATE_KEYS = ("title", "batch", *(key for key in STUDY_KEYS if key not in ("title", "crystal")))
-BATCH_KEYS = ("do", "orderings", "rotate", "axes", "tol")
+BATCH_KEYS = ("do", "orderings", "rotate", "bound", "axes", "tol")
 DEFAULT_TASKS = ("rank", "field")
 SOURCES = ("template", "file", "propose")
 #: What the ordering that an input file itself holds is called, the same for every file.
@@ -146,12 +147,13 @@ class Template:
     def options(self) -> dict[str, Any]:
         """What tasks are told beside the study; each takes what it knows."""
         given: dict[str, Any] = {}
-        for name, task in (("rotate", "rank"), ("axes", "field")):
+        for name, task in (("rotate", "rank"), ("bound", "rank"), ("axes", "field")):
             if name in self.batch and task not in self.do:
                 raise self.batch[name].refuse(f"has no effect: `batch.do` does not hold {task!r}.")
-        if "rotate" in self.batch:
-            self.batch["rotate"].true()
-            given["rotate"] = True
+        for name in ("rotate", "bound"):
+            if name in self.batch:
+                self.batch[name].true()
+                given[name] = True
         if "axes" in self.batch:
             given["axes"] = self.batch["axes"].one_of(_AXES)
         if "tol" in self.batch:
@@ -222,15 +224,21 @@ class Template:
         """
         results = {}
         for name in self.do:
-            task = known_tasks()[name]
-            takes = inspect.signature(task).parameters
-            bare = name == "rank" and "field" in self.do
-            document = task(
-                replace(study, probes=()) if bare else study,
-                **{key: value for key, value in self.options.items() if key in takes},
-            )
+            if name == "rank":
+                document = self._rank(study)
+            else:
+                task = known_tasks()[name]
+                takes = inspect.signature(task).parameters
+                document = task(study, **{key: value for key, value in self.options.items() if key in takes})
             results[name] = {key: value for key, value in document.items() if key not in ("inputs", "version")}
         return results
+
+    def _rank(self, study: Study) -> dict[str, Any]:
+        from latticedip.study.rank_options import RankOptions
+
+        told = {key: value for key, value in self.options.items() if key in ("rotate", "bound", "tol")}
+        options = RankOptions(**{"bound": False, **told})
+        return tasks.rank(replace(study, probes=()) if "field" in self.do else study, options)
 
 
 def _present_names(key: Key, crystal: Crystal) -> Key:

@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from latticedip import __version__
-from latticedip.errors import FileError
+from latticedip.errors import FileError, InputError
 
 if TYPE_CHECKING:
     from latticedip.ordering.model import Ordering
@@ -54,6 +54,13 @@ def content_hash(path: Path) -> str:
         return hashlib.sha256(path.read_bytes()).hexdigest()
     except OSError as error:
         raise FileError(f"cannot read {os.fspath(path)!r}: {error.strerror or error}.") from None
+
+
+def spare_inputs(path: Path, document: Mapping[str, Any]) -> None:
+    """Raise InputError where writing to ``path`` would destroy a file that the document was made from."""
+    for entry in document["inputs"]["files"]:
+        if path.exists() and Path(entry["path"]).exists() and path.samefile(entry["path"]):
+            raise InputError(f"{str(path)!r} is read here (as the {entry['role']}). Write to another file.")
 
 
 def ordering_head(ordering: Ordering) -> dict[str, Any]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import logging
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -26,7 +25,6 @@ if TYPE_CHECKING:
 QUICK_SITES = 16
 UEV_PER_EV, UEV_PER_MEV = 1e6, 1e3
 
-_log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -59,7 +57,6 @@ def bound_results(study: Study, ranking: Ranking, options: RankOptions) -> tuple
     if reason is not None:
         return {"bound": None, "bound_note": reason}, empty
     sizes = stated_sizes(study)
-    _log.info("looking for the lowest dipolar mode")
     bound = Bound(study.crystal, sizes, study.sample, options.tol)
     rows, scaled, without = [], [], []
     for row in ranking.rows:

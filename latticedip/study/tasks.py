@@ -157,9 +157,7 @@ def rank(study: Study, options: RankOptions | None = None) -> dict[str, Any]:
     return rank_document(study, ranking, options)
 
 
-def directions(
-    study: Study, *, steps: int = 18, orderings: Sequence[str] = (), tol: float = 1e-10
-) -> dict[str, Any]:
+def directions(study: Study, *, steps: int = 18, orderings: Sequence[str] = (), tol: float = 1e-10) -> dict[str, Any]:
     """The document of `directions`: the energy of every collinear ordering against the direction of its moments.
 
     orderings: names of those that count; none: all.
@@ -193,6 +191,60 @@ def propose(study: Study, search: Search, *, tol: float = 1e-10) -> tuple[dict[s
     from latticedip.study.proposals import propose_document
 
     return propose_document(study, search, tol=tol)
+
+
+def search_of(
+    study: Study,
+    *,
+    supercell: tuple[int, int, int] | None = None,
+    k: Sequence[Sequence[float]] = (),
+    along: str | None = None,
+) -> Search:
+    """What [propose] of a study asks for, with another supercell, other k (instead of it) or another direction.
+
+    along: as `direction_of` takes it; it takes the place of axes, too. Raises InputError for what is no direction.
+    """
+    import numpy as np
+
+    from latticedip.study.directions import direction_of
+
+    search = study.search
+    if supercell is not None:
+        search = dataclasses.replace(search, supercell=supercell, k=None)
+    if k:
+        search = dataclasses.replace(search, supercell=(1, 1, 1), k=np.array(k, dtype=float))
+    if along is not None:
+        search = dataclasses.replace(search, along=direction_of(study.crystal, along, "--along"), axes=None)
+    return search
+
+
+def write_proposal(
+    study: Study,
+    doc: dict[str, Any],
+    found: Proposal,
+    study_path: Path | None,
+    folder: Path | None,
+    *,
+    overwrite: bool = False,
+) -> tuple[dict[str, Any], bool]:
+    """The document with what was written, as a study and into a folder, and whether some ordering was not.
+
+    Raises FileError where a file exists (unless overwrite) or cannot be written.
+    """
+    from latticedip.study.proposals import write_candidates
+    from latticedip.study.written import write_study
+
+    orderings = [row.ordering for row in found.rows]
+    written: list[Path] = []
+    refused: list[tuple[str, str]] = []
+    if folder is not None:
+        files, failed = write_candidates(orderings, folder, overwrite=overwrite)
+        written, refused = [*written, *files], [*refused, *failed]
+    if study_path is not None:
+        files, failed = write_study(study, orderings, study_path, overwrite=overwrite)
+        written, refused = [*written, *files], [*refused, *failed]
+    listed = [{"ordering": name, "reason": reason} for name, reason in refused]
+    return {**doc, "written": [str(path) for path in written], "not_written": listed}, bool(refused)
 
 
 def shift(

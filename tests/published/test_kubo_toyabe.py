@@ -25,7 +25,7 @@ def test_the_start_is_a_parabola():
 
 
 def test_a_longitudinal_field_lifts_the_tail():
-    """Hayano et al. (1979): with ω = 2Δ the tail lies well above 1/3, with ω = 10Δ near 1 (from memory of the figure)."""
+    """Hayano et al. (1979): with ω = 2Δ the tail lies well above 1/3, with ω = 10Δ near 1 (figure, from memory)."""
     tails = [kubo_toyabe_along(np.array([80.0]), 0.4, ratio * 0.4)[0] for ratio in (0.0, 1.0, 2.0, 5.0, 10.0)]
     assert tails[0] == pytest.approx(1 / 3, abs=1e-6)
     assert np.all(np.diff(tails) > 0)
