@@ -1,4 +1,4 @@
-"""Batches whose processes are killed, hang, grow or meet a full disk: nothing finished is lost, and the end is the same."""
+"""Batches whose processes are killed, hang, grow or meet a full disk: nothing is lost, and the end is the same."""
 
 from __future__ import annotations
 
@@ -113,7 +113,7 @@ def test_a_full_disk_loses_nothing(work):
         "--resume (resume=True).\n"
     )
     assert Path("o/results.jsonl").read_bytes().endswith(b"\n")
-    assert run("t.toml", ["in"], "o", resume=True).reused > 0
+    assert ld.run_batch("t.toml", ["in"], "o", resume=True).reused > 0
     assert lines("o") == before
 
 

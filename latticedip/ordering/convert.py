@@ -16,6 +16,9 @@ if TYPE_CHECKING:
     from ase import Atoms
 
 SCALAR_NOTE = "the file gives scalar moments; they are taken along Cartesian z"
+TWO_SETS_NOTE = (
+    "the file holds initial magnetic moments and other ones as the result of a calculation; the initial ones are taken"
+)
 
 
 def ordering_from_ase(atoms: Atoms, name: str = "") -> Ordering:
@@ -26,21 +29,26 @@ def ordering_from_ase(atoms: Atoms, name: str = "") -> Ordering:
 
     Raises InputError when the atoms carry no moments.
     """
-    moments = _moments_of(atoms)
-    notes: tuple[str, ...] = ()
+    moments, notes = _moments_of(atoms)
     if moments.ndim == 1:
         moments = np.column_stack([np.zeros((len(moments), 2)), moments])
-        notes = (SCALAR_NOTE,)
-    return Ordering(crystal_from_ase(atoms), moments, name=name or atoms.get_chemical_formula(), notes=notes)
+        notes.insert(0, SCALAR_NOTE)
+    return Ordering(crystal_from_ase(atoms), moments, name=name or atoms.get_chemical_formula(), notes=tuple(notes))
 
 
-def _moments_of(atoms: Atoms) -> np.ndarray:
-    if "initial_magmoms" in atoms.arrays and np.any(atoms.arrays["initial_magmoms"] != 0):
-        return np.asarray(atoms.arrays["initial_magmoms"], dtype=float)
+def _moments_of(atoms: Atoms) -> tuple[np.ndarray, list[str]]:
+    """Shape (n,) or (n, 3) float in µB, and what must be said where the atoms hold two sets of moments."""
     results = getattr(atoms.calc, "results", {}) if atoms.calc is not None else {}
-    if "magmoms" in results:
-        return np.asarray(results["magmoms"], dtype=float)
-    raise InputError("the structure carries no magnetic moments. Give them in the study, or use a file that has them.")
+    calculated = np.asarray(results["magmoms"], dtype=float) if "magmoms" in results else None
+    if "initial_magmoms" in atoms.arrays and np.any(atoms.arrays["initial_magmoms"] != 0):
+        initial = np.asarray(atoms.arrays["initial_magmoms"], dtype=float)
+        differ = calculated is not None and (initial.shape != calculated.shape or not np.allclose(initial, calculated))
+        return initial, [TWO_SETS_NOTE] if differ else []
+    if calculated is None:
+        raise InputError(
+            "the structure carries no magnetic moments. Give them in the study, or use a file that has them."
+        )
+    return calculated, []
 
 
 def ordering_to_ase(ordering: Ordering, repeat: Sequence[int] = (1, 1, 1)) -> Atoms:

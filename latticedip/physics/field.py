@@ -272,9 +272,7 @@ def local_field(
             whole[i] += np.einsum("nab,nb->a", change, moments_of(ordering, pairs))
     magnetization = magnetization_T(ordering)
     n = len(rows)
-    contact = _filled(
-        rows, (3,), lambda i, row: contact_field(ordering, placed[i], row.contact) if row.contact else None
-    )
+    contact = _filled(rows, (3,), lambda i, row: _contact_at(ordering, row, placed[i]))
     notes = [*crystal.notes, *ordering.notes, *_spread_notes(rows, moment_spread), *reached]
     if ordering.reference is not None and any(row.particle for row in rows):
         notes.append(ordering.reference.how)
@@ -324,6 +322,15 @@ def _filled(rows: list[_Row], shape: tuple[int, ...], value: Callable[[int, _Row
         if found is not None:
             out[i] = found
     return out
+
+
+def _contact_at(ordering: Ordering, row: _Row, point: FloatArray) -> FloatArray | None:
+    if not row.contact:
+        return None
+    try:
+        return contact_field(ordering, point, row.contact)
+    except InputError as error:
+        raise InputError(f"{row.name}, ordering {ordering.name!r}: {error}") from None
 
 
 def _position_su(ordering: Ordering, row: _Row) -> FloatArray | None:

@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from latticedip.report.su import format_su
+from latticedip.report.su import with_su
 from latticedip.report.tables import (
     Column,
     bullets,
@@ -106,18 +106,13 @@ def _overview(entry: Mapping[str, Any], unit: str, width: int | None) -> str:
         line = [
             str(number),
             name,
-            _value(sizes[number - 1], digits, row.get(f"field_size_su_{unit}")),
-            _value(frequencies[number - 1], frequency_digits, row.get("frequency_su_MHz")),
+            with_su(sizes[number - 1], digits, row.get(f"field_size_su_{unit}")),
+            with_su(frequencies[number - 1], frequency_digits, row.get("frequency_su_MHz")),
         ]
         line += [fixed(slopes[number - 1], slope_digits), coordinates(row["position_in_reference_cell"])]
         line += [coordinates(row["position"])] if elsewhere else []
         cells.append(line)
     return table(columns, cells, width=width, keys=1)
-
-
-def _value(value: float, decimals: int, su: float | None) -> str:
-    """A value with its standard uncertainty where there is one, as value(su), else with some decimals."""
-    return fixed(value, decimals) if su is None or not math.isfinite(su) else format_su(value, su)
 
 
 def _error_bound(rows: Sequence[Mapping[str, Any]], unit: str) -> float:

@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 from latticedip.report.field import coordinates, ordering_lines
+from latticedip.report.su import format_su, with_su
 from latticedip.report.tables import (
     Column,
     bullets,
@@ -25,7 +26,11 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
     """Return the description of a structure or a study."""
     parts = [heading(document["title"]), "", _crystal(document["crystal"], width), "", _sites(document, width)]
     if document["moments_muB"]:
-        listed = [(name, f"{short(size)} µB") for name, size in document["moments_muB"].items()]
+        uncertain = document["moments_su_muB"]
+        listed = [
+            (name, f"{format_su(size, uncertain[name]) if uncertain.get(name) else short(size)} µB")
+            for name, size in document["moments_muB"].items()
+        ]
         parts += ["", "Moments stated", "", pairs(listed, width=width)]
     for entry in document["orderings"]:
         parts += ["", f"Ordering: {entry['ordering']}", "", _ordering(entry, width)]
@@ -36,6 +41,8 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         parts += ["", "Probes", "", _probes(document["probes"], width)]
         contacts = _contacts(document["probes"])
         parts += ["", "Contact terms", "", bullets(contacts, width=width)] if contacts else []
+        motion = [f"{row['probe']}: {words}" for row in document["probes"] for words in row["motion"]]
+        parts += ["", "Motion, uncertainty and moved neighbours", "", bullets(motion, width=width)] if motion else []
     if document["sample"] is not None:
         parts += ["", "Sample", "", _sample(document["sample"], width)]
     if document["susceptibility"]:
@@ -84,7 +91,8 @@ def _sites(document: Mapping[str, Any], width: int | None) -> str:
         occupancy = " to ".join(short(p) for p in dict.fromkeys((site["occupancies"][0], site["occupancies"][-1])))
         for number, position in enumerate(site["positions"], start=1):
             lead = [site["label"], ", ".join(site["elements"]), occupancy] if number == 1 else ["", "", ""]
-            cells.append([*lead, f"{number} of {site['multiplicity']}", *(fixed(x, 5) for x in position)])
+            shown = [with_su(x, 5, su) for x, su in zip(position, site["positions_su"][number - 1], strict=True)]
+            cells.append([*lead, f"{number} of {site['multiplicity']}", *shown])
     return table(columns, cells, width=width, keys=1)
 
 
@@ -115,7 +123,12 @@ def _collinear(entry: Mapping[str, Any], width: int | None) -> str:
     columns = [Column("site", words=True), Column("atom"), Column("position", words=True)]
     columns += [Column(name, "µB") for name in names]
     rows = [
-        [atom["label"], str(atom["atom"]), coordinates(atom["position"]), *(fixed(v, 4) for v in atom["along_muB"])]
+        [
+            atom["label"],
+            str(atom["atom"]),
+            coordinates(atom["position"]),
+            *(with_su(v, 4, atom["along_su_muB"] if len(cells) == 1 else None) for v in atom["along_muB"]),
+        ]
         for atom in entry["atoms"]
     ]
     return table(columns, rows, width=width, keys=2)
@@ -132,8 +145,10 @@ def _vectors(entry: Mapping[str, Any], width: int | None) -> str:
         for i, cell in enumerate(entry["cells"]):
             lead = [atom["label"], str(atom["atom"]), coordinates(atom["position"])] if i == 0 else ["", "", ""]
             lead += [",".join(str(n) for n in cell)] if several else []
-            components = [*atom["moments_abc_muB"][i], atom["sizes_muB"][i]]
-            rows.append([*lead, *(fixed(v, 4) for v in components)])
+            components = atom["moments_abc_muB"][i]
+            su = (atom["moment_su_muB"] if not several else None) or [None] * 3
+            shown = [with_su(v, 4, s) for v, s in zip(components, su, strict=True)]
+            rows.append([*lead, *shown, fixed(atom["sizes_muB"][i], 4)])
     return table(columns, rows, width=width, keys=2)
 
 

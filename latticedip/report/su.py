@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from decimal import Decimal, localcontext
 
+from latticedip.report.tables import fixed
+
 #: The uncertainty is given with two digits where these are at most this, else with one (the rule of nineteen).
 TWO_DIGITS_UP_TO = 19
 #: Digits of a value that has no uncertainty.
@@ -34,6 +36,13 @@ def format_su(value: float | None, su: float | None) -> str:
     if SMALLEST_POWER < power < LARGEST_POWER:
         return _written(exact, uncertainty)
     return f"{_written(exact.scaleb(-power), uncertainty.scaleb(-power))}e{power}"
+
+
+def with_su(value: float, decimals: int, su: float | None) -> str:
+    """A value with its standard uncertainty as `format_su` where there is one above 0, else with some decimals."""
+    if su is None or not math.isfinite(su) or su == 0.0:
+        return fixed(value, decimals)
+    return format_su(value, su)
 
 
 def _written(value: Decimal, su: Decimal) -> str:

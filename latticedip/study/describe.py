@@ -14,17 +14,19 @@ import numpy as np
 from latticedip.checks import FloatArray
 from latticedip.crystal.lattice import label_centrings
 from latticedip.crystal.model import Crystal
-from latticedip.crystal.neighbours import close_pairs, neighbours_of
+from latticedip.crystal.neighbours import neighbours_of
 from latticedip.crystal.symmetry import operations_of
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
+from latticedip.ordering.patterns import triple
 from latticedip.particles import particle_named
-from latticedip.physics.boundary import boundary_words, has_net_moment
+from latticedip.physics.boundary import boundary_words
 from latticedip.physics.contact import shell_neighbours
+from latticedip.physics.spread import probe_words
 from latticedip.probe import SHELL_TOLERANCE_A, Contact, Probe
-from latticedip.sample import Sample
 from latticedip.study.documents import NO_SUM, document
-from latticedip.study.start import OFTEN_MAGNETIC, formula
+from latticedip.study.start import formula
+from latticedip.study.warnings import crystal_warnings, study_warnings
 from latticedip.units import DIPOLE_EV_A3_PER_MUB2, K_PER_EV
 
 if TYPE_CHECKING:
@@ -35,12 +37,6 @@ MOST_CELLS = 16
 CELLS_ALONG = 8
 #: Shells of magnetic neighbours listed for one site label.
 SHELLS = 3
-#: Atoms closer than this (Å) are warned of; with hydrogen the second.
-SHORT_A, SHORT_HYDROGEN_A = 1.0, 0.6
-#: Pairs of atoms warned of one by one.
-MOST_WARNINGS = 10
-#: A probe closer than this (Å) to an atom is warned of.
-SHORT_PROBE_A = 0.8
 #: Neighbours are looked for up to this distance (Å).
 FARTHEST_A = 60.0
 
@@ -65,6 +61,7 @@ def describe_study(study: Study) -> dict[str, Any]:
             "title": study.title,
             **_structure(study.crystal),
             "moments_muB": {name: float(size) for name, size in study.moments.items()},
+            "moments_su_muB": dict(study.moments_su),
             "orderings": [describe_ordering(ordering) for ordering in study.orderings],
             "neighbours": magnetic_neighbours(where, sizes),
             "probes": [
@@ -73,7 +70,7 @@ def describe_study(study: Study) -> dict[str, Any]:
             "sample": study.sample.to_dict(),
             "susceptibility": {name: chi.words() for name, chi in study.susceptibility.items()},
             "abundances": dict(study.abundances),
-            "warnings": _study_warnings(study, sizes),
+            "warnings": study_warnings(study, sizes),
         },
     )
 
@@ -92,13 +89,14 @@ def describe_structure(path: Path, found: Crystal | Ordering) -> dict[str, Any]:
             "title": f"{path.name} ({formula(crystal)})",
             **_structure(crystal),
             "moments_muB": {},
+            "moments_su_muB": {},
             "orderings": [describe_ordering(ordering) for ordering in orderings],
             "neighbours": magnetic_neighbours(crystal, sizes),
             "probes": [],
             "sample": None,
             "susceptibility": {},
             "abundances": {},
-            "warnings": _crystal_warnings(crystal),
+            "warnings": crystal_warnings(crystal),
         },
     )
 
@@ -141,27 +139,10 @@ def _sites(crystal: Crystal) -> list[dict[str, Any]]:
                 "multiplicity": len(indices),
                 "occupancies": occupancies,
                 "positions": [crystal.positions[i].tolist() for i in indices],
+                "positions_su": [[None if np.isnan(x) else float(x) for x in crystal.position_su[i]] for i in indices],
             }
         )
     return entries
-
-
-def _crystal_warnings(crystal: Crystal) -> list[str]:
-    warnings = []
-    for i, j, distance in close_pairs(crystal, SHORT_A):
-        hydrogen = {"H", "D"} & {crystal.symbols[i], crystal.symbols[j]}
-        shared = crystal.occupancies[i] + crystal.occupancies[j] <= 1 + 1e-6
-        if not shared and distance < (SHORT_HYDROGEN_A if hydrogen else SHORT_A):
-            warnings.append(
-                f"{crystal.labels[i]} (atom {i + 1}) and {crystal.labels[j]} (atom {j + 1}) are only "
-                f"{distance:.3f} Å apart: check the cell and the positions."
-            )
-    if len(warnings) > MOST_WARNINGS:
-        warnings[MOST_WARNINGS:] = [f"and {len(warnings) - MOST_WARNINGS} more pairs of atoms that are too close."]
-    partial = [lab for lab, p in zip(crystal.labels, crystal.occupancies, strict=True) if p < 1 - 1e-9]
-    if partial and not any("occup" in note for note in crystal.notes):
-        warnings.append(f"partly occupied: {', '.join(dict.fromkeys(partial))}; sums take the mean moment.")
-    return warnings
 
 
 # --- orderings ------------------------------------------------------------------------------------------
@@ -210,7 +191,8 @@ def describe_ordering(ordering: Ordering) -> dict[str, Any]:
     crystal = ordering.crystal
     cells, words = first_cells(ordering)
     moments = ordering.moments(cells)
-    along = _common_direction(moments)
+    listed = [site for label in dict.fromkeys(crystal.labels) for site in crystal.find(label)]
+    along = _common_direction(moments[:, listed])
     atoms = []
     for label in dict.fromkeys(crystal.labels):
         for number, site in enumerate(crystal.find(label), start=1):
@@ -227,7 +209,8 @@ def describe_ordering(ordering: Ordering) -> dict[str, Any]:
                     "along_muB": None if along is None else (of_site @ along).tolist(),
                     "moment_su_muB": None
                     if np.all(np.isnan(ordering.moment_su[site]))
-                    else ordering.moment_su[site].tolist(),
+                    else [None if np.isnan(x) else float(x) for x in ordering.moment_su[site]],
+                    "along_su_muB": None if along is None else _along_su(ordering, site, along),
                 }
             )
     return {
@@ -244,6 +227,17 @@ def describe_ordering(ordering: Ordering) -> dict[str, Any]:
     }
 
 
+def _along_su(ordering: Ordering, site: int, along: FloatArray) -> float | None:
+    """Standard uncertainty of a moment along a Cartesian direction, of the amplitude where it is that of a wave."""
+    for group in ordering.size_su:
+        if site in group.sites:
+            return float(group.relative * np.linalg.norm(np.abs(ordering.components[:, site] @ along)))
+    su = ordering.moment_su[site]
+    if np.all(np.isnan(su)):
+        return None
+    return float(np.linalg.norm(np.nan_to_num(su) * (ordering.crystal.axes_unit @ along)))
+
+
 def _own_cell(ordering: Ordering) -> dict[str, Any]:
     return {
         "lengths_A": np.linalg.norm(ordering.crystal.cell, axis=1).tolist(),
@@ -253,7 +247,10 @@ def _own_cell(ordering: Ordering) -> dict[str, Any]:
 
 
 def _common_direction(moments: FloatArray) -> FloatArray | None:
-    """The unit vector that all moments lie along, None where they are not collinear; the largest first one is +."""
+    """The unit vector that all moments (cells, atoms, 3) lie along; None where they are not collinear.
+
+    Of the largest moments the first one counts as +.
+    """
     flat = moments.reshape(-1, 3)
     sizes = np.linalg.norm(flat, axis=1)
     largest = float(sizes.max(initial=0.0))
@@ -343,7 +340,18 @@ def describe_probe(
         "nearest_ion": ions[0][0] if ions else None,
         "nearest_ion_A": ions[0][1] if ions else None,
         "contact": [_contact(term, point, ordering) for term in probe.contact],
+        "position_su": None if probe.position_su is None else probe.position_su.tolist(),
+        "spread": probe.spread.tolist() if isinstance(probe.spread, np.ndarray) else probe.spread,
+        "motion": [words.removeprefix(f"{probe.name}: ") for words in _motion(probe)],
     }
+
+
+def _motion(probe: Probe) -> list[str]:
+    """Spread, displaced neighbours and uncertainty of a probe in words."""
+    words = probe_words(probe.name, probe.spread, probe.displaced)
+    if probe.position_su is not None:
+        words.append(f"{probe.name}: position uncertain by {triple(probe.position_su)}, fractional")
+    return words
 
 
 def _contact(term: Contact, point: FloatArray, ordering: Ordering | None) -> dict[str, Any]:
@@ -368,33 +376,6 @@ def _contact(term: Contact, point: FloatArray, ordering: Ordering | None) -> dic
         rows[key] = rows.get(key, 0) + 1
     plain["neighbours"] = [{"site": site, "distance_A": r, "count": count} for (site, r), count in rows.items()]
     return plain
-
-
-def _study_warnings(study: Study, sizes: Mapping[str, float]) -> list[str]:
-    warnings = _crystal_warnings(study.crystal)
-    known = set(sizes)
-    known |= {study.crystal.labels[i] for name in study.susceptibility for i in study.crystal.find(name)}
-    for ordering in study.orderings:
-        known |= {ordering.crystal.labels[i] for i in np.flatnonzero(ordering.is_magnetic)}
-    magnetic_elements = {o.crystal.symbols[i] for o in study.orderings for i in np.flatnonzero(o.is_magnetic)}
-    for label in dict.fromkeys(study.crystal.labels):
-        symbol = study.crystal.symbols[study.crystal.labels.index(label)]
-        if symbol in OFTEN_MAGNETIC and label not in known and symbol not in magnetic_elements:
-            warnings.append(f"{label} holds {symbol}, which often carries a moment, but no ordering gives it one.")
-    if study.sample.shape == Sample().shape:
-        with_moment = [ordering.name for ordering in study.orderings if has_net_moment(ordering)]
-        if with_moment:
-            warnings.append(
-                f"net moment without a shape of the sample ({', '.join(with_moment)}): N = 0 is assumed. "
-                "State [sample] where the sample has a shape of its own."
-            )
-    for probe in study.probes:
-        if probe.position is None:
-            continue
-        near = _shells(study.crystal, probe.position, tuple(range(study.crystal.n_sites)))
-        if near and near[0][1] < SHORT_PROBE_A:
-            warnings.append(f"{probe.name} lies only {near[0][1]:.3f} Å from {near[0][0]}.")
-    return warnings
 
 
 # --- rows -----------------------------------------------------------------------------------------------

@@ -11,6 +11,8 @@ from latticedip.study.keys import Key
 
 SPREAD_KEYS = ("spread_A", "covariance_A2", "Uij")
 MOTION_KEYS = (*SPREAD_KEYS, "position_su", "displaced")
+#: Those of a probe that stands for many places.
+RULE_MOTION_KEYS = (*SPREAD_KEYS, "displaced")
 DISPLACED_KEYS = ("shell", "within", "atom", "of", "factor", "outward_A", "vector_A")
 
 

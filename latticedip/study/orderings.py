@@ -15,7 +15,7 @@ import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, as_floats
 from latticedip.crystal.model import Crystal, site_order
-from latticedip.ordering.model import Ordering
+from latticedip.ordering.model import Ordering, SizeUncertainty
 from latticedip.ordering.patterns import (
     VANISHING_FRACTION,
     Setting,
@@ -33,31 +33,80 @@ WAVE_KEYS = ("cosine", "sine", "phase")
 OTHER_KEY = "other_energy_meV_per_ion"
 ORDERING_KEYS = ("name", "k", *SIGN_KEYS, *WAVE_KEYS, *FILE_KEYS, OTHER_KEY)
 
+MOMENT_KEYS = ("size", "su")
+
+_SIZE = "a size in Bohr magnetons, at least 0"
 _DIRECTION = "a direction in crystal axes a, b, c, such as [0, 0, 1]"
 _K = 'three reduced coordinates, such as [0, 0, 0.5] or [0, 0, "1/3"]'
 
 
 @dataclasses.dataclass(frozen=True, eq=False)
 class Sizes:
-    """Moment sizes in µB. of_site: Shape (n_sites,) float, NaN where [moments] gives none. by_name: as written."""
+    """Moment sizes in µB. of_site: Shape (n_sites,) float, NaN where [moments] gives none. by_name: as written.
+
+    su_by_name: standard uncertainties in µB, of the names that state one. named: n_sites names, the one that gives the
+    size of each site, empty where none does.
+    """
 
     of_site: FloatArray
     by_name: Mapping[str, float]
+    su_by_name: Mapping[str, float] = dataclasses.field(default_factory=dict)
+    named: tuple[str, ...] = ()
+
+    def uncertainties(self, ordering: Ordering) -> Ordering:
+        """The ordering with these uncertainties: one factor for all atoms whose size goes by one name."""
+        groups = []
+        relative = np.full(len(self.named), np.nan)
+        for name, su in self.su_by_name.items():
+            sites = tuple(i for i, owner in enumerate(self.named) if owner == name and ordering.is_magnetic[i])
+            if sites and su > 0:
+                groups.append(SizeUncertainty(sites, su / self.by_name[name]))
+                relative[list(sites)] = groups[-1].relative
+        if not groups:
+            return ordering
+        # As components, for files that hold no more: what the factor does to each.
+        amplitude = np.abs(ordering.crystal.to_crystal_axes(ordering.components[0]))
+        return dataclasses.replace(ordering, moment_su=relative[:, None] * amplitude, size_su=tuple(groups))
 
 
 def read_moments(key: Key | None, crystal: Crystal) -> Sizes:
-    """The [moments] table: sizes by site label or element; a label goes before the element."""
+    """The [moments] table: sizes by site label or element; a label goes before the element.
+
+    A size is a number, or { size = 4.4, su = 0.1 } with its standard uncertainty.
+    """
     of_site = np.full(crystal.n_sites, np.nan)
     by_name: dict[str, float] = {}
+    su_by_name: dict[str, float] = {}
+    owners = [""] * crystal.n_sites
     named = {} if key is None else key.table()
     for by_label in (False, True):
         for name, child in named.items():
             if (name in crystal.labels) is by_label:
                 with child.located():
                     sites = crystal.find(name)
-                by_name[name] = child.number("a size in Bohr magnetons, at least 0", low=0.0)
+                by_name[name], su = _size(child)
+                if su is not None:
+                    su_by_name[name] = su
                 of_site[list(sites)] = by_name[name]
-    return Sizes(of_site, {name: by_name[name] for name in named})
+                for site in sites:
+                    owners[site] = name
+    return Sizes(of_site, {name: by_name[name] for name in named}, su_by_name, tuple(owners))
+
+
+def _size(key: Key) -> tuple[float, float | None]:
+    """A size in µB and its standard uncertainty, None where it states none."""
+    if not isinstance(key.value, dict):
+        return key.number(_SIZE, low=0.0), None
+    table = key.table(MOMENT_KEYS)
+    if "size" not in table:
+        raise key.missing("size", _SIZE)
+    size = table["size"].number(_SIZE, low=0.0)
+    if "su" not in table:
+        return size, None
+    su = table["su"].number("the standard uncertainty of the size in Bohr magnetons, at least 0", low=0.0)
+    if su > 0 and size == 0:
+        raise table["su"].refuse("goes with a size above 0: the uncertainty is one of the size, along its direction.")
+    return size, su
 
 
 def read_orderings(
@@ -160,14 +209,17 @@ def _from_pattern(item: Key, table: dict[str, Key], crystal: Crystal, sizes: Siz
         setting = Setting.of(crystal, k)
     components = _sign_components(table, setting, sizes) if signs else _wave_components(table, setting)
     with item.located():
-        return setting.finish(components, notes=_k_notes(setting.k))
+        ordering = setting.finish(components, notes=_k_notes(setting.k))
+    return sizes.uncertainties(ordering) if signs else ordering
 
 
 def _k_notes(k: FloatArray) -> list[str]:
     """A remark on a coordinate that looks like a third or a sixth cut short, which is another vector."""
     for x in k:
         nearest = round(6 * x) / 6
-        if 1e-9 < abs(x - nearest) < 1e-3:
+        # Two digits, as in 0.33, leave more than three or four.
+        rough = 5e-3 if abs(100 * x - round(100 * x)) < 1e-9 else 1e-3
+        if 1e-9 < abs(x - nearest) < rough:
             return [
                 f"k = ({', '.join(f'{float(y):.10g}' for y in k)}) is taken as written; a third or a sixth is given "
                 'exactly by a string such as "1/3"'

@@ -22,8 +22,9 @@ from latticedip.errors import LimitError
 from latticedip.observables.isotopes import isotopes_by_element
 from latticedip.probe import Probe
 from latticedip.study.keys import Key
+from latticedip.study.motion import RULE_MOTION_KEYS, read_motion
 
-RULE_KEYS = ("rule", "name", "particle", "spacing_A")
+RULE_KEYS = ("rule", "name", "particle", "spacing_A", *RULE_MOTION_KEYS)
 #: Points that one rule may make in one crystal.
 MOST_POINTS = 20_000
 #: Grid points that are looked at to find them.
@@ -57,7 +58,8 @@ def probes_by_rule(item: Key, table: dict[str, Key], crystal: Crystal) -> list[P
     """The probes that a rule makes in a crystal, in the order of its atoms or by fractional x, y, z.
 
     A `name` goes in front of the label or the number of each. Without `particle` a site has the most abundant
-    isotope with a moment of its element (a site without any is left out), and points have muons.
+    isotope with a moment of its element (a site without any is left out), and points have muons. A spread and displaced
+    neighbours are those of each.
 
     Raises StudyError for a rule that is none, a rule that finds no place, and more than 20,000 points.
     """
@@ -65,6 +67,7 @@ def probes_by_rule(item: Key, table: dict[str, Key], crystal: Crystal) -> list[P
     name = table["name"].value if "name" in table else ""
     particle = table["particle"].value if "particle" in table else None
     points = _POINTS.fullmatch(rule)
+    motion = read_motion(item, table, crystal)
     with table["particle" if particle is not None else "rule"].located():
         if points is not None:
             spacing = float(table["spacing_A"].value) if "spacing_A" in table else 1.0
@@ -72,7 +75,7 @@ def probes_by_rule(item: Key, table: dict[str, Key], crystal: Crystal) -> list[P
             digits = len(str(len(places)))
             kind = particle or "muon"
             found = [
-                Probe(position=place, particle=kind, name=f"{name or kind} {number:0{digits}d}")
+                Probe(position=place, particle=kind, name=f"{name or kind} {number:0{digits}d}", **motion)
                 for number, place in enumerate(places, start=1)
             ]
         else:
@@ -80,7 +83,7 @@ def probes_by_rule(item: Key, table: dict[str, Key], crystal: Crystal) -> list[P
             for label, element in _labels(rule, crystal):
                 kind = particle or _usual_isotope(crystal, element)
                 if kind:
-                    found.append(Probe(site=label, particle=kind, name=f"{name or kind} at {label}"))
+                    found.append(Probe(site=label, particle=kind, name=f"{name or kind} at {label}", **motion))
     if not found:
         raise table["rule"].refuse(f"{rule!r} finds no place in this structure.")
     return found

@@ -157,6 +157,10 @@ def rank_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
     What each energy is made of is left to the document.
     """
     table = []
+    most_levels: dict[str, int] = {}
+    for row in doc["rows"]:
+        for name, points in row["fields"].items():
+            most_levels[name] = max(most_levels.get(name, 1), len(field_levels(points)))
     for row in doc["rows"]:
         spread = {key: value for key, value in row.items() if key not in NOT_IN_TABLE}
         same, free = row["same_as"], row["free_turns"]
@@ -165,10 +169,13 @@ def rank_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
         for i, line in enumerate(row.get("rotation", [])):
             spread.update({f"rotation_{i + 1}{j + 1}": value for j, value in enumerate(line)})
         for name, points in row["fields"].items():
-            for number, (size, frequency, count) in enumerate(field_levels(points), start=1):
-                lead = name if number == 1 else f"{name} ({number})"
-                spread.update({f"{lead}: field_size_T": size, f"{lead}: frequency_MHz": frequency})
-                spread[f"{lead}: points"] = count
+            levels = field_levels(points)
+            # Every row names the columns of all levels, so that those of one probe stand together.
+            for number in range(most_levels[name]):
+                level = levels[number] if number < len(levels) else (None, None, None)
+                place = f" ({number + 1})" if number else ""
+                keys = (f"{name}: {what}{place}" for what in ("field_size_T", "frequency_MHz", "points"))
+                spread.update(zip(keys, level, strict=True))
         spread["boundary"] = row["boundary"]
         table.append(spread)
     return table

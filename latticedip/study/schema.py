@@ -42,7 +42,8 @@ class Study:
     orderings: all [[ordering]]s, turned into that frame.
     probes: all [[probe]]s, positions in the cell of ``crystal``.
     sample: the Sample; N = 0 and no applied field where [sample] is left out.
-    moments: sizes in µB as [moments] gives them, by site label or element.
+    moments: sizes in µB as [moments] gives them, by site label or element. moments_su: their standard uncertainties in
+        µB, of those that state one.
     susceptibility: of the magnetic ions in the paramagnetic state, by site label or element.
     abundances: fractions of an element's atoms that are an isotope, by its name, where not the natural ones.
     other_energies_meV_per_ion: energies from elsewhere (exchange, single ion) by the name of the ordering.
@@ -64,6 +65,7 @@ class Study:
     abundances: Mapping[str, float] = field(default_factory=dict)
     other_energies_meV_per_ion: Mapping[str, float] = field(default_factory=dict)
     search: Search = field(default_factory=Search)
+    moments_su: Mapping[str, float] = field(default_factory=dict)
 
 
 def read_study(path: str | os.PathLike[str]) -> Study:
@@ -119,6 +121,7 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
         abundances=read_abundances(table.get("abundances"), crystal),
         other_energies_meV_per_ion=others,
         search=read_search(table.get("propose"), crystal, sizes),
+        moments_su=sizes.su_by_name,
     )
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import dataclasses
 import logging
 import os
+import shlex
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
@@ -43,7 +44,7 @@ def open_study(path: Path) -> Study:
     if path.suffix.lower() in _STRUCTURE_SUFFIXES:
         raise StudyError(
             f"{str(path)!r} is a structure file, not a study. "
-            f"Write a study for it with: latticedip start {path} -o study.toml"
+            f"Write a study for it with: latticedip start {shlex.quote(str(path))} -o study.toml"
         )
     study = read_study(path)
     _log.info(
