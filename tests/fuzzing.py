@@ -14,12 +14,17 @@ HERE = Path(__file__).parent
 #: Words that parsers trip over: numbers that are none or too large, unknown values, quotes, brackets, code, paths.
 NASTY = (
     "nan", "inf", "-inf", "1e308", "-1e308", "1e999", "1e-320", "0", "-0", "-1", "1000000000", "99999999999999999999",
-    "0x10", "1_000", "1.2.3", "1(", "1()", "1(2", "1(99999)", "0.5(3)", "?", ".", "''", '""', "'", '"', ";", "\n;\n", "#",
-    "[", "]", "[[", "{", "}", "{}", "[]", "loop_", "data_", "data_x", "save_", "_", "_cell_length_a", "$x", "=1+1", "@x",
+    "0x10", "1_000", "1.2.3", "1(", "1()", "1(2", "1(99999)", "0.5(3)", "?", ".", "''", '""', "'", '"', ";", "\n;\n",
+    "#",
+    "[", "]", "[[", "{", "}", "{}", "[]", "loop_", "data_", "data_x", "save_", "_", "_cell_length_a", "$x", "=1+1",
+    "@x",
     "x,y,z", "x,y,z,+1", "x,y,z,-1", "-x,-y", "x+1/0,y,z", "x/2,y,z", "x*1e9,y,z", "Mn", "Xx", "X", "D", "Mn2+", "Mn1",
-    "../../etc/passwd", "/dev/zero", "/dev/null", "$(id)", "`id`", "%s%n", "\\", "\t", "\r", "\x00", "\x1b[2J", "\ufeff",
-    "é", "µ", "½", "\u202e", "🜨", "A" * 300, "9" * 400, "true", "false", "null", "1979-05-27", "1/3", "1/0", "-1/3", "+",
-    "+-", "+-0+", "T", "F", "Direct", "Cartesian", "P 1", "F d -3 m", "1e9", "1e6", "1e-6", "1e-2", "180", "-90", "0.3333",
+    "../../etc/passwd", "/dev/zero", "/dev/null", "$(id)", "`id`", "%s%n", "\\", "\t", "\r", "\x00", "\x1b[2J",
+    "\ufeff",
+    "é", "µ", "½", "\u202e", "🜨", "A" * 300, "9" * 400, "true", "false", "null", "1979-05-27",
+    "1/3", "1/0", "-1/3", "+",
+    "+-", "+-0+", "T", "F", "Direct", "Cartesian", "P 1", "F d -3 m", "1e9", "1e6", "1e-6", "1e-2", "180", "-90",
+    "0.3333",
 )  # fmt: skip
 
 
@@ -230,9 +235,9 @@ def _value(rng: random.Random, old: Any) -> Any:
     number = rng.choice((0, -1, 1, 2, 1e-9, 1e-3, 0.5, 1e3, 1e6, 1e9, 1e300, 10**18, -(10**400), 5e-324, 1e-300))
     return rng.choice(
         (
-            number, number, number, float("nan"), float("inf"), True, False, "", rng.choice(NASTY), rng.choice(NASTY), [],
-            {}, [old], [old] * 3, [number] * 3, [[number] * 3] * 3, [0, 0, 0], {"x": old}, {"Mn": old, "Ni": number}, "a*",
-            [old] * 2000, "19F", "muon", "63Cu", "+" * 500, ["1/3", "1/7", "-11/13"],
+            number, number, number, float("nan"), float("inf"), True, False, "", rng.choice(NASTY), rng.choice(NASTY),
+            [], {}, [old], [old] * 3, [number] * 3, [[number] * 3] * 3, [0, 0, 0], {"x": old},
+            {"Mn": old, "Ni": number}, "a*", [old] * 2000, "19F", "muon", "63Cu", "+" * 500, ["1/3", "1/7", "-11/13"],
         )
     )  # fmt: skip
 
@@ -257,5 +262,5 @@ def _inline(value: Any) -> str:
 
 
 def _quoted(text: str) -> str:
-    plain = (c if c.isprintable() and c not in '"\\' else f"\\u{ord(c):04x}" for c in str(text))
+    plain = (c if c.isprintable() and c not in '"\\' else f"\\U{ord(c):08x}" for c in str(text))
     return '"' + "".join(plain) + '"'

@@ -16,6 +16,7 @@ from click.testing import CliRunner, Result
 
 import latticedip
 from latticedip.cli.main import COMMANDS, main
+from latticedip.study.rankings import rank_table
 from latticedip.units import K_PER_EV
 
 P1 = """data_cube
@@ -164,7 +165,7 @@ def test_tied_rows_keep_the_order_of_the_file(folder: Path) -> None:
 
 def test_parts_of_the_energy_that_are_zero_are_left_out_with_a_reason(folder: Path) -> None:
     shape = "no energy of the shape: no demagnetizing field for any of these orderings"
-    applied = "no energy in an applied field: no field is applied, or no ordering has a net moment"
+    applied = "no energy in an applied field: no field is applied"
     assert document("rank", "study.toml")["zero_parts"] == {"shape": shape, "applied": applied}
     text = " ".join(run("rank", "study.toml").stdout.split())
     assert shape in text and applied in text and "Parts of the energy" not in text
@@ -174,6 +175,10 @@ def test_parts_of_the_energy_that_are_zero_are_left_out_with_a_reason(folder: Pa
     assert lines[2].split() == ["rank", "ordering", "dipolar", "shape"]
     Path("study.toml").write_text(STUDY + "[sample]\nsphere = true\napplied_T = [0, 0, 1]\n", encoding="utf-8")
     assert document("rank", "study.toml")["zero_parts"] == {}
+    Path("study.toml").write_text(STUDY + "[sample]\nsphere = true\napplied_T = [1, 0, 0]\n", encoding="utf-8")
+    assert document("rank", "study.toml")["zero_parts"] == {
+        "applied": "no energy in an applied field: no ordering has a net moment along it"
+    }
 
 
 def test_fields_that_vanish_are_one_row(folder: Path) -> None:
@@ -258,6 +263,24 @@ def test_fields_that_change_from_cell_to_cell_are_said_to_be_of_one(folder: Path
     ferromagnet, rods, _ = document("field", "study.toml")["orderings"]
     assert not any(sentence in note for note in ferromagnet["notes"])
     assert any(sentence in note for note in rods["notes"])
+
+
+def test_rank_csv_keeps_the_levels_of_a_probe_together(folder: Path) -> None:
+    doc = document("rank", "study.toml")
+    points = doc["rows"][-1]["fields"]["muon A"]
+    points.append({**points[0], "field_size_T": 7.0, "frequency_MHz": 70.0})
+    first, *_, last = rank_table(doc)
+    what = ("field_size_T", "frequency_MHz", "points")
+    columns = [name for name in first if name.startswith(("muon A: ", "on site: "))]
+    assert columns == [
+        *(f"muon A: {name}" for name in what),
+        *(f"muon A: {name} (2)" for name in what),
+        *(f"on site: {name}" for name in what),
+    ]
+    assert list(first) == list(last) and list(first)[-1] == "boundary"
+    assert [first[f"muon A: {name} (2)"] for name in what] == [None] * 3
+    assert [last[f"muon A: {name}"] for name in what] == [7.0, 70.0, 1]
+    assert last["muon A: points (2)"] == 1
 
 
 def test_rank_csv(folder: Path) -> None:
@@ -478,6 +501,11 @@ def test_demag(arguments: list[str], factors: list[float]) -> None:
             ["rank", "cube.cif"],
             "Error: 'cube.cif' is a structure file, not a study. Write a study for it with: latticedip start cube.cif "
             "-o study.toml\n",
+        ),
+        (
+            ["field", "my cube.cif"],
+            "Error: 'my cube.cif' is a structure file, not a study. Write a study for it with: latticedip start "
+            "'my cube.cif' -o study.toml\n",
         ),
         (["start", "study.toml"], "Error: 'study.toml' is a study already; start takes a structure file.\n"),
         (["demag", "--prism", "1", "-2", "3"], "Error: edges must be positive lengths, got -2.0 as number 2.\n"),

@@ -124,3 +124,12 @@ def test_a_radius_at_which_no_shell_ends():
         "contact: beyond 95 Å the neighbours follow each other so closely that no shell ends within 200 Å. Use a "
         "smaller radius."
     )
+
+
+def test_a_field_names_the_probe_and_the_ordering_of_a_term_that_finds_nothing():
+    probe = ld.Probe([0.5, 0.5, 0.5], name="muon A", contact=ld.Contact(0.1, within=0.2))
+    with pytest.raises(InputError) as caught:
+        ld.local_field(cubic(), probe)
+    assert str(caught.value) == (
+        f"muon A, ordering {cubic().name!r}: contact: no magnetic ion lies within 0.2 Å of the probe."
+    )

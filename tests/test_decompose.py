@@ -45,7 +45,11 @@ def test_shells_of_a_cube_by_hand() -> None:
     # 4·1 + 8·(1 − 3/2) = 0, and so on: cubic shells vanish. Alternating along z, k = (0,0,½): 4 + 4 = 8, then
     # (4 + 4)/2^(3/2).
     ferromagnet = decompose(Ordering(CUBE, [[0, 0, 2]]), shells=3)
-    assert [round(shell.distance_A, 9) for shell in ferromagnet.shells] == [4.0, round(4 * 2**0.5, 9), round(4 * 3**0.5, 9)]
+    assert [round(shell.distance_A, 9) for shell in ferromagnet.shells] == [
+        4.0,
+        round(4 * 2**0.5, 9),
+        round(4 * 3**0.5, 9),
+    ]
     assert [shell.pairs_per_ion for shell in ferromagnet.shells] == [6.0, 12.0, 8.0]
     assert all(abs(shell.energy_eV) < 1e-18 for shell in ferromagnet.shells)
     layers = decompose(Ordering(CUBE, [[0, 0, 2]], (0, 0, 0.5)), shells=2)
@@ -76,8 +80,9 @@ def test_refusals() -> None:
     with pytest.raises(InputError) as refused:
         decompose(ordering, shells=-1)
     assert str(refused.value) == "shells must be a whole number from 0 to 1000, got -1."
-    with pytest.raises(InputError, match='by must be "site" or "label", got \'atom\'.'):
+    with pytest.raises(InputError) as refused:
         decompose(ordering, shells=0).pairs("atom")
+    assert str(refused.value) == 'by must be "site" or "label", got \'atom\'.'
     wide = Crystal(np.diag([900.0, 900.0, 900.0]), [(0, 0, 0)], ("Mn",))
     with pytest.raises(LimitError) as far:
         decompose(Ordering(wide, [[0, 0, 2]]), shells=3)

@@ -47,7 +47,7 @@ def test_type_two_is_free_about_its_wave_vector(tilt: float) -> None:
         dipolar_energy(ordering.rotated(Rotation.from_rotvec(angle * found.axis_cart).as_matrix())).per_ion_eV
         for angle in (0.0, 0.7, 2.0)
     ]
-    assert np.ptp(energies) < 1e-12 * abs(energies[0])
+    assert np.ptp(energies) < 1e-11 * abs(energies[0])
     assert found.words.startswith("continuously degenerate: all moments may be turned about [1 1 1] (Cartesian)")
     assert found.words.endswith(", their direction is free in the plane across it") is (tilt == 0.0)
 

@@ -280,3 +280,31 @@ def test_frozen_and_pickled():
     kept = ld.Ordering(CRYSTAL, given, (0.2, 0, 0))
     given[:] = 0
     assert np.array_equal(kept.components[0], S[0])
+
+
+def test_moments_that_cancel_leave_no_rounding():
+    moments = [[0.1, 0.2, 0.3], [0.2, -0.2, 0.6], [-0.3, 0, -0.9]]
+    crystal = ld.Crystal(CELL, [*PLACES, [0.1, 0.8, 0.4]], ["Mn"] * 3)
+    assert 0.1 + 0.2 - 0.3 != 0
+    assert np.array_equal(ld.Ordering(crystal, moments).net_moment, [0, 0, 0])
+    # What is small but larger than the rounding stays.
+    moments[0][2] += 1e-11
+    assert ld.Ordering(crystal, moments).net_moment[2] == pytest.approx(1e-11, rel=1e-4)
+
+
+def test_moments_beyond_any_unit_are_refused():
+    with pytest.raises(InputError, match=r"^a moment of 1e\+200 µB is beyond 1e\+06 µB. Give Bohr magnetons.$"):
+        ld.Ordering(CRYSTAL, [[0, 0, 1e200], [0, 0, 1]])
+
+
+def test_two_sets_of_moments_in_atoms_are_told():
+    atoms = Atoms("Mn2", positions=[[0, 0, 0], [0, 0, 2]], cell=[4, 4, 4], pbc=True, magmoms=[1, 1])
+    atoms.calc = SinglePointCalculator(atoms, magmoms=[3.0, -3.0])
+    ordering = ld.Ordering.from_ase(atoms)
+    assert np.array_equal(ordering.moments()[0], [[0, 0, 1], [0, 0, 1]])
+    assert ordering.notes[1:] == (
+        "the file holds initial magnetic moments and other ones as the result of a calculation; the initial ones are "
+        "taken",
+    )
+    atoms.calc = SinglePointCalculator(atoms, magmoms=[1.0, 1.0])
+    assert ld.Ordering.from_ase(atoms).notes == ("the file gives scalar moments; they are taken along Cartesian z",)

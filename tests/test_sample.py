@@ -385,3 +385,10 @@ def test_refuses(build: Callable[[], Sample], message: str) -> None:
     with pytest.raises(InputError) as caught:
         build()
     assert str(caught.value) == message
+
+
+def test_an_applied_field_beyond_any_magnet_is_refused() -> None:
+    with pytest.raises(
+        InputError, match=r"^applied_T holds \[0.0, 0.0, 1e\+300\], beyond 1e\+06 T. Give it in tesla.$"
+    ):
+        Sample.sphere(applied_T=[0, 0, 1e300])

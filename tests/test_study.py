@@ -221,6 +221,9 @@ def test_a_third_cut_short_is_told(tmp_path):
         'k = (0.3333, 0, 0) is taken as written; a third or a sixth is given exactly by a string such as "1/3"',
     )
     assert signs(tmp_path, '["-1/3", 0, 0]', "")[1].notes == ()
+    assert "taken as written" in signs(tmp_path, "[0.33, 0, 0]", "")[1].notes[0]
+    assert "taken as written" in signs(tmp_path, "[0, 0.17, 0]", "")[1].notes[0]
+    assert signs(tmp_path, "[0.336, 0.34, 0]", "")[1].notes == ()
 
 
 # Cosine and sine

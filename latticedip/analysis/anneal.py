@@ -25,7 +25,7 @@ from latticedip.physics.supercell import COLUMNS, ROWS
 from latticedip.units import EV_PER_MUB_T
 
 #: Temperature at the start and at the end, over the rms field on a moment among random ones.
-HOT, COLD_SIGNS, COLD_VECTORS = 1.5, 0.1, 1e-3
+HOT, COLD_SIGNS, COLD_VECTORS = 1.5, 0.25, 1e-3
 #: What holds the net moment at zero, over the rms field: for moments of the mean weight, at start and end.
 PENALTY_HOT, PENALTY_COLD = 0.25, 2.0
 #: Most times that a restart takes the best axis of what it found as its next direction.

@@ -18,9 +18,7 @@ from latticedip.cli.options import (
 
 @click.command(short_help="Energy against the direction of the moments.")
 @study_argument
-@click.option(
-    "--steps", type=click.IntRange(2, 10_000), default=18, show_default=True, help="Steps of half a turn."
-)
+@click.option("--steps", type=click.IntRange(2, 10_000), default=18, show_default=True, help="Steps of half a turn.")
 @plot_option
 @ordering_option
 @tol_option

@@ -25,6 +25,8 @@ from latticedip.errors import InputError, near_match
 if TYPE_CHECKING:
     from ase import Atoms
 
+    from latticedip.crystal.uncertain import Moves
+
 #: Two atoms of one label closer than this in a fractional coordinate count as equal when atoms are put in order.
 ORDER_TOLERANCE = 1e-4
 #: Atoms closer than this (Å) cannot both be there.
@@ -81,7 +83,7 @@ class Crystal:
     operations: Operations | None = field(default=None, repr=False)
     name: str = ""
     notes: tuple[str, ...] = field(default=(), repr=False)
-    position_su: FloatArray = field(default=None, repr=False)  # type: ignore[assignment]
+    position_su: FloatArray = field(default=None, repr=False)  # type: ignore[arg-type]
 
     def __post_init__(self) -> None:
         if np.shape(self.pbc) != (3,):
@@ -159,6 +161,13 @@ class Crystal:
                 cells = np.where(self.pbc, np.round(self.positions[j] - self.positions[i]), 0.0)
                 places[j] = places[i] + cells @ self.cell
         return frozen(places)
+
+    @cached_property
+    def position_moves(self) -> tuple[Moves, ...]:
+        """The independent ways in which the positions of sites are uncertain, as `position_su` states."""
+        from latticedip.crystal.uncertain import position_moves
+
+        return tuple(position_moves(self, self.position_su))
 
     @cached_property
     def axes_unit(self) -> FloatArray:

@@ -53,12 +53,12 @@ def parameter_steps(allowed: FloatArray, su: FloatArray) -> FloatArray:
     if 0 < rank < d and np.any(stated):
         basis = vectors[:, :rank]
 
-        def merit(rows: tuple[int, ...]) -> tuple[int, float]:
-            return int(np.count_nonzero(stated[list(rows)])), abs(float(np.linalg.det(basis[list(rows)])))
+        def merit(rows: list[int]) -> tuple[int, float]:
+            return int(np.count_nonzero(stated[rows])), abs(float(np.linalg.det(basis[rows])))
 
-        usable = [rows for rows in itertools.combinations(range(d), rank) if merit(rows)[1] > 1e-3]
+        usable = [list(rows) for rows in itertools.combinations(range(d), rank) if merit(list(rows))[1] > 1e-3]
         if usable:
-            chosen = list(max(usable, key=merit))
+            chosen = max(usable, key=merit)
             follow = basis @ np.linalg.inv(basis[chosen]) * stated[chosen]
             follow[np.abs(follow) < ROUNDING * np.abs(follow).max()] = 0.0
             expected = np.sqrt(np.sum(follow**2, axis=1))
@@ -69,7 +69,7 @@ def parameter_steps(allowed: FloatArray, su: FloatArray) -> FloatArray:
 
 
 def carried_su(turn: FloatArray, allowed: FloatArray, su: FloatArray) -> FloatArray:
-    """Shape (d,) float. Standard uncertainties of ``turn @ x``, of coordinates x with the symmetry of `parameter_steps`.
+    """Shape (d,) float. Standard uncertainties of ``turn @ x``; allowed, su: of the coordinates x, as `parameter_steps`.
 
     NaN where none of the coordinates that enter has one.
     """

@@ -45,7 +45,8 @@ def atom_lines(
 ) -> tuple[list[str], list[str]]:
     """The loop of all atoms, and the name of each in it, quoted.
 
-    su: Shape (n, 3), standard uncertainties of the positions; they get columns of their own where any is known. Where several atoms share a label, each gets one of its own, and the shared one stands in a column beside it.
+    su: Shape (n, 3), standard uncertainties of the positions; they get columns of their own where any is known.
+    Where several atoms share a label, each gets one of its own, and the shared one stands in a column beside it.
     """
     names = distinct(labels)
     quoted_names = [quoted(label, name) for label in names]

@@ -179,7 +179,10 @@ def _read_ase(name: str, block: str | int | None) -> Atoms:
     found: list[Any] = list(images) if isinstance(images, list) else [images]
     if not found:
         raise FileError(f"{name}: ASE finds no structure in it.")
-    return found[_image_number(name, len(found), block)]
+    chosen = found[_image_number(name, len(found), block)]
+    if len(chosen) == 0:
+        raise FileError(f"{name}: ASE finds no atoms in it (read as {kind}).")
+    return chosen
 
 
 def _crystal_of(name: str, atoms: Atoms) -> Crystal:

@@ -8,20 +8,23 @@ from typing import Any
 
 import numpy as np
 
-from latticedip.checks import FloatArray, check_tol, frozen
+from latticedip.checks import FloatArray, as_floats, check_tol, frozen
 from latticedip.crystal.displace import Displaced, moved_pairs
 from latticedip.crystal.model import SAME_PLACE_A, Crystal
 from latticedip.crystal.place import Place, place_of
+from latticedip.crystal.spread import as_spread, covariance_of
+from latticedip.crystal.uncertain import Moves
 from latticedip.errors import InputError
-from latticedip.observables.tensor import PrincipalFrame, principal_frame
+from latticedip.observables.tensor import PrincipalFrame, added, known, principal_frame
 from latticedip.ordering.model import Ordering
 from latticedip.physics.boundary import boundary_words
 from latticedip.physics.contact import shell_neighbours
 from latticedip.physics.coupling import require_bulk
+from latticedip.physics.spread import REACHED, exchanged_tensors, probe_words, reached_words, refuse_thin
 from latticedip.probe import Contact
 from latticedip.sample import Sample
 from latticedip.sums.bulk import lattice_sum
-from latticedip.sums.pairs import pair_tensors
+from latticedip.sums.smear import smeared_sum
 from latticedip.units import MU0_T_A3_PER_MUB
 
 
@@ -32,6 +35,8 @@ class SiteCouplings:
     sites: Shape (n,) int, the magnetic sites. occupancies: Shape (n,) float.
     dipolar: Shape (n, 3, 3) in T/µB, Lorentz-sphere sums over all cells for equal moments in every cell.
     contact: Shape (n, 3, 3) in T/µB, summed over the neighbours that the contact terms mean.
+    steps: Shape (m, n, 3, 3) in T/µB. What one standard uncertainty of each of m independent parameters of positions
+        does to the dipolar tensors; m is 0 where none is stated.
     magnetization_T: µ0 times one Bohr magneton per cell volume, in T/µB.
     """
 
@@ -40,6 +45,7 @@ class SiteCouplings:
     occupancies: FloatArray
     dipolar: FloatArray
     contact: FloatArray
+    steps: FloatArray
     magnetization_T: float
     ordering: Ordering
     error_bound: float
@@ -58,6 +64,7 @@ class CouplingTensor:
     error_bound: bound of the error of each element of the dipolar part that follows from tol, T/µB.
     principal: principal frame of the dipolar part.
     boundary: the boundary assumed, in words. notes: sentences a report must repeat.
+    steps: Shape (m, 3, 3). Changes of the dipolar part by one standard uncertainty of each parameter of the positions.
     """
 
     position: FloatArray
@@ -71,6 +78,7 @@ class CouplingTensor:
     error_bound: float
     boundary: str
     notes: tuple[str, ...] = field(default=(), repr=False)
+    steps: FloatArray = field(default_factory=lambda: np.zeros((0, 3, 3)), repr=False)
 
     @property
     def total(self) -> FloatArray:
@@ -97,6 +105,19 @@ class CouplingTensor:
         """η of the dipolar part, 0 to 1; 0 where that part vanishes."""
         return self.principal.asymmetry
 
+    @property
+    def dipolar_su(self) -> FloatArray:
+        """Shape (3, 3) float in T/µB. Standard uncertainties of the dipolar part; NaN where no position states any."""
+        return added(self.steps)
+
+    @property
+    def principal_values_su(self) -> FloatArray:
+        """Shape (3,) float in T/µB. Standard uncertainties of the principal values; of their mean where they are equal.
+
+        NaN where no position states any.
+        """
+        return added(self.principal.changes(self.steps))
+
     def to_dict(self) -> dict[str, Any]:
         """Plain dict; keys carry their units, tensors are Cartesian."""
         frame = self.principal
@@ -111,7 +132,9 @@ class CouplingTensor:
             "demagnetizing_T_per_muB": self.demagnetizing.tolist(),
             "contact_T_per_muB": self.contact.tolist(),
             "coupling_T_per_muB": self.total.tolist(),
+            "dipolar_su_T_per_muB": known(self.dipolar_su),
             "dipolar_principal_values_T_per_muB": frame.values.tolist(),
+            "dipolar_principal_values_su_T_per_muB": known(self.principal_values_su),
             "dipolar_principal_axes": frame.axes.tolist(),
             "dipolar_asymmetry": frame.asymmetry,
             "error_bound_T_per_muB": self.error_bound,
@@ -126,7 +149,9 @@ def coupling_tensor(
     magnetic: str | Sequence[str],
     sample: Sample | None = None,
     contact: Contact | Iterable[Contact] = (),
+    spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
+    position_su: Any = None,
     tol: float = 1e-10,
 ) -> CouplingTensor:
     """Coupling tensor of a probe to equal moments on all ions of a label or element: B = A m.
@@ -135,16 +160,31 @@ def coupling_tensor(
     and leaves that atom out. magnetic: a site label or element (the label wins), or several; occupancy applies.
     sample: its demagnetizing tensor; None means N = 0. contact: Contacts that couple to whole shells of the magnetic
     ions. displaced: neighbours that the probe moves; shells of both kinds count in the undisturbed crystal.
+    spread: of the probe, as `local_field`; the dipolar part is then the average over a Gaussian cloud.
+    position_su: Shape (3,) fractional, standard uncertainties of the coordinates of a position that is on no atom.
     tol: bound of the error of each site's tensor, as `dipole_tensor`.
 
+    Uncertainties of the dipolar part follow from position_su and those of the sites (``crystal.position_su``), to first
+    order, each independent parameter by itself; cell, contact and occupancies count as exact.
+
     Raises InputError for an unknown label, a position between 1e-3 and 0.1 Å from an atom, a shell that is not there,
-    a contact term without a coupling, or a crystal that is not periodic in three directions.
+    a contact term without a coupling, a spread as `local_field` refuses it, a position_su that is not three numbers of
+    at least 0 or belongs to a position on an atom, or a crystal that is not periodic in three directions.
     """
     names = (magnetic,) if isinstance(magnetic, str) else tuple(magnetic)
     if not names:
         raise InputError("magnetic names no label or element.")
     sites = sorted({site for name in names for site in crystal.find(name)})
-    parts = site_couplings(crystal, position, sites, contact=contact, displaced=displaced, tol=tol)
+    parts = site_couplings(
+        crystal,
+        position,
+        sites,
+        contact=contact,
+        spread=spread,
+        displaced=displaced,
+        position_su=position_su,
+        tol=tol,
+    )
     return summed(crystal, parts, np.arange(len(sites)), names, sample)
 
 
@@ -172,6 +212,7 @@ def summed(
         error_bound=parts.error_bound,
         boundary=boundary_words(parts.ordering, sample),
         notes=parts.notes,
+        steps=frozen(np.einsum("s,msab->mab", occupancies, parts.steps[:, rows])),
     )
 
 
@@ -181,44 +222,122 @@ def site_couplings(
     sites: Sequence[int],
     *,
     contact: Contact | Iterable[Contact] = (),
+    spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
+    position_su: Any = None,
     tol: float = 1e-10,
 ) -> SiteCouplings:
     """Coupling tensors of a probe to each of some sites (indices, distinct); arguments as `coupling_tensor`."""
     require_bulk(crystal)
     check_tol(tol)
     place = place_of(crystal, position)
+    of_probe = _probe_su(crystal, place, position_su)
     _refuse_split_place(crystal, place, sites)
     chosen = np.array(sites, dtype=int)
-    plan = lattice_sum(crystal.cell, (0.0, 0.0, 0.0), tol)
-    tensors = plan.tensors(plan.place(place.cart[None]), plan.place(crystal.places_cart[chosen]))[0]
-    bound = float(crystal.occupancies[chosen] @ (tol * np.maximum(1.0, np.abs(tensors).max(axis=(1, 2)))))
-    magnetization = MU0_T_A3_PER_MUB / crystal.volume_A3
-    dipolar = np.asarray(tensors, dtype=float) - magnetization / 3 * np.eye(3)
     terms = (displaced,) if isinstance(displaced, Displaced) else tuple(displaced)
-    pairs = moved_pairs(crystal, place, terms)
-    rows = {int(site): row for row, site in enumerate(chosen)}
-    change = pair_tensors(pairs.after) - pair_tensors(pairs.before)
-    for site, difference in zip(pairs.sites, change, strict=True):
-        if int(site) in rows:
-            dipolar[rows[int(site)]] += difference
     uniform = np.zeros((crystal.n_sites, 3))
     uniform[chosen, 2] = 1.0
     ordering = Ordering(crystal, uniform, name="equal moments")
+    cloud = as_spread("spread", spread)
+    moves = crystal.position_moves
+    stated = bool(moves) or of_probe is not None
+    tensors, slopes, reached = _dipolar(ordering, place, chosen, covariance_of(cloud), terms, stated, tol)
+    bound = float(crystal.occupancies[chosen] @ (tol * np.maximum(1.0, np.abs(tensors).max(axis=(1, 2)))))
+    magnetization = MU0_T_A3_PER_MUB / crystal.volume_A3
+    rows = {int(site): row for row, site in enumerate(chosen)}
     notes = [*crystal.notes, *(f"displaced: {term.words()}" for term in terms)]
+    notes += [*(words.removeprefix(": ") for words in probe_words("", cloud, ())), *reached]
     if place.site >= 0:
         notes.append(f"the position is that of atom {crystal.labels[place.site]}, which does not act on itself")
     return SiteCouplings(
         place=place,
         sites=frozen(chosen),
         occupancies=frozen(crystal.occupancies[chosen]),
-        dipolar=frozen(dipolar),
+        dipolar=frozen(tensors - magnetization / 3 * np.eye(3)),
         contact=frozen(_contact(ordering, place, contact, rows)),
+        steps=frozen(_steps(place, chosen, slopes, moves, of_probe)),
         magnetization_T=float(magnetization),
         ordering=ordering,
         error_bound=bound,
         notes=tuple(notes),
     )
+
+
+def _probe_su(crystal: Crystal, place: Place, position_su: Any) -> FloatArray | None:
+    """Shape (3, 3) float in Å. Rows: what one standard uncertainty of each coordinate does to the probe; or None."""
+    if position_su is None:
+        return None
+    su = as_floats("position_su", position_su, (3,))
+    if np.any(su < 0):
+        raise InputError(f"position_su must hold numbers of at least 0, got {su.tolist()}.")
+    if place.site >= 0:
+        raise InputError(
+            f"position_su goes with a position of its own; this one is that of atom {crystal.labels[place.site]} and "
+            "has the uncertainty of that site."
+        )
+    return np.asarray(su[:, None] * crystal.cell)
+
+
+def _dipolar(
+    ordering: Ordering,
+    place: Place,
+    chosen: np.ndarray,
+    covariance: FloatArray,
+    displaced: tuple[Displaced, ...],
+    slopes: bool,
+    tol: float,
+) -> tuple[FloatArray, FloatArray, list[str]]:
+    """N = 0 sums of each site (n, 3, 3) in T/µB, their derivatives by the place of the probe (n, 3, 3, 3) in T/µB/Å
+    (zero where not asked for), and notes on the atoms that the cloud of the probe reaches.
+    """
+    crystal = ordering.crystal
+    k = (0.0, 0.0, 0.0)
+    reach = np.full(len(chosen), np.inf)
+    steep = np.zeros((len(chosen), 3, 3, 3))
+    if slopes or np.any(covariance):
+        smeared = smeared_sum(crystal.cell, np.zeros(3), tol, covariance)
+        found, derivatives, near = smeared.tensors(
+            smeared.place(place.cart[None]), smeared.place(crystal.places_cart[chosen]), slopes
+        )
+        tensors, reach = found[0].real, near[0]
+        if derivatives is not None:
+            steep = derivatives[0].real
+        if smeared.cloud.thin:
+            refuse_thin(ordering, chosen, near, [])
+    else:
+        plan = lattice_sum(crystal.cell, k, tol)
+        tensors = plan.tensors(plan.place(place.cart[None]), plan.place(crystal.places_cart[chosen]))[0].real
+    tensors, steep = np.array(tensors), np.array(steep)
+    pairs = moved_pairs(crystal, place, displaced)
+    rows = {int(site): row for row, site in enumerate(chosen)}
+    still = np.zeros((crystal.n_sites, 3, 3))
+    change, change_steep = exchanged_tensors(ordering, pairs, covariance, still)
+    for i, site in enumerate(pairs.sites):
+        if int(site) in rows:
+            tensors[rows[int(site)]] += change[i]
+            steep[rows[int(site)]] += change_steep[i]
+    labels = dict.fromkeys(crystal.labels[site] for site in chosen[reach < REACHED])
+    return tensors, steep, [reached_words("of the probe", label) for label in labels]
+
+
+def _steps(
+    place: Place, chosen: np.ndarray, slopes: FloatArray, moves: Sequence[Moves], of_probe: FloatArray | None
+) -> FloatArray:
+    """Shape (m, n, 3, 3) in T/µB. A tensor depends on the separation of probe and site alone; a probe on a site moves
+    with it.
+    """
+    found = []
+    for move in moves:
+        apart = np.zeros((len(move.steps_cart), len(chosen), 3))
+        for i, site in enumerate(move.sites):
+            apart[:, chosen == site] -= move.steps_cart[:, i, None]
+            if site == place.site:
+                apart += move.steps_cart[:, i, None]
+        found.append(apart)
+    if of_probe is not None:
+        found.append(np.repeat(of_probe[:, None], len(chosen), axis=1))
+    apart = np.concatenate(found) if found else np.zeros((0, len(chosen), 3))
+    return np.asarray(np.einsum("sabc,msc->msab", slopes, apart))
 
 
 def _refuse_split_place(crystal: Crystal, place: Place, sites: Sequence[int]) -> None:

@@ -11,11 +11,15 @@ Moments are taken to first order, m_j = χ_j B_applied with χ_j the measured mo
 
 with A_j the Lorentz-sphere dipole tensor of site j and C_j its contact coupling. K is a (3, 3) tensor, not symmetric in
 general; to first order the shift along h is h·K·h, in which only its symmetric part counts.
+
+Uncertainties follow from those of the positions (through A_j) and of χ_j, to first order: K changes by a step for one
+standard uncertainty of each independent parameter, and the squares of the steps add up. Contact couplings, cell,
+occupancies and the shape of the sample count as exact.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any
@@ -29,7 +33,7 @@ from latticedip.errors import InputError
 from latticedip.observables.coupling_tensor import SiteCouplings, site_couplings
 from latticedip.observables.powder import PowderLine
 from latticedip.observables.susceptibility import UNITS, Susceptibility
-from latticedip.observables.tensor import PrincipalFrame, principal_frame
+from latticedip.observables.tensor import PrincipalFrame, added, known, principal_frame
 from latticedip.physics.boundary import boundary_words
 from latticedip.probe import Contact
 from latticedip.sample import Sample
@@ -75,6 +79,8 @@ class Shift:
     demagnetizing: −N times it. volume_susceptibility: Shape (3, 3), SI, dimensionless.
     chi_cm3_per_mol: a third of the trace of χ, mean over the magnetic ions, cgs per mole of ions.
     boundary: the boundary assumed, in words. notes: sentences a report must repeat.
+    steps: Shape (m, 3, 3). Changes of the total by one standard uncertainty of each parameter; m is 0 where positions
+        and χ state none, and all uncertainties are NaN then.
     """
 
     position: FloatArray
@@ -88,6 +94,7 @@ class Shift:
     chi_cm3_per_mol: float
     boundary: str
     notes: tuple[str, ...] = field(default=(), repr=False)
+    steps: FloatArray = field(default_factory=lambda: np.zeros((0, 3, 3)), repr=False)
 
     @cached_property
     def total(self) -> FloatArray:
@@ -113,6 +120,26 @@ class Shift:
         """Shift as a fraction, applied field along a Cartesian direction (3,); InputError for the zero vector."""
         h = as_unit_vector("direction", direction)
         return float(h @ self.total @ h)
+
+    @property
+    def total_su(self) -> FloatArray:
+        """Shape (3, 3) float. Standard uncertainties of the total."""
+        return added(self.steps)
+
+    @property
+    def isotropic_su(self) -> float:
+        """Standard uncertainty of the isotropic shift."""
+        return float(added(np.einsum("maa->m", self.steps) / 3))
+
+    @property
+    def principal_values_su(self) -> FloatArray:
+        """Shape (3,) float. Standard uncertainties of the principal values; of their mean where they are equal."""
+        return added(self.principal.changes(self.steps))
+
+    def su_along(self, direction: Any) -> float:
+        """Standard uncertainty of the shift along a Cartesian direction (3,); InputError for the zero vector."""
+        h = as_unit_vector("direction", direction)
+        return float(added(np.einsum("a,mab,b->m", h, self.steps, h)))
 
     def rotation(self, axis: Any, angles_deg: Any = None, start: Any = None) -> Rotation:
         """Shift against the angle by which the field turns about an axis of the crystal, always across it.
@@ -155,8 +182,11 @@ class Shift:
             "shift_lorentz": self.lorentz.tolist(),
             "shift_demagnetizing": self.demagnetizing.tolist(),
             "shift": self.total.tolist(),
+            "shift_su": known(self.total_su),
             "shift_isotropic": frame.isotropic,
+            "shift_isotropic_su": None if np.isnan(self.isotropic_su) else self.isotropic_su,
             "shift_principal_values": frame.values.tolist(),
+            "shift_principal_values_su": known(self.principal_values_su),
             "shift_principal_axes": frame.axes.tolist(),
             "shift_anisotropy": frame.anisotropy,
             "shift_asymmetry": frame.asymmetry,
@@ -194,6 +224,11 @@ class ShiftCurve:
         """Shape (n, 3) float. Principal values of each shift, as fractions."""
         return frozen(np.array([shift.principal.values for shift in self.shifts]).reshape(-1, 3))
 
+    @property
+    def isotropic_su(self) -> FloatArray:
+        """Shape (n,) float. Standard uncertainties of the isotropic shifts; NaN where none is stated."""
+        return frozen(np.array([shift.isotropic_su for shift in self.shifts]))
+
     def along(self, direction: Any) -> FloatArray:
         """Shape (n,) float. Shifts with the applied field along a Cartesian direction (3,), as fractions."""
         return frozen(np.array([shift.along(direction) for shift in self.shifts]))
@@ -211,20 +246,32 @@ def paramagnetic_shift(
     temperature_K: float | None = None,
     sample: Sample | None = None,
     contact: Contact | Iterable[Contact] = (),
+    spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
+    position_su: Any = None,
     tol: float = 1e-10,
 ) -> Shift:
     """Shift of a probe by the moments that an applied field induces; sign and reference as the module says.
 
-    crystal, position, sample, contact, displaced, tol: as `coupling_tensor`; the applied field of the sample plays no
-    part. susceptibility: for every magnetic site label or element its Susceptibility. temperature_K: where one of them
-    is a table.
+    crystal, position, sample, contact, spread, displaced, position_su, tol: as `coupling_tensor`; the applied field of
+    the sample plays no part. susceptibility: for every magnetic site label or element its Susceptibility.
+    temperature_K: where one of them is a table.
 
     Raises InputError as `coupling_tensor` and `Susceptibility` do, and where two names mean the same atom.
     """
-    sites = _magnetic_sites(crystal, susceptibility)
-    parts = site_couplings(crystal, position, sites, contact=contact, displaced=displaced, tol=tol)
-    return _shift(crystal, parts, susceptibility, temperature_K, sample)
+    (found,) = shifts_at(
+        crystal,
+        position,
+        susceptibility,
+        [temperature_K],
+        sample=sample,
+        contact=contact,
+        spread=spread,
+        displaced=displaced,
+        position_su=position_su,
+        tol=tol,
+    )
+    return found
 
 
 def shift_curve(
@@ -235,23 +282,72 @@ def shift_curve(
     *,
     sample: Sample | None = None,
     contact: Contact | Iterable[Contact] = (),
+    spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
+    position_su: Any = None,
     tol: float = 1e-10,
 ) -> ShiftCurve:
     """Shifts of a probe over temperatures.
 
-    crystal, position, susceptibility, sample, contact, displaced, tol: as `paramagnetic_shift`.
+    crystal, position, susceptibility, sample, contact, spread, displaced, position_su, tol: as `paramagnetic_shift`.
     temperatures_K: Shape (n,); None: those of the first table.
 
     Raises InputError as `paramagnetic_shift`, and where no susceptibility is a table.
     """
-    sites = _magnetic_sites(crystal, susceptibility)
-    tables = [chi.temperatures_K for chi in susceptibility.values() if chi.temperatures_K is not None]
+    tables = [chi.temperatures_K for chi in susceptibility.values() if _checked(chi).temperatures_K is not None]
     if not tables:
         raise InputError("a curve needs a susceptibility against temperature: give temperatures_K with its values.")
     temperatures = tables[0] if temperatures_K is None else as_floats("temperatures_K", temperatures_K, (None,))
-    parts = site_couplings(crystal, position, sites, contact=contact, displaced=displaced, tol=tol)
-    return ShiftCurve(tuple(_shift(crystal, parts, susceptibility, float(t), sample) for t in temperatures))
+    found = shifts_at(
+        crystal,
+        position,
+        susceptibility,
+        [float(t) for t in temperatures],
+        sample=sample,
+        contact=contact,
+        spread=spread,
+        displaced=displaced,
+        position_su=position_su,
+        tol=tol,
+    )
+    return ShiftCurve(tuple(found))
+
+
+def shifts_at(
+    crystal: Crystal,
+    position: Any,
+    susceptibility: Mapping[str, Susceptibility],
+    temperatures_K: Sequence[float | None],
+    *,
+    sample: Sample | None = None,
+    contact: Contact | Iterable[Contact] = (),
+    spread: Any = None,
+    displaced: Displaced | Iterable[Displaced] = (),
+    position_su: Any = None,
+    tol: float = 1e-10,
+) -> list[Shift]:
+    """Shifts of a probe at some temperatures (None where no susceptibility is a table), from one set of sums.
+
+    The other arguments and what is raised: as `paramagnetic_shift`.
+    """
+    sites = _magnetic_sites(crystal, susceptibility)
+    parts = site_couplings(
+        crystal,
+        position,
+        sites,
+        contact=contact,
+        spread=spread,
+        displaced=displaced,
+        position_su=position_su,
+        tol=tol,
+    )
+    return [_shift(crystal, parts, susceptibility, temperature, sample) for temperature in temperatures_K]
+
+
+def _checked(chi: Susceptibility) -> Susceptibility:
+    if not isinstance(chi, Susceptibility):
+        raise InputError(f"susceptibility must hold Susceptibility objects, got {chi!r}.")
+    return chi
 
 
 def _magnetic_sites(crystal: Crystal, susceptibility: Mapping[str, Susceptibility]) -> list[int]:
@@ -277,17 +373,26 @@ def _shift(
 ) -> Shift:
     # A temperature belongs to the tables; a single value beside a table holds at every temperature.
     tables = any(chi.temperatures_K is not None for chi in susceptibility.values())
-    chi = np.concatenate(
-        [
-            entry.of_atoms(crystal, name, temperature_K if entry.temperatures_K is not None or not tables else None)
-            for name, entry in susceptibility.items()
-        ]
-    )
+    at = {
+        name: temperature_K if entry.temperatures_K is not None or not tables else None
+        for name, entry in susceptibility.items()
+    }
+    chi = np.concatenate([entry.of_atoms(crystal, name, at[name]) for name, entry in susceptibility.items()])
     weighted = parts.occupancies[:, None, None] * chi
     volume = parts.magnetization_T * weighted.sum(axis=0)
     specimen = Sample() if sample is None else sample
     mean = float(np.einsum("saa->", weighted) / 3 / parts.occupancies.sum())
     place = parts.place
+    # What a step in the moment of one atom per field does to the field, all parts together.
+    response = parts.dipolar + parts.contact
+    response = response + parts.magnetization_T * (np.eye(3) / 3 - specimen.demagnetizing_tensor)
+    steps = [np.einsum("msab,sbc->mac", parts.steps, weighted)]
+    first = 0
+    for name, entry in susceptibility.items():
+        changes = entry.steps_of_atoms(crystal, name, at[name])
+        rows = slice(first, first + changes.shape[1])
+        steps.append(np.einsum("s,sab,msbc->mac", parts.occupancies[rows], response[rows], changes))
+        first = rows.stop
     return Shift(
         position=place.position,
         site=crystal.labels[place.site] if place.site >= 0 else "",
@@ -300,4 +405,5 @@ def _shift(
         chi_cm3_per_mol=mean / UNITS["cm3/mol"],
         boundary=boundary_words(parts.ordering, sample),
         notes=parts.notes,
+        steps=frozen(np.concatenate(steps)),
     )

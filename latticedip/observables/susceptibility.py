@@ -11,6 +11,7 @@ from scipy import constants
 from latticedip.checks import FloatArray, as_float, as_floats, frozen
 from latticedip.crystal.model import Crystal
 from latticedip.crystal.symmetry import operations_of
+from latticedip.crystal.uncertain import parameter_steps
 from latticedip.errors import InputError
 from latticedip.units import BOHR_MAGNETON_J_PER_T
 
@@ -23,6 +24,8 @@ UNITS = {
 }
 #: How far a tensor may be from symmetric, and from the symmetry of its site, relative to its largest element.
 TENSOR_TOLERANCE = 1e-6
+#: Elements of a symmetric tensor.
+ELEMENTS = ((0, 0), (1, 1), (2, 2), (1, 2), (0, 2), (0, 1))
 #: An operation carries an atom onto another within this distance (Å).
 SAME_ATOM_A = 0.02
 
@@ -39,6 +42,9 @@ class Susceptibility:
         linearly.
     local: True: chi is the tensor of the label's first atom; that of every other atom is what the operations of the
         crystal make of it. False: a (3, 3) tensor is the same, in the Cartesian frame, for all atoms.
+    chi_su: standard uncertainty, in the unit and shape of chi, or one number for all temperatures of a table of
+        numbers. Each value, and each of the six elements of a tensor, counts as independent, but for elements that the
+        site of a local tensor ties together.
 
     A mole is one of fully occupied sites; partial occupancy is applied when fields are summed.
 
@@ -50,6 +56,7 @@ class Susceptibility:
     unit: str = "cm3/mol"
     temperatures_K: Any = None
     local: bool = False
+    chi_su: Any = None
 
     def __post_init__(self) -> None:
         if self.unit not in UNITS:
@@ -74,6 +81,7 @@ class Susceptibility:
             if gap > TENSOR_TOLERANCE * np.abs(chi).max(initial=0.0):
                 raise InputError(f"chi must be symmetric, its elements across the diagonal differ by {gap:.6g}.")
             chi = (chi + np.swapaxes(chi, -1, -2)) / 2
+        su = np.zeros(chi.shape) if self.chi_su is None else self._checked_su(chi, table and depth == 0)
         if table:
             temperatures = as_floats("temperatures_K", self.temperatures_K, (None,))
             if len(temperatures) != len(chi) or not len(temperatures):
@@ -81,12 +89,25 @@ class Susceptibility:
             if np.any(temperatures <= 0):
                 raise InputError(f"temperatures_K must be positive, got {float(temperatures.min())!r}.")
             order = np.argsort(temperatures, kind="stable")
-            temperatures, chi = temperatures[order], chi[order]
+            temperatures, chi, su = temperatures[order], chi[order], su[order]
             twice = np.flatnonzero(np.diff(temperatures) == 0)
             if len(twice):
                 raise InputError(f"temperatures_K holds {float(temperatures[twice[0]])!r} twice.")
             object.__setattr__(self, "temperatures_K", frozen(temperatures))
         object.__setattr__(self, "chi", frozen(chi))
+        object.__setattr__(self, "chi_su", None if self.chi_su is None else frozen(su))
+
+    def _checked_su(self, chi: FloatArray, numbers: bool) -> FloatArray:
+        """chi_su in the shape of chi; numbers: chi is a table of numbers."""
+        su = self.chi_su
+        if np.ndim(su) == 0 and numbers:
+            su = np.full(chi.shape, as_float("chi_su", su))
+        su = as_floats("chi_su", su, chi.shape) if chi.ndim else np.array(as_float("chi_su", su))
+        if np.any(su < 0):
+            raise InputError(f"chi_su must hold numbers of at least 0, got {float(su.min())!r}.")
+        if chi.ndim >= 2 and np.abs(su - np.swapaxes(su, -1, -2)).max() > TENSOR_TOLERANCE * np.abs(su).max():
+            raise InputError("chi_su must be symmetric, as chi is.")
+        return su
 
     def words(self) -> str:
         """What is stated, for reports."""
@@ -106,13 +127,20 @@ class Susceptibility:
 
         Raises InputError where a table gets no temperature or one outside it, or a single value gets one.
         """
+        shares = self._shares(temperature_K)
+        if self.temperatures_K is None:
+            return np.asarray(self.chi * UNITS[self.unit])
+        return np.asarray(sum(share * self.chi[i] for i, share in shares) * UNITS[self.unit])
+
+    def _shares(self, temperature_K: float | None) -> list[tuple[int, float]]:
+        """Rows of the table that make the value at a temperature, and their shares; errors as `at`."""
         if self.temperatures_K is None:
             if temperature_K is not None:
                 raise InputError(
                     f"the susceptibility is a single value, so temperature_K = {temperature_K!r} has no meaning. "
                     "Leave it out, or give temperatures_K with a table."
                 )
-            return np.asarray(self.chi * UNITS[self.unit])
+            return [(0, 1.0)]
         low, high = float(self.temperatures_K[0]), float(self.temperatures_K[-1])
         if temperature_K is None:
             raise InputError(f"the susceptibility is a table from {low:g} to {high:g} K: give temperature_K.")
@@ -124,8 +152,8 @@ class Susceptibility:
         above = min(int(np.searchsorted(self.temperatures_K, wanted)), len(self.temperatures_K) - 1)
         below = max(0, above - 1)
         span = self.temperatures_K[above] - self.temperatures_K[below]
-        share = (wanted - self.temperatures_K[below]) / span if span > 0 else 1.0
-        return np.asarray(((1 - share) * self.chi[below] + share * self.chi[above]) * UNITS[self.unit])
+        share = float((wanted - self.temperatures_K[below]) / span) if span > 0 else 1.0
+        return [(below, 1 - share), (above, share)] if below != above else [(above, 1.0)]
 
     def of_atoms(self, crystal: Crystal, name: str, temperature_K: float | None = None) -> FloatArray:
         """Shape (n_atoms, 3, 3) float in µB/T per ion, for the atoms of a label or element in order.
@@ -135,31 +163,87 @@ class Susceptibility:
         """
         sites = crystal.find(name)
         value = self.at(temperature_K)
-        if value.ndim == 0:
-            return np.asarray(np.tile(value * np.eye(3), (len(sites), 1, 1)))
-        if value.ndim == 3:
-            if len(value) != len(sites):
-                raise InputError(f"{name}: {len(value)} susceptibility tensors for {len(sites)} atoms.")
-            return value
+        if value.ndim == 3 and len(value) != len(sites):
+            raise InputError(f"{name}: {len(value)} susceptibility tensors for {len(sites)} atoms.")
         if self.local:
             return _carried(crystal, name, sites, value)
-        return np.asarray(np.tile(value, (len(sites), 1, 1)))
+        return _for_all(value, len(sites))
+
+    def steps_of_atoms(self, crystal: Crystal, name: str, temperature_K: float | None = None) -> FloatArray:
+        """Shape (m, n_atoms, 3, 3) float in µB/T per ion. Changes by one standard uncertainty of each parameter.
+
+        m is 0 without chi_su. Arguments and errors as `of_atoms`.
+        """
+        sites = crystal.find(name)
+        found = [np.zeros((0, len(sites), 3, 3))]
+        for row, share in self._shares(temperature_K) if self.chi_su is not None else ():
+            su = self.chi_su if self.temperatures_K is None else self.chi_su[row]
+            found.append(share * UNITS[self.unit] * self._steps(crystal, sites, np.asarray(su)))
+        return np.concatenate(found)
+
+    def _steps(self, crystal: Crystal, sites: tuple[int, ...], su: FloatArray) -> FloatArray:
+        """Shape (m, n_atoms, 3, 3). Changes of the tensors of all atoms; su: Shape (), (3, 3) or (n_atoms, 3, 3)."""
+        if su.ndim == 0:
+            return _for_all(su, len(sites))[None]
+        if su.ndim == 3:
+            each = np.array([_tensors(np.diag(_elements(tensor))) for tensor in su])
+            own = np.eye(len(sites))
+            return np.asarray(np.einsum("ij,imab->imjab", own, each).reshape(-1, len(sites), 3, 3))
+        if not self.local:
+            steps = _tensors(np.diag(_elements(su)))
+            return np.asarray(np.tile(steps[:, None], (1, len(sites), 1, 1)))
+        turns = _turns(crystal, sites)
+        allowed = np.mean([_on_elements(turn) for target, turn in turns if target == 0], axis=0)
+        steps = _tensors(parameter_steps(allowed, _elements(su)).T)
+        first = dict(reversed(turns))
+        return np.stack([first[i] @ steps @ first[i].T for i in range(len(sites))], axis=1)
 
 
-def _carried(crystal: Crystal, name: str, sites: tuple[int, ...], tensor: FloatArray) -> FloatArray:
-    """Tensors of all atoms of a label from that of the first, by the operations of the crystal."""
+def _for_all(value: FloatArray, n: int) -> FloatArray:
+    """Shape (n, 3, 3) float. Tensors of n atoms from a number, one tensor or n of them."""
+    if value.ndim == 0:
+        return np.asarray(np.tile(value * np.eye(3), (n, 1, 1)))
+    return value if value.ndim == 3 else np.asarray(np.tile(value, (n, 1, 1)))
+
+
+def _elements(tensor: FloatArray) -> FloatArray:
+    """Shape (6,) float. The elements of a symmetric tensor in the order of ELEMENTS."""
+    return np.array([tensor[i, j] for i, j in ELEMENTS])
+
+
+def _tensors(elements: FloatArray) -> FloatArray:
+    """Shape (m, 3, 3) float. Symmetric tensors of their elements (m, 6)."""
+    out = np.zeros((len(elements), 3, 3))
+    for n, (i, j) in enumerate(ELEMENTS):
+        out[:, i, j] = out[:, j, i] = elements[:, n]
+    return out
+
+
+def _on_elements(turn: FloatArray) -> FloatArray:
+    """Shape (6, 6) float. What a rotation does to the elements of a symmetric tensor."""
+    return np.array([_elements(turn @ tensor @ turn.T) for tensor in _tensors(np.eye(6))]).T
+
+
+def _turns(crystal: Crystal, sites: tuple[int, ...]) -> list[tuple[int, FloatArray]]:
+    """For every operation that carries the first site onto one of them, which one, and its Cartesian rotation."""
     operations = operations_of(crystal)
     columns = crystal.cell.T
-    out = np.full((len(sites), 3, 3), np.nan)
-    scale = TENSOR_TOLERANCE * float(np.abs(tensor).max())
     home = crystal.positions[sites[0]]
+    found = []
     for rotation, translation in zip(operations.rotations, operations.translations, strict=True):
         gap = crystal.positions[list(sites)] - (rotation @ home + translation)
         distance = np.linalg.norm((gap - np.round(gap)) @ crystal.cell, axis=1)
         target = int(np.argmin(distance))
-        if distance[target] > SAME_ATOM_A:
-            continue
-        turn = columns @ rotation @ np.linalg.inv(columns)
+        if distance[target] <= SAME_ATOM_A:
+            found.append((target, np.asarray(columns @ rotation @ np.linalg.inv(columns))))
+    return found
+
+
+def _carried(crystal: Crystal, name: str, sites: tuple[int, ...], tensor: FloatArray) -> FloatArray:
+    """Tensors of all atoms of a label from that of the first, by the operations of the crystal."""
+    out = np.full((len(sites), 3, 3), np.nan)
+    scale = TENSOR_TOLERANCE * float(np.abs(tensor).max())
+    for target, turn in _turns(crystal, sites):
         turned = turn @ tensor @ turn.T
         if np.isnan(out[target, 0, 0]):
             out[target] = turned

@@ -43,6 +43,17 @@ class PrincipalFrame:
         difference = float(self.values[1] - self.values[0])
         return 0.0 if abs(difference) <= self.zero else float(np.clip(difference / reduced, 0.0, 1.0))
 
+    def changes(self, steps: FloatArray) -> FloatArray:
+        """Shape (m, 3) float. First-order changes of the values by changes (m, 3, 3) of the tensor.
+
+        Where values are equal within `zero` (or a part in 10⁹ of the largest), that of their mean: it does not depend
+        on the axes chosen between them.
+        """
+        each = np.einsum("ia,mab,ib->mi", self.axes, steps, self.axes)
+        slack = max(self.zero, 1e-9 * float(np.abs(self.values).max()))
+        equal = np.abs(self.values[:, None] - self.values) <= slack
+        return np.asarray(each @ (equal / equal.sum(axis=0)))
+
     def to_dict(self) -> dict[str, Any]:
         """Plain dict of values, axes, isotropic part, anisotropy and asymmetry."""
         return {
@@ -70,3 +81,15 @@ def principal_frame(tensor: FloatArray, zero: float = 0.0) -> PrincipalFrame:
     if np.linalg.det(axes) < 0:
         axes[1] *= -1
     return PrincipalFrame(frozen(values[order]), frozen(axes), zero)
+
+
+def added(steps: FloatArray) -> FloatArray:
+    """Standard uncertainties of what m independent parameters change by steps (m, ...); NaN where there are none."""
+    if not len(steps):
+        return np.full(steps.shape[1:], np.nan)
+    return np.asarray(np.sqrt(np.sum(steps**2, axis=0)))
+
+
+def known(su: FloatArray) -> list[Any] | None:
+    """Standard uncertainties as plain lists, None where none is known."""
+    return None if np.any(np.isnan(su)) else su.tolist()

@@ -139,13 +139,17 @@ def cloud_fields(
         bound[part.rows] += tol * np.maximum(1.0, np.abs(part.tensors).max(axis=(2, 3))) @ sizes
         for row, ion in np.argwhere(part.reach < REACHED):
             reached[names[part.rows[row]], ordering.crystal.labels[part.ions[ion]]] = None
-    notes = [
-        f"the spread of {who} reaches atom {label}: the traceless (principal-value) part is given; the rest is contact"
-        for who, label in list(reached)[:REACHED_SHOWN]
-    ]
+    notes = [reached_words(f"of {who}", label) for who, label in list(reached)[:REACHED_SHOWN]]
     if len(reached) > REACHED_SHOWN:
         notes.append(f"so does that of {len(reached) - REACHED_SHOWN} more pairs of a point and a label")
     return total, bound, notes
+
+
+def reached_words(who: str, label: str) -> str:
+    """What is said of a spread that reaches an atom; who: whose spread it is, "of ..." or "of the probe"."""
+    return (
+        f"the spread {who} reaches atom {label}: the traceless (principal-value) part is given; the rest is contact"
+    )
 
 
 def cloud_gradients(

@@ -26,6 +26,7 @@ applied field count as exact.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
@@ -34,7 +35,7 @@ import numpy as np
 from latticedip.checks import ComplexArray, FloatArray, frozen
 from latticedip.crystal.spread import carriers
 from latticedip.crystal.symmetry import operations_of
-from latticedip.crystal.uncertain import Tied, checked_su, parameter_steps, position_moves, tied_groups
+from latticedip.crystal.uncertain import Moves, Tied, checked_su, parameter_steps, position_moves, tied_groups
 from latticedip.ordering.model import ZERO_MOMENT_MUB, Ordering
 from latticedip.physics.contact import shell_neighbours
 from latticedip.physics.spread import exchanged_tensors, moments_of, pair_sums
@@ -112,7 +113,9 @@ def field_uncertainty(result: LocalField, *, site_position_su: Any = None) -> Fi
         return _open(n, ())
     covariance = np.zeros((n, 3, 3))
     tied = tied_moments(ordering, lines) if np.any(of_moments) else []
-    moves = position_moves(ordering.crystal, of_sites)
+    moves: Sequence[Moves] = ordering.crystal.position_moves
+    if site_position_su is not None:
+        moves = position_moves(ordering.crystal, of_sites)
     rows = np.arange(n)
     for block in np.array_split(rows, max(1, -(-n * n_sites * len(ordering.k) // BLOCK))):
         if moments_known:
@@ -169,7 +172,10 @@ def amplitudes(ordering: Ordering) -> Amplitudes:
 def _from_moments(
     ordering: Ordering, transfer: ComplexArray, lines: Amplitudes, tied: list[Tied], su: FloatArray
 ) -> FloatArray:
-    """Shape (n, 3, 3) float in T². Covariance that the moments make; transfer: of `_transfer`; su: (n_sites, 3) in µB."""
+    """Shape (n, 3, 3) float in T². Covariance that the moments make.
+
+    transfer: of `_transfer`. su: Shape (n_sites, 3) float in µB, crystal-axis components.
+    """
     covariance = np.zeros((transfer.shape[1], 3, 3))
     for size in ordering.size_su:
         sites = list(size.sites)

@@ -25,7 +25,7 @@ def modes_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         "a lower bound for every ordering"
     )
     lead = [
-        ("moments", f"{sizes} µB, {short(document['ions_per_cell'])} ions per cell"),
+        ("moments", f"{sizes} µB, {_ions(document['ions_per_cell'])} per cell"),
         ("boundary", document["boundary"]),
         ("lowest mode", energy),
         ("at", where_text(lowest)),
@@ -57,10 +57,16 @@ def where_text(mode: Mapping[str, Any]) -> str:
 
 
 def _reached(mode: Mapping[str, Any]) -> str:
+    if mode["equal_moments"] and mode["k"] is None:
+        return "yes, in the limit of ever longer waves or larger domains"
     if mode["equal_moments"]:
         several = mode["k"] is not None and len(mode["k"]) > 1
         return "yes, by several arms of the star together" if several else "yes: an ordering reaches the bound"
     return "no ordering with moments of these sizes was found that reaches it"
+
+
+def _ions(count: float) -> str:
+    return f"{short(count)} {'ion' if count == 1 else 'ions'}"
 
 
 def _degeneracy(mode: Mapping[str, Any]) -> str:

@@ -9,6 +9,7 @@ import numpy as np
 
 from latticedip.checks import FloatArray
 from latticedip.report.points import kind_lines, kind_name, kinds
+from latticedip.report.su import with_su
 from latticedip.report.tables import (
     Column,
     bullets,
@@ -62,6 +63,10 @@ def _coupling(coupling: Mapping[str, Any], width: int | None) -> str:
     return "\n".join([*lines, _principal(coupling, "dipolar", "_T_per_muB", "T/µB", digits, 1.0, width)])
 
 
+def _scaled(su: float | None, scale: float = PERCENT) -> float | None:
+    return None if su is None else scale * su
+
+
 def _tensors(tensors: Mapping[str, FloatArray], unit: str, digits: int, width: int | None) -> str:
     """Parts of a tensor, one line each; nine elements where one of them is not symmetric within the digits."""
     even = all(np.abs(tensor - tensor.T).max() < 0.5 * 10.0**-digits for tensor in tensors.values())
@@ -76,6 +81,7 @@ def _principal(
 ) -> str:
     """Principal values with their axes, and the asymmetry in words."""
     values = [scale * value for value in entry[f"{name}_principal_values{suffix}"]]
+    uncertain = entry[f"{name}_principal_values_su{suffix}"] or [None] * 3
     free = entry[f"{name}_principal_axes_free"]
     if all(free) or max(abs(v - sum(values) / 3) for v in values) < 0.5 * 10.0**-digits:
         return paragraph(f"The {name} tensor is isotropic within its accuracy.", width=width)
@@ -90,7 +96,7 @@ def _principal(
         shown = ["any across" if j == 0 else "" for j in range(len(axes))]
         if not free[i]:
             shown = [_headless(frame[i], axes[0][i]) for frame in axes]
-        cells.append([letter, fixed(values[i], digits), *shown])
+        cells.append([letter, with_su(values[i], digits, _scaled(uncertain[i], scale)), *shown])
     asymmetry = f"asymmetry {fixed(entry[f'{name}_asymmetry'], 4)}"
     return table(columns, cells, width=width, keys=1) + "\n" + asymmetry
 
@@ -109,6 +115,8 @@ def _shifts(shifts: Sequence[Mapping[str, Any]], document: Mapping[str, Any], wi
     else:
         lines += ["", "Shift against temperature", "", _curve(shifts, width)]
         lines += ["", paragraph("One --temperature gives its tensors and their parts.", width=width)]
+    if "powder" in shifts[0]:
+        lines += ["", "Line of a powder", "", _powder(shifts, width)]
     if document["rotate_about"] is not None:
         lines += ["", *_rotation(shifts, document, width)]
     return lines
@@ -131,12 +139,13 @@ def _one_shift(shift: Mapping[str, Any], width: int | None) -> list[str]:
         "",
         _tensors(tensors, "%", digits, width),
         "",
-        f"isotropic  {fixed(PERCENT * shift['shift_isotropic'], digits)} %",
+        f"isotropic  {with_su(PERCENT * shift['shift_isotropic'], digits, _scaled(shift['shift_isotropic_su']))} %",
         "",
         _principal(shift, "shift", "", "%", digits, PERCENT, width),
     ]
     if shift["shift_along_applied"] is not None:
-        along = fixed(PERCENT * shift["shift_along_applied"], digits)
+        su = _scaled(shift["shift_along_applied_su"])
+        along = with_su(PERCENT * shift["shift_along_applied"], digits, su)
         lines.append(f"along the applied field  {along} %")
     return lines
 
@@ -156,9 +165,31 @@ def _curve(shifts: Sequence[Mapping[str, Any]], width: int | None) -> str:
     cells = []
     for shift, values in zip(shifts, listed, strict=True):
         shown = [*values, shift["shift_along_applied"]] if along else values
+        uncertain = [shift["shift_isotropic_su"], *(shift["shift_principal_values_su"] or [None] * 3)]
+        uncertain += [shift["shift_along_applied_su"]] if along else []
         lead = [short(shift["temperature_K"]), fixed(shift["chi_cm3_per_mol"], chi_digits)]
-        cells.append([*lead, *(fixed(PERCENT * x, digits) for x in shown)])
+        pairs_shown = zip(shown, uncertain, strict=True)
+        cells.append([*lead, *(with_su(PERCENT * x, digits, _scaled(su)) for x, su in pairs_shown)])
     return table(columns, cells, width=width, keys=1)
+
+
+def _powder(shifts: Sequence[Mapping[str, Any]], width: int | None) -> str:
+    columns = [
+        Column("temperature", "K"),
+        Column("lower\nedge", "%"),
+        Column("singularity", "%"),
+        Column("upper\nedge", "%"),
+        Column("mean", "%"),
+        Column("standard\ndeviation", "%"),
+    ]
+    values = [[*s["powder_edges"], s["powder"]["mean"], s["powder"]["rms_deviation"]] for s in shifts]
+    digits = decimals_for([PERCENT * x for row in values for x in row], significant=5)
+    cells = [
+        ["" if s["temperature_K"] is None else short(s["temperature_K"]), *(fixed(PERCENT * x, digits) for x in row)]
+        for s, row in zip(shifts, values, strict=True)
+    ]
+    skip = 1 if shifts[0]["temperature_K"] is None else 0
+    return table(columns[skip:], [row[skip:] for row in cells], width=width, keys=1)
 
 
 def _rotation(shifts: Sequence[Mapping[str, Any]], document: Mapping[str, Any], width: int | None) -> list[str]:

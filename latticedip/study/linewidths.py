@@ -62,7 +62,8 @@ def linewidth_document(
             displaced=point.displaced,
         )
         rows.append(_row(point, found))
-        notes += point.notes(study.crystal, found.notes)
+        sharp = "its spread is not taken into account here, the place of the probe is taken as sharp"
+        notes += point.notes(study.crystal, found.notes if point.spread is None else [*found.notes, sharp])
     _group(rows)
     muon = any(row["zero_field_width_per_us"] is not None for row in rows)
     stated = ", ".join(f"{name} {share:g}" for name, share in study.abundances.items())

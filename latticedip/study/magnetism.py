@@ -16,7 +16,7 @@ from latticedip.study.keys import Key
 if TYPE_CHECKING:
     from latticedip.study.schema import Study
 
-SUSCEPTIBILITY_KEYS = ("chi", "unit", "temperatures_K", "local")
+SUSCEPTIBILITY_KEYS = ("chi", "chi_su", "unit", "temperatures_K", "local")
 _EXAMPLE = '{ chi = 0.012, unit = "cm3/mol" }'
 _UNITS = '"cm3/mol" (cgs, the same as emu/mol; per mole of ions), "m3/mol" (SI) or "muB/T" (per ion)'
 _CHI = "a number, a tensor (three lists of three numbers, Cartesian), or a list of them over temperatures_K"
@@ -26,8 +26,8 @@ _TEMPERATURES = "a list of temperatures in K, each larger than 0"
 def read_susceptibility(key: Key | None, crystal: Crystal) -> dict[str, Susceptibility]:
     """The [susceptibility] table: one entry per site label or element, in the order of the file.
 
-    Each holds chi with its unit and, where chi is a list over temperatures, temperatures_K. No two of them may mean
-    one atom.
+    Each holds chi with its unit and, where chi is a list over temperatures, temperatures_K; chi_su is its standard
+    uncertainty in the same form. No two of them may mean one atom.
     """
     found: dict[str, Susceptibility] = {}
     taken: dict[int, str] = {}
@@ -73,6 +73,13 @@ def _susceptibility(item: Key) -> Susceptibility:
         if isinstance(table["chi"].value, list) and not any(isinstance(v, list) for v in table["chi"].value):
             raise item.missing("temperatures_K", f"{_TEMPERATURES}, since chi is a list of numbers")
         chi = _number_or_tensor(table["chi"])
+    if "chi_su" in table:
+        key = table["chi_su"]
+        single = not isinstance(key.value, list) or "temperatures_K" not in table
+        items = [] if single else key.items("a list, one entry per temperature")
+        arguments["chi_su"] = _number_or_tensor(key) if single else [_number_or_tensor(entry) for entry in items]
+        with key.located():
+            return Susceptibility(chi, **arguments)
     with item.located():
         return Susceptibility(chi, **arguments)
 

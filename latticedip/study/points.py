@@ -11,23 +11,31 @@ import numpy as np
 from latticedip.checks import FloatArray
 from latticedip.crystal.displace import Displaced
 from latticedip.crystal.model import Crystal
-from latticedip.crystal.orbit import orbit
-from latticedip.errors import InputError
+from latticedip.crystal.spread import carried_spreads
+from latticedip.crystal.symmetry import operations_of
+from latticedip.crystal.uncertain import carried_su
+from latticedip.observables.orbits import equivalent_probes
 from latticedip.probe import Probe
 
 
 @dataclass(frozen=True, eq=False)
 class Point:
-    """One point that a probe stands for: its position, Shape (3,) fractional, and how many the probe has."""
+    """One point that a probe stands for: its position, Shape (3,) fractional, and how many the probe has.
+
+    probe: the probe, its tensors turned where the point is one that symmetry makes equal to its position. spread: that
+    of the probe, turned for the other atoms of a site. position_su: Shape (3,) fractional, where the probe states it.
+    """
 
     probe: Probe
     position: FloatArray
     multiplicity: int
+    spread: float | FloatArray | None = None
+    position_su: FloatArray | None = None
 
     @property
     def displaced(self) -> tuple[Displaced, ...]:
         """The neighbours that the probe moves."""
-        return displaced_of(self.probe)
+        return self.probe.displaced
 
     def head(self) -> dict[str, Any]:
         """What every row says of its point."""
@@ -41,51 +49,40 @@ class Point:
     def notes(self, crystal: Crystal, sentences: Iterable[str]) -> list[str]:
         """What a result says of this point, with the name of its probe; that a site lies on its atom goes without."""
         kept = [text for text in sentences if self.probe.site is None or not text.startswith("the position is that of")]
-        if self.probe.spread is not None:
-            kept.append("its spread is not taken into account here, the place of the probe is taken as sharp")
         return [text if text in crystal.notes else f"{self.probe.name}: {text}" for text in kept]
-
-
-def displaced_of(probe: Probe) -> tuple[Displaced, ...]:
-    """The neighbours that a probe moves."""
-    return tuple(probe.displaced)
 
 
 def points_of(crystal: Crystal, probes: Iterable[Probe], *, all_equivalent: bool = False) -> list[Point]:
     """The points of all probes, in order: the atoms of a site, or the position.
 
-    all_equivalent: a position stands for every one that the symmetry of the crystal makes equal to it.
+    all_equivalent: a position stands for every one that the symmetry of the crystal makes equal to it; contact tensors,
+    covariances and displaced neighbours are turned with it.
 
-    Raises InputError where that is asked for a probe with a tensor or a vector that holds at its own position only.
+    Raises InputError for a covariance without the symmetry of its site, and what `equivalent_probes` raises.
     """
     points: list[Point] = []
     for probe in probes:
         if probe.site is not None:
-            positions = crystal.positions[list(crystal.find(probe.site))]
-        elif all_equivalent:
-            _require_no_direction(probe)
-            positions = orbit(crystal, probe.position)
-        else:
-            positions = np.asarray(probe.position)[None]
-        points += [Point(probe, position, len(positions)) for position in positions]
+            sites = crystal.find(probe.site)
+            spreads = carried_spreads(crystal, sites, probe.spread, probe.name)
+            pairs = zip(crystal.positions[list(sites)], spreads, strict=True)
+            points += [Point(probe, position, len(sites), spread) for position, spread in pairs]
+            continue
+        images = equivalent_probes(crystal, probe) if all_equivalent else [probe]
+        for image in images:
+            su = probe.position_su if image is probe else _su_there(crystal, probe, np.asarray(image.position))
+            points.append(Point(image, np.asarray(image.position), len(images), image.spread, su))
     return points
 
 
-def _require_no_direction(probe: Probe) -> None:
-    """Refuse what is stated for one position and would have to be turned for the others."""
-    for term in probe.contact:
-        tensor = term.coupling_T_per_muB
-        if tensor is not None and not np.array_equal(tensor, tensor[0, 0] * np.eye(3)):
-            raise InputError(
-                f"probe {probe.name!r} has a contact tensor, which holds at its own position only, so its equivalent "
-                "positions cannot be taken. Give the coupling as a number, or list the positions as probes."
-            )
-    for moved in displaced_of(probe):
-        if moved.vector_A is not None or moved.atom is not None:
-            raise InputError(
-                f"probe {probe.name!r} moves a named atom or by a vector, which holds at its own position only, so its "
-                "equivalent positions cannot be taken. Move whole shells outward, or list the positions as probes."
-            )
+def _su_there(crystal: Crystal, probe: Probe, position: FloatArray) -> FloatArray | None:
+    """Standard uncertainties of the coordinates at an equivalent position, by an operation that leads there."""
+    if probe.position_su is None:
+        return None
+    operations = operations_of(crystal)
+    gaps = operations.rotations @ probe.position + operations.translations - position
+    distance = np.linalg.norm((gaps - np.round(gaps)) @ crystal.cell, axis=1)
+    return carried_su(operations.rotations[int(np.argmin(distance))].astype(float), np.eye(3), probe.position_su)
 
 
 def alike(tensors: list[FloatArray], error: float) -> list[list[int]]:

@@ -26,7 +26,6 @@ QUICK_SITES = 16
 UEV_PER_EV, UEV_PER_MEV = 1e6, 1e3
 
 
-
 @dataclass(frozen=True)
 class RankOptions:
     """What is asked of a ranking.

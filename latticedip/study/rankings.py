@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -29,11 +29,6 @@ UEV_PER_EV = 1e6
 SAME_FIELD = 1e-6
 #: Keys of a row that a flat table cannot hold, or holds otherwise.
 NOT_IN_TABLE = ("fields", "rotation", "boundary", "same_as", "free_turns", "parts")
-#: Parts of an energy that may be zero for every ordering, and why.
-ZERO_PARTS = {
-    "shape": "no energy of the shape: no demagnetizing field for any of these orderings",
-    "applied": "no energy in an applied field: no field is applied, or no ordering has a net moment",
-}
 
 
 def rank_document(study: Study, ranking: Ranking, options: RankOptions) -> dict[str, Any]:
@@ -69,12 +64,20 @@ def rank_document(study: Study, ranking: Ranking, options: RankOptions) -> dict[
             "sample": study.sample.to_dict(),
             **bound,
             "rows": rows,
-            "zero_parts": {
-                part: reason for part, reason in ZERO_PARTS.items() if not any(r[f"{part}_ueV_per_ion"] for r in rows)
-            },
+            "zero_parts": _zero_parts(rows, bool(np.any(study.sample.applied_T))),
             "notes": [*(home_cell_notes([r.ordering for r in ranking.rows]) if study.probes else []), *ranking.notes],
         },
     )
+
+
+def _zero_parts(rows: Sequence[Mapping[str, Any]], field_applied: bool) -> dict[str, str]:
+    """Parts of the energy that are zero for every ordering, and why."""
+    reasons = {
+        "shape": "no energy of the shape: no demagnetizing field for any of these orderings",
+        "applied": "no energy in an applied field: "
+        + ("no ordering has a net moment along it" if field_applied else "no field is applied"),
+    }
+    return {part: why for part, why in reasons.items() if not any(row[f"{part}_ueV_per_ion"] for row in rows)}
 
 
 def _rank_row(number: int, row: RankingRow, study: Study) -> dict[str, Any]:

@@ -10,7 +10,7 @@ import numpy as np
 from latticedip.checks import FloatArray
 from latticedip.errors import InputError
 from latticedip.observables.coupling_tensor import CouplingTensor, site_couplings, summed
-from latticedip.observables.shift import Rotation, Shift, paramagnetic_shift
+from latticedip.observables.shift import Rotation, Shift, shifts_at
 from latticedip.observables.tensor import PrincipalFrame
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import document
@@ -60,11 +60,18 @@ SHIFT_CAVEAT = (
 )
 
 
+SU_NOTE = (
+    "Digits in brackets are the standard uncertainty of the last ones, from those stated of positions and "
+    "susceptibilities, to first order; everything else counts as exact."
+)
+
+
 def shift_document(
     study: Study,
     *,
     temperatures_K: Sequence[float] = (),
     rotate_about: str | None = None,
+    powder_bins: int | None = None,
     probes: Sequence[str] = (),
     all_equivalent: bool = False,
     tol: float = 1e-10,
@@ -72,10 +79,10 @@ def shift_document(
     """The document of `shift`: one row per point of a probe, its coupling tensors and, with χ given, its shifts.
 
     temperatures_K: where a susceptibility is a table; none: those of the tables. rotate_about: a crystal direction.
-    probes: the names that were asked for; none: all. all_equivalent: as `points_of`.
+    powder_bins: also the line of a powder, in so many bins; None: no line. probes: the names that were asked for; none: all. all_equivalent: as `points_of`.
 
-    Raises StudyError where nothing names the magnetic ions, InputError for a temperature or an axis without a
-    susceptibility or outside its table, and what `site_couplings` raises.
+    Raises StudyError where nothing names the magnetic ions, InputError for a temperature, an axis or a powder without a
+    susceptibility or outside its table, for an axis together with a powder, and what `site_couplings` raises.
     """
     groups, source = magnetic_groups(study)
     temperatures = _temperatures(study, temperatures_K)
@@ -84,6 +91,11 @@ def shift_document(
         if not study.susceptibility:
             raise InputError("--rotate-about needs a susceptibility: add a table [susceptibility] to the study.")
         axis = direction_of(study.crystal, rotate_about, "--rotate-about")
+    if powder_bins is not None:
+        if not study.susceptibility:
+            raise InputError("--powder needs a susceptibility: add a table [susceptibility] to the study.")
+        if axis is not None:
+            raise InputError("--powder and --rotate-about are of a powder and of a crystal. Leave one out.")
     rows: list[dict[str, Any]] = []
     boundaries: list[str] = []
     notes: list[str] = []
@@ -98,7 +110,7 @@ def shift_document(
                 "position": point.position.tolist(),
                 "site": next(iter(couplings.values())).site or None,
                 "couplings": [_coupling_row(study, name, coupling) for name, coupling in couplings.items()],
-                "shifts": [_shift_row(study, shift, axis) for shift in shifts],
+                "shifts": [_shift_row(study, shift, axis, powder_bins) for shift in shifts],
             }
         )
     _group(rows)
@@ -109,6 +121,7 @@ def shift_document(
         options={
             "temperatures_K": list(temperatures_K) or None,
             "rotate_about": rotate_about,
+            "powder_bins": powder_bins,
             "probes": list(probes) or None,
             "orbit": all_equivalent,
             "tol": tol,
@@ -122,9 +135,20 @@ def shift_document(
             "rotate_about": None if axis is None else _direction_row(study, axis),
             "rows": rows,
             "conventions": [*COUPLING_CONVENTIONS, *(SHIFT_CONVENTIONS if shifted else ())],
-            "notes": [*dict.fromkeys(notes), SHIFT_CAVEAT if shifted else COUPLING_CAVEAT],
+            "notes": [*dict.fromkeys(notes), *_su_notes(rows), SHIFT_CAVEAT if shifted else COUPLING_CAVEAT],
         },
     )
+
+
+def _su_notes(rows: Sequence[Mapping[str, Any]]) -> list[str]:
+    """Where the numbers in brackets come from, if there are any."""
+    stated = any(
+        entry[key] is not None
+        for row in rows
+        for entries, key in ((row["couplings"], "dipolar_su_T_per_muB"), (row["shifts"], "shift_su"))
+        for entry in entries
+    )
+    return [SU_NOTE] if stated else []
 
 
 def _temperatures(study: Study, asked: Sequence[float]) -> list[float | None]:
@@ -148,9 +172,7 @@ def _couplings(
 ) -> tuple[dict[str, CouplingTensor], tuple[str, ...]]:
     """Coupling tensor to each kind of ion; shells of contact terms count the ions of all kinds together."""
     sites = sorted(site for group in groups.values() for site in group)
-    parts = site_couplings(
-        study.crystal, point.position, sites, contact=point.probe.contact, displaced=point.displaced, tol=tol
-    )
+    parts = site_couplings(study.crystal, point.position, sites, tol=tol, **_surroundings(point))
     tensors = {
         name: summed(study.crystal, parts, np.searchsorted(sites, sorted(group)), (name,), study.sample)
         for name, group in groups.items()
@@ -159,19 +181,27 @@ def _couplings(
 
 
 def _shifts(study: Study, point: Point, temperatures: Sequence[float | None], tol: float) -> list[Shift]:
-    return [
-        paramagnetic_shift(
-            study.crystal,
-            point.position,
-            study.susceptibility,
-            temperature_K=temperature,
-            sample=study.sample,
-            contact=point.probe.contact,
-            displaced=point.displaced,
-            tol=tol,
-        )
-        for temperature in temperatures
-    ]
+    if not temperatures:
+        return []
+    return shifts_at(
+        study.crystal,
+        point.position,
+        study.susceptibility,
+        temperatures,
+        sample=study.sample,
+        tol=tol,
+        **_surroundings(point),
+    )
+
+
+def _surroundings(point: Point) -> dict[str, Any]:
+    """What a point brings to the sums: its contact terms, spread, displaced neighbours and uncertainty."""
+    return {
+        "contact": point.probe.contact,
+        "spread": point.spread,
+        "displaced": point.displaced,
+        "position_su": point.position_su,
+    }
 
 
 def _coupling_row(study: Study, name: str, coupling: CouplingTensor) -> dict[str, Any]:
@@ -185,7 +215,7 @@ def _coupling_row(study: Study, name: str, coupling: CouplingTensor) -> dict[str
     }
 
 
-def _shift_row(study: Study, shift: Shift, axis: FloatArray | None) -> dict[str, Any]:
+def _shift_row(study: Study, shift: Shift, axis: FloatArray | None, powder_bins: int | None) -> dict[str, Any]:
     plain = shift.to_dict()
     kept = {key: value for key, value in plain.items() if key not in ("position", "site", "boundary", "notes")}
     row = {
@@ -195,6 +225,17 @@ def _shift_row(study: Study, shift: Shift, axis: FloatArray | None) -> dict[str,
     }
     field = float(np.linalg.norm(study.sample.applied_T))
     row["shift_along_applied"] = shift.along(study.sample.applied_T) if field > 0 else None
+    su = shift.su_along(study.sample.applied_T) if field > 0 else np.nan
+    row["shift_along_applied_su"] = None if np.isnan(su) else su
+    if powder_bins is not None:
+        limits, density = shift.powder.binned(powder_bins)
+        row["powder"] = {
+            "shift_limits": limits.tolist(),
+            "density": density.tolist(),
+            "share": (density * np.diff(limits)).tolist(),
+            "mean": shift.powder.mean,
+            "rms_deviation": float(np.sqrt(shift.powder.variance)),
+        }
     if axis is not None:
         turned: Rotation = shift.rotation(axis, np.arange(0.0, 360.0 + STEP_DEG / 2, STEP_DEG))
         row["rotation"] = {**turned.to_dict(), "start_abc": _direction_row(study, turned.start)["abc"]}
@@ -230,7 +271,9 @@ def _group(rows: list[dict[str, Any]]) -> None:
 
 
 def shift_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
-    """The rows of a shift document for CSV: shifts at every angle, or shifts, or else coupling tensors."""
+    """The rows of a shift document for CSV: shifts at every angle, or the bins of a powder line, or shifts, or else
+    coupling tensors.
+    """
     table: list[dict[str, Any]] = []
     for row in doc["rows"]:
         head = {key: row[key] for key in ("probe", "particle", "position", "site", "multiplicity", "distinct")}
@@ -241,9 +284,20 @@ def shift_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
                 boundary = doc["boundary"]
                 table += [{**lead, "angle_deg": angle, "shift": k, "boundary": boundary} for angle, k in pairs]
                 continue
+            if "powder" in shift:
+                line = shift["powder"]
+                bins = zip(line["shift_limits"], line["shift_limits"][1:], line["share"], line["density"], strict=False)
+                table += [
+                    {**lead, "shift_from": low, "shift_to": high, "share": share, "density": density}
+                    | {"boundary": doc["boundary"]}
+                    for low, high, share, density in bins
+                ]
+                continue
             line = {**lead, "shift_isotropic": shift["shift_isotropic"]}
+            line["shift_isotropic_su"] = shift["shift_isotropic_su"]
             line |= _spread("shift", shift, SHIFT_PARTS, "")
             line["shift_along_applied"] = shift["shift_along_applied"]
+            line["shift_along_applied_su"] = shift["shift_along_applied_su"]
             table.append({**line, "boundary": doc["boundary"]})
         for coupling in [] if row["shifts"] else row["couplings"]:
             line = {**head, "ion": coupling["ion"], "ions_per_cell": coupling["ions_per_cell"]}
@@ -258,6 +312,8 @@ def _spread(name: str, entry: dict[str, Any], parts: Mapping[str, str], unit: st
     letters = ("xx", "yy", "zz")
     for word, value in zip(letters, entry[f"{name}_principal_values{unit}"], strict=True):
         line[f"{name}_principal_{word}{unit}"] = value
+    for word, su in zip(letters, entry[f"{name}_principal_values_su{unit}"] or [None] * 3, strict=True):
+        line[f"{name}_principal_{word}_su{unit}"] = su
     for word, axis in zip(letters, entry[f"{name}_principal_axes"], strict=True):
         line[f"{name}_axis_{word}"] = axis
     line[f"{name}_asymmetry"] = entry[f"{name}_asymmetry"]

@@ -166,7 +166,8 @@ def _moments(sites: Sequence[Magnetic]) -> str:
 
 def _orderings(crystal: Crystal, sites: Sequence[Magnetic], source: str, ordering: Ordering | None) -> str:
     lines = [
-        "# Candidate orderings. `along` is a direction along the axes a, b, c; `latticedip rank --rotate` turns each",
+        "# Candidate orderings. `along` counts along unit vectors parallel to a, b, c (so [1, 1, 0] is the lattice",
+        "# direction a + b only where a and b are equally long); `latticedip rank --rotate` turns each",
         "# pattern to its best direction. `signs` holds one sign per atom of a site (of the primitive cell), all + if",
         "# left out. Add, change or remove candidates as you like.",
     ]
@@ -307,7 +308,7 @@ _SAMPLE = """\
 # every ordering with a net moment.
 # [sample]
 # ellipsoid = [1.0, 1.0, 0.3]  # or prism, cylinder = [diameter, height], sphere = true, plate = true, needle = true
-# axes = ["a", "b*"]           # crystal directions of the body's first two axes
+# axes = ["a", "b*"]           # directions of the body's first two axes; vectors count as in `along`
 # applied_T = [0, 0, 0]        # Cartesian
 """
 
