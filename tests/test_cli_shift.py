@@ -13,6 +13,7 @@ from click.testing import CliRunner, Result
 from scipy import constants
 
 from latticedip.cli.main import main
+from latticedip.report.su import format_su
 
 CELL_A = 4.0
 CUBE = f"""data_cube
@@ -212,14 +213,129 @@ def test_equivalent_positions(folder: Path) -> None:
     np.testing.assert_allclose(traceless, np.zeros((3, 3)), atol=1e-8)
 
 
-def test_a_contact_tensor_is_not_carried_to_equivalent_positions(folder: Path) -> None:
+def test_tensors_and_uncertainties_turn_with_equivalent_positions(folder: Path) -> None:
     tensor = "[[0.1, 0, 0], [0, 0, 0], [0, 0, 0]]"
-    probe = '[[probe]]\nname = "muon"\nposition = [0.3, 0, 0]\n'
-    write(MOMENTS, probe, f"contact = [{{ shell = 1, coupling_T_per_muB = {tensor} }}]\n")
-    assert refused("--orbit", "--probe", "muon") == (
-        "Error: probe 'muon' has a contact tensor, which holds at its own position only, so its equivalent positions "
-        "cannot be taken. Give the coupling as a number, or list the positions as probes.\n"
-    )
+    probe = '[[probe]]\nname = "muon"\nposition = [0.3, 0, 0]\nposition_su = [0.002, 0, 0]\n'
+    spread = "covariance_A2 = [[0.02, 0, 0], [0, 0.01, 0], [0, 0, 0.01]]\n"
+    write(MOMENTS, probe, spread, f"contact = [{{ shell = 1, coupling_T_per_muB = {tensor} }}]\n")
+    rows = document("--orbit", "--probe", "muon")["rows"]
+    assert len(rows) == 6
+    alone = document("--probe", "muon")["rows"][0]["couplings"][0]
+    for row in rows:
+        (coupling,) = row["couplings"]
+        along = int(np.argmax(np.abs(np.array(row["position"]) - np.round(row["position"]))))
+        # From the axis of the position to x, with the other two axes after it.
+        order = np.roll(range(3), -along)
+        for key in ("contact_T_per_muB", "dipolar_T_per_muB", "dipolar_su_T_per_muB"):
+            turned = np.array(coupling[key])[np.ix_(order, order)]
+            np.testing.assert_allclose(turned, alone[key], atol=1e-9)
+    assert alone["dipolar_su_T_per_muB"][0][0] > 0
+
+
+def test_a_moving_probe(folder: Path) -> None:
+    from latticedip import coupling_tensor, read_crystal
+
+    probe = '[[probe]]\nname = "muon"\nposition = [0.3, 0.1, 0.2]\n'
+    write(MOMENTS, probe, "Uij = [0.02, 0.01, 0.03, 0.005, 0, 0]\n")
+    doc = document("--probe", "muon")
+    spread = [[0.02, 0.005, 0], [0.005, 0.01, 0], [0, 0, 0.03]]
+    expected = coupling_tensor(read_crystal("cube.cif"), (0.3, 0.1, 0.2), magnetic="Mn", spread=spread)
+    np.testing.assert_allclose(doc["rows"][0]["couplings"][0]["dipolar_T_per_muB"], expected.dipolar, atol=1e-12)
+    assert any(note.startswith("muon: field averaged over a Gaussian spread of ") for note in doc["notes"])
+    # The tensor of an atom is turned for the others: along its own bond each time.
+    write(MOMENTS)
+    text = Path("study.toml").read_text(encoding="utf-8")
+    Path("study.toml").write_text(text.replace('site = "F"', 'site = "F1"\nspread_A = 0.1'), encoding="utf-8")
+    found = document("--probe", "fluorine")["rows"][0]["couplings"][0]["dipolar_T_per_muB"]
+    wide = coupling_tensor(read_crystal("cube.cif"), (0.5, 0, 0), magnetic="Mn", spread=0.1)
+    np.testing.assert_allclose(found, wide.dipolar, atol=1e-12)
+
+
+def test_the_line_of_a_powder(folder: Path) -> None:
+    write(TABLE, NEEDLE)
+    doc = document("--powder", "--bins", "50", "--temperature", "100", "--probe", "fluorine")
+    (shift,) = doc["rows"][0]["shifts"]
+    line = shift["powder"]
+    assert len(line["share"]) == 50 and sum(line["share"]) == pytest.approx(1, abs=1e-12)
+    widths = np.diff(line["shift_limits"])
+    np.testing.assert_allclose(np.array(line["density"]) * widths, line["share"], rtol=1e-12)
+    assert line["mean"] == pytest.approx(shift["shift_isotropic"], abs=1e-12)
+    middle = np.array(line["shift_limits"][:-1]) + widths / 2
+    assert middle @ line["share"] == pytest.approx(line["mean"], abs=0.02 * np.ptp(shift["powder_edges"]))
+    rows = list(csv.DictReader(run("--powder", "--bins", "50", "--csv", "-").stdout.splitlines()))
+    assert len(rows) == 4 * 3 * 50
+    assert {"shift_from", "shift_to", "share", "density", "temperature_K", "boundary"} <= set(rows[0])
+    text = run("--powder", "--temperature", "100").stdout
+    assert "Line of a powder" in text and "singularity" in text
+    assert max(len(part) for part in text.splitlines()) <= 80
+
+
+def test_a_powder_has_no_shift_but_the_isotropic_one(folder: Path) -> None:
+    """Without contact, in a sphere: the dipolar part has no trace, so the line has its mean at zero."""
+    write(CHI, "[sample]\nsphere = true\n")
+    for row in document("--powder", "--probe", "fluorine")["rows"]:
+        (shift,) = row["shifts"]
+        assert np.ptp(shift["powder_edges"]) > 1e-4
+        assert abs(shift["powder"]["mean"]) < 1e-12
+
+
+@pytest.mark.parametrize(
+    ("table", "arguments"),
+    [
+        (TABLE, []),
+        (TABLE, ["--rotate-about", "c"]),
+        (TABLE, ["--powder"]),
+        (CHI, ["--powder"]),
+        (CHI, ["--rotate-about", "1 1 0"]),
+    ],
+    ids=["temperature", "rotation", "powders", "powder", "one rotation"],
+)
+def test_pictures(folder: Path, table: str, arguments: list[str]) -> None:
+    pytest.importorskip("matplotlib")
+    write(table, NEEDLE)
+    for suffix, start in (("png", b"\x89PNG"), ("svg", b"<?xml"), ("pdf", b"%PDF")):
+        result = run(*arguments, "--plot", f"shift.{suffix}")
+        assert (result.exit_code, result.stderr) == (0, f"Wrote shift.{suffix}.\n")
+        assert Path(f"shift.{suffix}").read_bytes().startswith(start)
+
+
+def test_uncertainties_on_screen_and_in_files(folder: Path) -> None:
+    uncertain = CUBE.replace("F1 F 0.5 0 0\n", "F1 F 0.5(0) 0.010(2) 0\n")
+    Path("cube.cif").write_text(uncertain, encoding="utf-8")
+    write('[susceptibility]\nMn = { chi = 0.01, chi_su = 0.0002, unit = "cm3/mol" }\n', NEEDLE, "applied_T = [0, 0, 1]\n")
+    doc = document()
+    contact = 0.05 * 8 * INDUCED_MUB_PER_T
+    (shift,) = doc["rows"][0]["shifts"]
+    assert shift["shift_isotropic_su"] == pytest.approx(0.02 * contact, rel=1e-6)
+    assert shift["shift_along_applied_su"] > 0
+    fluorine = doc["rows"][1]["couplings"][0]
+    assert max(fluorine["dipolar_principal_values_su_T_per_muB"]) > 0
+    assert sum(note.startswith("Digits in brackets are the standard uncertainty") for note in doc["notes"]) == 1
+    text = run().stdout
+    assert f"isotropic  {format_su(100 * shift['shift_isotropic'], 100 * shift['shift_isotropic_su'])} %" in text
+    along = format_su(100 * shift["shift_along_applied"], 100 * shift["shift_along_applied_su"])
+    assert f"along the applied field  {along} %" in text
+    rows = list(csv.DictReader(run("--csv", "-").stdout.splitlines()))
+    assert float(rows[0]["shift_isotropic_su"]) == shift["shift_isotropic_su"]
+    assert float(rows[0]["shift_principal_zz_su"]) == shift["shift_principal_values_su"][2]
+    # Nothing stated: no brackets, empty cells.
+    Path("cube.cif").write_text(CUBE, encoding="utf-8")
+    write(CHI, NEEDLE)
+    doc = document()
+    assert doc["rows"][0]["shifts"][0]["shift_isotropic_su"] is None
+    assert not any(note.startswith("Digits in brackets") for note in doc["notes"])
+    rows = list(csv.DictReader(run("--csv", "-").stdout.splitlines()))
+    assert rows[0]["shift_isotropic_su"] == "" and rows[0]["shift_principal_zz_su"] == ""
+
+
+def test_a_table_of_uncertain_susceptibilities(folder: Path) -> None:
+    write(TABLE.replace("chi = [", "chi_su = [0.002, 0.001, 0.001], chi = ["))
+    shifts = document("--probe", "centre")["rows"][0]["shifts"]
+    relative = [s["shift_isotropic_su"] / s["shift_isotropic"] for s in shifts]
+    assert relative == pytest.approx([0.05, 0.05, 0.1], rel=1e-6)
+    lines = run("--probe", "centre").stdout.splitlines()
+    shown = format_su(100 * shifts[0]["shift_isotropic"], 100 * shifts[0]["shift_isotropic_su"])
+    assert any(line.split()[:1] == ["50"] and shown in line for line in lines)
 
 
 def test_shells_of_contact_terms_count_all_kinds_of_ions(folder: Path) -> None:
@@ -285,6 +401,29 @@ def test_the_ions_of_the_orderings_count_where_nothing_else_names_them(folder: P
             ["--rotate-about", "d"],
             "--rotate-about: got 'd', expected a crystal direction: a, b, c, a*, b*, c*, or three components along the "
             'axes a, b, c, such as "1 1 0".',
+        ),
+        ([MOMENTS], ["--powder"], "--powder needs a susceptibility: add a table [susceptibility] to the study."),
+        (
+            [CHI],
+            ["--powder", "--rotate-about", "c"],
+            "--powder and --rotate-about are of a powder and of a crystal. Leave one out.",
+        ),
+        (
+            [CHI],
+            ["--plot", "shift.png"],
+            "there is no curve of a shift to draw. Ask for --rotate-about or --powder, or state chi as a table of "
+            "temperatures in [susceptibility].",
+        ),
+        ([CHI], ["--plot", "shift.gif"], "a picture ends in .png, .svg, .pdf, got 'shift.gif'."),
+        (
+            [CHI.replace("0.01,", "0.01, chi_su = -1,")],
+            [],
+            "study.toml: `susceptibility.Mn.chi_su`: chi_su must hold numbers of at least 0, got -1.0.",
+        ),
+        (
+            [TABLE.replace("chi = [", "chi_su = [0.1], chi = [")],
+            [],
+            "study.toml: `susceptibility.Mn.chi_su`: chi_su must have shape (3), got (1,).",
         ),
         ([CHI], ["--rotate-about", "0 0 0"], "--rotate-about: got '0 0 0': [0, 0, 0] has no direction."),
         (

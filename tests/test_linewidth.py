@@ -299,6 +299,54 @@ def test_displacing_one_element_or_back_again():
     assert by[2]["23Na"] > by[0]["23Na"]
 
 
+def test_like_spins_of_equivalent_sites_only():
+    """Where inequivalent sites of the probe's isotope do not flip with it they count as unlike: a ninth less of 9."""
+    crystal = ld.Crystal(np.diag([4.0, 4.0, 9.0]), [[0, 0, 0], [0.5, 0.5, 0.2], [0.5, 0.5, 0.8]], ["F"] * 3)
+    assert len({tuple(np.round(x, 6)) for x in ld.orbit(crystal, (0.5, 0.5, 0.2))}) == 2
+    together = ld.linewidth(crystal, (0.5, 0.5, 0.2), particle="19F", direction=[0, 0, 1])
+    apart = ld.linewidth(crystal, (0.5, 0.5, 0.2), particle="19F", direction=[0, 0, 1], like="site")
+    own, other = apart.contributions
+    assert (own.isotope, own.like, own.atoms_per_cell) == ("19F", True, 2.0)
+    assert (other.isotope, other.like, other.atoms_per_cell) == ("19F", False, 1.0)
+    assert together.contributions[0].second_moment_T2 == pytest.approx(
+        own.second_moment_T2 + 9 / 4 * other.second_moment_T2, rel=1e-12
+    )
+    # Of one kind each: the sums of crystals that hold one kind of site alone, the probe's place kept.
+    lone = ld.Crystal(crystal.cell, [[0, 0, 0]], ["F"])
+    unlike = ld.linewidth(lone, (0.5, 0.5, 0.2), particle="19F", direction=[0, 0, 1], like="site")
+    assert other.second_moment_T2 == pytest.approx(unlike.second_moment_T2, rel=1e-12)
+    assert not any("sits on" in note for note in apart.notes)
+    # The field in zero field knows no flips, and a muon no like spins.
+    np.testing.assert_allclose(apart.zero_tensor_T2, together.zero_tensor_T2, rtol=1e-12)
+    widths = [ld.linewidth(crystal, (0.25, 0.5, 0), particle="muon", like=word) for word in ("isotope", "site")]
+    assert widths[0].second_moment_T2 == widths[1].second_moment_T2
+    with pytest.raises(InputError) as caught:
+        ld.linewidth(crystal, (0, 0, 0), particle="19F", like="spin")
+    assert str(caught.value) == 'like must be "isotope" or "site", got \'spin\'.'
+
+
+def test_width_of_a_partly_occupied_crystal_is_that_of_random_ones():
+    """⟨B²⟩ of 4000 random fillings of a finite cluster: the sum of squares, each with its occupancy."""
+    rng = np.random.default_rng(11)
+    places = rng.uniform(0, 1, (12, 3)) * 0.8 + 0.1
+    occupancies = rng.uniform(0.1, 0.9, 12)
+    edges, probe = 20 * np.eye(3), (0.5, 0.5, 0.02)
+    whole = ld.Crystal(edges, places, ["F"] * 12, occupancies=occupancies, pbc=(False,) * 3)
+    mean = ld.linewidth(whole, probe, particle="muon", direction=[0, 0, 1]).second_moment_T2
+    single = np.array(
+        [
+            ld.linewidth(
+                ld.Crystal(edges, place[None], ["F"], pbc=(False,) * 3), probe, particle="muon", direction=[0, 0, 1]
+            ).second_moment_T2
+            for place in places
+        ]
+    )
+    filled = rng.uniform(size=(4000, 12)) < occupancies
+    sums = filled @ single
+    assert mean == pytest.approx(occupancies @ single, rel=1e-12)
+    assert mean == pytest.approx(sums.mean(), abs=4 * sums.std() / np.sqrt(4000))
+
+
 def test_result_as_a_dict():
     document = ld.linewidth(
         pair_crystal("Au", "F", 1.9), (0, 0, 0), particle="muon", nuclei="19F", direction=[0, 0, 3]

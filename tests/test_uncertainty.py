@@ -8,8 +8,8 @@ import pytest
 import latticedip as ld
 from latticedip.crystal.model import Operations
 from latticedip.errors import InputError
-from latticedip.ordering.model import ParentTransform, Reference
-from latticedip.crystal.uncertain import carried_su, parameter_steps, position_moves, tied_positions
+from latticedip.ordering.model import ParentTransform, Reference, SizeUncertainty
+from latticedip.crystal.uncertain import tied_positions
 from latticedip.physics.uncertainty import field_uncertainty, tied_moments
 from latticedip.report.su import format_su
 
@@ -177,15 +177,139 @@ def test_a_vanishing_field_has_no_direction():
     assert np.abs(found.field_su_T[0]).max() < 1e-10
 
 
-def test_modulated_moments_are_left_open_with_a_note():
+def along_waves(k, phases, moments=MOMENTS, su=MOMENT_SU) -> ld.Ordering:
+    """Amplitudes along one line for every site, each with a phase of its own."""
+    there = crystal()
+    amplitudes = there.to_cartesian(moments) * np.exp(1j * np.asarray(phases))[:, None]
+    return ld.Ordering(there, amplitudes, k, moment_su=su)
+
+
+@pytest.mark.parametrize("spread", [None, TILTED], ids=["point", "tilted"])
+@pytest.mark.parametrize("phases", [(0, 0, 0), (0.3, -1.2, 2.5)], ids=["real", "with phases"])
+def test_amplitudes_of_a_wave_by_finite_differences(phases, spread):
+    k = (0.21, -0.34, 0.11)
+    probes = [probe_of(spread=spread), ld.Probe(site="O", particle="17O", contact=CONTACT)]
+    base = ld.local_field(along_waves(k, phases), probes, sample=SAMPLE)
+    covariance = np.zeros((2, 3, 3))
+    for site, axis in np.ndindex(3, 3):
+        if np.isfinite(MOMENT_SU[site, axis]):
+            moved = MOMENTS.copy()
+            moved[site, axis] += MOMENT_SU[site, axis]
+            change = ld.local_field(along_waves(k, phases, moved), probes, sample=SAMPLE).total - base.total
+            covariance += change[:, :, None] * change[:, None, :]
+    np.testing.assert_allclose(base.uncertainty.covariance_T2, covariance, rtol=1e-8, atol=1e-14)
+    assert np.all(base.size_su_T > 0) and base.uncertainty.notes == ()
+
+
+def test_still_moments_beside_a_wave():
+    """Sites that have their moment at one of several k keep their uncertainty."""
+    there = crystal()
+    still, moving = there.to_cartesian(MOMENTS), there.to_cartesian(MOMENTS) * np.exp(0.4j)
+    still[1], moving[0] = 0, 0
+    alone = [
+        ld.Ordering(there, part, k, moment_su=MOMENT_SU) for part, k in ((still, (0, 0, 0)), (moving, (0.2, 0.1, 0)))
+    ]
+    covered = np.array([[True] * 3, [True] * 3, [False] * 3])
+    both = ld.Ordering(there, [still, moving], [(0, 0, 0), (0.2, 0.1, 0)], moment_su=np.where(covered, MOMENT_SU, 0))
+    found = ld.local_field(both, POINT[None]).uncertainty.covariance_T2
+    parts = [ld.local_field(one, POINT[None]).uncertainty.covariance_T2 for one in alone]
+    np.testing.assert_allclose(found, parts[0] + parts[1], rtol=1e-9)
+
+
+@pytest.mark.parametrize(
+    "components",
+    [MOMENTS + 1j * MOMENTS[::-1], np.array([MOMENTS, 0.5 * MOMENTS])],
+    ids=["turning", "several k"],
+)
+def test_moments_that_turn_are_left_open_with_a_note(components):
     note = (
-        "standard uncertainties of moments are stated, but with more than one propagation vector, or one where "
-        "components have a phase, they do not say which component they belong to: field uncertainties are left open"
+        "standard uncertainties are stated of moments that turn along a propagation vector, or have components at "
+        "several: they do not say which component they belong to, so that field uncertainties are left open"
     )
-    wave = ld.Ordering(crystal(), MOMENTS, (0.2, 0, 0), moment_su=MOMENT_SU)
+    k = [(0.2, 0, 0), (0.3, 0, 0)] if np.ndim(components) == 3 else (0.2, 0, 0)
+    wave = ld.Ordering(crystal(), components, k, moment_su=MOMENT_SU)
     found = ld.local_field(wave, ld.Probe(POINT, position_su=(1e-3, 0, 0)))
     assert np.isnan(found.size_su_T[0]) and found.uncertainty.notes == (note,)
     assert found.to_dict()["notes"][-1] == note
+
+
+@pytest.mark.parametrize("several", [False, True], ids=["helix", "several k"])
+def test_a_size_is_one_parameter_at_any_k(several):
+    """Every component of the atoms of one size is multiplied by 1 ± su/size."""
+    there = crystal()
+    groups = (SizeUncertainty((0, 2), 0.05), SizeUncertainty((1,), 0.1))
+    helix = MOMENTS + 1j * MOMENTS[::-1]
+    k = [(0.2, 0.1, 0), (0.13, 0, 0.4)] if several else (0.2, 0.1, 0)
+
+    def build(factors=(1.0, 1.0, 1.0), size_su=()):
+        parts = helix * np.array(factors)[:, None]
+        return ld.Ordering(there, [parts, 0.3 * parts[:, ::-1]] if several else parts, k, size_su=size_su)
+
+    probe = probe_of()
+    base = ld.local_field(build(size_su=groups), probe, sample=SAMPLE)
+    covariance = np.zeros((3, 3))
+    for factors in ((1.05, 1, 1.05), (1, 1.1, 1)):
+        change = (ld.local_field(build(factors), probe, sample=SAMPLE).total - base.total)[0]
+        covariance += np.outer(change, change)
+    np.testing.assert_allclose(base.uncertainty.covariance_T2[0], covariance, rtol=1e-8, atol=1e-14)
+    # Turning all moments leaves the sizes.
+    turned = build(size_su=groups).rotated(np.diag([1.0, -1, -1]))
+    assert turned.size_su == groups and np.isfinite(ld.local_field(turned, POINT[None]).size_su_T[0])
+
+
+def test_moments_on_a_line_that_symmetry_fixes_are_one_parameter():
+    """m = (1, 1, 0) m on a diagonal twofold axis: its size is as uncertain as the field, not less by √2."""
+    cubic = ld.Crystal(4 * np.eye(3), [[0, 0, 0]], ["Mn"])
+    su = [[0.1, 0.1, np.nan]]
+    found = ld.local_field(ld.Ordering(cubic, [[1.0, 1.0, 0]], moment_su=su), [[0.3, 0.1, 0.2]])
+    assert found.size_su_T[0] == pytest.approx(0.1 * found.size_T[0], rel=1e-9)
+    # A third component that symmetry forbids, and that is stated all the same: the refinement had less symmetry.
+    free = ld.local_field(ld.Ordering(cubic, [[1.0, 1.0, 0]], moment_su=[[0.1, 0.1, 0.1]]), [[0.3, 0.1, 0.2]])
+    tensor = ld.dipole_tensor(4 * np.eye(3), [[1.2, 0.4, 0.8]])[0]
+    np.testing.assert_allclose(free.uncertainty.covariance_T2[0], 0.01 * tensor @ tensor.T, rtol=1e-8)
+
+
+def test_sizes_of_a_study_carry_their_uncertainty(tmp_path):
+    from tests.test_study import study_of
+
+    text = """[moments]
+Co1 = { size = 2, su = 0.1 }
+[[ordering]]
+name = "one"
+k = [0, 0, 0]
+along = [0, 1, 1]
+[[ordering]]
+name = "wave"
+k = [0.213, 0, 0]
+along = [0, 0, 1]
+[[ordering]]
+name = "written out"
+k = [0, 0, 0]
+cosine = { Co1 = [0, 0, 2] }
+[[probe]]
+name = "A"
+position = [0.1, 0.2, 0.3]
+"""
+    study = study_of(tmp_path, text)
+    assert (dict(study.moments), dict(study.moments_su)) == ({"Co1": 2.0}, {"Co1": 0.1})
+    for ordering in study.orderings[:2]:
+        found = ld.local_field(ordering, study.probes)
+        np.testing.assert_allclose(found.size_su_T, 0.05 * found.size_T, rtol=1e-9)
+    ions = study.orderings[0].is_magnetic
+    moments = study.crystal.to_crystal_axes(study.orderings[0].moments()[0])
+    np.testing.assert_allclose(study.orderings[0].moment_su[ions], 0.05 * np.abs(moments[ions]), atol=1e-12)
+    assert np.isnan(study.orderings[0].moment_su[~ions]).all()
+    assert np.isnan(ld.local_field(study.orderings[2], study.probes).size_su_T).all()
+
+
+def test_many_rows_are_worked_on_in_blocks(monkeypatch):
+    from latticedip.physics import uncertainty
+
+    points = np.random.default_rng(3).uniform(0.2, 0.8, (7, 3)) * [1, 0.1, 1] + [0, 0.6, 0]
+    probes = [ld.Probe(p, position_su=(1e-3, 0, 0), displaced=DISPLACED, contact=CONTACT, name=str(p)) for p in points]
+    whole = ld.local_field(ordering_of(), probes).uncertainty.covariance_T2
+    monkeypatch.setattr(uncertainty, "BLOCK", 6)
+    np.testing.assert_allclose(ld.local_field(ordering_of(), probes).uncertainty.covariance_T2, whole, rtol=1e-12)
 
 
 def test_a_position_is_uncertain_in_the_cell_it_is_given_in():

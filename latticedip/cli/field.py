@@ -9,8 +9,10 @@ import click
 
 from latticedip.cli.options import (
     deliver,
+    draw_to,
     ordering_option,
     output_options,
+    plot_option,
     probe_option,
     study_argument,
     tol_option,
@@ -31,6 +33,7 @@ if TYPE_CHECKING:
     "size and angles (theta from z, phi from x in the xy plane).",
 )
 @click.option("--unit", type=click.Choice(["T", "G"]), default="T", show_default=True, help="Tesla or gauss.")
+@plot_option
 @ordering_option
 @probe_option
 @tol_option
@@ -39,6 +42,7 @@ def field(
     study: Path,
     axes: Axes,
     unit: Unit,
+    plot_path: Path | None,
     orderings: tuple[str, ...],
     probes: tuple[str, ...],
     tol: float,
@@ -51,12 +55,21 @@ def field(
     Example:
       latticedip field study.toml --axes crystal --csv fields.csv
       latticedip field study.toml --ordering "ferromagnet" --probe "muon A"
+      latticedip field study.toml --plot fields.pdf
     """
     from latticedip.report.field import field_text
     from latticedip.study import tasks
     from latticedip.study.fields import field_table
 
+    if plot_path is not None:
+        from latticedip.report.plots import check_plot
+
+        check_plot(plot_path)
     document = tasks.field(tasks.open_study(study), axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol)
+    if plot_path is not None:
+        from latticedip.report.plots import draw_field
+
+        draw_to(plot_path, document, draw_field)
     deliver(
         document,
         rows=lambda: field_table(document),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Literal
 
 import click
 
@@ -23,6 +24,14 @@ from latticedip.cli.options import deliver, orbit_option, output_options, probe_
     metavar="NAME",
     help="Count this isotope (63Cu) or element (Cu) only; may be given several times.",
 )
+@click.option(
+    "--like",
+    type=click.Choice(["isotope", "site"]),
+    default="isotope",
+    show_default=True,
+    help="Which spins of the probe's own isotope are like spins: all, or those on sites that symmetry makes equal to "
+    "its own (where shift or quadrupole splitting tells the others apart).",
+)
 @probe_option
 @orbit_option
 @output_options
@@ -30,6 +39,7 @@ def linewidth(
     study: Path,
     direction: str | None,
     nuclei: tuple[str, ...],
+    like: Literal["isotope", "site"],
     probes: tuple[str, ...],
     orbit: bool,
     as_json: bool,
@@ -56,7 +66,7 @@ def linewidth(
     from latticedip.study.linewidths import linewidth_table
 
     document = tasks.linewidth(
-        tasks.open_study(study), direction=direction, nuclei=nuclei, probes=probes, all_equivalent=orbit
+        tasks.open_study(study), direction=direction, nuclei=nuclei, like=like, probes=probes, all_equivalent=orbit
     )
     deliver(
         document,

@@ -25,7 +25,7 @@ from latticedip.errors import LatticedipError, near_match
 #: Subcommands in the order in which a user meets them; each is found in the module of its name.
 COMMANDS = (
     "start", "show", "field", "rank", "directions", "propose", "modes", "batch", "shift", "linewidth", "spectrum",
-    "demag",
+    "report", "demag",
 )  # fmt: skip
 
 EPILOG = """\b

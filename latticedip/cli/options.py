@@ -119,6 +119,16 @@ def plot_option(function: F) -> F:
     )(function)
 
 
+def view_option(function: F) -> F:
+    """--view AXIS, where a drawing is seen from."""
+    return click.option(
+        "--view",
+        metavar="AXIS",
+        help="Where the drawing is seen from: a, b, c, a*, b*, c* or components along a, b, c such as "
+        '"1 1 0"; "8 3 2" without it.',
+    )(function)
+
+
 def orbit_option(function: F) -> F:
     """Whether a position stands for all that are equivalent to it."""
     return click.option(
@@ -139,6 +149,15 @@ def output_options(function: F) -> F:
         help="Also write the rows to a CSV file with every digit; - writes them to stdout instead of the table.",
     )(function)
     return click.option("--json", "as_json", is_flag=True, help="Print a JSON document instead of the table.")(function)
+
+
+def draw_to(path: Path, document: Mapping[str, Any], draw: Callable[[Mapping[str, Any], Path], None]) -> None:
+    """Draw a document into a file and say so; InputError where that is one of the files the document was made from."""
+    from latticedip.study.documents import spare_inputs
+
+    spare_inputs(path, document)
+    draw(document, path)
+    click.echo(f"Wrote {path}.", err=True)
 
 
 def deliver(

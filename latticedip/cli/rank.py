@@ -6,7 +6,15 @@ from pathlib import Path
 
 import click
 
-from latticedip.cli.options import deliver, ordering_option, output_options, study_argument, tol_option
+from latticedip.cli.options import (
+    deliver,
+    draw_to,
+    ordering_option,
+    output_options,
+    plot_option,
+    study_argument,
+    tol_option,
+)
 
 
 @click.command(short_help="Rank orderings by their dipolar energy.")
@@ -34,6 +42,7 @@ from latticedip.cli.options import deliver, ordering_option, output_options, stu
     show_default=True,
     help="Shells of distance listed by --parts.",
 )
+@plot_option
 @ordering_option
 @tol_option
 @output_options
@@ -43,6 +52,7 @@ def rank(
     bound: bool | None,
     parts: bool,
     shells: int,
+    plot_path: Path | None,
     orderings: tuple[str, ...],
     tol: float,
     as_json: bool,
@@ -56,7 +66,7 @@ def rank(
 
     \b
     Example:
-      latticedip rank study.toml --rotate
+      latticedip rank study.toml --rotate --plot ranking.pdf
       latticedip rank study.toml --ordering "ferromagnet" --ordering "layers"
       latticedip rank study.toml --parts --shells 6
     """
@@ -65,8 +75,16 @@ def rank(
     from latticedip.study.rank_options import RankOptions
     from latticedip.study.rankings import rank_table
 
+    if plot_path is not None:
+        from latticedip.report.plots import check_plot
+
+        check_plot(plot_path)
     options = RankOptions(rotate, bound, parts, shells, orderings, tol)
     document = tasks.rank(tasks.open_study(study), options)
+    if plot_path is not None:
+        from latticedip.report.plots import draw_rank
+
+        draw_to(plot_path, document, draw_rank)
     deliver(
         document,
         rows=lambda: rank_table(document),

@@ -6,23 +6,29 @@ from pathlib import Path
 
 import click
 
-from latticedip.cli.options import block_option, deliver, output_options
+from latticedip.cli.options import block_option, deliver, draw_to, output_options, plot_option, view_option
 
 
 @click.command(short_help="Say what was understood of a structure or a study.")
 @click.argument("file", type=click.Path(path_type=Path), metavar="FILE|STUDY")
 @block_option
+@plot_option
+@view_option
 @output_options
-def show(file: Path, block: str | None, as_json: bool, csv_path: Path | None) -> None:
+def show(
+    file: Path, block: str | None, plot_path: Path | None, view: str | None, as_json: bool, csv_path: Path | None
+) -> None:
     """Say what was understood of a structure file or a study (a name that ends in .toml).
 
     Cell, sites, moments in every cell of a period, nearest magnetic neighbours with the dipolar scale, probes,
     sample, warnings. Atoms are listed in the order in which signs and amplitudes of a study count. The CSV file
-    holds the moments or, where there are none, the atoms.
+    holds the moments or, where there are none, the atoms. The picture shows cell, moments and probes with their
+    fields, seen from --view.
 
     \b
     Example:
       latticedip show study.toml
+      latticedip show study.toml --plot orderings.pdf --view "1 1 0"
     """
     from latticedip.report.show import show_text
     from latticedip.study import tasks
@@ -30,7 +36,17 @@ def show(file: Path, block: str | None, as_json: bool, csv_path: Path | None) ->
 
     if block is not None and tasks.is_study(file):
         raise click.UsageError("--block goes with a structure file; in a study, write block = ... beside the file.")
+    if view is not None and plot_path is None:
+        raise click.UsageError("--view goes with --plot.")
+    if plot_path is not None:
+        from latticedip.report.plots import check_plot
+
+        check_plot(plot_path)
     document = tasks.show(file, block=block)
+    if plot_path is not None:
+        from latticedip.report.plots import draw_orderings
+
+        draw_to(plot_path, tasks.drawing(file, block=block, view=view), draw_orderings)
     deliver(
         document,
         rows=lambda: show_table(document),

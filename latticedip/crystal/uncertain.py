@@ -69,9 +69,9 @@ def parameter_steps(allowed: FloatArray, su: FloatArray) -> FloatArray:
 
 
 def carried_su(turn: FloatArray, allowed: FloatArray, su: FloatArray) -> FloatArray:
-    """Shape (d,) float. Standard uncertainties of ``turn @ x``; allowed, su: of the coordinates x, as `parameter_steps`.
+    """Shape (d,) float. Standard uncertainties of ``turn @ x``, NaN where no coordinate that enters has one.
 
-    NaN where none of the coordinates that enter has one.
+    turn: Shape (d, d) float. allowed, su: of the coordinates x, as `parameter_steps`.
     """
     known = ~np.isnan(su)
     if not np.any(known):

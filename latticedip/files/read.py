@@ -18,6 +18,7 @@ from latticedip.crystal.model import Crystal
 from latticedip.errors import FileError, LatticedipError
 from latticedip.files.cif import occupancy_notes, read_structure
 from latticedip.files.cifsyntax import Block, choose_block, decode, parse_blocks
+from latticedip.files.counts import check_counts
 from latticedip.files.fourier import has_series
 from latticedip.files.magcif import is_magnetic, read_magnetic_crystal, read_magnetic_ordering
 from latticedip.files.modulated import is_modulated, read_modulated_crystal, read_modulated_ordering
@@ -52,7 +53,7 @@ def read_crystal(path: str | os.PathLike[str], *, block: str | int | None = None
     if _is_cif(name, data):
         chosen = choose_block(parse_blocks(data, name), name, None if block is None else str(block))
         return _crystal_in(chosen, _title(name))
-    return _crystal_of(name, _read_ase(name, block))
+    return _crystal_of(name, _read_ase(name, data, block))
 
 
 def read_ordering(path: str | os.PathLike[str], *, block: str | int | None = None) -> Ordering:
@@ -73,7 +74,7 @@ def read_ordering(path: str | os.PathLike[str], *, block: str | int | None = Non
         if not (is_modulated(chosen) or is_magnetic(chosen) or has_moments(chosen)):
             _structure_only(chosen)
         return _ordering_in(chosen, _title(name))
-    return _ordering_of(name, _read_ase(name, block))
+    return _ordering_of(name, _read_ase(name, data, block))
 
 
 def read_file(path: str | os.PathLike[str], *, block: str | int | None = None) -> Crystal | Ordering:
@@ -84,7 +85,7 @@ def read_file(path: str | os.PathLike[str], *, block: str | int | None = None) -
         if has_moments(chosen) or has_series(chosen):
             return _ordering_in(chosen, _title(name))
         return _crystal_in(chosen, _title(name))
-    atoms = _read_ase(name, block)
+    atoms = _read_ase(name, data, block)
     results = getattr(atoms.calc, "results", {})
     if atoms.get_initial_magnetic_moments().any() or "magmoms" in results:
         return _ordering_of(name, atoms)
@@ -154,7 +155,7 @@ def _is_cif(name: str, data: bytes) -> bool:
     return first is not None and first.group(1).lower().startswith("data_")
 
 
-def _read_ase(name: str, block: str | int | None) -> Atoms:
+def _read_ase(name: str, data: bytes, block: str | int | None) -> Atoms:
     """The one structure of a file that ASE reads; raises FileError where ASE cannot, or where it finds several."""
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
@@ -167,6 +168,7 @@ def _read_ase(name: str, block: str | int | None) -> Atoms:
                 raise FileError(
                     f"{name}: this seems to be a CIF, but it does not begin with data_. Name it .cif, or mend its head."
                 )
+            check_counts(kind, name, data)
             images = ase.io.read(name, index=":", format=kind, do_not_split_by_at_sign=True)
         except LatticedipError:
             raise

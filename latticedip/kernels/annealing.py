@@ -15,6 +15,8 @@ import numpy as np
 from latticedip.kernels.jit import kernel
 from latticedip.kernels.patterns import lowest_on_sphere
 
+#: With no more free signs than this a descent also tries to turn round every pair.
+PAIRS_UP_TO = 200
 #: Part of the moves that exchange two moments, where the net moment is held at zero.
 EXCHANGES = 0.5
 
@@ -234,10 +236,12 @@ def sum_fields(table, m, nx, ny, nz, signs, fields):
 
 @kernel()
 def descend_best_axis(tables, m, nx, ny, nz, free, weights, pull, signs):
-    """Turn single signs round while that lowers the energy along the pattern's own best axis; changes ``signs``.
+    """Turn signs (and pairs of few) round while that lowers the energy along the pattern's own best axis.
+
+    Changes ``signs`` and returns that energy.
 
     tables (6, …), flat as in `anneal_signs`: the form of the axis, xx, yy, zz, yz, xz, xy. weights (n_moments,): net
-    moment along the axis. pull (3,): energy −(net moment) pull·u in the applied field. Returns that energy.
+    moment along the axis. pull (3,): energy −(net moment) pull·u in the applied field.
     """
     n = signs.shape[0]
     fields = np.empty((6, n))
@@ -259,22 +263,35 @@ def descend_best_axis(tables, m, nx, ny, nz, free, weights, pull, signs):
         energy = lowest_on_sphere(form, arm, values, vectors)
         turned = 0
         for step in range(free.shape[0]):
-            place = free[step]
-            sign = signs[place]
-            after = net - 2.0 * sign * weights[place]
-            for c in range(6):
-                own = coupling_between(tables[c], m, nx, ny, nz, place, place)
-                trial[c] = form[c] - 2.0 * sign * fields[c, place] + 2.0 * own
-            for i in range(3):
-                arm[i] = after * pull[i]
-            new = lowest_on_sphere(trial, arm, values, vectors)
-            if new < energy - 1e-11 * (1.0 + abs(energy)):
-                turned += 1
-                energy, net = new, after
-                signs[place] = -sign
+            # The place itself stands for no second sign.
+            for other_step in range(step, free.shape[0] if free.shape[0] <= PAIRS_UP_TO else step + 1):
+                place, other = free[step], free[other_step]
+                one, two = signs[place], signs[other]
+                after = net - 2.0 * one * weights[place]
+                if other != place:
+                    after -= 2.0 * two * weights[other]
                 for c in range(6):
-                    form[c] = trial[c]
-                    add_field(tables[c], m, nx, ny, nz, place, -2.0 * sign, fields[c])
+                    change = -2.0 * one * fields[c, place]
+                    change += 2.0 * coupling_between(tables[c], m, nx, ny, nz, place, place)
+                    if other != place:
+                        change -= 2.0 * two * fields[c, other]
+                        change += 2.0 * coupling_between(tables[c], m, nx, ny, nz, other, other)
+                        change += 4.0 * one * two * coupling_between(tables[c], m, nx, ny, nz, place, other)
+                    trial[c] = form[c] + change
+                for i in range(3):
+                    arm[i] = after * pull[i]
+                new = lowest_on_sphere(trial, arm, values, vectors)
+                if new < energy - 1e-11 * (1.0 + abs(energy)):
+                    turned += 1
+                    energy, net = new, after
+                    signs[place] = -one
+                    if other != place:
+                        signs[other] = -two
+                    for c in range(6):
+                        form[c] = trial[c]
+                        add_field(tables[c], m, nx, ny, nz, place, -2.0 * one, fields[c])
+                        if other != place:
+                            add_field(tables[c], m, nx, ny, nz, other, -2.0 * two, fields[c])
         if turned == 0:
             break
     return energy

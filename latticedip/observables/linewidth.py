@@ -7,12 +7,17 @@ b = (µ0/4π) µ/(I r³) the field per unit of spin and θ the angle between r a
     along a strong field, like spins     (3/4) I(I+1) b² (1 − 3cos²θ)²     the same: 9/4 of it, by mutual flips
     in zero field, ⟨B_a B_b⟩             (1/3) I(I+1) b² (3 n_a n_b + δ_ab)
 
-adds up over sites with occupancy and abundance as probabilities. Averaged over all directions (1 − 3cos²θ)² is 4/5. A
+adds up over sites with occupancy and abundance as probabilities: ⟨B²⟩ = Σ_j p_j ⟨b_j²⟩, p_j their product, so that the
+second moment of a dilute isotope is p times that of a full one. The line itself is near a Gaussian only for p near 1;
+for p ≪ 1 it is close to a Lorentzian with a cut-off, and narrower than its second moment says (Kittel and Abrahams,
+Phys. Rev. 90, 238 (1953)). Averaged over all directions (1 − 3cos²θ)² is 4/5. A
 muon in a strong field relaxes with σ, exp(−σ²t²/2), σ² = γ² ⟨B_∥²⟩; in zero field with Δ per field component,
 Δ² = γ² ⟨B²⟩/3, and Δ²/σ² = 5/2 in a powder (Hayano et al., Phys. Rev. B 20, 850 (1979)).
 
 The strong field is stronger than all dipolar fields and quadrupole splittings of the nuclei; like spins are those of
-the probe's own isotope, as if all of them had the same resonance. In a quadrupole splitting that the muon itself
+the probe's own isotope, as if all of them had the same resonance. Where inequivalent sites are told apart by shift or
+quadrupole splitting, mutual flips between them are quenched, and only the isotope's spins on sites equivalent to that
+of the probe are like (`like="site"`). In a quadrupole splitting that the muon itself
 causes at low fields the secular part differs (Hartmann, Phys. Rev. Lett. 39, 832 (1977)): that is not included.
 """
 
@@ -21,7 +26,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 
@@ -29,6 +34,7 @@ from latticedip.checks import FloatArray, as_unit_vector, frozen
 from latticedip.crystal.displace import Displaced, moved_pairs
 from latticedip.crystal.model import OVERLAP_A, Crystal
 from latticedip.crystal.place import Place, place_of
+from latticedip.crystal.symmetry import equivalent_sites
 from latticedip.errors import InputError
 from latticedip.observables.isotopes import element_of, isotopes_by_element
 from latticedip.particles import Particle, particle_named
@@ -48,7 +54,7 @@ DILUTE = 0.1
 class Contribution:
     """What one isotope adds.
 
-    isotope: its name. like: True for the isotope of the probe itself. atoms_per_cell: mean number in the cell.
+    isotope: its name. like: True for spins that flip mutually with the probe. atoms_per_cell: mean number in the cell.
     second_moment_T2: mean square field along the strong field, T².
     mean_square_field_T2: ⟨B²⟩ of all three components in zero field, T².
     """
@@ -149,18 +155,21 @@ def linewidth(
     direction: Any = None,
     abundances: Mapping[str, float] | None = None,
     displaced: Displaced | Iterable[Displaced] = (),
+    like: Literal["isotope", "site"] = "isotope",
 ) -> Linewidth:
     """Static dipolar second moment and widths of a probe from the nuclear moments around it.
 
     crystal: periodic in three directions, or in none. position: Shape (3,) fractional; within 1e-3 Å of an atom it is
-    that site, and neither that atom nor one that shares its place acts on the probe. particle: "muon" or an isotope;
-    spins of the same isotope are like spins. nuclei: isotopes ("63Cu") or elements ("Cu") that count; None: all.
+    that site, and neither that atom nor one that shares its place acts on the probe. particle: "muon" or an isotope.
+    like: which spins of the same isotope are like spins: all ("isotope"), or those on sites that the symmetry of the
+    crystal makes equal to that of the probe ("site"; none for a probe on no site).
+    nuclei: isotopes ("63Cu") or elements ("Cu") that count; None: all.
     direction: Shape (3,) Cartesian, of the strong field; None: powder average. abundances: fraction of the atoms of an
     element that are an isotope, by its name, where they are not the natural ones. displaced: neighbours that the probe
     moves. Lattice sums are exact to ten digits or better.
 
-    Raises InputError for unknown particles and nuclei, a zero direction, a position between 1e-3 and 0.1 Å from an
-    atom, a shell that is not there, or a crystal that is periodic in one or two directions.
+    Raises InputError for unknown particles and nuclei, another word for like, a zero direction, a position between 1e-3
+    and 0.1 Å from an atom, a shell that is not there, or a crystal that is periodic in one or two directions.
     """
     probe = particle_named(particle)
     along = None if direction is None else frozen(as_unit_vector("direction", direction))
@@ -170,21 +179,27 @@ def linewidth(
     sums = _site_sums(crystal, place, terms)
     strong, zero = np.zeros((3, 3, 3, 3)), np.zeros((3, 3))
     contributions = []
+    own = _like_sites(crystal, place, like)
     for element, entries in isotopes.items():
-        sites = np.array([symbol == element for symbol in crystal.symbols])
-        occupied = float(crystal.occupancies[sites].sum())
-        around = np.einsum("s,sabcd->abcd", crystal.occupancies[sites], sums[sites])
-        second = np.einsum("abcc->ab", around)
+        of_element = np.array([symbol == element for symbol in crystal.symbols])
         for isotope, share in entries:
-            like = isotope.name == probe.name
             scale = share * _mean_square_T2_A6(isotope)
-            part = (LIKE_FACTOR if like else 1.0) * scale * around
-            random = scale * (3 * second + np.trace(second) * np.eye(3))
-            strong += part
-            zero += random
-            contributions.append(
-                Contribution(isotope.name, like, share * occupied, _along(part, along), float(np.trace(random)))
-            )
+            same = isotope.name == probe.name
+            # Spins of the probe's own isotope come in two kinds where the option parts them.
+            for flips in (True, False) if same else (False,):
+                sites = of_element & (own == flips) if same else of_element
+                if not np.any(sites):
+                    continue
+                around = np.einsum("s,sabcd->abcd", crystal.occupancies[sites], sums[sites])
+                second = np.einsum("abcc->ab", around)
+                part = (LIKE_FACTOR if flips else 1.0) * scale * around
+                random = scale * (3 * second + np.trace(second) * np.eye(3))
+                strong += part
+                zero += random
+                atoms = share * float(crystal.occupancies[sites].sum())
+                contributions.append(
+                    Contribution(isotope.name, flips, atoms, _along(part, along), float(np.trace(random)))
+                )
     return Linewidth(
         position=place.position,
         site=crystal.labels[place.site] if place.site >= 0 else "",
@@ -196,6 +211,18 @@ def linewidth(
         contributions=tuple(contributions),
         notes=_notes(crystal, place, probe, terms, contributions),
     )
+
+
+def _like_sites(crystal: Crystal, place: Place, like: str) -> np.ndarray:
+    """Shape (n_sites,) bool. Sites on which spins of the probe's own isotope are like spins."""
+    if like not in ("isotope", "site"):
+        raise InputError(f'like must be "isotope" or "site", got {like!r}.')
+    if like == "isotope":
+        return np.ones(crystal.n_sites, dtype=bool)
+    if place.site < 0:
+        return np.zeros(crystal.n_sites, dtype=bool)
+    first = np.array(equivalent_sites(crystal))
+    return np.asarray(first == first[place.site])
 
 
 def _mean_square_T2_A6(isotope: Particle) -> float:
@@ -243,7 +270,7 @@ def _notes(
         strongest = max(parts, key=lambda part: part.second_moment_T2)
         element = element_of(strongest.isotope)
         atoms = sum(symbol == element for symbol in crystal.symbols)
-        share = strongest.atoms_per_cell / atoms
+        share = sum(part.atoms_per_cell for part in parts if part.isotope == strongest.isotope) / atoms
         if strongest.second_moment_T2 > 0 and share < DILUTE:
             notes.append(
                 f"{strongest.isotope} sits on {100 * share:.3g} % of the {element} places only: the line of dilute "

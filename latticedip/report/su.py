@@ -39,8 +39,10 @@ def format_su(value: float | None, su: float | None) -> str:
 
 
 def with_su(value: float, decimals: int, su: float | None) -> str:
-    """A value with its standard uncertainty as `format_su` where there is one above 0, else with some decimals."""
-    if su is None or not math.isfinite(su) or su == 0.0:
+    """A value with its standard uncertainty as `format_su`, else with some decimals: where there is none, or none that
+    a thousandth of the last decimal could tell from 0.
+    """
+    if su is None or not math.isfinite(su) or su < 10.0 ** -(decimals + 3):
         return fixed(value, decimals)
     return format_su(value, su)
 

@@ -7,8 +7,11 @@ import os
 import shutil
 import sys
 import unicodedata
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
+from contextlib import contextmanager
+from contextvars import ContextVar
 from dataclasses import dataclass
+from typing import Protocol
 
 #: Blanks between two columns.
 GAP = 2
@@ -34,6 +37,38 @@ class Column:
     unit: str = ""
     words: bool = False
     whole: bool = False
+
+
+class Setter(Protocol):
+    """Sets tables and sentences in another form than aligned text; each method returns what stands in their place."""
+
+    def table(self, columns: Sequence[Column], rows: Sequence[Sequence[str]], keys: int) -> str:
+        """Set a table whose first ``keys`` columns name the line."""
+
+    def pairs(self, items: Sequence[tuple[str, str]]) -> str:
+        """Set names and values."""
+
+    def paragraph(self, text: str) -> str:
+        """Set running text."""
+
+    def bullets(self, sentences: Sequence[str]) -> str:
+        """Set a list of sentences."""
+
+    def heading(self, text: str) -> str:
+        """Set a heading."""
+
+
+_SETTER: ContextVar[Setter | None] = ContextVar("latticedip.report.tables.setter", default=None)
+
+
+@contextmanager
+def set_by(setter: Setter) -> Iterator[None]:
+    """Within this context tables, pairs, paragraphs, bullets and headings are set by ``setter``."""
+    token = _SETTER.set(setter)
+    try:
+        yield
+    finally:
+        _SETTER.reset(token)
 
 
 def screen_width() -> int:
@@ -69,6 +104,8 @@ def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], *, width: in
     cells = [[clean(cell) for cell in row] for row in rows]
     if any(len(row) != len(columns) for row in cells):
         raise ValueError(f"each row must hold {len(columns)} cells.")
+    if (setter := _SETTER.get()) is not None:
+        return setter.table(columns, cells, keys)
     natural = [
         max(_widest(text) for text in (column.head, column.unit, *(row[i] for row in cells)))
         for i, column in enumerate(columns)
@@ -184,6 +221,8 @@ def pairs(items: Iterable[tuple[str, str]], *, width: int | None = None, indent:
     """Return names and values below each other, values aligned and wrapped to the screen."""
     width = screen_width() if width is None else width
     listed = [(clean(name), clean(value)) for name, value in items]
+    if (setter := _SETTER.get()) is not None:
+        return setter.pairs(listed)
     column = indent + max((text_width(name) for name, _ in listed), default=0) + GAP
     lines = []
     for name, value in listed:
@@ -195,6 +234,8 @@ def pairs(items: Iterable[tuple[str, str]], *, width: int | None = None, indent:
 
 def paragraph(text: str, *, width: int | None = None, first: str = "") -> str:
     """Return a text wrapped to the screen; ``first`` leads the first line, the others are indented alike."""
+    if (setter := _SETTER.get()) is not None:
+        return setter.paragraph(first + clean(text))
     width = screen_width() if width is None else width
     lead = text_width(first)
     lines = _wrapped(clean(text), max(width - lead, NARROWEST))
@@ -205,12 +246,16 @@ def bullets(sentences: Iterable[str], *, width: int | None = None) -> str:
     """Return sentences as a list, one item each; what another sentence already says in the same words is left out."""
     distinct = list(dict.fromkeys(sentences))
     kept = [s for s in distinct if not any(s in other and s != other for other in distinct)]
+    if (setter := _SETTER.get()) is not None:
+        return setter.bullets([clean(s) for s in kept])
     return "\n".join(paragraph(s, width=width, first="- ") for s in kept)
 
 
 def heading(text: str) -> str:
     """Return a text underlined."""
     shown = clean(text)
+    if (setter := _SETTER.get()) is not None:
+        return setter.heading(shown)
     return f"{shown}\n{'=' * text_width(shown)}"
 
 

@@ -62,7 +62,12 @@ def drawing_of_study(
     return document(
         "drawing",
         files=study.files,
-        options={"view": view or VIEW, "orderings": list(orderings) or None, "probes": list(probes) or None, "tol": tol},
+        options={
+            "view": view or VIEW,
+            "orderings": list(orderings) or None,
+            "probes": list(probes) or None,
+            "tol": tol,
+        },
         boundary=common_boundary([entry["boundary"] for entry in entries]),
         results={"title": study.title, "view": towards, "orderings": entries},
     )
@@ -104,9 +109,7 @@ def _ordering(ordering: Ordering) -> dict[str, Any]:
         magnetic = bool(ordering.is_magnetic[site])
         listed = _with_faces(crystal, site, cells if magnetic else [(0, 0, 0)])
         moments = ordering.moments(listed)[:, site] if magnetic else np.zeros((len(listed), 3))
-        atoms += [
-            _atom(crystal, site, cell, moment, magnetic) for cell, moment in zip(listed, moments, strict=True)
-        ]
+        atoms += [_atom(crystal, site, cell, moment, magnetic) for cell, moment in zip(listed, moments, strict=True)]
     return {
         **ordering_head(ordering),
         "cell_A": crystal.cell.tolist(),

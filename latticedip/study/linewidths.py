@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from latticedip.observables.linewidth import Linewidth, linewidth
 from latticedip.study.directions import direction_of
@@ -19,10 +19,16 @@ BOUNDARY = "none needed: sums over r⁻⁶ do not depend on the shape of the sam
 #: Points of one probe whose widths differ by less than this part are listed once.
 SAME_WIDTH = 1e-9
 CONVENTIONS = (
-    "M2 is the mean square dipolar field of the nuclei along a strong field, like spins (the probe's own isotope) "
-    "counted 9/4 times; √M2 is the standard deviation of a line, as a field in mT and as a frequency in kHz.",
+    "M2 is the mean square dipolar field of the nuclei along a strong field, like spins ({like}) counted 9/4 times; "
+    "√M2 is the standard deviation of a line, as a field in mT and as a frequency in kHz.",
+    "Every place counts with its occupancy times the abundance of the isotope; the line is near a Gaussian where both "
+    "are near 1.",
     "sigma = gamma √M2, as in exp(−sigma² t²/2), for a strong transverse field.",
 )
+LIKE_WORDS = {
+    "isotope": "the probe's own isotope",
+    "site": "the probe's own isotope on sites equivalent to its own; on others it is unlike",
+}
 MUON_CONVENTION = (
     "Delta, of the Kubo–Toyabe function in zero field: gamma times the standard deviation of one field component; with "
     "a direction, of the two components across it, which a polarization along it feels."
@@ -38,13 +44,14 @@ def linewidth_document(
     *,
     direction: str | None = None,
     nuclei: Sequence[str] = (),
+    like: Literal["isotope", "site"] = "isotope",
     probes: Sequence[str] = (),
     all_equivalent: bool = False,
 ) -> dict[str, Any]:
     """The document of `linewidth`: one row per point of a probe, with what each isotope adds.
 
     direction: of the strong field, a crystal direction; None: powder. nuclei: isotopes or elements that count; none:
-    all. probes: the names that were asked for; none: all. all_equivalent: as `points_of`.
+    all. like: as `linewidth`. probes: the names that were asked for; none: all. all_equivalent: as `points_of`.
 
     Raises InputError for an unknown nucleus or direction, and what `linewidth` raises.
     """
@@ -60,6 +67,7 @@ def linewidth_document(
             direction=along,
             abundances=study.abundances,
             displaced=point.displaced,
+            like=like,
         )
         rows.append(_row(point, found))
         sharp = "its spread is not taken into account here, the place of the probe is taken as sharp"
@@ -73,6 +81,7 @@ def linewidth_document(
         options={
             "direction": direction,
             "nuclei": list(nuclei) or None,
+            "like": like,
             "probes": list(probes) or None,
             "orbit": all_equivalent,
         },
@@ -84,7 +93,10 @@ def linewidth_document(
             else {"cartesian": along.tolist(), "abc": study.crystal.to_crystal_axes(along).tolist()},
             "abundances": dict(study.abundances),
             "rows": rows,
-            "conventions": [*CONVENTIONS, *([MUON_CONVENTION] if muon else [])],
+            "conventions": [
+                *(text.format(like=LIKE_WORDS[like]) for text in CONVENTIONS),
+                *([MUON_CONVENTION] if muon else []),
+            ],
             "notes": [
                 *dict.fromkeys(notes),
                 f"abundances: {f'{stated} as stated, the others natural' if stated else 'natural'}",

@@ -79,7 +79,8 @@ def shift_document(
     """The document of `shift`: one row per point of a probe, its coupling tensors and, with χ given, its shifts.
 
     temperatures_K: where a susceptibility is a table; none: those of the tables. rotate_about: a crystal direction.
-    powder_bins: also the line of a powder, in so many bins; None: no line. probes: the names that were asked for; none: all. all_equivalent: as `points_of`.
+    powder_bins: also the line of a powder, in so many bins; None: no line. probes: the names that were asked for; none:
+    all. all_equivalent: as `points_of`.
 
     Raises StudyError where nothing names the magnetic ions, InputError for a temperature, an axis or a powder without a
     susceptibility or outside its table, for an axis together with a powder, and what `site_couplings` raises.

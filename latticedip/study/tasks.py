@@ -8,7 +8,7 @@ import os
 import shlex
 from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, TypeVar
+from typing import TYPE_CHECKING, Any, Literal, TypeVar
 
 from latticedip.errors import InputError, StudyError, near_match
 
@@ -107,6 +107,21 @@ def show(path: Path, *, block: str | None = None) -> dict[str, Any]:
     if is_study(path):
         return describe_study(open_study(path))
     return describe_structure(path, read_file(path, block=block))
+
+
+def drawing(path: Path, *, block: str | None = None, view: str | None = None) -> dict[str, Any]:
+    """What a drawing of a study or a structure file shows: cells, atoms with their moments, probes with their fields.
+
+    view: the crystal direction that it is seen from, such as "a" or "1 1 0".
+
+    Raises what `show` and `local_field` raise, and InputError for a view that is no direction.
+    """
+    from latticedip.files.read import read_file
+    from latticedip.study.drawings import drawing_of_structure, drawing_of_study
+
+    if is_study(path):
+        return drawing_of_study(open_study(path), view=view)
+    return drawing_of_structure(path, read_file(path, block=block), view=view)
 
 
 def field(
@@ -281,6 +296,7 @@ def linewidth(
     *,
     direction: str | None = None,
     nuclei: Sequence[str] = (),
+    like: Literal["isotope", "site"] = "isotope",
     probes: Sequence[str] = (),
     all_equivalent: bool = False,
 ) -> dict[str, Any]:
@@ -292,7 +308,12 @@ def linewidth(
 
     _need_probes(study, "a linewidth")
     return linewidth_document(
-        choose(study, probes=probes), direction=direction, nuclei=nuclei, probes=probes, all_equivalent=all_equivalent
+        choose(study, probes=probes),
+        direction=direction,
+        nuclei=nuclei,
+        like=like,
+        probes=probes,
+        all_equivalent=all_equivalent,
     )
 
 

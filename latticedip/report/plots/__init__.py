@@ -9,7 +9,7 @@ from latticedip.report.plots.curves import draw_directions, draw_modes
 from latticedip.report.plots.field import draw_field, field_figure
 from latticedip.report.plots.ordering import draw_orderings, orderings_figure
 from latticedip.report.plots.rank import draw_rank, rank_figure
-from latticedip.report.plots.shift import draw_shift, shift_figure
+from latticedip.report.plots.shift import draw_shift, shift_figure, shift_has_curve
 from latticedip.report.plots.spectrum import draw_spectrum
 from latticedip.report.plots.style import SUFFIXES, check_library, check_plot, render
 
@@ -29,4 +29,5 @@ __all__ = [
     "rank_figure",
     "render",
     "shift_figure",
+    "shift_has_curve",
 ]

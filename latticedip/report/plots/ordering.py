@@ -41,6 +41,10 @@ END_ON, NOTHING = 0.12, 0.02
 #: Tallest and flattest panel, as height over width.
 TALLEST, FLATTEST = 1.5, 0.5
 HEAD_IN, FOOT_IN = 0.5, 0.6
+#: Rings of arrows seen end on, and the width of a letter of a name, in points.
+RING_PT, LETTER_PT = 8, 4.4
+#: Sides of a mark that its name may stand on: x and y in half its size.
+SIDES = ((1, 0), (1, -1), (1, 1), (-1, 0), (-1, -1), (-1, 1), (0, -1), (0, 1))
 
 
 @dataclass(frozen=True, eq=False)
@@ -108,10 +112,13 @@ def orderings_figure(document: Mapping[str, Any]) -> Figure:
     marks = _marks(entries)
     for panel in panels:
         panel.set_axis_off()
-    for panel, entry in zip(panels, entries, strict=False):
-        _panel(panel, entry, view, scale, marks)
-    handles = _legend(entries, scale, marks)
-    figure.legend(handles=handles, loc="outside lower center", ncols=3, frameon=False)
+    end_on: set[int] = set()
+    for panel, entry, shape in zip(panels, entries, shapes, strict=False):
+        per_point = float(max(shape[0], shape[1] / ratio)) / (72 * wide)
+        end_on |= _panel(panel, entry, view, scale, marks, per_point)
+    handles = _legend(entries, scale, marks, end_on)
+    labels = [(handle[0] if isinstance(handle, tuple) else handle).get_label() for handle in handles]
+    figure.legend(handles, labels, loc="outside lower center", ncols=3, frameon=False)
     return figure
 
 
@@ -167,11 +174,14 @@ def _marks(entries: Sequence[Mapping[str, Any]]) -> dict[tuple[str, bool], str]:
 
 
 def _panel(
-    panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, marks: Mapping[tuple[str, bool], str]
-) -> None:
+    panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, marks: Mapping[tuple[str, bool], str],
+    per_point: float,
+) -> set[int]:  # fmt: skip
+    """Draw one ordering. per_point: Å of the drawing in a point of print. Returns as `_arrows`, for all arrows."""
     wave = f"\nk = {k_text(entry['k'])}" if any(x for k in entry["k"] for x in k) else ""
     panel.set_title(f"{in_lines(entry['ordering'])}{plain(wave)}", loc="center")
     panel.set_aspect("equal")
+    panel.set_anchor("N")
     _cells(panel, entry, view)
     for (element, magnetic), mark in marks.items():
         atoms = [a for a in entry["atoms"] if a["element"] == element and a["magnetic"] == magnetic]
@@ -182,12 +192,13 @@ def _panel(
                 markerfacecolor=INK if magnetic else "1.0", markeredgewidth=0.6,
             )  # fmt: skip
     magnetic_atoms = [atom for atom in entry["atoms"] if atom["magnetic"]]
-    _arrows(
+    end_on = _arrows(
         panel, view, _positions({"atoms": magnetic_atoms}, "atoms"), [a["moment_muB"] for a in magnetic_atoms],
-        scale.per_muB, scale.largest_muB, pivot="mid", facecolor=INK, edgecolor="1.0", zorder=4,
+        scale.per_muB, scale.largest_muB, per_point, pivot="mid", facecolor=INK, edgecolor="1.0", zorder=4,
     )  # fmt: skip
-    _probes(panel, entry, view, scale)
+    end_on |= _probes(panel, entry, view, scale, per_point)
     panel.margins(0.06)
+    return end_on
 
 
 def _cells(panel: Axes, entry: Mapping[str, Any], view: View) -> None:
@@ -207,6 +218,8 @@ def _cells(panel: Axes, entry: Mapping[str, Any], view: View) -> None:
         if home:
             middle = flat.mean(axis=0)
             for axis, corner in zip("abc", (4, 2, 1), strict=True):
+                if np.linalg.norm(flat[corner] - flat[0]) < END_ON * np.linalg.norm(corners[corner] - corners[0]):
+                    continue
                 away = flat[corner] - middle
                 panel.annotate(
                     axis, flat[corner], xytext=tuple(9 * away / (np.linalg.norm(away) or 1.0)),
@@ -216,11 +229,14 @@ def _cells(panel: Axes, entry: Mapping[str, Any], view: View) -> None:
 
 def _arrows(
     panel: Axes, view: View, places: FloatArray, vectors: Sequence[Sequence[float]], per_unit: float, largest: float,
-    **look: Any,
-) -> None:  # fmt: skip
-    """Arrows in the plane of the drawing, from back to front; rings for what is seen end on."""
+    per_point: float, **look: Any,
+) -> set[int]:  # fmt: skip
+    """Arrows in the plane of the drawing, from back to front; rings for what is seen end on.
+
+    Returns the signs of the latter: 1 where one points to the eye, -1 where one points away.
+    """
     if not len(vectors) or largest == 0.0:
-        return
+        return set()
     arrows = np.array(vectors, dtype=float)
     order = np.argsort(places @ view.eye, kind="stable")
     arrows, at = arrows[order], view.flat(places[order])
@@ -234,43 +250,78 @@ def _arrows(
             *at[lying].T, *(flat[lying] * per_unit).T, angles="xy", scale_units="xy", scale=1, units="inches",
             width=0.028, headwidth=4.2, headlength=4.6, headaxislength=4.2, linewidth=0.5, **look,
         )  # fmt: skip
-        ends = at[lying] + (0.5 if look["pivot"] == "mid" else 1.0) * flat[lying] * per_unit
-        panel.update_datalim(ends)
-        if look["pivot"] == "mid":
-            panel.update_datalim(at[lying] - 0.5 * flat[lying] * per_unit)
-    for sign, mark in ((1, "."), (-1, "x")):
-        facing = shown & ~lying & (np.sign(arrows @ view.eye) == sign)
-        if np.any(facing):
-            zorder = look["zorder"]
-            panel.plot(
-                *at[facing].T, "o", color=INK, markerfacecolor="1.0", markersize=8, markeredgewidth=0.9, zorder=zorder
-            )
-            panel.plot(*at[facing].T, mark, color=INK, markersize=5, markeredgewidth=0.9, zorder=zorder + 0.1)
+        panel.update_datalim(_along(at[lying], flat[lying] * per_unit, look["pivot"], 2).reshape(-1, 2))
+    facing = np.flatnonzero(shown & ~lying)
+    signs = np.sign(arrows @ view.eye).astype(int)
+    drawn: dict[tuple[int, int], list[int]] = {}
+    # From front to back: one that hides behind another and points the other way is moved aside.
+    for i in facing[::-1]:
+        found = drawn.setdefault((round(at[i, 0] / per_point / 3), round(at[i, 1] / per_point / 3)), [])
+        if signs[i] not in found:
+            # A ring round a probe would hide under its star.
+            steps = len(found) + (look["pivot"] == "tail")
+            aside = at[i] + 0.8 * RING_PT * per_point * steps * np.array([1.0, 1.0])
+            found.append(int(signs[i]))
+            for mark, size in (("o", RING_PT), ("." if signs[i] > 0 else "x", 5)):
+                panel.plot(
+                    *aside, mark, color=INK, markerfacecolor="1.0" if mark == "o" else INK, markersize=size,
+                    markeredgewidth=0.9, zorder=look["zorder"] - 0.1 * len(found),
+                )  # fmt: skip
+    return {int(signs[i]) for i in facing}
 
 
-def _probes(panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale) -> None:
+def _along(at: FloatArray, arrows: FloatArray, pivot: str, count: int) -> FloatArray:
+    """Shape (n, count, 2). Points along arrows (n, 2) that stand at, or lie with their middle on, places (n, 2)."""
+    part = np.linspace(0.0, 1.0, count) - (0.5 if pivot == "mid" else 0.0)
+    return np.asarray(at[:, None] + part[:, None] * arrows[:, None])
+
+
+def _probes(panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, per_point: float) -> set[int]:
     if not entry["probes"]:
-        return
+        return set()
     places = _positions(entry, "probes")
     given = [i for i, probe in enumerate(entry["probes"]) if probe["field_T"] is not None]
-    _arrows(
-        panel, view, places[given], [entry["probes"][i]["field_T"] for i in given], scale.per_T, scale.largest_T,
-        pivot="tail", facecolor="1.0", edgecolor=INK, zorder=5,
+    fields = [entry["probes"][i]["field_T"] for i in given]
+    end_on = _arrows(
+        panel, view, places[given], fields, scale.per_T, scale.largest_T, per_point, pivot="tail", facecolor="1.0",
+        edgecolor=INK, zorder=5,
     )  # fmt: skip
     flat = view.flat(places)
     panel.plot(*flat.T, "*", color=INK, markerfacecolor="1.0", markersize=7, markeredgewidth=0.7, zorder=5.5)
-    named: set[str] = set()
-    for probe, place in zip(entry["probes"], flat, strict=True):
-        if probe["probe"] not in named:
-            named.add(probe["probe"])
-            panel.annotate(
-                plain(probe["probe"]), place, xytext=(4, -4), textcoords="offset points", fontsize=SMALL_PT, ha="left",
-                va="top", zorder=6, bbox={"facecolor": "1.0", "edgecolor": "none", "pad": 0.4, "alpha": 0.75},
-            )  # fmt: skip
+    taken = [flat, view.flat(_positions(entry, "atoms"))]
+    moments = view.flat([atom["moment_muB"] for atom in entry["atoms"]]) * scale.per_muB
+    taken.append(_along(taken[1], moments, "mid", 7).reshape(-1, 2))
+    if given:
+        taken.append(_along(flat[given], view.flat(fields) * scale.per_T, "tail", 9).reshape(-1, 2))
+    _names(panel, [probe["probe"] for probe in entry["probes"]], flat, np.concatenate(taken), per_point)
+    return end_on
+
+
+def _names(panel: Axes, names: Sequence[str], flat: FloatArray, taken: FloatArray, per_point: float) -> None:
+    """Write the name of each probe beside the one of its points, and on the side, where there is most room."""
+    for name in dict.fromkeys(names):
+        shown = plain(name)
+        half = 0.5 * per_point * np.array([LETTER_PT * len(shown), SMALL_PT])
+        best, room = flat[0], -1.0
+        for place in (point for point, other in zip(flat, names, strict=True) if other == name):
+            for side in SIDES:
+                centre = place + np.array(side) * (half + 5 * per_point)
+                # Distance from the box of the text to the nearest mark or arrow.
+                apart = np.maximum(np.abs(taken - centre) - half, 0.0)
+                free = float(np.linalg.norm(apart, axis=1).min())
+                if free > room * (1 + 1e-9):
+                    best, room = centre, free
+        panel.annotate(
+            shown, best, fontsize=SMALL_PT, ha="center", va="center", zorder=6, annotation_clip=False,
+            bbox={"facecolor": "1.0", "edgecolor": "none", "pad": 0.3, "alpha": 0.7},
+        )  # fmt: skip
+        grid = [best + half * np.array([x, y]) for x in (-1, -0.5, 0, 0.5, 1) for y in (-1, 0, 1)]
+        taken = np.concatenate([taken, grid])
+        panel.update_datalim([best - half, best + half])
 
 
 def _legend(
-    entries: Sequence[Mapping[str, Any]], scale: Scale, marks: Mapping[tuple[str, bool], str]
+    entries: Sequence[Mapping[str, Any]], scale: Scale, marks: Mapping[tuple[str, bool], str], end_on: set[int]
 ) -> list[Any]:
     from matplotlib.lines import Line2D
     from matplotlib.path import Path as Outline
@@ -280,7 +331,7 @@ def _legend(
     def mark(shape: Any, words: str, **look: Any) -> Line2D:
         return Line2D([], [], linestyle="", marker=shape, color=INK, label=plain(words), **look)
 
-    handles = [
+    handles: list[Any] = [
         mark(shape, f"{element}, with a moment" if magnetic else element, markersize=4,
              markerfacecolor=INK if magnetic else "1.0", markeredgewidth=0.6)
         for (element, magnetic), shape in marks.items()
@@ -293,4 +344,8 @@ def _legend(
     if scale.largest_T > 0:
         words = f"field (longest: {short(scale.largest_T, 4)} T)"
         handles.append(mark(arrow, words, markersize=16, markerfacecolor="1.0", markeredgewidth=0.6))
+    for sign, inner, words in ((1, ".", "points to the eye"), (-1, "x", "points away from the eye")):
+        if sign in end_on:
+            ring = {"markersize": RING_PT, "markerfacecolor": "1.0", "markeredgewidth": 0.9}
+            handles.append((mark("o", words, **ring), mark(inner, words, markersize=5)))
     return handles

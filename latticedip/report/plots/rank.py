@@ -69,6 +69,7 @@ def rank_figure(document: Mapping[str, Any]) -> Figure:
         panel.annotate(
             signed(energy, ".2f" if abs(energy) < 1e4 else ".5g"), (energy, place), xytext=(0, 5),
             textcoords="offset points", fontsize=SMALL_PT, ha="center", va="bottom",
+            bbox={"facecolor": "1.0", "edgecolor": "none", "pad": 0.3},
         )  # fmt: skip
     panel.set_yticks(range(len(rows)), [f"{row['rank']}  {in_lines(row['ordering'])}" for row in rows])
     panel.set_ylim(len(rows) - 0.4, -0.75)

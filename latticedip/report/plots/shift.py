@@ -39,7 +39,7 @@ def draw_shift(document: Mapping[str, Any], path: Path) -> None:
     save(lambda: shift_figure(document), path)
 
 
-def has_curve(document: Mapping[str, Any]) -> bool:
+def shift_has_curve(document: Mapping[str, Any]) -> bool:
     """Whether a document holds a curve of shifts to draw."""
     shifts = document["rows"][0]["shifts"] if document["rows"] else []
     return len(shifts) > 1 or any("rotation" in shift or "powder" in shift for shift in shifts)
@@ -49,7 +49,7 @@ def shift_figure(document: Mapping[str, Any]) -> Figure:
     """The picture of `draw_shift`; raises InputError as it does."""
     rows = document["rows"]
     groups = kinds(rows)
-    if not has_curve(document):
+    if not shift_has_curve(document):
         raise InputError(
             "there is no curve of a shift to draw. Ask for --rotate-about or --powder, or state chi as a table of "
             "temperatures in [susceptibility]."

@@ -86,7 +86,14 @@ def signed(value: float, format_spec: str) -> str:
 
 def above_axis(panel: Axes, factor: float, label: str) -> None:
     """A second scale on top of a panel: that of its own x axis times ``factor``."""
-    above = panel.secondary_xaxis("top", functions=(lambda x: x * factor, lambda x: x / factor))
+
+    def times(x: Any) -> Any:
+        return x * factor
+
+    def back(x: Any) -> Any:
+        return x / factor
+
+    above = panel.secondary_xaxis("top", functions=(times, back))
     above.set_xlabel(label)
 
 

@@ -1,0 +1,72 @@
+"""``latticedip report``: everything about a study on one page."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from latticedip.cli.options import (
+    ordering_option,
+    probe_option,
+    study_argument,
+    tol_option,
+    verbose_option,
+    view_option,
+)
+
+SUFFIXES = (".html", ".htm")
+
+
+@click.command(short_help="Write a page with all results and pictures of a study.")
+@study_argument
+@click.option(
+    "-o", "--output", type=click.Path(path_type=Path), required=True, metavar="FILE", help="The page: .html or .htm."
+)
+@click.option("--rotate", is_flag=True, help="Turn each pattern of the ranking as a whole to its best orientation.")
+@click.option("--no-pictures", is_flag=True, help="Tables only; needs no matplotlib.")
+@view_option
+@ordering_option
+@probe_option
+@tol_option
+@click.option("--json", "as_json", is_flag=True, help="Also print all results as one JSON document.")
+@verbose_option
+def report(
+    study: Path,
+    output: Path,
+    rotate: bool,
+    no_pictures: bool,
+    view: str | None,
+    orderings: tuple[str, ...],
+    probes: tuple[str, ...],
+    tol: float,
+    as_json: bool,
+) -> None:
+    """Write one HTML page about a study, for the logbook and for a referee: inputs with content hashes, assumptions,
+    the tables of show, rank, field, shift (with a susceptibility) and linewidth, pictures, and what is left out.
+
+    The page needs nothing else: no network, no script. The same inputs give the same page.
+
+    \b
+    Example:
+      latticedip report study.toml -o report.html
+    """
+    from latticedip.encode import to_json, write_text_atomically
+    from latticedip.errors import InputError
+    from latticedip.report.html import report_html
+    from latticedip.study import tasks
+    from latticedip.study.documents import spare_inputs
+    from latticedip.study.reports import ReportOptions, report_document
+
+    if output.suffix.lower() not in SUFFIXES:
+        raise InputError(f"a report ends in {' or '.join(SUFFIXES)}, got {str(output)!r}.")
+    if not no_pictures:
+        from latticedip.report.plots import check_library
+
+        check_library()
+    document = report_document(tasks.open_study(study), ReportOptions(orderings, probes, rotate, view, tol))
+    spare_inputs(output, document)
+    write_text_atomically(output, report_html(document, pictures=not no_pictures))
+    click.echo(f"Wrote {output}.", err=True)
+    if as_json:
+        click.echo(to_json(document), nl=False)
