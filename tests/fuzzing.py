@@ -209,7 +209,7 @@ def broken_study(rng: random.Random, data: bytes) -> bytes:
     """A study that is sound TOML with one to three of its values, keys or tables changed."""
     document = tomllib.loads(data.decode())
     for _ in range(rng.choice((1, 1, 2, 3))):
-        place, key = rng.choice(_places(document))
+        place, key = rng.choice(places(document))
         kind = rng.randrange(7)
         if kind == 0:
             del place[key]
@@ -219,15 +219,16 @@ def broken_study(rng: random.Random, data: bytes) -> bytes:
             place.append(place[key])
         else:
             place[key] = _value(rng, place[key])
-    return _toml(document).encode("utf-8", "surrogatepass")
+    return as_toml(document).encode("utf-8", "surrogatepass")
 
 
-def _places(value: Any) -> list[tuple[Any, Any]]:
+def places(value: Any) -> list[tuple[Any, Any]]:
+    """(container, key) of everything in a document, at any depth."""
     found: list[tuple[Any, Any]] = []
     for key in value if isinstance(value, dict) else range(len(value)):
         found.append((value, key))
         if isinstance(value[key], (dict, list)):
-            found += _places(value[key])
+            found += places(value[key])
     return found or [({"x": 0}, "x")]
 
 
@@ -242,7 +243,8 @@ def _value(rng: random.Random, old: Any) -> Any:
     )  # fmt: skip
 
 
-def _toml(document: dict[str, Any]) -> str:
+def as_toml(document: dict[str, Any]) -> str:
+    """A document as TOML, tables written in line."""
     return "".join(f"{_quoted(key)} = {_inline(value)}\n" for key, value in document.items())
 
 

@@ -526,8 +526,16 @@ def test_the_command_says_what_became_of_it(work):
     assert result.exit_code == 1
     assert result.stdout == ""
     assert result.stderr == ("1 done, 1 failed, 1 skipped. Wrote o.\n  in/00019_rocksalt.cif: the file is empty.\n")
-    result = command("t.toml", "in/00001_rocksalt.cif", "-o", "o2", "--quiet")
-    assert (result.exit_code, result.output) == (0, "")
+    result = command("t.toml", "in/00001_rocksalt.cif", "-o", "o2", "--quiet", "--json")
+    assert (result.exit_code, result.stderr) == (0, "")
+    assert result.stdout == Path("o2/summary.json").read_text(encoding="utf-8")
+    document = json.loads(result.stdout)
+    assert document["schema"] == "latticedip/batch/1"
+    assert document["inputs"]["files"][0]["path"] == "t.toml"
+    assert document["boundary"] == (
+        "net moment without a stated shape: N = 0 assumed (a domain that closes its flux); no net moment: the shape of "
+        "the sample does not matter (N = 0 sum)"
+    )
 
 
 def test_the_progress_bar(capsys):

@@ -178,3 +178,17 @@ def test_wrong_input() -> None:
     assert run().stderr == "Error: study.toml: `abundances`: abundances of 1H, 2H add up to 1.2, more than 1.\n"
     Path("study.toml").write_text(STUDY.split("[[probe]]")[0], encoding="utf-8")
     assert "'study.toml' has no [[probe]], so there is no place to ask for a linewidth." in run().stderr
+
+
+def test_like_spins_by_site(folder: Path) -> None:
+    text = CUBE.replace("H1 H 0 0 0\n", "H1 H 0 0 0\nH2 H 0.5 0.5 0.2\nH3 H 0.5 0.5 0.8\n")
+    Path("cube.cif").write_text(text, encoding="utf-8")
+    write(PURE)
+    both = document("--probe", "proton")
+    apart = document("--probe", "proton", "--like", "site")
+    assert both["inputs"]["options"]["like"] == "isotope" and apart["inputs"]["options"]["like"] == "site"
+    assert [part["like"] for part in both["rows"][0]["contributions"]] == [True]
+    assert [part["like"] for part in apart["rows"][0]["contributions"]] == [True, False]
+    assert apart["rows"][0]["second_moment_T2"] < both["rows"][0]["second_moment_T2"]
+    assert any("on sites equivalent to its own; on others it is unlike" in words for words in apart["conventions"])
+    assert any("occupancy times the abundance" in words for words in apart["conventions"])

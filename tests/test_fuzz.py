@@ -7,10 +7,12 @@ stretch of cases. Every case follows from its seed and number alone.
 from __future__ import annotations
 
 import os
+import pickle
 import random
 import resource
 import shutil
 import signal
+import tomllib
 import traceback
 from collections.abc import Callable
 from pathlib import Path
@@ -30,7 +32,7 @@ from latticedip.files.read import read_file
 from latticedip.study import tasks
 from latticedip.study.batch_journal import RESULTS, Journal
 from latticedip.study.batch_template import Template
-from tests.fuzzing import broken, broken_study, corpus
+from tests.fuzzing import as_toml, broken, broken_study, corpus, places
 
 DATA = Path(__file__).parent / "data"
 SEED = int(os.environ.get("LATTICEDIP_FUZZ_SEED", "1"))
@@ -205,6 +207,107 @@ def test_some_broken_inputs(tmp_path):
 @pytest.mark.slow
 def test_twenty_thousand_broken_inputs(tmp_path):
     run_cases(500, 500 + int(os.environ.get("LATTICEDIP_FUZZ", "20000")), tmp_path)
+
+
+# Wrong acceptance: words that are no number, in every place where a number counts
+
+NO_NUMBERS = ("nan", "inf", "abc", "1.2.3", "0x10", "1_000", "--1", "1e999", "1,5", "?", "½", "=1", "1(x)")
+
+
+def number_places(text: str) -> list[tuple[int, int]]:
+    """(line, word) of the numbers of cell, positions, occupancies and moments of a CIF."""
+    places, columns = [], []
+    for i, line in enumerate(text.split("\n")):
+        words = line.split(" ")
+        if line.startswith(("_cell_length", "_cell_angle")):
+            places.append((i, 1))
+        if line == "loop_":
+            columns = []
+        elif line.startswith("_"):
+            columns.append(line)
+        elif columns and columns[0].startswith("_atom_site") and len(words) == len(columns):
+            counts = ("fract", "occupancy", "crystalaxis_x", "crystalaxis_y", "crystalaxis_z")
+            places += [(i, w) for w, column in enumerate(columns) if column.endswith(counts) or "_fract_" in column]
+    return places
+
+
+@pytest.mark.parametrize("word", NO_NUMBERS)
+def test_what_is_no_number_is_never_taken_for_one(tmp_path, word):
+    path = tmp_path / "x.mcif"
+    text = (DATA / "hexagonal.mcif").read_text(encoding="utf-8")
+    places = number_places(text)
+    assert len(places) > 20
+    lines = text.split("\n")
+    for i, w in places:
+        words = lines[i].split(" ")
+        if not words[w].strip("'()0123456789.-"):
+            words[w] = word
+            path.write_text("\n".join([*lines[:i], " ".join(words), *lines[i + 1 :]]), encoding="utf-8")
+            try:
+                found = ld.read_ordering(path)
+            except LatticedipError as error:
+                assert str(error).startswith(f"{path}: ")
+            else:
+                # An unknown occupancy is the one thing that may be assumed, and then it is said.
+                assert f"occupancies stated as unknown (?) are taken as 1: {words[0]}" in found.crystal.notes
+
+
+@pytest.mark.parametrize("wrong", [True, float("nan"), float("inf"), {"x": {}}, "", 1979, [[[]]]], ids=repr)
+def test_a_value_of_another_kind_is_never_taken_in_a_study(tmp_path, wrong):
+    """Every value of a sound study replaced by one that no key of its kind can mean."""
+    for name in ("tetragonal.cif", "doubled.mcif"):
+        shutil.copy(DATA / "study" / name, tmp_path)
+    path = tmp_path / "s.toml"
+    source = (DATA / "study" / "chains.toml").read_text(encoding="utf-8")
+    for n in range(len(places(tomllib.loads(source)))):
+        document = tomllib.loads(source)
+        place, key = places(document)[n]
+        sound = place[key]
+        # A number may stand for another one, for a fraction such as "1/3", and for a tensor that is a multiple of one.
+        if wrong == 1979 and (
+            isinstance(sound, (int, float)) or key == "coupling_T_per_muB" or sound in ("1/2", "1/3")
+        ):
+            continue
+        place[key] = wrong
+        path.write_text(as_toml(document), encoding="utf-8")
+        with pytest.raises(LatticedipError) as caught:
+            ld.read_study(path)
+        assert str(caught.value).startswith(f"{path}: ")
+
+
+def test_a_pickle_is_never_run(tmp_path):
+    """Old trajectories held pickled objects, which do what they like when they are read."""
+
+    class Harm:
+        def __reduce__(self):
+            return os.mkdir, (str(tmp_path / "harm"),)
+
+    for suffix in (".traj", ".trj", ".pckl", ".xyz", ".cif", ""):
+        path = tmp_path / f"x{suffix}"
+        path.write_bytes(b"PickleTrajectory" + pickle.dumps(Harm()))
+        with pytest.raises(LatticedipError):
+            ld.read_crystal(path)
+    assert not (tmp_path / "harm").exists()
+
+
+@pytest.mark.parametrize(
+    ("name", "text", "message"),
+    [
+        ("x.xyz", "99999999999\n\nMn 0 0 0\n", "line 1 announces 99999999999 atoms, but only 4 lines are there."),
+        ("x.xyz", "1\n\nMn 0 0 0\n88\n\nMn 0 0 0\n", "line 4 announces 88 atoms, but only 4 lines are there."),
+        ("x.vasp", "x\n1\n4 0 0\n0 4 0\n0 0 4\nMn\n1000000000\nDirect\n0 0 0\n", "line 7 announces 1000000000 atoms"),
+        ("x.gen", "1000000000 F\nMn\n1 1 0 0 0\n", "line 1 announces 1000000000 atoms"),
+        ("x.xsf", "CRYSTAL\nPRIMVEC\n4 0 0\n0 4 0\n0 0 4\nPRIMCOORD\n1000000000 1\n25 0 0 0\n", "line 7 announces"),
+        ("x.xyz", "9" * 5000 + "\n\nMn 0 0 0\n", "line 1 announces more than 1e+18 atoms"),
+        ("x.pdb", "CRYST1    4.000    4.000    9.000  90.00  90.00  90.00 P 1\nEND\n", "ASE finds no atoms in it"),
+    ],
+)  # fmt: skip
+def test_a_count_that_the_file_does_not_keep_is_refused(tmp_path, name, text, message):
+    path = tmp_path / name
+    path.write_text(text, encoding="utf-8")
+    with pytest.raises(LatticedipError) as caught:
+        ld.read_crystal(path)
+    assert str(caught.value).startswith(f"{path}: {message}")
 
 
 # Limits of size, before memory is taken

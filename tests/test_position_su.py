@@ -176,7 +176,8 @@ def test_fields_take_the_uncertainties_of_the_sites(tmp_path):
     def field(crystal: ld.Crystal) -> np.ndarray:
         ions = np.array([s in ("Mn", "F") for s in crystal.symbols])
         ordering = ld.Ordering(crystal, np.where(ions[:, None], [0.5, 0.2, 3.0], 0))
-        probes = [ld.Probe((0.45, 0.3, 0.1)), ld.Probe(site="Mn1", particle="55Mn"), ld.Probe(site="F1", particle="19F")]
+        probes = [ld.Probe(site=site, particle=nucleus) for site, nucleus in (("Mn1", "55Mn"), ("F1", "19F"))]
+        probes.append(ld.Probe((0.45, 0.3, 0.1)))
         return ld.local_field(ordering, probes, tol=1e-12)
 
     base = field(read(tmp_path, HEXAGONAL.replace("0.13(2)", "0.13")))

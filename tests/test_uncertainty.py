@@ -7,9 +7,9 @@ import pytest
 
 import latticedip as ld
 from latticedip.crystal.model import Operations
+from latticedip.crystal.uncertain import tied_positions
 from latticedip.errors import InputError
 from latticedip.ordering.model import ParentTransform, Reference, SizeUncertainty
-from latticedip.crystal.uncertain import tied_positions
 from latticedip.physics.uncertainty import field_uncertainty, tied_moments
 from latticedip.report.su import format_su
 

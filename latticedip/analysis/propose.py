@@ -7,6 +7,7 @@ is that of the dipolar interaction, the shape of the sample and the applied fiel
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from fractions import Fraction
@@ -32,6 +33,8 @@ from latticedip.physics.energy import Energy, dipolar_energy
 from latticedip.physics.supercell import Supercell, check_repeat
 from latticedip.sample import Sample
 from latticedip.units import EV_PER_MUB_T, MU0_T_A3_PER_MUB
+
+_log = logging.getLogger(__name__)
 
 KINDS = ("ising", "planar", "heisenberg")
 METHODS = ("auto", "exhaustive", "annealing")
@@ -247,6 +250,8 @@ def _patterns(searches: list[SearchProblem], options: _Options) -> tuple[list[Fo
             f"{options.kind} moments{where} were annealed: {result.at_best} of {result.restarts} restarts "
             f"({schedule.sweeps} sweeps each) found the best; a lower state may exist"
         )
+    for note in notes:
+        _log.info("%s", note)
     return found, notes, counts
 
 

@@ -78,6 +78,7 @@ def _clock(seconds: float) -> str:
     help="Resident size that a process may reach; an input that takes more is stopped and reported.",
 )
 @click.option("--quiet", is_flag=True, help="No progress bar and no closing words.")
+@click.option("--json", "as_json", is_flag=True, help="Print what summary.json holds when all is done.")
 @verbose_option
 def batch(
     template: Path,
@@ -89,17 +90,20 @@ def batch(
     timeout: float | None,
     memory: float | None,
     quiet: bool,
+    as_json: bool,
 ) -> None:
     """Run a template on every INPUT: structure files, patterns such as 'set/*.cif', folders, or - for a list on stdin.
 
     TEMPLATE is a study without [crystal]. A broken input never stops the others; it is reported in the results, and
-    the exit status is then 1. A run that was stopped goes on with --resume.
+    the exit status is then 1. A run that was stopped goes on with --resume. No --csv is needed: results.csv is always
+    written.
 
     \b
     Example:
       latticedip batch template.toml structures/ -o results
       latticedip batch template.toml structures/ -o results --resume --timeout 60
     """
+    from latticedip.encode import to_json
     from latticedip.study.batch import cluster_executor, run_batch
 
     if cluster is not None:
@@ -131,6 +135,8 @@ def batch(
             click.echo(f"  {entry['error'] if entry['input'] in entry['error'] else _both(entry)}", err=True)
         if result.failed > 5:
             click.echo(f"  and {result.failed - 5} more, listed in {folder / 'summary.json'}.", err=True)
+    if as_json:
+        click.echo(to_json(result.summary), nl=False)
     if result.failed:
         click.get_current_context().exit(1)
 

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import logging
 import warnings
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import spglib
@@ -16,6 +17,8 @@ if TYPE_CHECKING:
 
 #: Distance (Å) within which atoms count as symmetry-equivalent.
 SYMMETRY_TOLERANCE_A = 1e-3
+
+_log = logging.getLogger(__name__)
 
 
 def find_operations(crystal: Crystal, tolerance: float = SYMMETRY_TOLERANCE_A) -> tuple[Operations | None, list[int]]:
@@ -30,21 +33,40 @@ def find_operations(crystal: Crystal, tolerance: float = SYMMETRY_TOLERANCE_A) -
     alone = list(range(crystal.n_sites))
     if not all(crystal.pbc) or crystal.n_sites == 0:
         return None, alone
+    data = _dataset(crystal, tolerance)
+    if data is None:
+        _log.debug("no symmetry found of %d atoms", crystal.n_sites)
+        return None, alone
+    _log.debug(
+        "symmetry of %d atoms within %g Å: space group %s, %d operations",
+        crystal.n_sites, tolerance, data.international, len(data.rotations),
+    )  # fmt: skip
+    return Operations(data.rotations, data.translations), [int(i) for i in data.equivalent_atoms]
+
+
+def _dataset(crystal: Crystal, tolerance: float) -> Any:
+    """What spglib finds of a crystal that is periodic in three directions; None where the search fails."""
     kinds: dict[tuple[str, float], int] = {}
     numbers = [
         kinds.setdefault((s, round(float(p), 6)), len(kinds) + 1)
         for s, p in zip(crystal.symbols, crystal.occupancies, strict=True)
     ]
-    cell = (crystal.cell, crystal.positions, numbers)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", DeprecationWarning)
         try:
-            data = spglib.get_symmetry_dataset(cell, symprec=tolerance)
+            return spglib.get_symmetry_dataset((crystal.cell, crystal.positions, numbers), symprec=tolerance)
         except spglib.SpglibError:
-            return None, alone
-    if data is None:
-        return None, alone
-    return Operations(data.rotations, data.translations), [int(i) for i in data.equivalent_atoms]
+            return None
+
+
+def cells_in_conventional(crystal: Crystal) -> float:
+    """How many cells of a crystal its conventional cell holds: 4 for a primitive face-centred one, 1/2 for a doubled
+    cell; 1 where it has none (not periodic in three directions, or the search for symmetry fails).
+    """
+    if not all(crystal.pbc) or crystal.n_sites == 0:
+        return 1.0
+    data = _dataset(crystal, SYMMETRY_TOLERANCE_A)
+    return 1.0 if data is None else float(1.0 / np.linalg.det(data.transformation_matrix))
 
 
 def operations_of(crystal: Crystal) -> Operations:

@@ -319,6 +319,7 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
     sites: dict[str, Site] = {}
     dummies: list[str] = []
     empty: list[str] = []
+    unknown: list[str] = []
     notes: list[str] = []
     for row in range(len(x.values)):
         label = labels.text(row)
@@ -329,7 +330,10 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
         if (_optional(optional["calc_flag"], row) or "").lower() == "dum":
             dummies.append(label)
             continue
-        occupancy = _occupancy(block, optional["occupancy"], row, label)
+        column = optional["occupancy"]
+        occupancy = _occupancy(block, column, row, label)
+        if column is not None and column.is_unknown(row):
+            unknown.append(label)
         if occupancy == 0:
             empty.append(label)
             continue
@@ -352,6 +356,8 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
     if not sites:
         raise block.error("it lists no atoms.")
     notes.extend(occupancy_notes([site.shown for site in sites.values()], [site.occupancy for site in sites.values()]))
+    if unknown:
+        notes.append(f"occupancies stated as unknown (?) are taken as 1: {', '.join(unknown)}")
     if dummies:
         notes.append(f"dummy atoms are left out: {', '.join(dummies)}")
     if empty:

@@ -26,6 +26,7 @@ from latticedip.study.batch_journal import RESULTS, SUMMARY, TABLE, Journal, Row
 from latticedip.study.batch_pool import TICK_S, Pool
 from latticedip.study.batch_record import CRASH, INPUT, Job, Outcome, do_job, failure, file_hash
 from latticedip.study.batch_template import Template, check_limit
+from latticedip.study.documents import NO_SUM
 
 #: Jobs that an executor holds at one time; a cluster of a thousand cores stays busy with them.
 MOST_SUBMITTED = 4000
@@ -152,17 +153,24 @@ def _summary(
     from latticedip.study.batch_tables import record_rows
 
     failed: list[dict[str, Any]] = []
+    boundaries: dict[str, None] = {}
 
     def rows(record: dict[str, Any]) -> list[Row]:
         if record["status"] == "failed":
             failed.append({"input": record["input"], "error": record["error"], "reason": record["reason"]})
+        for document in record["results"].values():
+            boundaries.update(dict.fromkeys(document["boundary"].split("; ")))
         return [*record_rows(record)]
 
     journal.merge(rows)
     return {
         "schema": "latticedip/batch/1",
         "version": __version__,
-        "template": {"path": plan.file, "sha256": plan.digest, "do": list(plan.do)},
+        "inputs": {
+            "files": [{"role": "template", "path": plan.file, "sha256": plan.digest}],
+            "options": {"do": list(plan.do), **plan.options},
+        },
+        "boundary": "; ".join(boundaries) or NO_SUM,
         "counts": {
             "inputs": len(states),
             "done": sum(states.values()),

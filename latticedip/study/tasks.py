@@ -54,6 +54,11 @@ def open_study(path: Path) -> Study:
         len(study.orderings),
         len(study.probes),
     )
+    if _log.isEnabledFor(logging.INFO):
+        from latticedip.crystal.symmetry import operations_of
+
+        found = operations_of(study.crystal)
+        _log.info("symmetry: %d operations of the structure without moments", len(found.rotations))
     return study
 
 

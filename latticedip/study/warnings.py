@@ -8,8 +8,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from latticedip.checks import FloatArray
+from latticedip.crystal.lattice import label_centrings
 from latticedip.crystal.model import SAME_PLACE_A, Crystal
 from latticedip.crystal.neighbours import close_pairs, neighbours_of
+from latticedip.crystal.symmetry import cells_in_conventional
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.particles import particle_named
@@ -66,6 +68,7 @@ def study_warnings(study: Study, sizes: Mapping[str, float]) -> list[str]:
     return [
         *crystal_warnings(study.crystal),
         *_moment_warnings(study, sizes),
+        *_cell_warnings(study),
         *_shape_warnings(study),
         *(words for probe in study.probes for words in _probe_warnings(probe, study.crystal)),
         *(words for probe in study.probes for words in _contact_warnings(probe, study)),
@@ -85,6 +88,29 @@ def _moment_warnings(study: Study, sizes: Mapping[str, float]) -> Iterator[str]:
     for label, size in sizes.items():
         if size > LARGEST_ION_MUB:
             yield f"{label} has a moment of {size:.6g} µB, more than any ion: check it."
+
+
+def _cell_warnings(study: Study) -> Iterator[str]:
+    """Where k could be meant in another cell of the same lattice: the primitive or the conventional one."""
+    waves = [
+        ordering.name
+        for ordering in study.orderings
+        if ordering.reference is None and not all(float(x).is_integer() for x in ordering.k.ravel())
+    ]
+    if not waves:
+        return
+    named = f"({', '.join(waves)})"
+    centrings, cells = len(label_centrings(study.crystal)), cells_in_conventional(study.crystal)
+    if centrings > 1:
+        yield (
+            f"the cell holds {centrings} primitive cells: k counts in the reciprocal vectors of this cell, not of a "
+            f"primitive one {named}."
+        )
+    elif cells > 1 + 1e-6:
+        yield (
+            f"the cell is primitive, the conventional one holds {cells:.3g} of it: k counts in the reciprocal vectors "
+            f"of this cell, not of the conventional one {named}."
+        )
 
 
 def _shape_warnings(study: Study) -> Iterator[str]:

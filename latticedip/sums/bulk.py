@@ -15,6 +15,7 @@ with B₁, B₂ as in `latticedip.kernels.radial`. The trace of the whole is kno
 
 from __future__ import annotations
 
+import logging
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
@@ -40,6 +41,8 @@ TAIL_SHARE = 0.2
 MAX_VECTORS = 20_000_000
 #: Whole numbers above this cannot be taken from an offset exactly.
 MAX_CELLS = 2**26
+
+_log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True, eq=False)
@@ -238,7 +241,7 @@ def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | N
     distances = lattice.layer_distances
     wanted = TAIL_SHARE * tol / DIPOLE_T_A3_PER_MUB
     if alpha is None:
-        alpha, r_c, q_c = choose_splitting(distances, lattice.volume, wanted)
+        alpha, r_c, q_c = _splitting(distances.tobytes(), lattice.volume, wanted)
     else:
         one = np.array([alpha])
         r_c, q_c = (
@@ -258,6 +261,17 @@ def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | N
         runs=frozen(consecutive_runs(indices)), limits=frozen(np.abs(indices).max(axis=0, initial=0)), q=frozen(q),
         weights=frozen(pairs * scale[:, None]),
     )  # fmt: skip
+
+
+@lru_cache(maxsize=256)
+def _splitting(distances: bytes, volume: float, wanted: float) -> tuple[float, float, float]:
+    """`choose_splitting`, done and told once for a lattice and a bound, whatever the k."""
+    alpha, r_c, q_c = choose_splitting(np.frombuffer(distances), volume, wanted)
+    _log.info(
+        "lattice sum over a cell of %.5g Å³: splitting %.4g 1/Å, images within %.4g Å, waves up to %.4g 1/Å",
+        volume, alpha, r_c, q_c,
+    )  # fmt: skip
+    return alpha, r_c, q_c
 
 
 def image_vectors(lattice: ReducedLattice, cutoff: float) -> tuple[FloatArray, FloatArray]:

@@ -11,6 +11,7 @@ once, and a block of k costs two matrix products. T_ji(k) is the conjugate of T_
 
 from __future__ import annotations
 
+import logging
 from dataclasses import dataclass
 from itertools import combinations
 
@@ -30,6 +31,8 @@ MAX_TABLE_BYTES = 2 * 2**30
 BLOCK_BYTES = 2**24
 #: Cost of one wave against one image, in the products and in building their tables (measured).
 COST_WAVE = 1.5
+
+_log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True, eq=False)
@@ -141,6 +144,10 @@ def many_k(cell: FloatArray, places_cart: FloatArray, tol: float = 1e-10, alpha:
             f"{len(places_cart)} sites need tables larger than {MAX_TABLE_BYTES // 2**30} GiB for sums at many k. "
             "Give a primitive cell, fewer magnetic sites or a larger tol."
         )
+    _log.info(
+        "sums at many k between %d sites: splitting %.4g 1/Å, about %d images and %d waves tabulated",
+        len(places_cart), grid[best], images[best], waves[best],
+    )  # fmt: skip
     return _tabulate(
         lattice, np.asarray(places_cart, dtype=float), float(grid[best]), float(r_c[best]), float(q_c[best] + widest)
     )

@@ -56,7 +56,7 @@ def modes_figure(document: Mapping[str, Any]) -> Figure:
     bound = document["lowest"]["energy_ueV_per_ion"]
     panel.axhline(bound, color=INK, linestyle=(0, (5, 3)), linewidth=0.9)
     panel.annotate(
-        f"lowest mode {signed(bound, '.5g')} µeV", (distance[-1], bound), xytext=(0, -3),
+        f"lowest mode {signed(bound, '.5g')} µeV", (distance[-1], bound), xytext=(-3, -3),
         textcoords="offset points", fontsize=SMALL_PT, ha="right", va="top",
     )  # fmt: skip
     for tick in found["ticks"]:

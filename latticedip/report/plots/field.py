@@ -91,6 +91,7 @@ def _panel(panel: Axes, probe: str, entries: Sequence[Mapping[str, Any]], unit: 
     panel.hlines(range(len(entries)), 0, 1, transform=panel.get_yaxis_transform(), color=PALE, linewidth=0.5, zorder=0)
     panel.set_yticks(range(len(entries)), [in_lines(entry["ordering"]) for entry in entries])
     panel.set_ylim(len(entries) - 0.4, -0.7)
+    panel.locator_params(axis="x", nbins=7)
     panel.set_xlim(-0.03 * largest or -0.03, 1.12 * largest or 1.0)
     if per_unit > 0:
         above_axis(panel, per_unit, "frequency (MHz)")

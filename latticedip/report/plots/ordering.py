@@ -103,18 +103,20 @@ def orderings_figure(document: Mapping[str, Any]) -> Figure:
     columns = min(len(entries), 2 if len(entries) in (2, 4) else 3)
     lines = -(-len(entries) // columns)
     shapes = [_extent(entry, view) for entry in entries]
-    ratio = float(np.clip(max(y / x for x, y in shapes), FLATTEST, TALLEST))
+    ratios = [float(np.clip(y / x, FLATTEST, TALLEST)) for x, y in shapes]
+    by_line = [max(ratios[i * columns : (i + 1) * columns]) for i in range(lines)]
     wide = WIDTH_IN / columns if columns > 1 else 0.75 * WIDTH_IN
-    figure = Figure(figsize=(WIDTH_IN, lines * (wide * ratio + HEAD_IN) + HEAD_IN + FOOT_IN), layout="constrained")
+    heights = [wide * ratio + HEAD_IN for ratio in by_line]
+    figure = Figure(figsize=(WIDTH_IN, sum(heights) + HEAD_IN + FOOT_IN), layout="constrained")
     seen = direction(document["view"]["eye_abc"])
     figure.suptitle(plain(f"{document['title']}\nseen from {seen} (components along a, b, c)"))
-    panels = figure.subplots(lines, columns, squeeze=False).ravel()
+    panels = figure.subplots(lines, columns, squeeze=False, height_ratios=heights).ravel()
     marks = _marks(entries)
     for panel in panels:
         panel.set_axis_off()
     end_on: set[int] = set()
-    for panel, entry, shape in zip(panels, entries, shapes, strict=False):
-        per_point = float(max(shape[0], shape[1] / ratio)) / (72 * wide)
+    for number, (panel, entry, (x, y)) in enumerate(zip(panels, entries, shapes, strict=False)):
+        per_point = float(max(x, y / by_line[number // columns])) / (72 * wide)
         end_on |= _panel(panel, entry, view, scale, marks, per_point)
     handles = _legend(entries, scale, marks, end_on)
     labels = [(handle[0] if isinstance(handle, tuple) else handle).get_label() for handle in handles]

@@ -56,7 +56,9 @@ def rank_figure(document: Mapping[str, Any]) -> Figure:
     figure.suptitle(plain(document["title"]))
     panel = figure.subplots()
     energies = [row["energy_ueV_per_ion"] for row in rows]
+    banded: set[int] = set()
     for first, last in tie_bands(rows):
+        banded |= set(range(first, last + 1))
         panel.axhspan(first - 0.42, last + 0.42, color=FAINT, linewidth=0)
         panel.annotate(
             "tie", (1, (first + last) / 2), xycoords=("axes fraction", "data"), xytext=(-5, 0),
@@ -69,7 +71,7 @@ def rank_figure(document: Mapping[str, Any]) -> Figure:
         panel.annotate(
             signed(energy, ".2f" if abs(energy) < 1e4 else ".5g"), (energy, place), xytext=(0, 5),
             textcoords="offset points", fontsize=SMALL_PT, ha="center", va="bottom",
-            bbox={"facecolor": "1.0", "edgecolor": "none", "pad": 0.3},
+            bbox={"facecolor": FAINT if place in banded else "1.0", "edgecolor": "none", "pad": 0.3},
         )  # fmt: skip
     panel.set_yticks(range(len(rows)), [f"{row['rank']}  {in_lines(row['ordering'])}" for row in rows])
     panel.set_ylim(len(rows) - 0.4, -0.75)
