@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import os
+import resource
 import subprocess
 import sys
 import tempfile
@@ -45,11 +46,12 @@ def watch(process: subprocess.Popen[bytes], sizes: list[tuple[float, float, floa
         time.sleep(0.2)
 
 
-def run(folder: Path, workers: int, round_number: int) -> tuple[float, list[tuple[float, float, float]]]:
-    """Seconds of one batch command, and the sizes of its processes over time."""
+def run(folder: Path, workers: int, round_number: int) -> tuple[float, float, list[tuple[float, float, float]]]:
+    """Wall and CPU seconds of one batch command, and the sizes of its processes over time."""
     out = folder / f"out_{workers}_{round_number}"
     command = [sys.executable, "-m", "latticedip", "batch", "t.toml", "in", "-o", str(out), "--quiet"]
     sizes: list[tuple[float, float, float]] = []
+    used = resource.getrusage(resource.RUSAGE_CHILDREN)
     start = time.perf_counter()
     process = subprocess.Popen(
         [*command, "--workers", str(workers)], cwd=folder, env=os.environ | {"PYTHONPATH": str(ROOT)}
@@ -61,7 +63,8 @@ def run(folder: Path, workers: int, round_number: int) -> tuple[float, list[tupl
     watcher.join()
     counts = json.loads((out / "summary.json").read_text(encoding="utf-8"))["counts"]
     assert counts["done"] + counts["failed"] == counts["inputs"] and process.returncode == 1, counts
-    return spent, sizes
+    now = resource.getrusage(resource.RUSAGE_CHILDREN)
+    return spent, now.ru_utime + now.ru_stime - used.ru_utime - used.ru_stime, sizes
 
 
 def level(sizes: list[tuple[float, float, float]], column: int, first: float, last: float) -> float:
@@ -79,13 +82,19 @@ def main() -> None:
         folder = Path(name)
         write_files(folder / "in", n)
         (folder / "t.toml").write_text(TEMPLATE, encoding="utf-8")
-        one, two = [], []
+        one, two, cpu_one, cpu_two = [], [], [], []
         for number in range(rounds):
-            spent, sizes = run(folder, 1, number)
+            spent, cpu, sizes = run(folder, 1, number)
             one.append(spent)
-            spent, _ = run(folder, 2, number)
+            cpu_one.append(cpu)
+            spent, cpu, _ = run(folder, 2, number)
             two.append(spent)
-            print(f"round {number + 1}: one worker {one[-1]:.1f} s, two workers {two[-1]:.1f} s", flush=True)
+            cpu_two.append(cpu)
+            print(
+                f"round {number + 1}: one worker {one[-1]:.1f} s ({cpu_one[-1]:.1f} s CPU), "
+                f"two workers {two[-1]:.1f} s ({cpu_two[-1]:.1f} s CPU)",
+                flush=True,
+            )
         lines = {(folder / f"out_{w}_0" / "results.jsonl").stat().st_size for w in (1, 2)}
         tables = {(folder / f"out_{w}_0" / "results.csv").read_bytes() for w in (1, 2)}
         bytes_of_results = max(lines)

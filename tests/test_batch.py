@@ -351,6 +351,22 @@ def test_other_commands_are_tasks(work):
         assert [len(points) for points in row["fields"].values()] == [1]
 
 
+def test_orderings_may_be_proposed(work):
+    text = "[propose]\nsupercell = [1, 1, 2]\nalong = [0, 0, 1]\nnet_zero = true\nkeep = 2\n[moments]\n" + "".join(
+        f"{element} = 2\n" for element in ("Mn", "Fe", "Co", "Ni")
+    )
+    Path("u.toml").write_text(text, encoding="utf-8")
+    run("u.toml", ["in/00000_bilayer.cif", "in/00003_magnetic.mcif"], "o")
+    found = records("o")
+    rows = found["in/00000_bilayer.cif"]["results"]["rank"]["rows"]
+    assert len(rows) == 2 and all(row["net_moment_muB_per_ion"] < 1e-9 for row in rows)
+    names = [row["ordering"] for row in found["in/00003_magnetic.mcif"]["results"]["rank"]["rows"]]
+    assert "in the file" in names and len(set(names)) == 3
+    Path("u.toml").write_text("[propose]\nkeep = 2\n[[probe]]\nposition = [0.3, 0, 0]\n", encoding="utf-8")
+    run("u.toml", ["in/00000_bilayer.cif"], "o2")
+    assert "states no moment sizes" in records("o2")["in/00000_bilayer.cif"]["error"]
+
+
 # Probes by rule
 
 

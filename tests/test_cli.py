@@ -564,11 +564,16 @@ def test_help_of_every_command_holds_an_example() -> None:
 
 def test_verbose_reports_on_stderr(folder: Path) -> None:
     result = run("--verbose", "rank", "study.toml")
-    assert result.stderr.startswith("read study.toml: 1 sites, 3 orderings, 2 probes\ndone in ")
+    lead = "read study.toml: 1 sites, 3 orderings, 2 probes\nsymmetry: 48 operations of the structure without moments\n"
+    assert result.stderr.startswith(lead)
+    assert result.stderr.splitlines()[-1].startswith("done in ")
     assert run("rank", "study.toml").stderr == ""
     assert run("rank", "study.toml").stdout == result.stdout
-    behind = run("rank", "study.toml", "-v")
-    assert behind.stderr.startswith("read study.toml: 1 sites, 3 orderings, 2 probes\ndone in ")
+    behind = run("rank", "study.toml", "-v", "--tol", "3.1e-9")
+    assert behind.stderr.startswith(lead)
+    # What was decided of the lattice sums is told once for a cell and a bound.
+    assert "\nlattice sum over a cell of " in behind.stderr
+    assert "\nsums at many k between 1 sites: splitting " in behind.stderr
     assert run("rank", "study.toml").stderr == ""
 
 

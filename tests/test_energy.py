@@ -219,3 +219,12 @@ def test_objects_and_refusals():
     )
     with pytest.raises(InputError, match=r"^tol must lie between 1e-12 and 0.01, got 0.1\.$"):
         ld.dipolar_energy(ordering_of("pair"), tol=0.1)
+
+
+@pytest.mark.parametrize("call", [ld.dipolar_energy, lambda x, **more: ld.local_field(x, [[0.1, 0.2, 0.3]], **more)])
+def test_other_kinds_of_object_are_refused(call):
+    crystal = ld.Crystal(4 * np.eye(3), [[0, 0, 0]], ["Mn"])
+    with pytest.raises(ld.LatticedipError, match="needs an Ordering, got Crystal"):
+        call(crystal)
+    with pytest.raises(ld.LatticedipError, match="sample must be a Sample"):
+        call(ld.Ordering(crystal, [[0, 0, 1]]), sample=[1, 1, 1])

@@ -118,3 +118,60 @@ def test_start_does_not_write_over_its_structure(folder: Path) -> None:
     assert (result.exit_code, result.stdout) == (2, "")
     assert result.stderr == "Error: 'pair.cif' is read here (as the structure). Write to another file.\n"
     assert Path("pair.cif").read_text(encoding="utf-8") == CRYSTAL
+
+
+#: Rock salt in its primitive cell and in its conventional one.
+PRIMITIVE = """2
+Lattice="0 2.2 2.2 2.2 0 2.2 2.2 2.2 0" Properties=species:S:1:pos:R:3 pbc="T T T"
+Mn 0 0 0
+O 2.2 2.2 2.2
+"""
+CONVENTIONAL = """8
+Lattice="4.4 0 0 0 4.4 0 0 0 4.4" Properties=species:S:1:pos:R:3 pbc="T T T"
+Mn 0 0 0
+Mn 0 2.2 2.2
+Mn 2.2 0 2.2
+Mn 2.2 2.2 0
+O 2.2 2.2 2.2
+O 2.2 0 0
+O 0 2.2 0
+O 0 0 2.2
+"""
+LAYERS = """[crystal]
+file = "salt.xyz"
+[moments]
+Mn = 2.0
+[[ordering]]
+name = "layers"
+k = ["1/2", "1/2", "1/2"]
+along = [0, 0, 1]
+"""
+
+
+@pytest.mark.parametrize(
+    ("crystal", "study", "warnings"),
+    [
+        (
+            PRIMITIVE,
+            LAYERS,
+            [
+                "the cell is primitive, the conventional one holds 4 of it: k counts in the reciprocal vectors of this "
+                "cell, not of the conventional one (layers)."
+            ],
+        ),
+        (
+            CONVENTIONAL,
+            LAYERS,
+            [
+                "the cell holds 4 primitive cells: k counts in the reciprocal vectors of this cell, not of a primitive "
+                "one (layers)."
+            ],
+        ),
+        # At k = 0 every cell gives the same.
+        (PRIMITIVE, LAYERS.replace('["1/2", "1/2", "1/2"]', "[0, 0, 0]") + "[sample]\nsphere = true\n", []),
+    ],
+)
+def test_k_that_could_be_meant_in_another_cell(folder: Path, crystal: str, study: str, warnings: list[str]) -> None:
+    (folder / "salt.xyz").write_text(crystal, encoding="utf-8")
+    (folder / "study.toml").write_text(study, encoding="utf-8")
+    assert study_warnings(read_study("study.toml"), {"Mn1": 2.0}) == warnings

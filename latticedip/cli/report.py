@@ -7,11 +7,12 @@ from pathlib import Path
 import click
 
 from latticedip.cli.options import (
+    deliver,
     ordering_option,
+    output_options,
     probe_option,
     study_argument,
     tol_option,
-    verbose_option,
     view_option,
 )
 
@@ -29,8 +30,7 @@ SUFFIXES = (".html", ".htm")
 @ordering_option
 @probe_option
 @tol_option
-@click.option("--json", "as_json", is_flag=True, help="Also print all results as one JSON document.")
-@verbose_option
+@output_options
 def report(
     study: Path,
     output: Path,
@@ -41,32 +41,43 @@ def report(
     probes: tuple[str, ...],
     tol: float,
     as_json: bool,
+    csv_path: Path | None,
 ) -> None:
     """Write one HTML page about a study, for the logbook and for a referee: inputs with content hashes, assumptions,
     the tables of show, rank, field, shift (with a susceptibility) and linewidth, pictures, and what is left out.
 
-    The page needs nothing else: no network, no script. The same inputs give the same page.
+    The page needs nothing else: no network, no script. The same inputs give the same page. Its summary goes to the
+    screen; the JSON document holds all results, the CSV file the ranking (without orderings, the atoms).
 
     \b
     Example:
       latticedip report study.toml -o report.html
     """
-    from latticedip.encode import to_json, write_text_atomically
+    from latticedip.encode import write_text_atomically
     from latticedip.errors import InputError
-    from latticedip.report.html import report_html
+    from latticedip.report.html import report_html, summary_sentences
+    from latticedip.report.tables import paragraph
     from latticedip.study import tasks
     from latticedip.study.documents import spare_inputs
-    from latticedip.study.reports import ReportOptions, report_document
+    from latticedip.study.reports import ReportOptions, report_document, report_table
 
     if output.suffix.lower() not in SUFFIXES:
         raise InputError(f"a report ends in {' or '.join(SUFFIXES)}, got {str(output)!r}.")
     if not no_pictures:
         from latticedip.report.plots import check_library
 
-        check_library()
+        try:
+            check_library()
+        except InputError as error:
+            raise InputError(f"{error}. Or leave them out with --no-pictures.") from None
     document = report_document(tasks.open_study(study), ReportOptions(orderings, probes, rotate, view, tol))
     spare_inputs(output, document)
     write_text_atomically(output, report_html(document, pictures=not no_pictures))
     click.echo(f"Wrote {output}.", err=True)
-    if as_json:
-        click.echo(to_json(document), nl=False)
+    deliver(
+        document,
+        rows=lambda: report_table(document),
+        text=lambda: "\n".join(paragraph(sentence) for sentence in summary_sentences(document)),
+        as_json=as_json,
+        csv_path=csv_path,
+    )

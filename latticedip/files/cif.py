@@ -91,7 +91,7 @@ def expand(block: Block, name: str, cell: FloatArray, group: Group, *, magnetic:
     The operations are kept on the Crystal where they are those of a non-magnetic structure and more than the
     identity; elsewhere the symmetry is left to be found from the atoms.
     """
-    sites, notes = read_sites(block)
+    sites, notes = read_sites(block, magnetic=magnetic)
     orbits = tuple(orbit_of(block, group, site.position, cell, site.label) for site in sites)
     for site, orbit in zip(sites, orbits, strict=True):
         # In a magCIF a stated multiplicity may count in the parent's cell, so it is compared in plain CIFs only.
@@ -293,8 +293,10 @@ def _from_gemmi(operations: gemmi.GroupOps) -> list[Operation]:
     ]
 
 
-def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
+def read_sites(block: Block, *, magnetic: bool = True) -> tuple[tuple[Site, ...], tuple[str, ...]]:
     """The listed sites, and what has to be said about them (partial occupancy, deuterium, rows left out).
+
+    Without moments nothing refers to a label, so that atoms of one element may share one: it then covers them all.
 
     Raises FileError for missing or duplicate labels, unknown elements, missing coordinates and occupancies
     outside 0 to 1.
@@ -325,6 +327,12 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
         label = labels.text(row)
         if not label:
             raise block.error(f"{labels.tag} is {labels.values[row]!r} in row {row + 1}; every atom needs a label.")
+        known = sites.get(label)
+        if known is not None and not magnetic and known.symbol == _element(block, optional["type_symbol"], row, label):
+            # Files that list every atom often call all of one element alike.
+            shared, label = label, f"{label} (row {row + 1})"
+        else:
+            shared = None
         if label in sites or label in dummies or label in empty:
             raise block.error(f"{labels.tag} {label!r} stands for two atoms (row {row + 1}). Labels must differ.")
         if (_optional(optional["calc_flag"], row) or "").lower() == "dum":
@@ -349,7 +357,7 @@ def read_sites(block: Block) -> tuple[tuple[Site, ...], tuple[str, ...]]:
             su,
             occupancy,
             int(multiplicity) if multiplicity and multiplicity.isdecimal() else None,
-            _optional(shown, row) or label,
+            _optional(shown, row) or shared or label,
         )
         if symbol == "D":
             notes.append(f"{label} is deuterium; it is counted as hydrogen")

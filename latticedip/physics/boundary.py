@@ -5,12 +5,19 @@ from __future__ import annotations
 import numpy as np
 
 from latticedip.checks import FloatArray
+from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.sample import Sample
 from latticedip.units import MU0_T_A3_PER_MUB
 
 #: Net moments smaller than this (µB per cell) count as zero in words; the numbers keep them.
 NET_MOMENT_MUB = 1e-6
+
+
+def check_sample(sample: object) -> None:
+    """Raise InputError unless this is a Sample or None."""
+    if sample is not None and not isinstance(sample, Sample):
+        raise InputError(f"sample must be a Sample (such as Sample.sphere()) or None, got {type(sample).__name__}.")
 
 
 def magnetization_T(ordering: Ordering) -> FloatArray:

@@ -134,6 +134,8 @@ class Coupling:
 
 def require_bulk(crystal: Crystal) -> None:
     """Raise InputError unless the crystal is periodic in three directions, which the sums here need."""
+    if not isinstance(crystal, Crystal):
+        raise InputError(f"a Crystal is needed here, got {type(crystal).__name__}.")
     if not all(crystal.pbc):
         raise InputError(
             f"the structure is periodic along {crystal.pbc} only; sums are available for three periodic directions."

@@ -10,7 +10,7 @@ import numpy as np
 from latticedip.checks import ComplexArray, FloatArray, check_tol
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering, is_self_conjugate
-from latticedip.physics.boundary import boundary_words
+from latticedip.physics.boundary import boundary_words, check_sample
 from latticedip.physics.coupling import coupling_tensors, refuse_split_ions
 from latticedip.sample import Sample
 from latticedip.units import EV_PER_MUB_T, K_PER_EV, MU0_T_A3_PER_MUB
@@ -76,7 +76,10 @@ def dipolar_energy(ordering: Ordering, *, sample: Sample | None = None, tol: flo
     Raises InputError where no site carries a moment, the crystal is not periodic in three directions, or two magnetic
     sites lie between 1e-3 and 0.1 Å apart.
     """
+    if not isinstance(ordering, Ordering):
+        raise InputError(f"dipolar_energy needs an Ordering, got {type(ordering).__name__}.")
     require_ions(ordering)
+    check_sample(sample)
     specimen = Sample() if sample is None else sample
     dipolar = bound = 0.0
     for weight, mean, tensors in weighted_couplings(ordering, check_tol(tol)):

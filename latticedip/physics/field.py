@@ -15,7 +15,7 @@ from latticedip.crystal.model import OVERLAP_A, SAME_PLACE_A, Crystal
 from latticedip.crystal.spread import as_spread, carried_spreads, covariance_of
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
-from latticedip.physics.boundary import boundary_words, magnetization_T
+from latticedip.physics.boundary import boundary_words, check_sample, magnetization_T
 from latticedip.physics.contact import contact_field
 from latticedip.physics.coupling import require_bulk
 from latticedip.physics.spread import (
@@ -247,8 +247,11 @@ def local_field(
     site, a crystal that is not periodic in three directions, a spread as `Probe` refuses it, and one that is flat and
     reaches an ion.
     """
+    if not isinstance(ordering, Ordering):
+        raise InputError(f"local_field needs an Ordering, got {type(ordering).__name__}.")
     require_bulk(ordering.crystal)
     check_tol(tol)
+    check_sample(sample)
     specimen = Sample() if sample is None else sample
     rows = _rows(ordering, points, as_spread("spread", spread))
     crystal = ordering.crystal

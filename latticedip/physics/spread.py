@@ -147,9 +147,7 @@ def cloud_fields(
 
 def reached_words(who: str, label: str) -> str:
     """What is said of a spread that reaches an atom; who: whose spread it is, "of ..." or "of the probe"."""
-    return (
-        f"the spread {who} reaches atom {label}: the traceless (principal-value) part is given; the rest is contact"
-    )
+    return f"the spread {who} reaches atom {label}: the traceless (principal-value) part is given; the rest is contact"
 
 
 def cloud_gradients(

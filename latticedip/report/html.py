@@ -203,7 +203,8 @@ def _bullets(sentences: Sequence[str]) -> str:
 # --- what is said beside the results --------------------------------------------------------------------
 
 
-def _summary(document: Mapping[str, Any]) -> str:
+def summary_sentences(document: Mapping[str, Any]) -> list[str]:
+    """The outcome of a report document in a few sentences: which ordering is lowest, boundary, warnings."""
     sentences = []
     rank = document["sections"].get("rank")
     if rank is not None:
@@ -225,7 +226,12 @@ def _summary(document: Mapping[str, Any]) -> str:
     warnings = len(document["sections"]["show"]["warnings"])
     if warnings:
         sentences.append(f"{warnings} warning{'s' if warnings > 1 else ''}, listed at the end.")
-    return '<div class="summary">' + "".join(f"<p>{escaped(sentence)}</p>" for sentence in sentences) + "</div>"
+    return sentences
+
+
+def _summary(document: Mapping[str, Any]) -> str:
+    sentences = "".join(f"<p>{escaped(sentence)}</p>" for sentence in summary_sentences(document))
+    return f'<div class="summary">{sentences}</div>'
 
 
 def _bound(rows: Sequence[Mapping[str, Any]]) -> float:

@@ -252,11 +252,12 @@ def bullets(sentences: Iterable[str], *, width: int | None = None) -> str:
 
 
 def heading(text: str) -> str:
-    """Return a text underlined."""
+    """Return a text underlined, over several lines where it is wider than the screen."""
     shown = clean(text)
     if (setter := _SETTER.get()) is not None:
         return setter.heading(shown)
-    return f"{shown}\n{'=' * text_width(shown)}"
+    lines = _wrapped(shown, screen_width())
+    return "\n".join([*lines, "=" * max(text_width(line) for line in lines)])
 
 
 def decimals_for(values: Iterable[float], *, significant: int = SIGNIFICANT, error: float = 0.0) -> int:

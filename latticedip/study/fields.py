@@ -28,6 +28,11 @@ PARTS = {
     "applied": "applied",
     "field": "total",
 }
+#: What stands beside a field with an uncertainty.
+SU_NOTE = (
+    "digits in brackets are the standard uncertainty of the last ones, from those stated of moments, sites and probes, "
+    "to first order; everything else counts as exact"
+)
 
 
 def field_document(
@@ -49,7 +54,8 @@ def field_document(
         plain = result.to_dict()
         rows = [field_row(row, study.crystal, axes, unit) for row in plain["rows"]]
         placed = "" if ordering.reference is None else ordering.reference.how
-        notes = [note for note in [*plain["notes"], *home_cell_notes([ordering])] if note not in placed]
+        uncertain = [SU_NOTE] if any("field_size_su_T" in row for row in plain["rows"]) else []
+        notes = [note for note in [*plain["notes"], *uncertain, *home_cell_notes([ordering])] if note not in placed]
         entries.append({**ordering_head(ordering), **plain, "rows": rows, "notes": notes})
     return document(
         "field",

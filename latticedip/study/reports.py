@@ -9,10 +9,11 @@ from typing import TYPE_CHECKING, Any
 
 from latticedip.errors import LatticedipError
 from latticedip.study import tasks
-from latticedip.study.describe import describe_study
+from latticedip.study.describe import describe_study, show_table
 from latticedip.study.documents import document
 from latticedip.study.drawings import drawing_of_study
 from latticedip.study.rank_options import RankOptions
+from latticedip.study.rankings import rank_table
 from latticedip.study.schema import LARGEST_FILE, load_bytes
 
 if TYPE_CHECKING:
@@ -99,6 +100,12 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
             "left_out": left_out,
         },
     )
+
+
+def report_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
+    """The rows of a report document for CSV: those of its ranking or, without orderings, of what was understood."""
+    sections = doc["sections"]
+    return rank_table(sections["rank"]) if "rank" in sections else show_table(sections["show"])
 
 
 def _study_text(study: Study) -> str | None:

@@ -79,7 +79,7 @@ def shift_figure(document: Mapping[str, Any]) -> Figure:
         _curve_panel(row[1], found, "chi_cm3_per_mol")
         row[0].set_xlabel("temperature (K)")
         row[1].set_xlabel("χ (cm³/mol of ions)")
-        row[1].locator_params(axis="x", nbins=40)
+        row[1].locator_params(axis="x", nbins=5)
         row[0].set_ylabel("shift (%)")
         row[0].legend(frameon=False)
     return figure
