@@ -88,7 +88,8 @@ def check_cell(name: str, value: ArrayLike, pbc: Sequence[bool] = (True, True, T
     """
     cell = as_floats(name, value, (3, 3))
     periodic = cell[np.asarray(pbc, dtype=bool)]
-    lengths = np.linalg.norm(periodic, axis=1)
+    with np.errstate(over="ignore"):  # a length that overflows is infinite, and refused as such
+        lengths = np.linalg.norm(periodic, axis=1)
     if np.any(lengths < 1e-2) or np.any(lengths > 1e6):
         raise InputError(f"{name}: cell vectors must be 0.01 to 1e6 Å long, got lengths {lengths.tolist()}.")
     if len(periodic):

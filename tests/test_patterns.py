@@ -171,9 +171,7 @@ def test_a_list_of_the_wrong_length_is_refused():
 
 
 def test_stated_operations_of_another_crystal_are_refused():
-    crystal = Crystal(
-        CELL, [[0, 0, 0], [0.5, 0.5, 0.4]], ("Mn", "Mn"), operations=centred(BCC).operations
-    )
+    crystal = Crystal(CELL, [[0, 0, 0], [0.5, 0.5, 0.4]], ("Mn", "Mn"), operations=centred(BCC).operations)
     with pytest.raises(InputError) as caught:
         Setting.of(crystal, (0, 0, 0.5))
     assert str(caught.value) == (

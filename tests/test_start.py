@@ -11,6 +11,7 @@ import pytest
 from latticedip.crystal.model import Crystal, Operations
 from latticedip.errors import FileError, InputError
 from latticedip.ordering.model import Ordering
+from latticedip.study.rank_options import RankOptions
 from latticedip.study.schema import read_study
 from latticedip.study.start import (
     best_nucleus,
@@ -157,7 +158,7 @@ def test_the_study_runs_and_its_paths_lead_back(tmp_path: Path, group: str) -> N
     output.write_text(document["study"], encoding="utf-8")
     study = read_study(output)
     assert study.crystal.n_sites > 2
-    ranking = rank(study, tol=1e-4)
+    ranking = rank(study, RankOptions(tol=1e-4))
     assert len(ranking["rows"]) == len(study.orderings) >= 4
     assert ranking["rows"][0]["above_lowest_ueV_per_ion"] == 0
     assert [row["known"] for row in document["rows"]] == [False, False]

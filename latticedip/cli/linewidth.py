@@ -58,7 +58,8 @@ def linewidth(
     \b
     In the study:
       [abundances]
-      7Li = 0.05   # fraction of all lithium; an isotope that is not named is absent then
+      # fractions of all lithium; an isotope that is not named is absent then
+      7Li = 0.05
       6Li = 0.95
     """
     from latticedip.report.linewidth import linewidth_text

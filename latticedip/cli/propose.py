@@ -106,15 +106,15 @@ def propose(
 
     \b
       [propose]
-      supercell = [2, 2, 1]              # or k = [0, 0, "1/2"], or a list of such vectors
-      along = [0, 0, 1]                  # or axes = { Mn1 = [[1, 1, 1], [1, -1, -1]] }
-      fixed = { Mn1 = "+0" }             # signs that are given, 0 where free
+      supercell = [2, 2, 1]    # or k = [0, 0, "1/2"], or a list of such vectors
+      along = [0, 0, 1]        # or axes = { Mn1 = [[1, 1, 1], [1, -1, -1]] }
+      fixed = { Mn1 = "+0" }   # signs that are given, 0 where free
       net_zero = true
-      keep = 10                          # also seed, moments, method, restarts, sweeps
+      keep = 10                # also seed, moments, method, restarts, sweeps
 
     \b
     Example:
-      latticedip propose study.toml --supercell 2 2 1 --write-study candidates.toml
+      latticedip propose study.toml --supercell 2 2 1 --write-study found.toml
     """
     from latticedip.report.propose import propose_text
     from latticedip.study import tasks

@@ -73,12 +73,14 @@ def shift(
 
     \b
     Example:
-      latticedip shift study.toml --temperature 100 --rotate-about c --plot shift.pdf
+      latticedip shift study.toml --temperature 100
+      latticedip shift study.toml --rotate-about c --plot shift.pdf
 
     \b
     In the study:
       [susceptibility]
-      Mn = { chi = 0.012, unit = "cm3/mol" }   # cgs, per mole of ions; or "m3/mol" (SI), "muB/T" per ion
+      # cgs, per mole of ions; or "m3/mol" (SI), "muB/T" per ion
+      Mn = { chi = 0.012, unit = "cm3/mol" }
       Co = { chi = 0.015, chi_su = 0.001, unit = "cm3/mol" }
       Fe = { chi = [0.02, 0.01], unit = "cm3/mol", temperatures_K = [50, 100] }
     """

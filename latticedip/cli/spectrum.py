@@ -108,7 +108,7 @@ def spectrum(
 
     \b
     Example:
-      latticedip spectrum study.toml --probe "muon A" --powder --time 5 --plot spectrum.pdf
+      latticedip spectrum study.toml --powder --time 5 --plot spectrum.pdf
     """
     from latticedip.report.spectrum import spectrum_text
     from latticedip.study import tasks

@@ -116,9 +116,7 @@ def primitive_basis(centrings: FloatArray) -> FloatArray:
     return np.asarray(hermite_basis(whole) / n)
 
 
-def centring_classes(
-    crystal: Crystal, sites: tuple[int, ...], centrings: FloatArray
-) -> tuple[np.ndarray, FloatArray]:
+def centring_classes(crystal: Crystal, sites: tuple[int, ...], centrings: FloatArray) -> tuple[np.ndarray, FloatArray]:
     """Which of the sites are translation copies of one another.
 
     sites: indices of atoms, in the order in which they count; closed under the centrings.

@@ -255,9 +255,7 @@ def _anchors(parent: Crystal, child: Crystal, translations: FloatArray) -> list[
     return [(start, int(site)) for site in np.unique(first[theirs])]
 
 
-def _fit_origin(
-    parent: Crystal, child: Crystal, P: FloatArray, p: FloatArray, turn: _Turn, basis: FloatArray
-) -> Match:
+def _fit_origin(parent: Crystal, child: Crystal, P: FloatArray, p: FloatArray, turn: _Turn, basis: FloatArray) -> Match:
     """The match with the origin shift that centres the displacements, brought to its shortest equivalent."""
     displacement = _displacements(parent, child, P, p)[2]
     p = p - displacement.mean(axis=0) @ np.linalg.inv(parent.cell)

@@ -29,6 +29,8 @@ if TYPE_CHECKING:
 
 #: Two atoms of one label closer than this in a fractional coordinate count as equal when atoms are put in order.
 ORDER_TOLERANCE = 1e-4
+#: Beyond this a fractional coordinate has lost the digits that say where in the cell an atom is.
+FARTHEST = 1e6
 #: Atoms closer than this (Å) cannot both be there.
 OVERLAP_A = 0.1
 #: Atoms, or a point and an atom, closer than this (Å) are at one place.
@@ -101,6 +103,12 @@ class Crystal:
         labels = tuple(str(s) for s in self.labels) or symbols
         if len(labels) != len(positions):
             raise InputError(f"{len(positions)} positions but {len(labels)} labels.")
+        far = np.flatnonzero(np.abs(positions).max(axis=1, initial=0.0) > FARTHEST)
+        if len(far):
+            raise InputError(
+                f"the position of {labels[far[0]]} (number {far[0] + 1}) is {positions[far[0]].tolist()} in fractional "
+                "coordinates, far outside any cell."
+            )
         occupancies = np.ones(len(positions)) if self.occupancies is None else self.occupancies
         occupancies = as_floats("occupancies", occupancies, (len(positions),))
         if np.any(occupancies <= 0) or np.any(occupancies > 1 + 1e-9):

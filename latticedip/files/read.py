@@ -184,6 +184,9 @@ def _read_ase(name: str, data: bytes, block: str | int | None) -> Atoms:
     chosen = found[_image_number(name, len(found), block)]
     if len(chosen) == 0:
         raise FileError(f"{name}: ASE finds no atoms in it (read as {kind}).")
+    unnamed = [i for i, number in enumerate(chosen.numbers.tolist(), start=1) if number == 0]
+    if unnamed:
+        raise FileError(f"{name}: ASE finds no element for atom {unnamed[0]} (read as {kind}).")
     return chosen
 
 

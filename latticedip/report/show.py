@@ -10,6 +10,7 @@ from latticedip.report.su import format_su, with_su
 from latticedip.report.tables import (
     Column,
     bullets,
+    caption,
     decimals_for,
     direction,
     fixed,
@@ -33,7 +34,7 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
         ]
         parts += ["", "Moments stated", "", pairs(listed, width=width)]
     for entry in document["orderings"]:
-        parts += ["", f"Ordering: {entry['ordering']}", "", _ordering(entry, width)]
+        parts += ["", caption(f"Ordering: {entry['ordering']}"), "", _ordering(entry, width)]
     if document["neighbours"]:
         parts += ["", "Nearest magnetic neighbours", "", _neighbours(document["neighbours"], width)]
         parts += ["", paragraph("The dipolar scale is µ0 m1 m2/(4π r³).", width=width)]

@@ -260,6 +260,12 @@ def heading(text: str) -> str:
     return "\n".join([*lines, "=" * max(text_width(line) for line in lines)])
 
 
+def caption(text: str) -> str:
+    """Return the line that leads a table or a list, over several lines where it is wider than the screen."""
+    shown = clean(text)
+    return shown if _SETTER.get() is not None else "\n".join(_wrapped(shown, screen_width()))
+
+
 def decimals_for(values: Iterable[float], *, significant: int = SIGNIFICANT, error: float = 0.0) -> int:
     """Digits behind the point that give the largest value its significant digits, fewer where ``error`` asks.
 

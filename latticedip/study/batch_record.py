@@ -99,12 +99,15 @@ def do_job(template: Template, job: Job) -> Outcome:
     except MemoryError as problem:
         # A limit of this program that was met before memory was taken is a property of the input.
         foreseen = isinstance(problem, LatticedipError)
-        error = _one_line(problem, job) if foreseen else "there is not enough memory for it."
+        error = _one_line(problem, template, job) if foreseen else "there is not enough memory for it."
         reason = INPUT if foreseen else MEMORY
     except LatticedipError as problem:
-        error, reason = _one_line(problem, job), INPUT
+        error, reason = _one_line(problem, template, job), INPUT
     except Exception as problem:  # a slip of this program on one input must not cost all the others
-        error, reason = f"internal error, please report it ({type(problem).__name__}: {_one_line(problem, job)})", CRASH
+        error, reason = (
+            f"internal error, please report it ({type(problem).__name__}: {_one_line(problem, template, job)})",
+            CRASH,
+        )
     if not error and file_hash(job.path) != before:
         error, reason, results = "the file was changed while it was being read. Run it again.", CRASH, {}
     line = record_line(job, digest, sha256=before, error=error, reason=reason, results=results)
@@ -123,8 +126,9 @@ def _results(template: Template, job: Job) -> dict[str, Any]:
     return template.run(template.study_for(crystal, own, Path(job.path)))
 
 
-def _one_line(problem: BaseException, job: Job) -> str:
-    """A message in one line, with the path as the user named it and no character that JSON or a terminal minds."""
-    text = " ".join(str(problem).replace(job.path, job.input).split())
+def _one_line(problem: BaseException, template: Template, job: Job) -> str:
+    """A message in one line, with paths as the user named them and no character that JSON or a terminal minds."""
+    text = str(problem).replace(job.path, job.input).replace(str(template.path), template.file)
+    text = " ".join(text.split())
     text = "".join(c if c.isprintable() else "�" for c in text)
     return text if len(text) <= LONGEST_ERROR else text[: LONGEST_ERROR - 3] + "..."

@@ -2,9 +2,9 @@
 
 Tables beside those of a study:
 
-[batch]    do = ["rank", "field"] (names of commands that take a study), orderings = ["template", "file", "propose"]
-           (where candidates come from; without it all that there are), rotate and bound (for rank; the bound is
-           worked out only where it is asked for), axes (for field), tol
+[batch]    do = ["rank", "field"] (names of commands that take a study; without any [[probe]] it is "rank" alone),
+           orderings = ["template", "file", "propose"] (where candidates come from; without it all that there are),
+           rotate and bound (for rank; the bound is worked out only where it is asked for), axes (for field), tol
 [propose]  as in a study; here the orderings it finds are candidates
 
 Names in [moments] and [susceptibility] that a structure does not have are passed over, as long as it has one of them:
@@ -80,6 +80,11 @@ class Template:
         template.check()
         return template
 
+    @property
+    def path(self) -> Path:
+        """Its absolute path."""
+        return Path(self.folder, Path(self.file).name)
+
     @cached_property
     def table(self) -> dict[str, Key]:
         """The tables by name; unknown ones are refused."""
@@ -119,7 +124,8 @@ class Template:
     def do(self) -> tuple[str, ...]:
         """The tasks, in the order in which they are done."""
         if "do" not in self.batch:
-            return DEFAULT_TASKS
+            # Without any place there is no field to ask for.
+            return DEFAULT_TASKS if "probe" in self.table else DEFAULT_TASKS[:1]
         items = self.batch["do"].items('a list of commands, such as ["rank", "field"]')
         if not items:
             raise self.batch["do"].expected("at least one command")
@@ -127,6 +133,8 @@ class Template:
         for i, name in enumerate(names):
             if name in names[:i]:
                 raise items[i].refuse(f"{name!r} is named twice. Leave one out.")
+        if "field" in names and "probe" not in self.table:
+            raise items[names.index("field")].refuse("there is no [[probe]], so there is no place to ask for a field.")
         return tuple(names)
 
     @cached_property
@@ -190,7 +198,7 @@ class Template:
                 table[name] = _present_names(table[name], crystal)
         if "template" not in self.sources:
             table.pop("ordering", None)
-        study = assemble(table, crystal, title=self.title, path=Path(self.folder, Path(self.file).name), files={})
+        study = assemble(table, crystal, title=self.title, path=self.path, files={})
         found = list(study.orderings)
         if own is not None and "file" in self.sources:
             found.append(replace(own, name=_free_name(OWN_NAME, found)))

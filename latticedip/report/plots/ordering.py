@@ -294,6 +294,8 @@ def _probes(panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, per
     moments = view.flat([atom["moment_muB"] for atom in entry["atoms"]]) * scale.per_muB
     taken.append(_along(taken[1], moments, "mid", 7).reshape(-1, 2))
     if given:
+        # Where a ring would stand.
+        taken.append(flat[given] + 0.8 * RING_PT * per_point)
         taken.append(_along(flat[given], view.flat(fields) * scale.per_T, "tail", 9).reshape(-1, 2))
     _names(panel, [probe["probe"] for probe in entry["probes"]], flat, np.concatenate(taken), per_point)
     return end_on
