@@ -75,7 +75,13 @@ def _reciprocal(
     """Write the reciprocal part, divided by C, to ``out`` (parts, n_t, 1, 3) in µB/Å³."""
     n_q, parts = len(plan.q), len(out)
     table = wave_table(plan, sources)
-    cosine, sine = table[:, :n_q].T @ moments, table[:, n_q:].T @ moments
+    # Not a matrix product: it is small, and the threads that BLAS would wake cost more than the work.
+    cosine = np.einsum("sq,sa->qa", table[:, :n_q], moments.real) + 1j * np.einsum(
+        "sq,sa->qa", table[:, :n_q], moments.imag
+    )
+    sine = np.einsum("sq,sa->qa", table[:, n_q:], moments.real) + 1j * np.einsum(
+        "sq,sa->qa", table[:, n_q:], moments.imag
+    )
     square = np.einsum("qa,qa->q", plan.q, plan.q)
     scale = (
         (2.0 if plan.is_real else 1.0)
