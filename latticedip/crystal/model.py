@@ -72,8 +72,9 @@ class Crystal:
     notes: sentences a report must repeat (partial occupancy and the like).
     position_su: Shape (n_sites, 3) float, fractional. Standard uncertainties of the positions, NaN where none is known.
 
-    Raises InputError for a cell without volume, values that are not finite, lists of unequal length, occupancies
-    outside (0, 1], uncertainties below 0 and atoms closer than 0.1 Å (unless their occupancies add up to at most 1).
+    Raises InputError for a cell without volume, values that are not finite, lists of unequal length, positions a
+    million cells away, occupancies outside (0, 1], uncertainties below 0 and atoms closer than 0.1 Å (unless their
+    occupancies add up to at most 1).
     """
 
     cell: FloatArray

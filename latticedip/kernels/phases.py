@@ -86,6 +86,32 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
         out_turns[row] = turns - np.rint(turns)
 
 
+@kernel(fastmath=ORDERED, inline=True)
+def unit_phases(point, waves, k, limits, powers, third_re, third_im):
+    """Powers of the three unit phases exp(i b·x) of a point, and the phase exp(−i k·x) that all waves share.
+
+    powers (3, widest) complex: non-negative powers of each. third_re, third_im (2 limits[2] + 1,): all powers of the
+    third. Built by doubling, so that rounding grows with log m only.
+    """
+    lead = 0.0
+    for axis in range(3):
+        angle = point[0] * waves[axis, 0] + point[1] * waves[axis, 1] + point[2] * waves[axis, 2]
+        lead += k[axis] * angle
+        powers[axis, 0] = 1.0
+        if limits[axis] > 0:
+            powers[axis, 1] = complex(np.cos(angle), np.sin(angle))
+        for m in range(2, limits[axis] + 1):
+            half = m // 2
+            powers[axis, m] = powers[axis, half] * powers[axis, m - half]
+    for m in range(limits[2] + 1):
+        value = powers[2, m]
+        third_re[limits[2] + m] = value.real
+        third_im[limits[2] + m] = value.imag
+        third_re[limits[2] - m] = value.real
+        third_im[limits[2] - m] = -value.imag
+    return complex(np.cos(lead), -np.sin(lead))
+
+
 @kernel(fastmath=ORDERED)
 def phase_table(first, last, points, waves, runs, k, limits, out):
     """Fill rows first..last of ``out`` (n, 2 n_q) with cos(q·x) and then sin(q·x).
@@ -93,47 +119,25 @@ def phase_table(first, last, points, waves, runs, k, limits, out):
     points (n, 3): Cartesian Å. waves (3, 3): rows are the reciprocal vectors including 2π; q = (m − k)·waves.
     runs (n_runs, 5): first q, number of q, m₁, m₂ and the first m₃ of each stretch of consecutive m₃.
     limits (3,): largest |m| per axis.
-    Powers of the three unit phases are built by doubling, so that rounding grows with log m only.
     """
-    n_q = out.shape[1] // 2
+    n_q = np.uint64(out.shape[1] // 2)
     widest = max(limits[0], limits[1], limits[2]) + 1
     powers = np.empty((3, widest), np.complex128)
-    third_re = np.empty(2 * limits[2] + 1)
-    third_im = np.empty(2 * limits[2] + 1)
+    re = np.empty(2 * limits[2] + 1)
+    im = np.empty(2 * limits[2] + 1)
     for row in range(first, last):
-        lead = 0.0
-        for axis in range(3):
-            angle = points[row, 0] * waves[axis, 0] + points[row, 1] * waves[axis, 1] + points[row, 2] * waves[axis, 2]
-            lead += k[axis] * angle
-            powers[axis, 0] = 1.0
-            if limits[axis] > 0:
-                powers[axis, 1] = complex(np.cos(angle), np.sin(angle))
-            for m in range(2, limits[axis] + 1):
-                half = m // 2
-                powers[axis, m] = powers[axis, half] * powers[axis, m - half]
-        for m in range(limits[2] + 1):
-            value = powers[2, m]
-            third_re[limits[2] + m] = value.real
-            third_im[limits[2] + m] = value.imag
-            third_re[limits[2] - m] = value.real
-            third_im[limits[2] - m] = -value.imag
-        start = complex(np.cos(lead), -np.sin(lead))
+        start = unit_phases(points[row], waves, k, limits, powers, re, im)
         for r in range(runs.shape[0]):
-            q = runs[r, 0]
             a = runs[r, 2]
             b = runs[r, 3]
-            c = runs[r, 4] + limits[2]
             pa = powers[0, a] if a >= 0 else powers[0, -a].conjugate()
             pb = powers[1, b] if b >= 0 else powers[1, -b].conjugate()
             base = start * pa * pb
             x = base.real
             y = base.imag
-            # Slices, because an index that might be negative would keep the loop from being vectorised.
-            n = runs[r, 1]
-            re = third_re[c : c + n]
-            im = third_im[c : c + n]
-            cosine = out[row, q : q + n]
-            sine = out[row, n_q + q : n_q + q + n]
-            for i in range(n):
-                cosine[i] = x * re[i] - y * im[i]
-                sine[i] = x * im[i] + y * re[i]
+            # Unsigned numbers, because an index that might be negative would keep the loop from being vectorised.
+            q = np.uint64(runs[r, 0])
+            c = np.uint64(runs[r, 4] + limits[2])
+            for i in range(np.uint64(runs[r, 1])):
+                out[row, q + i] = x * re[c + i] - y * im[c + i]
+                out[row, n_q + q + i] = x * im[c + i] + y * re[c + i]

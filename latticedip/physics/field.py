@@ -268,7 +268,9 @@ def local_field(
         whole[smeared], bound[smeared], reached = cloud_fields(
             ordering, targets[smeared], clouds[smeared], extended, tol, names
         )
-    moved = tuple(_moved(ordering, row, point) for row, point in zip(rows, placed, strict=True))
+    moved: tuple[MovedPairs | None, ...] = (None,) * len(rows)
+    if not _are_bare(rows):
+        moved = tuple(_moved(ordering, row, point) for row, point in zip(rows, placed, strict=True))
     for i, pairs in enumerate(moved):
         if pairs is not None:
             change, _ = exchanged_tensors(ordering, pairs, clouds[i], extended, rows[i].name)
@@ -317,9 +319,16 @@ def _moved(ordering: Ordering, row: _Row, point: FloatArray) -> MovedPairs | Non
     return exchanged(ordering, point, row.reference, row.probe)
 
 
+def _are_bare(rows: list[_Row]) -> bool:
+    """True for points without a Probe and without a spread: rows are all of one kind, and a million may come."""
+    return not rows or (rows[0].probe is None and rows[0].spread is None)
+
+
 def _filled(rows: list[_Row], shape: tuple[int, ...], value: Callable[[int, _Row], FloatArray | None]) -> FloatArray:
     """Shape (n, *shape) float. One value per row, zero where there is none, as for most of a million points."""
     out = np.zeros((len(rows), *shape))
+    if _are_bare(rows):
+        return out
     for i, row in enumerate(rows):
         found = value(i, row)
         if found is not None:
@@ -346,7 +355,7 @@ def _position_su(ordering: Ordering, row: _Row) -> FloatArray | None:
 
 def _spread_notes(rows: list[_Row], moment_spread: Any) -> list[str]:
     notes = [] if moment_spread is None else [f"moments are extended: Gaussian spread {moment_spread} (Å rms, or Å²)"]
-    for row in rows:
+    for row in rows[:1] if _are_bare(rows) else rows:
         name = "every point" if row.probe is None else row.name
         notes += probe_words(name, row.spread, () if row.probe is None else row.probe.displaced)
     return notes

@@ -304,7 +304,8 @@ def wave_vectors(lattice: ReducedLattice, k: FloatArray, cutoff: float, half: bo
     keep = (np.einsum("qa,qa->q", q, q) <= cutoff**2 * (1 + 1e-12)) & np.any(fractional != 0, axis=1)
     if half:
         f = fractional
-        keep &= (f[:, 2] > 0) | ((f[:, 2] == 0) & ((f[:, 1] > 0) | ((f[:, 1] == 0) & (f[:, 0] > 0))))
+        # The half with m₁ > 0: stretches of consecutive m₃ then keep their whole length.
+        keep &= (f[:, 0] > 0) | ((f[:, 0] == 0) & ((f[:, 1] > 0) | ((f[:, 1] == 0) & (f[:, 2] > 0))))
     return indices[keep].astype(np.int64), q[keep]
 
 
