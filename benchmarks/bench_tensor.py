@@ -22,6 +22,7 @@ sys.path.insert(0, str(ROOT))
 import latticedip as ld  # noqa: E402
 from benchmarks.peers import DIPOLE_T, SphereSum, best_plain_ewald  # noqa: E402
 from latticedip.sums.bulk import lattice_sum  # noqa: E402
+from latticedip.sums.fields import field_plan, lattice_field  # noqa: E402
 from tests.reference.mpmath_sum import tensors  # noqa: E402
 
 CELL = np.array([[8.0, 0.0, 0.0], [1.1, 7.9, 0.0], [-0.9, 1.4, 11.9]])
@@ -183,7 +184,6 @@ import sys, time, numpy as np
 sys.path.insert(0, {root!r})
 from benchmarks.bench_tensor import CELL, TOL, points, seconds
 from latticedip.sums.bulk import lattice_sum
-from latticedip.sums.fields import field_plan, lattice_field
 found = []
 for k in ((0, 0, 0), (0.21, -0.34, 0.07)):
     plan = lattice_sum(CELL, k, TOL)
