@@ -284,7 +284,7 @@ def local_field(
     return LocalField(
         ordering=ordering,
         points=frozen(placed),
-        reference_points=frozen(np.array([row.reference for row in rows]).reshape(-1, 3)),
+        reference_points=frozen(_stacked([row.reference for row in rows])),
         probe_names=tuple(row.name for row in rows),
         particles=tuple(row.particle for row in rows),
         sites=frozen(sites),
@@ -317,6 +317,11 @@ def _moved(ordering: Ordering, row: _Row, point: FloatArray) -> MovedPairs | Non
     if row.probe is None or not row.probe.displaced:
         return None
     return exchanged(ordering, point, row.reference, row.probe)
+
+
+def _stacked(vectors: list[FloatArray]) -> FloatArray:
+    """Shape (n, 3) float. Several times faster than an array of a list of small arrays."""
+    return np.concatenate(vectors).reshape(-1, 3) if vectors else np.zeros((0, 3))
 
 
 def _are_bare(rows: list[_Row]) -> bool:
@@ -395,7 +400,7 @@ def _probe_rows(ordering: Ordering, probe: Probe, spread: float | FloatArray | N
 def _snap(ordering: Ordering, rows: list[_Row]) -> tuple[FloatArray, np.ndarray]:
     """Put points within 1e-3 Å of an atom onto it; returns points and the site of each (−1: none)."""
     crystal = ordering.crystal
-    placed = np.array([row.point for row in rows], dtype=float).reshape(-1, 3)
+    placed = _stacked([row.point for row in rows])
     sites = np.array([row.site for row in rows], dtype=int)
     carried = np.array([bool(row.element) for row in rows], dtype=bool)
     if crystal.n_sites == 0:

@@ -112,7 +112,7 @@ def reciprocal_cutoffs(alpha: FloatArray, lengths: FloatArray, wanted: float) ->
 #: source (measured in nanoseconds on one core; many targets and several sources).
 COST_IMAGE, COST_WAVE = 9.0, 0.7
 #: The same where only the field of given moments is wanted: one image of one source, one wave for all sources.
-COST_FIELD_IMAGE, COST_FIELD_WAVE = 5.0, 3.0
+COST_FIELD_IMAGE, COST_FIELD_WAVE = 5.0, 2.0
 
 
 def choose_splitting(
