@@ -10,3 +10,11 @@ from hypothesis import settings
 settings.register_profile("fixed", derandomize=True, deadline=None)
 settings.register_profile("search", deadline=None, max_examples=500)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "fixed"))
+
+
+def pytest_configure(config):
+    """Compile the kernels once, before test workers start: two that compile at once can differ in a last digit."""
+    if not hasattr(config, "workerinput") and os.environ.get("NUMBA_DISABLE_JIT", "0") == "0":
+        from latticedip.study.batch_worker import warm_up
+
+        warm_up()

@@ -192,11 +192,17 @@ def test_waves_of_a_centred_cell():
     assert len(waves) == 2
     assert waves[0].tolist() == [0, 0, 0]
     assert sorted(np.abs(waves[1]).tolist()) == [0, 0, 1]
-    found = ld.propose(centred, {"Mn": 1.0}, net_zero=True, keep=3).rows[0]
+    found = ld.propose(centred, {"Mn": 1.0}, net_zero=True, keep=3).rows
     primitive = ld.Crystal(2 * np.array([[0, 1, 1], [1, 0, 1], [1, 1, 0]]), [[0, 0, 0]], ["Mn"])
-    other = ld.propose(primitive, {"Mn": 1.0}, k=(0.5, 0.5, 0)).rows[0]
-    assert found.energy.per_ion_eV == pytest.approx(other.energy.per_ion_eV, rel=1e-9)
-    assert found.bns_number == other.bns_number
+    other = ld.propose(primitive, {"Mn": 1.0}, k=(0.5, 0.5, 0)).rows
+    assert found[0].energy.per_ion_eV == pytest.approx(other[0].energy.per_ion_eV, rel=1e-9)
+    # Moments across k are free to turn, and rounding decides which of the equal orderings comes first.
+    assert groups_of_the_lowest(found) & groups_of_the_lowest(other)
+
+
+def groups_of_the_lowest(rows):
+    lowest = rows[0].energy.per_ion_eV
+    return {row.bns_number for row in rows if row.energy.per_ion_eV == pytest.approx(lowest, rel=1e-9)}
 
 
 def test_orbits_of_moments():

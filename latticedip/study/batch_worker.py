@@ -7,11 +7,18 @@ stdin does, and dies with its parent.
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import signal
 import sys
+from collections.abc import Iterator
 from typing import Any, BinaryIO
+
+try:
+    import fcntl
+except ImportError:  # a system without advisory locks
+    fcntl = None  # type: ignore[assignment]
 
 #: One thread each: the processes fill the cores.
 ONE_THREAD = dict.fromkeys(
@@ -66,7 +73,11 @@ def serve(setup: dict[str, Any], jobs: BinaryIO, outcomes: BinaryIO) -> None:
 
 
 def warm_up() -> None:
-    """Load the libraries and the compiled kernels that almost every structure needs."""
+    """Load the libraries and the compiled kernels that almost every structure needs.
+
+    One worker at a time: two that compile the same kernel may differ in the order of its additions, and so in the last
+    digit of a result. The first compiles and the others load what it wrote.
+    """
     import numpy as np
 
     from latticedip.analysis.rank import rank
@@ -80,8 +91,22 @@ def warm_up() -> None:
     crystal = Crystal(np.eye(3) * 4.0, np.array([[0.0, 0, 0], [0.5, 0.5, 0.5]]), ("Mn", "O"))
     operations_of(crystal)
     orderings = [Ordering(crystal, [[0, 0, 1.0], [0, 0, 0]], k) for k in ((0, 0, 0), (0, 0, 0.5), (0, 0, 0.3))]
-    ranking = rank(orderings, probes=[Probe([0.5, 0, 0])])
-    assert len(ranking.rows) == 3 and read and fields and rankings
+    with _one_at_a_time():
+        rows = rank(orderings, probes=[Probe([0.5, 0, 0])]).to_dict()["rows"]
+    assert len(rows) == 3 and read and fields and rankings
+
+
+@contextlib.contextmanager
+def _one_at_a_time() -> Iterator[None]:
+    """Hold a lock that all workers of this installation share; where the system has none, hold nothing."""
+    if fcntl is None:
+        yield
+        return
+    from latticedip.kernels import jit
+
+    with open(jit.__file__, "rb") as held:
+        fcntl.flock(held, fcntl.LOCK_EX)
+        yield
 
 
 def _die_with(parent: int) -> None:
