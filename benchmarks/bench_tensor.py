@@ -114,7 +114,7 @@ def one_probe_of_a_batch(size: int) -> None:
         all_sources = tensors(CELL, probes[i] - sources).real
         lorentz = DIPOLE_T * 4 * np.pi / 3 / abs(np.linalg.det(CELL)) * moments.sum(axis=0)
         exact.append(np.einsum("sab,sb->a", all_sources, moments) - lorentz)
-    plan = field_plan(CELL, np.zeros(3), TOL, len(sources))
+    plan = field_plan(CELL, np.zeros(3), TOL, len(sources), len(probes))
     placed = plan.place(sources)
     rounds = [
         (

@@ -2,12 +2,18 @@
 
 from __future__ import annotations
 
+import dataclasses
+from collections.abc import Sequence
+
 import numpy as np
 
 from latticedip.checks import FloatArray
-from latticedip.crystal.model import SAME_PLACE_A
+from latticedip.crystal.model import SAME_PLACE_A, Crystal
 from latticedip.crystal.neighbours import neighbours_of
+from latticedip.crystal.spread import SAME_TENSOR, SITE_MATCH_A
+from latticedip.crystal.symmetry import operations_of
 from latticedip.errors import InputError
+from latticedip.ordering.domains import orthogonal
 from latticedip.ordering.model import Ordering
 from latticedip.probe import SHELL_TOLERANCE_A, Contact
 from latticedip.units import MU0_T_A3_PER_MUB
@@ -69,3 +75,56 @@ def shell_neighbours(ordering: Ordering, point: FloatArray, term: Contact) -> tu
                 )
             raise InputError(f"contact: shell {term.shell} lies farther than {MAX_RADIUS_A:g} Å from the probe.")
     return sites[chosen], cells[chosen], distance[chosen]
+
+
+def is_isotropic(tensor: FloatArray) -> bool:
+    """True for a number times the unit matrix."""
+    return bool(np.abs(tensor - tensor[0, 0] * np.eye(3)).max() <= 1e-12 * np.abs(tensor).max(initial=0.0))
+
+
+def has_direction(term: Contact) -> bool:
+    """True for a coupling tensor that must be turned with the position it is stated for."""
+    return term.coupling_T_per_muB is not None and not is_isotropic(term.coupling_T_per_muB)
+
+
+def turned_term(term: Contact, turn: FloatArray) -> Contact:
+    """A contact term carried by an orthogonal matrix on Cartesian vectors, shape (3, 3)."""
+    if not has_direction(term):
+        return term
+    return dataclasses.replace(term, coupling_T_per_muB=turn @ term.coupling_T_per_muB @ turn.T)
+
+
+def carried_contacts(
+    home: Crystal, first: FloatArray, places: FloatArray, terms: Sequence[Contact], name: str
+) -> list[tuple[Contact, ...]]:
+    """Contact terms at equivalent places (n, 3) fractional, where they are stated for the place ``first`` (3,).
+
+    A tensor is turned by an operation of the crystal that carries the first place onto the other.
+
+    Raises InputError, naming ``name``, where there is no such operation or where two of them disagree: the tensor then
+    lacks the symmetry of its place.
+    """
+    if not any(has_direction(term) for term in terms):
+        return [tuple(terms)] * len(places)
+    operations = operations_of(home)
+    images = operations.rotations @ first + operations.translations
+    found: list[tuple[Contact, ...]] = []
+    for place in places:
+        gaps = images - place
+        leads = np.linalg.norm((gaps - np.round(gaps)) @ home.cell, axis=1) < SITE_MATCH_A
+        turns = [orthogonal(home, rotation) for rotation in operations.rotations[leads]]
+        found.append(tuple(_agreed(term, turns, name) if has_direction(term) else term for term in terms))
+    return found
+
+
+def _agreed(term: Contact, turns: list[FloatArray], name: str) -> Contact:
+    turned = [turned_term(term, turn) for turn in turns]
+    scale = SAME_TENSOR * float(np.abs(term.coupling_T_per_muB).max())
+    if not turned or any(
+        np.abs(other.coupling_T_per_muB - turned[0].coupling_T_per_muB).max() > scale for other in turned
+    ):
+        raise InputError(
+            f"{name}: its contact tensor is stated for the first atom and does not have the symmetry of "
+            "that site, so that the other atoms have none of their own. Symmetrize it, or give a number."
+        )
+    return turned[0]

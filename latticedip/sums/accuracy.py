@@ -110,9 +110,11 @@ def reciprocal_cutoffs(alpha: FloatArray, lengths: FloatArray, wanted: float) ->
 
 #: Relative cost of one image in the real part and of one pair ±q in the reciprocal part, for a pair of target and
 #: source (measured in nanoseconds on one core; many targets and several sources).
-COST_IMAGE, COST_WAVE = 9.0, 0.7
+COST_IMAGE, COST_WAVE = 8.0, 0.5
 #: The same where only the field of given moments is wanted: one image of one source, one wave for all sources.
-COST_FIELD_IMAGE, COST_FIELD_WAVE = 5.0, 2.0
+COST_FIELD_IMAGE, COST_FIELD_WAVE = 8.0, 0.5
+#: What images of one source and waves cost once for all targets, and a wave once for each source.
+COST_FIELD_IMAGE_ONCE, COST_FIELD_WAVE_ONCE, COST_FIELD_WAVE_OF_SOURCE = 30.0, 40.0, 4.0
 
 
 def choose_splitting(

@@ -17,7 +17,7 @@ from __future__ import annotations
 
 import logging
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from typing import Any
 
 import numpy as np
@@ -29,6 +29,7 @@ from latticedip.kernels.phases import phase_table, reduce_offsets
 from latticedip.kernels.real import real_gradients, real_tensors
 from latticedip.kernels.reciprocal import reciprocal_tensors
 from latticedip.sums.accuracy import choose_splitting, real_cutoffs, reciprocal_cutoffs
+from latticedip.sums.boxes import boxes, largest_radius
 from latticedip.sums.lattice import ReducedLattice, reduce_cell, reduce_k, stable_inverse
 from latticedip.units import DIPOLE_T_A3_PER_MUB
 
@@ -61,12 +62,35 @@ class Points:
 
 
 @dataclass(frozen=True, eq=False)
+class Stretches:
+    """Waves sorted by m₁ and m₂: those of one stretch differ in m₃ only.
+
+    rows: Shape (n, 3) int. m₁, m₂ and the number of orders |m₃| from 0, made even. orders: the largest, at least 2.
+    row, order, negative: Shape (n_q,) int. The stretch of each wave, its |m₃|, and 1 where m₃ < 0.
+    along: Shape (n_q,) float. m₃ − k₃ of each wave.
+    """
+
+    rows: np.ndarray
+    orders: int
+    row: np.ndarray
+    order: np.ndarray
+    negative: np.ndarray
+    along: FloatArray
+
+    def by_order(self, factors: np.ndarray) -> np.ndarray:
+        """Shape (2, n, orders). One factor per wave (n_q,), those of m₃ ≥ 0 and of m₃ < 0 apart, by |m₃|; else zero."""
+        out = np.zeros((2, len(self.rows), self.orders), dtype=factors.dtype)
+        out[self.negative, self.row, self.order] = factors
+        return out
+
+
+@dataclass(frozen=True, eq=False)
 class LatticeSum:
     """What is common to all sums over one lattice at one k: vectors, weights, splitting. See `lattice_sum`.
 
     alpha 1/Å; cutoff Å; images (3, n) Å with lengths (n,) and phase (2, n); q (n_q, 3) in 1/Å, q = (m − k)·waves;
-    runs (n_runs, 5) and limits (3,): the whole numbers m as `phase_table` takes them; weights (n_q, 5) in 1/Å³ for
-    xx, yy, xy, xz, yz.
+    runs (n_runs, 5) and limits (3,): the whole numbers m as `phase_table` takes them; wave_factors (n_q,) in 1/Å: what
+    stands before q_a q_b, with both waves of a pair ±q where only one is kept.
     """
 
     given_cell: FloatArray
@@ -84,7 +108,31 @@ class LatticeSum:
     runs: np.ndarray
     limits: np.ndarray
     q: FloatArray
-    weights: FloatArray
+    wave_factors: FloatArray
+
+    @cached_property
+    def stretches(self) -> Stretches:
+        """The waves by stretches of m₃."""
+        runs = self.runs
+        # Several runs share m₁ and m₂ where the stretch is broken by the wave q = 0.
+        new = np.append(True, np.any(np.diff(runs[:, 2:4], axis=0) != 0, axis=1))[: len(runs)]
+        row = np.repeat(np.cumsum(new) - 1, runs[:, 1])
+        third = np.repeat(runs[:, 4] - runs[:, 0], runs[:, 1]) + np.arange(len(self.q))
+        top = np.zeros(int(new.sum()), dtype=np.int64)
+        np.maximum.at(top, row, np.abs(third))
+        rows = np.column_stack([runs[new, 2:4], (top + 2) // 2 * 2]).astype(np.int64)
+        orders = int(rows[:, 2].max(initial=2))
+        return Stretches(rows, orders, row, np.abs(third), (third < 0).astype(np.int64), third - self.k[2])
+
+    @cached_property
+    def tensor_factors(self) -> FloatArray:
+        """Shape (n_stretches, orders, 6) in Å⁻¹. What `reciprocal_tensors` takes."""
+        found = self.stretches
+        out = np.empty((len(found.rows), found.orders, 6))
+        for power in range(3):
+            apart = found.by_order(self.wave_factors * found.along**power)
+            out[..., 2 * power], out[..., 2 * power + 1] = apart[0] + apart[1], apart[0] - apart[1]
+        return out
 
     def place(self, positions_cart: Any) -> Points:
         """Reduce Cartesian positions (n, 3) in Å by lattice vectors, exactly for the doubles as given."""
@@ -114,19 +162,12 @@ class LatticeSum:
         if n_t and n_s:
             reciprocal_part(self, targets.reduced, sources.reduced, flat)
             real_part(self, targets.reduced, sources.reduced, flat)
-        flat *= DIPOLE_T_A3_PER_MUB
-        trace = boundary_trace(self)
-        turns = targets.turns[:, None] - sources.turns[None, :]
-        if self.is_real:
-            # Turns are multiples of one half here, so that the phase is a sign.
-            return (
-                unpack(flat[0], trace) * np.cos(2 * np.pi * turns)[:, :, None, None]
-                if np.any(turns)
-                else unpack(flat[0], trace)
-            )
-        both = unpack(flat[0], trace) + 1j * unpack(flat[1], 0.0)
-        both *= np.exp(-2j * np.pi * turns)[:, :, None, None]
-        return both
+        out = np.empty((n_t, n_s, 3, 3), dtype=float if self.is_real else complex)
+        over_rows(
+            finish_tensors, n_t, flat, boundary_trace(self), targets.turns, sources.turns, out,
+            at_least=max(1, 20_000 // max(1, n_s)),
+        )  # fmt: skip
+        return out
 
     def field_gradient(self, targets: Points, sources: Points, components: ComplexArray) -> ComplexArray:
         """Shape (n_targets, 3, 3) complex in T/Å. ∂B_a/∂x_c of the field of components (n_sources, 3) in µB.
@@ -155,11 +196,11 @@ class LatticeSum:
 
 def real_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
     """Add the real part and the self term, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³."""
-    imaginary = flat[1] if len(flat) == 2 else np.empty((0, 0, 5))
+    found = boxes(plan.lattice, targets)
     over_rows(
-        real_tensors, len(targets), targets, sources, plan.lattice.cell, plan.lattice.inverse, plan.images,
-        plan.lengths, plan.phase, plan.k, plan.alpha, plan.cutoff, ON_SITE_A, self_term(plan.alpha), flat[0], imaginary,
-        at_least=max(1, 400 // max(1, len(sources))),
+        real_tensors, len(found), found.order, found.starts, found.centres, found.radii, targets, sources,
+        plan.lattice.cell, plan.lattice.inverse, plan.images, plan.lengths, plan.phase, plan.k, plan.alpha, plan.cutoff,
+        ON_SITE_A, self_term(plan.alpha), flat, at_least=max(1, 400 * len(found) // (len(sources) * len(targets))),
     )  # fmt: skip
 
 
@@ -183,35 +224,53 @@ def wave_table(plan: LatticeSum, points: FloatArray) -> FloatArray:
 def reciprocal_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
     """Write the reciprocal part, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³.
 
-    cos q·(x_t − x_s) = cos cos + sin sin (and the like for the sine) makes of it a product of a table of phases of
-    the targets with one of weighted phases of the sources: n_t × 2n_q times 2n_q × 5n_s.
+    Every pair of target and source has phases of its own, products of those of its two points.
     """
-    n_q, n_s, parts = len(plan.q), len(sources), len(flat)
-    table = wave_table(plan, sources).reshape(n_s, 1, 2, n_q)
-    weights = plan.weights.T[None, :, None, :]
-    columns = parts * n_s * 5
-    right = np.zeros(((columns + 3) // 4 * 4, 2 * n_q))
-    shaped = right[:columns].reshape(parts, n_s, 5, 2, n_q)
-    np.multiply(table, weights, out=shaped[0])
-    if parts == 2:
-        shaped[1, :, :, 0] = -shaped[0, :, :, 1]
-        shaped[1, :, :, 1] = shaped[0, :, :, 0]
+    parts, n_t, n_s, _ = flat.shape
     over_rows(
-        reciprocal_tensors, len(targets), targets, plan.lattice.waves, plan.runs, plan.k, plan.limits, right, flat,
-        at_least=max(4, 50_000 // max(1, right.size) * 4),
+        reciprocal_tensors, n_t * n_s, _unit_phases(plan, targets), _unit_phases(plan, sources), plan.lattice.waves,
+        plan.k, plan.limits, plan.stretches.rows, plan.tensor_factors, flat.reshape(parts, n_t * n_s, 5),
+        at_least=max(16, 400_000 // max(1, len(plan.q))),
     )  # fmt: skip
 
 
-def unpack(flat: FloatArray, trace: float) -> FloatArray:
-    """Shape (..., 3, 3). Symmetric tensors from xx, yy, xy, xz, yz and the trace."""
-    out = np.empty((*flat.shape[:-1], 3, 3))
-    out[..., 0, 0] = flat[..., 0]
-    out[..., 1, 1] = flat[..., 1]
-    out[..., 2, 2] = trace - flat[..., 0] - flat[..., 1]
-    out[..., 0, 1] = out[..., 1, 0] = flat[..., 2]
-    out[..., 0, 2] = out[..., 2, 0] = flat[..., 3]
-    out[..., 1, 2] = out[..., 2, 1] = flat[..., 4]
-    return out
+def _unit_phases(plan: LatticeSum, points: FloatArray) -> ComplexArray:
+    """Shape (n, 4) complex. exp(i b·x) for the three reciprocal vectors b, and exp(−i k·x)."""
+    angles = points @ plan.lattice.waves.T
+    return np.ascontiguousarray(np.exp(1j * np.column_stack([angles, -angles @ plan.k])))
+
+
+def finish_tensors(
+    first: int,
+    last: int,
+    flat: FloatArray,
+    trace: float,
+    target_turns: FloatArray,
+    source_turns: FloatArray,
+    out: FloatArray | ComplexArray,
+) -> None:
+    """Write rows first..last of ``out`` (n_t, n_s, 3, 3) in T/µB: whole tensors, with the phases of the turns taken.
+
+    flat (parts, n_t, n_s, 5): xx, yy, xy, xz, yz divided by C. trace in T/µB, real.
+    """
+    rows = slice(first, last)
+    _unpack(flat[0, rows], trace, out.real[rows])
+    if len(flat) == 2:
+        _unpack(flat[1, rows], 0.0, out.imag[rows])
+    turns = target_turns[rows, None] - source_turns[None, :]
+    if np.any(turns):
+        # Where the sum is real turns are multiples of one half, so that the phase is a sign.
+        phase = np.exp(-2j * np.pi * turns) if len(flat) == 2 else np.cos(2 * np.pi * turns)
+        out[rows] *= phase[:, :, None, None]
+
+
+def _unpack(flat: FloatArray, trace: float, out: FloatArray) -> None:
+    np.multiply(flat[..., 0], DIPOLE_T_A3_PER_MUB, out=out[..., 0, 0])
+    np.multiply(flat[..., 1], DIPOLE_T_A3_PER_MUB, out=out[..., 1, 1])
+    np.subtract(trace - out[..., 0, 0], out[..., 1, 1], out=out[..., 2, 2])
+    for e, (a, b) in zip((2, 3, 4), ((0, 1), (0, 2), (1, 2)), strict=True):
+        np.multiply(flat[..., e], DIPOLE_T_A3_PER_MUB, out=out[..., a, b])
+        out[..., b, a] = out[..., a, b]
 
 
 def lattice_sum(cell: Any, k: Any = (0.0, 0.0, 0.0), tol: float = 1e-10, alpha: float | None = None) -> LatticeSum:
@@ -248,18 +307,18 @@ def _lattice_sum(cell_bytes: bytes, k_bytes: bytes, tol: float, alpha: float | N
             float(real_cutoffs(one, distances, wanted)[0]),
             float(reciprocal_cutoffs(one, distances, wanted)[0]),
         )
-    images, cells = image_vectors(lattice, r_c)
+    # Targets of one box share a list of images: it holds what the farthest of them needs.
+    images, cells = image_vectors(lattice, r_c + largest_radius(lattice))
     turns = (cells @ k) % 1.0
     indices, q = wave_vectors(lattice, k, q_c, is_real)
     square = np.einsum("qa,qa->q", q, q)
-    scale = (2.0 if is_real else 1.0) * -4 * np.pi / lattice.volume * np.exp(-square / (4 * alpha**2)) / square
-    pairs = q[:, [0, 1, 0, 0, 1]] * q[:, [0, 1, 1, 2, 2]]
+    factors = (2.0 if is_real else 1.0) * -4 * np.pi / lattice.volume * np.exp(-square / (4 * alpha**2)) / square
     return LatticeSum(
         given_cell=given, given_k=given_k, lattice=lattice, k=frozen(k), tol=tol, alpha=alpha, cutoff=r_c,
         is_real=is_real, is_uniform=is_uniform, images=frozen(images.T), lengths=frozen(np.linalg.norm(images, axis=1)),
         phase=frozen(np.stack([np.cos(2 * np.pi * turns), -np.sin(2 * np.pi * turns)])),
         runs=frozen(consecutive_runs(indices)), limits=frozen(np.abs(indices).max(axis=0, initial=0)), q=frozen(q),
-        weights=frozen(pairs * scale[:, None]),
+        wave_factors=frozen(factors),
     )  # fmt: skip
 
 

@@ -14,32 +14,47 @@ import numpy as np
 from latticedip.checks import ComplexArray, FloatArray, check_tol
 from latticedip.kernels.fields import real_fields
 from latticedip.kernels.jit import over_rows
-from latticedip.kernels.reciprocal import reciprocal_tensors
-from latticedip.sums.accuracy import COST_FIELD_IMAGE, COST_FIELD_WAVE, choose_splitting
+from latticedip.kernels.reciprocal import reciprocal_fields
+from latticedip.sums.accuracy import (
+    COST_FIELD_IMAGE,
+    COST_FIELD_IMAGE_ONCE,
+    COST_FIELD_WAVE,
+    COST_FIELD_WAVE_OF_SOURCE,
+    COST_FIELD_WAVE_ONCE,
+    choose_splitting,
+)
+from latticedip.sums.boxes import boxes
 from latticedip.sums.bulk import ON_SITE_A, TAIL_SHARE, LatticeSum, Points, lattice_sum, self_term, wave_table
-from latticedip.sums.lattice import ReducedLattice, reduce_cell
+from latticedip.sums.lattice import reduce_cell
 from latticedip.units import DIPOLE_T_A3_PER_MUB
 
-#: Boxes whose targets share a list of images: targets wanted in each, and the smallest and largest edge in Å.
-BOX_TARGETS, BOX_MIN_A, BOX_MAX_A = 8, 0.8, 4.0
 
-
-def field_plan(cell: FloatArray, k: FloatArray, tol: float, n_sources: int) -> LatticeSum:
-    """The `LatticeSum` with the splitting that suits fields of about this many sources; kept for the next call.
+def field_plan(cell: FloatArray, k: FloatArray, tol: float, n_sources: int, n_targets: int) -> LatticeSum:
+    """The `LatticeSum` with the splitting that suits about so many sources and targets; kept for the next call.
 
     cell (3, 3) Å, k (3,), tol as `lattice_sum`, which also says what is raised.
     """
-    bucket = 1 << max(0, int(n_sources) - 1).bit_length()
     given = np.ascontiguousarray(cell, dtype=float)
-    return lattice_sum(given, k, tol, _splitting(given.tobytes(), check_tol(tol), bucket))
+    sizes = _bucket(n_sources, 2), _bucket(n_targets, 8)
+    return lattice_sum(given, k, tol, _splitting(given.tobytes(), check_tol(tol), *sizes))
+
+
+def _bucket(n: int, base: int) -> int:
+    """The lowest power of a base that is at least n, up to a million."""
+    power = 1
+    while power < min(n, 10**6):
+        power *= base
+    return power
 
 
 @lru_cache(maxsize=64)
-def _splitting(cell: bytes, tol: float, n_sources: int) -> float:
+def _splitting(cell: bytes, tol: float, n_sources: int, n_targets: int) -> float:
     lattice = reduce_cell(np.frombuffer(cell).reshape(3, 3))
     wanted = TAIL_SHARE * tol / DIPOLE_T_A3_PER_MUB
-    costs = COST_FIELD_IMAGE, COST_FIELD_WAVE / n_sources
-    return choose_splitting(lattice.layer_distances, lattice.volume, wanted, costs)[0]
+    # What is done once for a batch counts for each of its targets.
+    image = COST_FIELD_IMAGE + COST_FIELD_IMAGE_ONCE / n_targets
+    wave = COST_FIELD_WAVE + (COST_FIELD_WAVE_ONCE + COST_FIELD_WAVE_OF_SOURCE * n_sources) / n_targets
+    return choose_splitting(lattice.layer_distances, lattice.volume, wanted, (image, wave / n_sources))[0]
 
 
 def lattice_field(
@@ -73,44 +88,38 @@ def _reciprocal(
     plan: LatticeSum, targets: FloatArray, sources: FloatArray, moments: ComplexArray, out: FloatArray
 ) -> None:
     """Write the reciprocal part, divided by C, to ``out`` (parts, n_t, 1, 3) in µB/Å³."""
-    n_q, parts = len(plan.q), len(out)
+    n_q = len(plan.q)
     table = wave_table(plan, sources)
-    # Not a matrix product: it is small, and the threads that BLAS would wake cost more than the work.
-    cosine = np.einsum("sq,sa->qa", table[:, :n_q], moments.real) + 1j * np.einsum(
-        "sq,sa->qa", table[:, :n_q], moments.imag
-    )
-    sine = np.einsum("sq,sa->qa", table[:, n_q:], moments.real) + 1j * np.einsum(
-        "sq,sa->qa", table[:, n_q:], moments.imag
-    )
-    square = np.einsum("qa,qa->q", plan.q, plan.q)
-    scale = (
-        (2.0 if plan.is_real else 1.0)
-        * -4
-        * np.pi
-        / plan.lattice.volume
-        * np.exp(-square / (4 * plan.alpha**2))
-        / square
-    )
-
-    def projected(structure: ComplexArray) -> ComplexArray:
-        return np.asarray((plan.q * (scale * np.einsum("qa,qa->q", plan.q, structure))[:, None]).T)
-
-    right = np.zeros((4 if parts == 1 else 8, 2 * n_q))
-    rows = right[: 3 * parts].reshape(parts, 3, 2, n_q)
     if plan.is_real:
-        # One of each pair ±q: cos q·(x_t − x_s) = cos cos + sin sin, for real and imaginary parts of the moments alike.
-        both = projected(cosine), projected(sine)
-        rows[0, :, 0], rows[0, :, 1] = both[0].real, both[1].real
-        if parts == 2:
-            rows[1, :, 0], rows[1, :, 1] = both[0].imag, both[1].imag
+        # One of each pair ±q is kept, and the other is its conjugate. Real and imaginary parts of the moments go apart.
+        structures = [_structure(plan, table, part) for part in (moments.real, moments.imag)[: len(out)]]
     else:
-        wave = projected(cosine - 1j * sine)
-        rows[0, :, 0], rows[0, :, 1] = wave.real, -wave.imag
-        rows[1, :, 0], rows[1, :, 1] = wave.imag, wave.real
-    over_rows(
-        reciprocal_tensors, len(targets), targets, plan.lattice.waves, plan.runs, plan.k, plan.limits, right, out,
-        at_least=max(4, 50_000 // max(1, right.size) * 4),
-    )  # fmt: skip
+        structures = [_structure(plan, table, moments.real) + 1j * _structure(plan, table, moments.imag)]
+    for structure, written in zip(structures, np.split(out, len(structures)), strict=True):
+        over_rows(
+            reciprocal_fields, len(targets), targets, plan.lattice.waves, plan.k, plan.limits, plan.stretches.rows,
+            _coefficients(plan, plan.wave_factors * structure), written, at_least=max(16, 200_000 // max(1, n_q)),
+        )  # fmt: skip
+
+
+def _structure(plan: LatticeSum, table: FloatArray, moments: FloatArray) -> ComplexArray:
+    """Shape (n_q,) complex in µB/Å. Σ_s (q·m_s) exp(−iq·x_s) from the table of phases of the sources."""
+    n_q = len(plan.q)
+    # Not matrix products: they are small, and the threads that BLAS would wake cost more than the work.
+    along = np.einsum("sa,qa->sq", moments, plan.q)
+    cosine, sine = np.einsum("sq,sq->q", along, table[:, :n_q]), np.einsum("sq,sq->q", along, table[:, n_q:])
+    return np.asarray(cosine - 1j * sine)
+
+
+def _coefficients(plan: LatticeSum, factors: ComplexArray) -> FloatArray:
+    """Shape (n_stretches, orders, 8). What `reciprocal_fields` takes, from one factor per wave."""
+    stretches = plan.stretches
+    out = np.empty((len(stretches.rows), stretches.orders, 8))
+    for power in range(2):
+        apart = stretches.by_order(factors * stretches.along**power)
+        both, odd = apart[0] + apart[1], apart[0] - apart[1]
+        out[..., 4 * power : 4 * power + 4] = np.stack([both.real, -odd.imag, both.imag, odd.real], axis=-1)
+    return out
 
 
 def _real(
@@ -125,14 +134,15 @@ def _real(
     positions, owner, phase = _source_images(plan, sources)
     carried = moments[owner] * phase[:, None]
     split = np.ascontiguousarray(np.stack([carried.real.T, carried.imag.T][: len(out)]))
-    order, starts, centres, radii = boxes(plan.lattice, targets)
+    found = boxes(plan.lattice, targets)
     sorted_out, sorted_weight = np.zeros(out.shape), np.zeros(len(targets))
     over_rows(
-        real_fields, len(radii), starts, centres, radii, targets[order], positions, split, np.abs(carried).sum(axis=1),
-        plan.alpha, plan.cutoff, ON_SITE_A, self_term(plan.alpha), sorted_out, sorted_weight, at_least=4,
+        real_fields, len(found), found.starts, found.centres, found.radii, targets[found.order], positions, split,
+        np.abs(carried).sum(axis=1), plan.alpha, plan.cutoff, ON_SITE_A, self_term(plan.alpha),
+        sorted_out, sorted_weight, at_least=4,
     )  # fmt: skip
-    out[:, order] += sorted_out
-    weight[order] = sorted_weight
+    out[:, found.order] += sorted_out
+    weight[found.order] = sorted_weight
 
 
 def _source_images(plan: LatticeSum, sources: FloatArray) -> tuple[FloatArray, np.ndarray, ComplexArray]:
@@ -155,26 +165,3 @@ def _source_images(plan: LatticeSum, sources: FloatArray) -> tuple[FloatArray, n
     if plan.is_real:
         phase = np.round(phase.real).astype(complex)
     return np.ascontiguousarray(positions.T), owner, phase
-
-
-def boxes(lattice: ReducedLattice, targets: FloatArray) -> tuple[np.ndarray, np.ndarray, FloatArray, FloatArray]:
-    """Group reduced targets (n, 3) by place: order (n,), starts (n_boxes + 1,), centres (n_boxes, 3), radii (n_boxes,).
-
-    Few targets stand each for itself.
-    """
-    n = len(targets)
-    edge = min(max((lattice.volume * BOX_TARGETS / max(1, n)) ** (1 / 3), BOX_MIN_A), BOX_MAX_A)
-    count = np.maximum(1, np.ceil(np.linalg.norm(lattice.cell, axis=1) / edge)).astype(int)
-    if np.prod(count.astype(float)) > n:
-        return np.arange(n), np.arange(n + 1), np.ascontiguousarray(targets), np.zeros(n)
-    place = np.clip(((targets @ lattice.inverse + 0.5) * count).astype(int), 0, count - 1)
-    index = np.ravel_multi_index(tuple(place.T), tuple(count))
-    order = np.argsort(index, kind="stable")
-    kinds, first = np.unique(index[order], return_index=True)
-    corner = np.array(np.unravel_index(kinds, tuple(count))).T
-    centres = ((corner + 0.5) / count - 0.5) @ lattice.cell
-    edges = lattice.cell / count[:, None]
-    signs = ((1, 1, 1), (1, 1, -1), (1, -1, 1), (-1, 1, 1))
-    # A hair wider, for targets that rounding puts on the other side of a face.
-    radius = 0.5 * max(float(np.linalg.norm(np.array(s) @ edges)) for s in signs) + 1e-9
-    return order, np.append(first, n), np.ascontiguousarray(centres), np.full(len(kinds), radius)

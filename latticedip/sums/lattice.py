@@ -8,11 +8,11 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from fractions import Fraction
-from functools import cached_property
+from functools import cached_property, lru_cache
 
 import numpy as np
 
-from latticedip.checks import FloatArray
+from latticedip.checks import FloatArray, frozen
 from latticedip.errors import AccuracyError
 
 
@@ -59,6 +59,12 @@ def reduce_cell(cell: FloatArray) -> ReducedLattice:
 
     Raises AccuracyError where the reduction needs whole numbers beyond 2²⁰: such a cell is not a structure.
     """
+    return _reduced(np.ascontiguousarray(cell, dtype=float).tobytes())
+
+
+@lru_cache(maxsize=64)
+def _reduced(cell_bytes: bytes) -> ReducedLattice:
+    cell = np.frombuffer(cell_bytes).reshape(3, 3)
     steps = np.eye(3)
     for _ in range(1000):
         basis = steps @ cell
@@ -76,7 +82,7 @@ def reduce_cell(cell: FloatArray) -> ReducedLattice:
         raise AccuracyError(f"the cell {cell.tolist()} is too skewed: its vectors are almost dependent.")
     if np.linalg.det(steps @ cell) < 0:
         steps = -steps
-    return ReducedLattice(_exact_product(steps, cell), np.ascontiguousarray(steps))
+    return ReducedLattice(frozen(_exact_product(steps, cell)), frozen(np.ascontiguousarray(steps)))
 
 
 def _shortening(basis: FloatArray) -> tuple[int, FloatArray] | None:
