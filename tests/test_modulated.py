@@ -185,7 +185,7 @@ def test_commensurate_waves_and_the_initial_phase(tmp_path):
         structure.read(tmp_path)
 
 
-def test_average_moments_keep_their_uncertainties_and_amplitudes_say_that_theirs_are_lost(tmp_path):
+def test_average_moments_and_amplitudes_keep_their_uncertainties(tmp_path):
     text = replaced(
         STRUCTURES["triclinic, two atoms, three harmonics, average"].text,
         ("\nFe1 1 0 0\n", "\nFe1 1.0(2) 0 0\n"), ("\nMn1 0.5", "\nMn1 0.50(3)"),
@@ -193,7 +193,14 @@ def test_average_moments_keep_their_uncertainties_and_amplitudes_say_that_theirs
     )  # fmt: skip
     ordering = read_text(text, tmp_path)
     assert np.isnan(ordering.moment_su).all()
-    assert "standard uncertainties of Fourier amplitudes are not kept" in ordering.notes
+    assert ordering.notes == ()
+    # Where a site is modulated its average counts among the amplitudes; x of Fe1 at 0 and 2q, of Mn1 at 0.
+    sizes = sorted((one.sites, np.abs(one.steps).max(axis=(1, 2)).tolist()) for one in ordering.amplitude_su)
+    assert sizes == [
+        ((0,), pytest.approx([0.03, 0, 0, 0])),
+        ((1,), pytest.approx([0, 0, 0.04, 0])),
+        ((1,), pytest.approx([0.2, 0, 0, 0])),
+    ]
     still = "".join(line + "\n" for line in text.splitlines() if not re.match(r"1[0-2] Fe1", line))
     ordering = read_text(still, tmp_path)
     assert ordering.moment_su[1, 0] == pytest.approx(0.2)

@@ -25,6 +25,8 @@ _WHITE = " \t\n"
 _WORD, _BLANK = re.compile(rf"[^{_WHITE}]+"), re.compile(rf"[{_WHITE}]+")
 _GEMMI_PLACE = re.compile(r"string:(\d+)(?::\d+\(\d+\))?(?: in data_\S*)?:? ?")
 
+#: Letters of a line of a file in a message.
+SHOWN = 60
 #: The loop number of items that stand alone; those of one category belong together.
 NO_LOOP = -1
 
@@ -137,23 +139,37 @@ def decode(data: bytes) -> str:
 
 
 def parse_blocks(data: bytes, path: str) -> list[Block]:
-    """All data blocks of a CIF. Raises FileError with file and line where the syntax is broken."""
+    """All data blocks of a CIF. Raises FileError with file, line and its text where the syntax is broken."""
     if b"\0" in data:
         raise FileError(f"{path}: this is not a text file (it holds zero bytes).")
-    text = quote_lists(decode(data), path)
+    given = decode(data)
+    quoted = quote_lists(given, path)
     try:
-        document = gemmi.cif.read_string(text)
+        document = gemmi.cif.read_string(quoted)
     except (ValueError, RuntimeError) as error:
-        raise FileError(f"{path}: {_readable(str(error))}") from None
+        raise FileError(f"{path}: {_readable(str(error), given)}") from None
     return [_block(raw, path) for raw in document]
 
 
-def _readable(message: str) -> str:
-    """gemmi's message with its place rewritten as a line number and a word on what to do."""
+def _readable(message: str, text: str) -> str:
+    """gemmi's message with its place rewritten as a line number, and that line of the text."""
     match = _GEMMI_PLACE.match(message)
     if match is None:
         return f"the CIF syntax is broken ({message.removeprefix('string: ')})."
-    return f"line {match.group(1)}: the CIF syntax is broken ({message[match.end() :]})."
+    number = int(match.group(1))
+    return f"line {number}: the CIF syntax is broken ({message[match.end() :]}){_shown(text, number)}."
+
+
+def _shown(text: str, number: int) -> str:
+    """A line of the file in a message: shortened, in quotes and with control characters escaped.
+
+    Nothing for a line that tells nothing: a blank one, or the one that opens a loop.
+    """
+    lines = text.split("\n")
+    line = lines[number - 1].strip() if number <= len(lines) else ""
+    if len(line) > SHOWN:
+        line = line[: SHOWN - 1] + "…"
+    return f" in {line!r}" if line.lower() not in ("", "loop_") else ""
 
 
 def _block(raw: gemmi.cif.Block, path: str) -> Block:
@@ -243,7 +259,8 @@ def _token(text: str, start: int, path: str, triple: bool) -> tuple[int, str | N
     if triple and text.startswith(("'''", '"""'), start):
         stop = text.find(text[start : start + 3], start + 3)
         if stop < 0:
-            raise FileError(f"{path}: line {_line(text, start)}: a triple-quoted string is not closed.")
+            line = _line(text, start)
+            raise FileError(f"{path}: line {line}: a triple-quoted string is not closed{_shown(text, line)}.")
         return stop + 3, _as_cif1_text(text[start + 3 : stop])
     if first in "'\"":
         return _end_of_quoted(text, start), None
@@ -283,7 +300,8 @@ def _end_of_list(text: str, start: int, path: str) -> int:
             if depth == 0:
                 return stop + 1
         stop += 1
-    raise FileError(f"{path}: line {_line(text, start)}: a list that begins with '[' is not closed by ']'.")
+    line = _line(text, start)
+    raise FileError(f"{path}: line {line}: a list that begins with '[' is not closed by ']'{_shown(text, line)}.")
 
 
 def _as_cif1_text(content: str) -> str:

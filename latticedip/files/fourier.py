@@ -33,11 +33,28 @@ class Series:
     """Amplitudes of the sites that a file modulates.
 
     amplitudes[label][n]: Shape (3,) complex in µB, A_n along unit vectors parallel to a, b, c, n ≥ 0; at n = 0 only the
-    real part has a meaning. notes: sentences a report must repeat.
+    real part has a meaning. uncertain[label]: what is uncertain of them. notes: sentences a report must repeat.
     """
 
     amplitudes: dict[str, dict[int, ComplexArray]]
+    uncertain: dict[str, list[UncertainWave]]
     notes: tuple[str, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class UncertainWave:
+    """Standard uncertainties of the numbers that a file gives of one amplitude of one site.
+
+    n: the harmonic, at least 0.
+    basis: Shape (3, d) complex, crystal axes. What one unit of each number adds to A_n; the numbers are cosines, then
+        sines (d = 6), at n = 0 cosines alone (d = 3). A modulus counts as a cosine, its phase in radians times the
+        modulus as a sine, both turned by the phase.
+    su: Shape (d,) float in µB, NaN where none is stated.
+    """
+
+    n: int
+    basis: ComplexArray
+    su: FloatArray
 
 
 def has_series(block: Block) -> bool:
@@ -192,11 +209,11 @@ def read_series(block: Block, cell: FloatArray, labels: list[str], orders: dict[
         stray = block.starting_with(_LOOP)
         if stray:
             raise block.error(f"{stray[0]} stands without labels ({_LOOP}.atom_site_label).")
-        return Series({}, ())
+        return Series({}, {}, ())
     axis, wave = (_needed(block, site, f"{_LOOP}.{name}") for name in ("axis", "wave_vector_seq_id"))
     values = _Values(block, site)
     from_cartesian = np.linalg.inv(cell / np.linalg.norm(cell, axis=1)[:, None]).T
-    entries: dict[tuple[str, str], dict[int, complex]] = {}
+    entries: dict[tuple[str, str], dict[int, _Entry]] = {}
     forms = _Forms(block)
     for row in _rows(site):
         label, key, direction = site.text(row), wave.text(row), (axis.text(row) or "").lower()
@@ -216,8 +233,9 @@ def read_series(block: Block, cell: FloatArray, labels: list[str], orders: dict[
                 "stands in two rows. Keep one."
             )
         components[_AXES[direction]] = values.amplitude(row, label)
-        forms.add(label, values, row, components[_AXES[direction]])
+        forms.add(label, values, row, components[_AXES[direction]].value)
     amplitudes: dict[str, dict[int, ComplexArray]] = {}
+    uncertain: dict[str, list[UncertainWave]] = {}
     for (label, key), components in entries.items():
         if min(components) < 3 <= max(components):
             raise block.error(
@@ -225,10 +243,15 @@ def read_series(block: Block, cell: FloatArray, labels: list[str], orders: dict[
                 "ones. Use one system."
             )
         vector = np.zeros(6, dtype=complex)
-        vector[list(components)] = list(components.values())
+        vector[list(components)] = [entry.value for entry in components.values()]
         amplitude = vector[:3] + from_cartesian @ vector[3:]
         n = orders[key]
-        if n == 0 and np.abs(amplitude.imag).max() > 0:
+        axes = from_cartesian if min(components) > 2 else np.eye(3)
+        stated = _uncertain_wave({place % 3: entry for place, entry in components.items()}, axes, n)
+        if stated is not None:
+            uncertain.setdefault(label, []).append(stated)
+        # A phase of half a cycle leaves no more than rounding.
+        if n == 0 and np.abs(amplitude.imag).max() > 1e-12 * np.abs(amplitude).max():
             raise block.error(
                 f"the moment of {label} at Fourier wave vector {key}, which is zero, has a sine part; it means nothing "
                 "there. Remove it."
@@ -236,7 +259,34 @@ def read_series(block: Block, cell: FloatArray, labels: list[str], orders: dict[
         mine = amplitudes.setdefault(label, {})
         # A wave at −n q is the one at n q with the sine reversed.
         mine[abs(n)] = mine.get(abs(n), np.zeros(3, dtype=complex)) + (amplitude if n >= 0 else amplitude.conj())
-    return Series(amplitudes, tuple(forms.notes() + values.notes()))
+    return Series(amplitudes, uncertain, tuple(forms.notes()))
+
+
+@dataclass(frozen=True)
+class _Entry:
+    """One row of the Fourier loop: cos + i sin in µB; uncertainties (NaN: none) and turn as in `UncertainWave`."""
+
+    value: complex
+    su: tuple[float, float]
+    turn: complex
+
+
+def _uncertain_wave(entries: dict[int, _Entry], axes: FloatArray, n: int) -> UncertainWave | None:
+    """The uncertainties of one amplitude, by its axis; axes: Shape (3, 3), columns in crystal axes."""
+    su, turns = np.full((2, 3), np.nan), np.ones(3, dtype=complex)
+    for axis, entry in entries.items():
+        su[:, axis] = entry.su
+        # At n = 0 the amplitude is real, whatever phase an amplitude of zero is given.
+        turns[axis] = entry.turn if n else 1.0
+    if not np.any(np.nan_to_num(su[0] if n == 0 else su)):
+        return None
+    basis = np.asarray(axes * turns, dtype=complex)
+    if n == 0:
+        return UncertainWave(0, basis, su[0])
+    # A wave at −n q is the one at n q with the sine reversed.
+    return UncertainWave(
+        abs(n), np.hstack([basis, 1j * basis] if n > 0 else [basis.conj(), -1j * basis.conj()]), su.ravel()
+    )
 
 
 def _axis_words(axis: Column, label: str, row: int) -> str:
@@ -281,7 +331,6 @@ class _Values:
         if any(column.loop != first.loop for column in self.columns.values()):
             raise block.error(f"{first.tag} and its sister parameters stand in different loops.")
         self._place = list(_rows(site)) if first.loop == site.loop else self._matched(site, first)
-        self._uncertain = False
 
     def _matched(self, site: Column, first: Column) -> list[int]:
         """The row of the parameters that belongs to each row of the Fourier loop."""
@@ -305,46 +354,55 @@ class _Values:
             raise self._block.error(f"{there.tag} {spare!r} belongs to no row of {here.tag}.")
         return places
 
-    def amplitude(self, row: int, label: str) -> complex:
-        """cos + i sin = modulus · exp(−2πi phase) of a row, in µB."""
+    def amplitude(self, row: int, label: str) -> _Entry:
+        """cos + i sin = modulus · exp(−2πi phase) of a row, in µB, with what is uncertain of it."""
         place = self._place[row]
-        given: list[complex] = []
+        given: list[_Entry] = []
         for first, second in (("cos", "sin"), ("modulus", "phase")):
             pair = [self.columns[name] for name in (first, second) if name in self.columns]
             if not pair or not any(column.text(place) for column in pair):
                 continue
-            numbers = []
-            for column in pair:
-                value, su = self._block.number(column, place)
-                if abs(value) > LARGEST:
-                    raise self._block.error(f"{column.tag} of {label} is {value:g}, beyond {LARGEST:g} µB.")
-                self._uncertain |= bool(su > 0) or self._block.sibling(column, f"{column.tag}_su") is not None
-                numbers.append(value)
-            if first == "modulus" and abs(numbers[1]) > 1:
+            (one, one_su), (two, two_su) = (self._number(column, place, label) for column in pair)
+            if first == "cos":
+                given.append(_Entry(complex(one, two), (one_su, two_su), 1.0))
+                continue
+            if abs(two) > 1:
                 raise self._block.error(
-                    f"{pair[1].tag} of {label} is {numbers[1]:g}; a phase is given in cycles, between -1 and 1."
+                    f"{pair[1].tag} of {label} is {two:g}; a phase is given in cycles, between -1 and 1."
                 )
-            given.append(
-                complex(*numbers) if first == "cos" else complex(numbers[0] * np.exp(-2j * np.pi * numbers[1]))
-            )
+            turn = complex(np.exp(-2j * np.pi * two))
+            given.append(_Entry(one * turn, (one_su, 2 * np.pi * abs(one) * two_su), turn))
         if not given:
             raise self._block.error(f"the amplitude of {label} in row {row + 1} of its Fourier loop is not given.")
-        if abs(given[-1] - given[0]) > max(AGREE_MUB, AGREE_FRACTION * abs(given[0])):
+        if abs(given[-1].value - given[0].value) > max(AGREE_MUB, AGREE_FRACTION * abs(given[0].value)):
             raise self._block.error(
                 f"cosine and sine of {label} in row {row + 1} of its Fourier loop contradict modulus and phase. Keep "
                 "the right ones."
             )
-        return given[0]
+        # Two descriptions of one amplitude: the first that says how uncertain it is.
+        stated = next((entry for entry in given if not np.all(np.isnan(entry.su))), given[0])
+        return _Entry(given[0].value, stated.su, stated.turn)
+
+    def _number(self, column: Column, place: int, label: str) -> tuple[float, float]:
+        """A number and its standard uncertainty, in brackets or in a column of its own (NaN: none)."""
+        value, su = self._block.number(column, place)
+        if abs(value) > LARGEST:
+            raise self._block.error(f"{column.tag} of {label} is {value:g}, beyond {LARGEST:g} µB.")
+        separate = self._block.sibling(column, f"{column.tag}_su")
+        if separate is not None and separate.text(place) is not None:
+            su = self._block.number(separate, place)[0]
+        if su < 0 or su > LARGEST:
+            tag = column.tag if separate is None else separate.tag
+            raise self._block.error(
+                f"{tag} of {label} is {su:g}; a standard uncertainty is at least 0 and at most {LARGEST:g}."
+            )
+        return value, su
 
     def form(self, name: str, row: int) -> str | None:
         """The symmetry-adapted form of a parameter of a row, where the file gives one."""
         column = self.columns.get(name)
         form = None if column is None else self._block.sibling(column, f"{_LOOP}_param_{name}_symmform")
         return None if form is None else form.text(self._place[row])
-
-    def notes(self) -> list[str]:
-        """What is left out of the amplitudes."""
-        return ["standard uncertainties of Fourier amplitudes are not kept"] if self._uncertain else []
 
 
 class _Forms:

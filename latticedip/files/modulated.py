@@ -19,11 +19,19 @@ import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray
 from latticedip.crystal.model import Crystal
+from latticedip.crystal.uncertain import parameter_steps
 from latticedip.errors import InputError
 from latticedip.files.cif import OPERATION_TAGS, Structure, expand, modulated_items, read_cell
 from latticedip.files.cifsyntax import Block, Column, parse_number
 from latticedip.files.expand import Group, build_group
-from latticedip.files.fourier import harmonics, read_series, refuse_more_waves, triple, wave_vector
+from latticedip.files.fourier import (
+    UncertainWave,
+    harmonics,
+    read_series,
+    refuse_more_waves,
+    triple,
+    wave_vector,
+)
 from latticedip.files.magcif import (
     ALLOWED_FRACTION,
     ALLOWED_MUB,
@@ -37,6 +45,7 @@ from latticedip.files.magcif import (
 from latticedip.files.moments import SiteMoment, has_moments, read_moments
 from latticedip.files.symop import Operation, parse_superspace_operation
 from latticedip.ordering.model import Ordering, is_self_conjugate, snap_k
+from latticedip.ordering.uncertain import AmplitudeUncertainty
 
 OPERATION_TAG = "_space_group_symop_magn_ssg_operation.algebraic"
 CENTRING_TAG = "_space_group_symop_magn_ssg_centering.algebraic"
@@ -86,7 +95,9 @@ def read_modulated_crystal(block: Block, name: str) -> Crystal:
 def read_modulated_ordering(block: Block, name: str) -> Ordering:
     """The ordering that a block describes: its average moments at k = 0 and harmonic n of the modulation at n q.
 
-    Standard uncertainties are kept for the average moments of sites without a modulation.
+    Standard uncertainties are kept: in ``moment_su`` for sites without a modulation, in ``amplitude_su`` for the
+    others, where every number that the file gives (cosine and sine, or modulus and phase, along each axis) is one
+    parameter, or as many as the symmetry of the site leaves free, and moves all its atoms.
 
     Raises FileError naming file, item and value where something is missing, contradicts itself or is forbidden by the
     symmetry, for more than one independent wave vector, and for modulations other than that of the moments.
@@ -104,9 +115,12 @@ def read_modulated_ordering(block: Block, name: str) -> Ordering:
     still: list[FloatArray] = []
     su: list[FloatArray] = []
     waves: dict[int, list[ComplexArray]] = {n: [] for n in _orders(series.amplitudes)}
+    uncertain = {label: list(found) for label, found in series.uncertain.items()}
     for i, site in enumerate(structure.sites):
         mine = series.amplitudes.get(site.label, {})
         average = averages.get(site.label)
+        if mine and average is not None:
+            uncertain.setdefault(site.label, []).append(UncertainWave(0, np.eye(3, dtype=complex), average.su))
         if 0 in mine:
             known = SiteMoment(np.zeros(3), np.full(3, np.nan)) if average is None else average
             average = SiteMoment(known.crystal_axes + mine[0].real, known.su)
@@ -117,16 +131,12 @@ def read_modulated_ordering(block: Block, name: str) -> Ordering:
             parts.append(_expand_wave(block, found, i, n, mine.get(n, np.zeros(3, dtype=complex)), notes))
     k, components = [np.zeros(3)], [np.concatenate(still).astype(complex)]
     for n, parts in waves.items():
-        turns = (n * (crystal.positions @ found.q + found.phase)) % 1.0
-        component = np.concatenate(parts) * np.exp(-2j * np.pi * turns)[:, None]
-        vector = snap_k(n * found.q)
-        if is_self_conjugate(vector[None])[0]:
-            component = component.real.astype(complex)
-        k.append(vector)
-        components.append(component)
+        k.append(snap_k(n * found.q))
+        components.append(_counted_in_cells(found, n, np.concatenate(parts), crystal.positions))
     used = [i for i, component in enumerate(components) if np.any(component)] or [0]
     if not np.any(components[used[0]]):
         notes.append("every moment of the file is zero")
+    parameters = _parameters(found, uncertain, [[0, *waves][i] for i in used], notes)
     parent = read_parent(block)
     notes.extend(series.notes)
     notes.extend(propagation_notes(block, parent, np.array([n * found.q for n in (*waves, 1)])))
@@ -139,9 +149,68 @@ def read_modulated_ordering(block: Block, name: str) -> Ordering:
             moment_su=np.concatenate(su),
             parent=parent,
             notes=tuple(notes),
+            amplitude_su=tuple(parameters),
         )
     except InputError as error:
         raise block.error(str(error)) from None
+
+
+def _counted_in_cells(found: _Superspace, n: int, amplitudes: ComplexArray, positions: FloatArray) -> ComplexArray:
+    """Components S = A_n exp(−2πi n (q·τ + t)) of amplitudes (..., m, 3) of atoms at positions (m, 3)."""
+    if n == 0:
+        return np.asarray(amplitudes.real.astype(complex))
+    turns = (n * (positions @ found.q + found.phase)) % 1.0
+    component = amplitudes * np.exp(-2j * np.pi * turns)[:, None]
+    if is_self_conjugate(snap_k(n * found.q)[None])[0]:
+        component = component.real.astype(complex)
+    return np.asarray(component)
+
+
+def _parameters(
+    found: _Superspace, uncertain: dict[str, list[UncertainWave]], orders: list[int], notes: list[str]
+) -> list[AmplitudeUncertainty]:
+    """What is uncertain of the amplitudes: the numbers of a listed site, or as many as its symmetry leaves free.
+
+    uncertain: by label of the site. orders: the harmonic at each k of the ordering.
+    """
+    structure, crystal = found.structure, found.structure.crystal
+    parameters = []
+    left_out = set()
+    first = 0
+    for i, site in enumerate(structure.sites):
+        positions = structure.orbits[i].positions
+        atoms = tuple(range(first, first + len(positions)))
+        first += len(positions)
+        for wave in uncertain.get(site.label, ()):
+            if not np.any(np.nan_to_num(wave.su)):
+                continue
+            if wave.n not in orders:
+                left_out.add(wave.n)
+                continue
+            steps = np.zeros((len(orders), len(atoms), 3), dtype=complex)
+            for images in _uncertain_images(found, i, wave):
+                step = _counted_in_cells(found, wave.n, images, positions)
+                if np.any(step):
+                    steps[orders.index(wave.n)] = crystal.to_cartesian(step)
+                    parameters.append(AmplitudeUncertainty(atoms, steps))
+    for n in sorted(left_out):
+        what = f"amplitudes at {n} q" if n else "average moments of modulated sites"
+        notes.append(f"standard uncertainties of {what} are not kept, since these are all zero")
+    return parameters
+
+
+def _uncertain_images(found: _Superspace, index: int, wave: UncertainWave) -> list[ComplexArray]:
+    """Changes (m, 3) of A_n of the atoms of a site, one array for each independent parameter of its amplitude."""
+    orbit = found.structure.orbits[index]
+
+    def stack(vectors: ComplexArray) -> FloatArray:
+        """Complex columns as real ones: an operation may conjugate, so that only real factors go through it."""
+        return np.asarray(vectors.real if wave.n == 0 else np.vstack([vectors.real, vectors.imag]))
+
+    kept = np.array([_images(found, index, wave.n, column)[orbit.stabilizer].mean(axis=0) for column in wave.basis.T]).T
+    allowed = np.asarray(np.linalg.solve(stack(wave.basis), stack(kept)), dtype=np.float64)
+    steps = wave.basis @ parameter_steps(allowed, wave.su)
+    return [_images(found, index, wave.n, step)[orbit.carriers] for step in steps.T]
 
 
 def _orders(amplitudes: dict[str, dict[int, ComplexArray]]) -> list[int]:
@@ -152,21 +221,11 @@ def _expand_wave(
     block: Block, found: _Superspace, index: int, n: int, amplitude: ComplexArray, notes: list[str]
 ) -> ComplexArray:
     """Shape (m, 3) complex in µB along crystal axes. A_n of all atoms of a site; as `expand_moment` for averages."""
-    structure, group = found.structure, found.group
+    structure = found.structure
     orbit, site, crystal = structure.orbits[index], structure.sites[index], structure.crystal
     if not np.any(amplitude):
         return np.zeros((len(orbit.positions), 3), dtype=complex)
-    lengths = np.linalg.norm(crystal.cell, axis=1)
-    turns = group.axial * lengths[:, None] / lengths[None, :]
-    shifts = group.rotations[:, 3, :3] @ _listed_position(orbit.positions, site.position, crystal)
-    phases = np.exp(2j * np.pi * ((n * (group.translations[:, 3] + shifts)) % 1.0))
-    forward = group.rotations[:, 3, 3] > 0
-
-    def images(vector: ComplexArray) -> ComplexArray:
-        turned = np.einsum("gab,gb->ga", turns, np.where(forward[:, None], vector, vector.conj()))
-        return np.asarray(phases[:, None] * turned)
-
-    allowed = images(amplitude)[orbit.stabilizer].mean(axis=0)
+    allowed = _images(found, index, n, amplitude)[orbit.stabilizer].mean(axis=0)
     miss = float(np.linalg.norm((amplitude - allowed) @ crystal.axes_unit))
     if miss > max(ALLOWED_MUB, ALLOWED_FRACTION * float(np.linalg.norm(amplitude @ crystal.axes_unit))):
         raise block.error(
@@ -178,7 +237,20 @@ def _expand_wave(
         notes.append(
             f"the modulation of {site.label} at {n} q misses what its site allows by {miss:.2g} µB; it is put right"
         )
-    return images(allowed)[orbit.carriers]
+    return _images(found, index, n, allowed)[orbit.carriers]
+
+
+def _images(found: _Superspace, index: int, n: int, amplitude: ComplexArray) -> ComplexArray:
+    """Shape (n_operations, 3) complex. What every operation makes of A_n (crystal axes) of a listed atom."""
+    structure, group = found.structure, found.group
+    orbit, site, crystal = structure.orbits[index], structure.sites[index], structure.crystal
+    lengths = np.linalg.norm(crystal.cell, axis=1)
+    turns = group.axial * lengths[:, None] / lengths[None, :]
+    shifts = group.rotations[:, 3, :3] @ _listed_position(orbit.positions, site.position, crystal)
+    phases = np.exp(2j * np.pi * ((n * (group.translations[:, 3] + shifts)) % 1.0))
+    forward = group.rotations[:, 3, 3] > 0
+    turned = np.einsum("gab,gb->ga", turns, np.where(forward[:, None], amplitude, amplitude.conj()))
+    return np.asarray(phases[:, None] * turned)
 
 
 def _listed_position(images: FloatArray, position: FloatArray, crystal: Crystal) -> FloatArray:

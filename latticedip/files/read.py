@@ -62,7 +62,8 @@ def read_ordering(path: str | os.PathLike[str], *, block: str | int | None = Non
     path, block: as for `read_crystal`. Moments come in µB; those of a magCIF are turned from its crystal-axis,
     Cartesian or spherical components, its standard uncertainties are kept in ``moment_su``, and the change of
     cell from the parent structure in ``parent``. A magCIF in (3+1)D superspace gives an ordering of the average cell,
-    with components at the multiples of its wave vector.
+    with components at the multiples of its wave vector; the uncertainties of their cosines and sines (or moduli and
+    phases) are kept in ``amplitude_su``.
 
     Raises FileError, with one message that names file, item and value, for whatever cannot be understood: no
     moments, moments that the symmetry of their site forbids, several independent wave vectors, modulated positions or

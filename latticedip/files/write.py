@@ -55,8 +55,9 @@ def write_ordering(
     with its harmonics and a part at k = 0, can also be written in its own cell as a modulation in (3+1)D superspace.
     The magCIF lists all atoms in P 1 with crystal-axis components in µB, standard uncertainties and the change of cell
     from the parent where they are known; it fixes lengths and angles, so that a turned cell comes back in the standard
-    orientation. The extended XYZ keeps the cell vectors, labels, occupancies and Cartesian moments, but no
-    uncertainties.
+    orientation. Uncertainties of the amplitudes of a wave are kept in superspace alone, of each number by itself; a
+    comment in the file says what is lost. The extended XYZ keeps the cell vectors, labels, occupancies and Cartesian
+    moments, but no uncertainties.
 
     path: its suffix chooses the format. overwrite: whether an existing file is replaced. The file appears whole
     or not at all. superspace: None writes a magCIF in superspace where there is no supercell of allowed size.
@@ -113,8 +114,7 @@ def _magnetic_cell(ordering: Ordering, name: str) -> _MagneticCell:
     scale = np.array(counts, dtype=float)
     positions = ((crystal.positions[None] + lattice[:, None]) / scale).reshape(-1, 3)
     # Away from zone-boundary k a moment mixes two amplitudes, whose uncertainties are not those of the moment.
-    keeps_su = len(ordering.k) == 1 and bool(is_self_conjugate(ordering.k)[0])
-    su = ordering.moment_su if keeps_su else np.full((crystal.n_sites, 3), np.nan)
+    su = _moment_su(ordering) if _keeps_su(ordering) else np.full((crystal.n_sites, 3), np.nan)
     parent = ordering.parent
     return _MagneticCell(
         crystal.cell * scale[:, None],
@@ -128,6 +128,21 @@ def _magnetic_cell(ordering: Ordering, name: str) -> _MagneticCell:
         np.tile(ordering.is_magnetic, len(cells)),
         None if parent is None else ParentTransform(np.asarray(parent.P) * scale, parent.p),
     )
+
+
+def _keeps_su(ordering: Ordering) -> bool:
+    """True where every moment is an amplitude, up to its sign."""
+    return len(ordering.k) == 1 and bool(is_self_conjugate(ordering.k)[0])
+
+
+def _moment_su(ordering: Ordering) -> FloatArray:
+    """Shape (n_sites, 3) float in µB. Of the crystal-axis components of single moments, at one k."""
+    to_axes = np.linalg.inv(ordering.crystal.axes_unit)
+    covariance = np.einsum("ba,nbc,cd->nad", to_axes, ordering.moments_covariance()[0], to_axes)
+    su = np.sqrt(np.maximum(0.0, np.einsum("naa->na", covariance)))
+    # What is nothing beside the others is exact.
+    su[su <= 1e-9 * np.nanmax(su, axis=1, keepdims=True, initial=0.0)] = np.nan
+    return np.where(np.isnan(covariance[:, 0, 0])[:, None], ordering.moment_su, su)
 
 
 def _fits_supercell(ordering: Ordering) -> bool:
@@ -162,7 +177,10 @@ def _as_mcif(ordering: Ordering, name: str) -> str:
     magnetic = _magnetic_cell(ordering, name)
     axes = magnetic.cell / np.linalg.norm(magnetic.cell, axis=1)[:, None]
     components = magnetic.moments_cart @ np.linalg.inv(axes)
-    lines = ["# Magnetic structure in P 1, written by latticedip", f"data_{block_name(ordering.name)}"]
+    lines = ["# Magnetic structure in P 1, written by latticedip"]
+    if ordering.amplitude_su and not _keeps_su(ordering):
+        lines += ["# Standard uncertainties of amplitudes are not written: a moment here mixes several amplitudes."]
+    lines += [f"data_{block_name(ordering.name)}"]
     lines += cell_lines(magnetic.cell)
     lines += ["_space_group_magn.number_BNS '1.1'", "_space_group_magn.name_BNS 'P1'"]
     lines += parent_lines(magnetic.parent)

@@ -256,6 +256,7 @@ def _placed(ordering: Ordering, rotation: np.ndarray, translation: FloatArray, r
         crystal=carried,
         components=-components if reverse else components,
         moment_su=None,
+        amplitude_su=tuple(one.turned(axial) for one in ordering.amplitude_su),
         parent=None,
         reference=Reference(reference.crystal, transform, reference.how),
     )

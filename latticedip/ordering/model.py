@@ -20,6 +20,12 @@ import numpy as np
 from latticedip.checks import ComplexArray, FloatArray, as_complex, as_floats, frozen
 from latticedip.crystal.model import Crystal, site_order
 from latticedip.errors import InputError
+from latticedip.ordering.uncertain import (
+    AmplitudeUncertainty,
+    aligned_parameters,
+    moments_covariance,
+    without_imaginary,
+)
 
 if TYPE_CHECKING:
     from ase import Atoms
@@ -107,12 +113,14 @@ class Ordering:
     reference: the crystal in whose cell probes are given, where it is not ``crystal`` (set when a study is read).
     notes: sentences a report must repeat.
     size_su: where a size is uncertain and its direction is not; it then counts in the place of moment_su.
+    amplitude_su: the independent parameters of the components, at any number of k, where their uncertainties are known
+        one by one; for the atoms they change they count in the place of moment_su.
 
     Components at k equal or opposite modulo 1 are merged (S_k + conj S_−k). Where k and −k are the same vector
     only the real part has a meaning.
 
-    Raises InputError for wrong shapes, values that are not finite, components beyond 1e6 µB, or an imaginary part at
-    such a k.
+    Raises InputError for wrong shapes, values that are not finite, components beyond 1e6 µB, an imaginary part at
+    such a k, or an atom in both size_su and amplitude_su.
     """
 
     crystal: Crystal
@@ -124,6 +132,7 @@ class Ordering:
     reference: Reference | None = field(default=None, repr=False)
     notes: tuple[str, ...] = field(default=(), repr=False)
     size_su: tuple[SizeUncertainty, ...] = field(default=(), repr=False)
+    amplitude_su: tuple[AmplitudeUncertainty, ...] = field(default=(), repr=False)
 
     def __post_init__(self) -> None:
         if not isinstance(self.crystal, Crystal):
@@ -140,8 +149,16 @@ class Ordering:
         for axis, periodic in enumerate(self.crystal.pbc):
             if not periodic and np.any(np.abs(k[:, axis]) > K_SNAP):
                 raise InputError(f"k has a component along direction {axis + 1}, in which the crystal is not periodic.")
-        k, components = merge_components(snap_k(k), components)
+        parameters = aligned_parameters(self.amplitude_su, len(k), n)
+        given = snap_k(k)
+        k, components = merge_components(given, components)
+        if len(k) != len(given):
+            parameters = tuple(
+                AmplitudeUncertainty(one.sites, merge_components(given, one.steps)[1]) for one in parameters
+            )
         own_opposite = is_self_conjugate(k)
+        parameters = tuple(without_imaginary(one, own_opposite) for one in parameters)
+        self._refuse_two_uncertainties(parameters)
         scale = max(1.0, float(np.abs(components).max(initial=0.0)))
         for i in np.flatnonzero(own_opposite):
             imaginary = np.abs(components[i].imag)
@@ -161,6 +178,16 @@ class Ordering:
             su = su.astype(float)
         for key, value in (("components", components), ("k", k), ("moment_su", su)):
             object.__setattr__(self, key, frozen(value))
+        object.__setattr__(self, "amplitude_su", parameters)
+
+    def _refuse_two_uncertainties(self, parameters: Sequence[AmplitudeUncertainty]) -> None:
+        sized = {site for group in self.size_su for site in group.sites}
+        both = sorted(sized & {site for one in parameters for site in one.sites})
+        if both:
+            raise InputError(
+                f"site {both[0] + 1} ({self.crystal.labels[both[0]]}) stands in size_su and in amplitude_su, which "
+                "would count its uncertainty twice. Leave one out."
+            )
 
     def moments(self, cells: Sequence[Sequence[int]] | Any = ((0, 0, 0),)) -> FloatArray:
         """Shape (n_cells, n_sites, 3) float in µB. Cartesian moments in the cells at lattice vectors ``cells``."""
@@ -170,6 +197,14 @@ class Ordering:
         turns = (lattice @ self.k.T) % 1.0
         phases = np.exp(-2j * np.pi * turns)
         return np.asarray(np.einsum("ck,kja->cja", phases, self.components).real)
+
+    def moments_covariance(self, cells: Sequence[Sequence[int]] | Any = ((0, 0, 0),)) -> FloatArray:
+        """Shape (n_cells, n_sites, 3, 3) float in µB². What ``amplitude_su`` makes uncertain of Cartesian moments.
+
+        cells: as `moments`. NaN for atoms that ``amplitude_su`` does not change.
+        """
+        lattice = as_floats("cells", cells, (None, 3))
+        return moments_covariance(self.amplitude_su, self.k, lattice, self.crystal.n_sites)
 
     @cached_property
     def is_magnetic(self) -> np.ndarray:
@@ -214,6 +249,7 @@ class Ordering:
             reference=self.reference,
             notes=self.notes,
             size_su=self.size_su,
+            amplitude_su=tuple(one.turned(matrix) for one in self.amplitude_su),
         )
 
     @classmethod

@@ -13,6 +13,9 @@ Which parameters are independent:
   says. Any other atom has parameters of its own, also under the same label.
 * At k ≠ 0 they are the components of the amplitude A of a wave S = A exp(iφ) whose moments stay along one line: A is
   real, and its phase φ counts as exact. With F the sum of tensors at k, ∂B/∂A = Re[F exp(iφ)].
+* Where the ordering states the parameters of its amplitudes (``ordering.amplitude_su``), as modulated magCIFs and the
+  amplitudes of a study do, these are the parameters, at any number of k: each changes the components S_kj by a known
+  step, and B by Σ Re[F_kj · step_kj]. A phase that follows the position of the atom counts as exact.
 * A size that is stated with its uncertainty (``ordering.size_su``) is one parameter for all atoms it is stated for, at
   any k: their part of the field changes by its fraction.
 * Each fractional coordinate of a site is one parameter, or as many as the symmetry of the site leaves free; atoms of
@@ -37,6 +40,7 @@ from latticedip.crystal.spread import carriers
 from latticedip.crystal.symmetry import operations_of
 from latticedip.crystal.uncertain import Moves, Tied, checked_su, parameter_steps, position_moves, tied_groups
 from latticedip.ordering.model import ZERO_MOMENT_MUB, Ordering
+from latticedip.ordering.uncertain import AmplitudeUncertainty
 from latticedip.physics.contact import shell_neighbours
 from latticedip.physics.spread import exchanged_tensors, moments_of, pair_sums
 from latticedip.units import MU0_T_A3_PER_MUB
@@ -99,15 +103,19 @@ def field_uncertainty(result: LocalField, *, site_position_su: Any = None) -> Fi
     """
     ordering = result.ordering
     n, n_sites = len(result.points), ordering.crystal.n_sites
-    stated = ordering.crystal.position_su if site_position_su is None else site_position_su
-    of_sites = np.nan_to_num(checked_su("site_position_su", stated, (n_sites, 3)))
-    scaled = [site for group in ordering.size_su for site in group.sites]
+    placed = ordering.crystal.position_su if site_position_su is None else site_position_su
+    of_sites = np.nan_to_num(checked_su("site_position_su", placed, (n_sites, 3)))
     of_moments = np.nan_to_num(ordering.moment_su) * ordering.is_magnetic[:, None]
-    of_moments[scaled] = 0.0
+    # The parameters of these atoms are stated themselves.
+    stated = [site for group in ordering.size_su for site in group.sites]
+    stated += [site for one in ordering.amplitude_su for site in one.sites]
+    of_moments[stated] = 0.0
     lines = amplitudes(ordering)
     if np.any(of_moments[lines.index < 0]):
         return _open(n, (MODULATED,))
+    lines.index[stated] = -1
     moments_known = bool(np.any(of_moments)) or any(group.relative > 0 for group in ordering.size_su)
+    moments_known |= any(_changes(ordering, one) for one in ordering.amplitude_su)
     known = np.full(n, moments_known or bool(np.any(of_sites))) | np.any(result.position_su_cart, axis=(1, 2))
     if not np.any(known):
         return _open(n, ())
@@ -148,6 +156,11 @@ def _open(n: int, notes: tuple[str, ...]) -> FieldUncertainty:
     return FieldUncertainty(frozen(nan), frozen(nan[:, 0]), frozen(nan[:, 0, 0]), frozen(nan[:, 0, 0]), notes)
 
 
+def _changes(ordering: Ordering, parameter: AmplitudeUncertainty) -> bool:
+    """True where a parameter changes the moment of an ion."""
+    return bool(np.any(parameter.steps[:, ordering.is_magnetic[list(parameter.sites)]]))
+
+
 def _squares(steps: FloatArray) -> FloatArray:
     """Shape (n, 3, 3). Covariance of changes (n, 3, m) by one standard uncertainty of each of m parameters."""
     return np.asarray(steps @ steps.transpose(0, 2, 1))
@@ -181,6 +194,9 @@ def _from_moments(
         sites = list(size.sites)
         part = np.einsum("ktjab,kjb->ta", transfer[:, :, sites], ordering.components[:, sites]).real
         covariance += _squares(size.relative * part[:, :, None])
+    for one in ordering.amplitude_su:
+        part = np.einsum("ktjab,kjb->ta", transfer[:, :, list(one.sites)], one.steps).real
+        covariance += _squares(part[:, :, None])
     for group in tied:
         steps = parameter_steps(group.allowed, su[group.sites[0]])
         if not steps.size:

@@ -167,6 +167,7 @@ def _turned(ordering: Ordering, crystal: Crystal, match: Match, how: str, notes:
         ordering,
         crystal=turned,
         components=ordering.components @ match.rotation.T,
+        amplitude_su=tuple(one.turned(match.rotation) for one in ordering.amplitude_su),
         reference=Reference(crystal, ParentTransform(match.P, match.p), how),
         notes=(*ordering.notes, *notes),
     )

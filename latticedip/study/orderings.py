@@ -1,6 +1,8 @@
 """The [[ordering]] tables of a study: patterns of signs, cosine and sine amplitudes, or files with their own cell.
 
 `along`, `cosine` and `sine` are crystal-axis components, along unit vectors parallel to a, b, c of [crystal].
+`cosine_su` and `sine_su` state standard uncertainties in the layout of `cosine` and `sine`: each number is one
+independent parameter, and a triple that holds for all atoms of a name is one for all of them.
 An ordering with `along` covers every site that has a size in [moments]; sites that `signs` leaves out are all +.
 """
 
@@ -24,16 +26,19 @@ from latticedip.ordering.patterns import (
     triple,
     unit_direction,
 )
+from latticedip.ordering.uncertain import AmplitudeUncertainty
 from latticedip.study.frames import place_in_frame
 from latticedip.study.keys import Key
 
 FILE_KEYS = ("file", "block", "domain")
 SIGN_KEYS = ("along", "signs")
-WAVE_KEYS = ("cosine", "sine", "phase")
+WAVE_KEYS = ("cosine", "sine", "phase", "cosine_su", "sine_su")
 OTHER_KEY = "other_energy_meV_per_ion"
 ORDERING_KEYS = ("name", "k", *SIGN_KEYS, *WAVE_KEYS, *FILE_KEYS, OTHER_KEY)
 
 MOMENT_KEYS = ("size", "su")
+#: What the triples of a key are multiplied with.
+AMPLITUDES = {"cosine": 1.0, "sine": 1j}
 
 _SIZE = "a size in Bohr magnetons, at least 0"
 _DIRECTION = "a direction in crystal axes a, b, c, such as [0, 0, 1]"
@@ -210,7 +215,7 @@ def _from_pattern(item: Key, table: dict[str, Key], crystal: Crystal, sizes: Siz
     components = _sign_components(table, setting, sizes) if signs else _wave_components(table, setting)
     with item.located():
         ordering = setting.finish(components, notes=_k_notes(setting.k))
-    return sizes.uncertainties(ordering) if signs else ordering
+    return sizes.uncertainties(ordering) if signs else _with_amplitude_su(ordering, table, setting)
 
 
 def _k_notes(k: FloatArray) -> list[str]:
@@ -284,32 +289,95 @@ def _directions(key: Key, crystal: Crystal, used: np.ndarray) -> FloatArray:
 
 def _wave_components(table: dict[str, Key], setting: Setting) -> ComplexArray:
     crystal = setting.crystal
-    follow = "phase" not in table or table["phase"].one_of(("position", "cell")) == "position"
     components = np.zeros((crystal.n_sites, 3), dtype=complex)
-    for name, factor in (("cosine", 1.0), ("sine", 1j)):
+    for name in AMPLITUDES:
         if name not in table:
             continue
         part = np.zeros_like(components)
 
-        def one(key: Key, sites: tuple[int, ...], factor: complex = factor) -> ComplexArray:
-            entries = factor * read_triples(key, setting, sites)
-            if follow:
-                # A list for the primitive cell holds amplitudes, which centring leaves as they are; the position
-                # carries the whole phase.
-                still = dataclasses.replace(setting, k=np.zeros(3))
-                values = still.spread(sites, entries) * setting.follow_positions(sites)[:, None]
-            else:
-                values = setting.spread(sites, entries)
-            if factor == 1j and setting.self_conjugate and _has_no_real_part(values):
+        def one(key: Key, sites: tuple[int, ...], name: str = name) -> ComplexArray:
+            values = _carried(table, setting, name, sites, read_triples(key, setting, sites))
+            if name == "sine" and setting.self_conjugate and _has_no_real_part(values):
                 raise key.refuse(
                     f"at k = {triple(setting.k)}, where k and −k are the same vector, a sine amplitude has no effect "
                     "on these atoms. Leave it out, or give it as cosine."
                 )
-            return np.asarray(values @ crystal.axes_unit)
+            return values
 
         fill_by_site(table[name], crystal, part, one)
         components += part
     return components
+
+
+def _carried(
+    table: dict[str, Key], setting: Setting, name: str, sites: tuple[int, ...], entries: FloatArray
+) -> ComplexArray:
+    """Shape (n_sites, 3) complex, Cartesian µB. Components of the sites of one name, from the triples (m, 3) of it."""
+    amplitudes = AMPLITUDES[name] * entries
+    if "phase" not in table or table["phase"].one_of(("position", "cell")) == "position":
+        # A list for the primitive cell holds amplitudes, which centring leaves as they are; the position carries the
+        # whole phase.
+        still = dataclasses.replace(setting, k=np.zeros(3))
+        values = still.spread(sites, amplitudes) * setting.follow_positions(sites)[:, None]
+    else:
+        values = setting.spread(sites, amplitudes)
+    return np.asarray(values @ setting.crystal.axes_unit)
+
+
+def _with_amplitude_su(ordering: Ordering, table: dict[str, Key], setting: Setting) -> Ordering:
+    """The ordering with the uncertainties that `cosine_su` and `sine_su` state of its amplitudes."""
+    parameters: list[AmplitudeUncertainty] = []
+    for name in AMPLITUDES:
+        if f"{name}_su" not in table:
+            continue
+        key = table[f"{name}_su"]
+        if name not in table:
+            raise key.refuse(f"goes only with `{name}`, which this ordering has not.")
+        stated = table[name].table()
+        for who, child in key.table(header="a table by site label or element, as `cosine` and `sine` are").items():
+            if who not in stated:
+                raise child.refuse(
+                    f"stands in no entry of `{name}`, which has {', '.join(stated)}. Use the same names."
+                )
+            sites = setting.crystal.find(who)
+            for entries in _su_entries(child, stated[who], setting.counts(sites)[0]):
+                steps = _carried(table, setting, name, sites, entries)
+                if setting.self_conjugate:
+                    # As of the components, only the real part has a meaning; an ion that is left without a moment has
+                    # no uncertain one.
+                    steps = np.where(ordering.is_magnetic[list(sites)][:, None], steps.real, 0.0).astype(complex)
+                if np.any(steps):
+                    parameters.append(AmplitudeUncertainty(sites, steps[None]))
+    return dataclasses.replace(ordering, amplitude_su=tuple(parameters)) if parameters else ordering
+
+
+def _su_entries(key: Key, stated: Key, primitive: int) -> list[FloatArray]:
+    """Changes of the list of triples (m, 3) by each uncertain number, of which one may stand for all atoms."""
+    of_triple = "three standard uncertainties in µB, each at least 0"
+    if not isinstance(stated.value[0], list):
+        su = [
+            item.number("a number of at least 0", low=0.0)
+            for item in _exactly(key, 3, f"{of_triple}, as `{stated.path}` has one triple")
+        ]
+        return [np.tile(np.eye(3)[axis] * su[axis], (primitive, 1)) for axis in range(3) if su[axis]]
+    n = len(stated.value)
+    changes = []
+    for row, item in enumerate(
+        _exactly(key, n, f"{n} triples of standard uncertainties in µB, as `{stated.path}` has {n}")
+    ):
+        for axis, number in enumerate(_exactly(item, 3, of_triple)):
+            entries = np.zeros((n, 3))
+            entries[row, axis] = number.number("a number of at least 0", low=0.0)
+            if entries[row, axis]:
+                changes.append(entries)
+    return changes
+
+
+def _exactly(key: Key, n: int, what: str) -> list[Key]:
+    items = key.items(what)
+    if len(items) != n:
+        raise key.expected(what)
+    return items
 
 
 def _has_no_real_part(values: ComplexArray) -> bool:
