@@ -49,7 +49,8 @@ def linewidth(
     each isotope adds.
 
     Abundances are natural unless the study says otherwise. Sums over all nuclei of the crystal are exact to ten
-    digits or better.
+    digits or better. A spread that the study states for a probe counts as motion that is fast against the linewidth:
+    the field of every nucleus is averaged over it. A slow motion gives a distribution of widths instead.
 
     \b
     Example:
@@ -61,6 +62,9 @@ def linewidth(
       # fractions of all lithium; an isotope that is not named is absent then
       7Li = 0.05
       6Li = 0.95
+      [[probe]]
+      # rms displacement along each axis, or covariance_A2 or Uij
+      spread_A = 0.15
     """
     from latticedip.report.linewidth import linewidth_text
     from latticedip.study import tasks

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -20,7 +21,17 @@ from latticedip.ordering.model import Ordering
 from latticedip.physics.boundary import boundary_words
 from latticedip.physics.contact import shell_neighbours
 from latticedip.physics.coupling import require_bulk
-from latticedip.physics.spread import REACHED, exchanged_tensors, probe_words, reached_words, refuse_thin
+from latticedip.physics.spread import (
+    REACHED,
+    equal_covariances,
+    exchanged_tensors,
+    extended_words,
+    moment_clouds,
+    moment_spread_words,
+    probe_words,
+    reached_words,
+    refuse_thin,
+)
 from latticedip.probe import Contact
 from latticedip.sample import Sample
 from latticedip.sums.bulk import lattice_sum
@@ -152,6 +163,7 @@ def coupling_tensor(
     spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
     position_su: Any = None,
+    moment_spread: Any = None,
     tol: float = 1e-10,
 ) -> CouplingTensor:
     """Coupling tensor of a probe to equal moments on all ions of a label or element: B = A m.
@@ -162,14 +174,16 @@ def coupling_tensor(
     ions. displaced: neighbours that the probe moves; shells of both kinds count in the undisturbed crystal.
     spread: of the probe, as `local_field`; the dipolar part is then the average over a Gaussian cloud.
     position_su: Shape (3,) fractional, standard uncertainties of the coordinates of a position that is on no atom.
+    moment_spread: of the moments (extended ions), as `local_field`: the cloud of each pair is that of both together.
     tol: bound of the error of each site's tensor, as `dipole_tensor`.
 
     Uncertainties of the dipolar part follow from position_su and those of the sites (``crystal.position_su``), to first
     order, each independent parameter by itself; cell, contact and occupancies count as exact.
 
     Raises InputError for an unknown label, a position between 1e-3 and 0.1 Å from an atom, a shell that is not there,
-    a contact term without a coupling, a spread as `local_field` refuses it, a position_su that is not three numbers of
-    at least 0 or belongs to a position on an atom, or a crystal that is not periodic in three directions.
+    a contact term without a coupling, a spread (of the probe or of moments) as `local_field` refuses it, a position_su
+    that is not three numbers of at least 0 or belongs to a position on an atom, or a crystal that is not periodic in
+    three directions.
     """
     names = (magnetic,) if isinstance(magnetic, str) else tuple(magnetic)
     if not names:
@@ -183,6 +197,7 @@ def coupling_tensor(
         spread=spread,
         displaced=displaced,
         position_su=position_su,
+        moment_spread=moment_spread,
         tol=tol,
     )
     return summed(crystal, parts, np.arange(len(sites)), names, sample)
@@ -216,6 +231,25 @@ def summed(
     )
 
 
+def averaged(tensors: Sequence[CouplingTensor], weights: FloatArray) -> CouplingTensor:
+    """Mean of the coupling tensors to the same ions at several positions, that of a probe that moves fast between them.
+
+    weights: Shape (n,) float, adding up to 1. The position is that of the first; uncertainties are those of the sites,
+    which all tensors share, so that each must count the same parameters.
+    """
+    shares = np.asarray(weights, dtype=float)
+    first = tensors[0]
+    return dataclasses.replace(
+        first,
+        site="",
+        dipolar=frozen(np.einsum("n,nab->ab", shares, [one.dipolar for one in tensors])),
+        contact=frozen(np.einsum("n,nab->ab", shares, [one.contact for one in tensors])),
+        error_bound=float(shares @ [one.error_bound for one in tensors]),
+        steps=frozen(np.einsum("n,nmab->mab", shares, [one.steps for one in tensors])),
+        notes=tuple(dict.fromkeys(note for one in tensors for note in one.notes)),
+    )
+
+
 def site_couplings(
     crystal: Crystal,
     position: Any,
@@ -225,6 +259,7 @@ def site_couplings(
     spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
     position_su: Any = None,
+    moment_spread: Any = None,
     tol: float = 1e-10,
 ) -> SiteCouplings:
     """Coupling tensors of a probe to each of some sites (indices, distinct); arguments as `coupling_tensor`."""
@@ -241,12 +276,14 @@ def site_couplings(
     cloud = as_spread("spread", spread)
     moves = crystal.position_moves
     stated = bool(moves) or of_probe is not None
-    tensors, slopes, reached = _dipolar(ordering, place, chosen, covariance_of(cloud), terms, stated, tol)
+    extended = moment_clouds(ordering, moment_spread)
+    tensors, slopes, reached = _dipolar(ordering, place, chosen, covariance_of(cloud), extended, terms, stated, tol)
     bound = float(crystal.occupancies[chosen] @ (tol * np.maximum(1.0, np.abs(tensors).max(axis=(1, 2)))))
     magnetization = MU0_T_A3_PER_MUB / crystal.volume_A3
     rows = {int(site): row for row, site in enumerate(chosen)}
     notes = [*crystal.notes, *(f"displaced: {term.words()}" for term in terms)]
-    notes += [*(words.removeprefix(": ") for words in probe_words("", cloud, ())), *reached]
+    notes += [words.removeprefix(": ") for words in probe_words("", cloud, ())]
+    notes += [*moment_spread_words(moment_spread), *reached]
     if place.site >= 0:
         notes.append(f"the position is that of atom {crystal.labels[place.site]}, which does not act on itself")
     return SiteCouplings(
@@ -283,40 +320,45 @@ def _dipolar(
     place: Place,
     chosen: np.ndarray,
     covariance: FloatArray,
+    of_moments: FloatArray,
     displaced: tuple[Displaced, ...],
     slopes: bool,
     tol: float,
 ) -> tuple[FloatArray, FloatArray, list[str]]:
     """N = 0 sums of each site (n, 3, 3) in T/µB, their derivatives by the place of the probe (n, 3, 3, 3) in T/µB/Å
     (zero where not asked for), and notes on the atoms that the cloud of the probe reaches.
+
+    covariance, of_moments: Shape (3, 3) and (n_sites, 3, 3) in Å², of the probe and of the moments.
     """
     crystal = ordering.crystal
     k = (0.0, 0.0, 0.0)
     reach = np.full(len(chosen), np.inf)
+    tensors = np.zeros((len(chosen), 3, 3))
     steep = np.zeros((len(chosen), 3, 3, 3))
-    if slopes or np.any(covariance):
-        smeared = smeared_sum(crystal.cell, np.zeros(3), tol, covariance)
-        found, derivatives, near = smeared.tensors(
-            smeared.place(place.cart[None]), smeared.place(crystal.places_cart[chosen]), slopes
-        )
-        tensors, reach = found[0].real, near[0]
-        if derivatives is not None:
-            steep = derivatives[0].real
-        if smeared.cloud.thin:
-            refuse_thin(ordering, chosen, near, [])
+    if slopes or np.any(covariance) or np.any(of_moments[chosen]):
+        for some in equal_covariances(of_moments[chosen]):
+            smeared = smeared_sum(crystal.cell, np.zeros(3), tol, covariance + of_moments[chosen[some[0]]])
+            found, derivatives, near = smeared.tensors(
+                smeared.place(place.cart[None]), smeared.place(crystal.places_cart[chosen[some]]), slopes
+            )
+            tensors[some], reach[some] = found[0].real, near[0]
+            if derivatives is not None:
+                steep[some] = derivatives[0].real
+            if smeared.cloud.thin:
+                refuse_thin(ordering, chosen[some], near, [])
     else:
         plan = lattice_sum(crystal.cell, k, tol)
-        tensors = plan.tensors(plan.place(place.cart[None]), plan.place(crystal.places_cart[chosen]))[0].real
-    tensors, steep = np.array(tensors), np.array(steep)
+        tensors[:] = plan.tensors(plan.place(place.cart[None]), plan.place(crystal.places_cart[chosen]))[0].real
     pairs = moved_pairs(crystal, place, displaced)
     rows = {int(site): row for row, site in enumerate(chosen)}
-    still = np.zeros((crystal.n_sites, 3, 3))
-    change, change_steep = exchanged_tensors(ordering, pairs, covariance, still)
+    change, change_steep = exchanged_tensors(ordering, pairs, covariance, of_moments)
     for i, site in enumerate(pairs.sites):
         if int(site) in rows:
             tensors[rows[int(site)]] += change[i]
             steep[rows[int(site)]] += change_steep[i]
     labels = dict.fromkeys(crystal.labels[site] for site in chosen[reach < REACHED])
+    if not np.any(covariance):
+        return tensors, steep, [extended_words("the probe", label) for label in labels]
     return tensors, steep, [reached_words("of the probe", label) for label in labels]
 
 

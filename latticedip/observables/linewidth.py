@@ -19,6 +19,10 @@ the probe's own isotope, as if all of them had the same resonance. Where inequiv
 quadrupole splitting, mutual flips between them are quenched, and only the isotope's spins on sites equivalent to that
 of the probe are like (`like="site"`). In a quadrupole splitting that the muon itself
 causes at low fields the secular part differs (Hartmann, Phys. Rev. Lett. 39, 832 (1977)): that is not included.
+
+A spread of the probe, an average over a Gaussian cloud, is motion that is fast against the linewidth, as zero-point
+motion is: the field of every nucleus is averaged before it is squared (`latticedip.observables.averaged_pairs`). Slow
+motion and disorder give a distribution of widths instead; sharp positions in the cloud stand for that.
 """
 
 from __future__ import annotations
@@ -34,12 +38,17 @@ from latticedip.checks import FloatArray, as_unit_vector, frozen
 from latticedip.crystal.displace import Displaced, moved_pairs
 from latticedip.crystal.model import OVERLAP_A, Crystal
 from latticedip.crystal.place import Place, place_of
+from latticedip.crystal.spread import as_spread, covariance_of
 from latticedip.crystal.symmetry import equivalent_sites
 from latticedip.errors import InputError
+from latticedip.observables.averaged_pairs import averaged_power_tensors, change_by_cloud
 from latticedip.observables.isotopes import element_of, isotopes_by_element
+from latticedip.ordering.model import Ordering
 from latticedip.particles import Particle, particle_named
+from latticedip.physics.spread import REACHED, reached_words, refuse_thin, spread_words
 from latticedip.sums.pairs import pair_power_tensors
 from latticedip.sums.powers import direction_sum, power_tensors
+from latticedip.sums.smear import cloud_of, smeared_pair_tensors
 from latticedip.units import BOHR_MAGNETON_J_PER_T, DIPOLE_T_A3_PER_MUB, NUCLEAR_MAGNETON_J_PER_T
 
 #: (µ0/4π) µ_N/Å³ in T.
@@ -74,7 +83,8 @@ class Linewidth:
     particle: name of the probe. MHz_per_T: its |γ|/2π.
     direction: Shape (3,) unit vector of the strong field (in zero field: of the initial polarization), Cartesian; None
         for a powder.
-    strong_tensor_T2: Shape (3, 3, 3, 3) in T². Σ p (1/3 or 3/4) I(I+1) b² n_a n_b n_c n_d, for all directions.
+    strong_tensor_T2: Shape (3, 3, 3, 3) in T². Σ p (1/3 or 3/4) I(I+1) b² n_a n_b n_c n_d, for all directions; with a
+        spread the tensor that gives the averaged sums in the same way.
     zero_tensor_T2: Shape (3, 3) in T². ⟨B_a B_b⟩ in zero field.
     contributions: by isotope. notes: sentences a report must repeat.
     """
@@ -156,6 +166,7 @@ def linewidth(
     abundances: Mapping[str, float] | None = None,
     displaced: Displaced | Iterable[Displaced] = (),
     like: Literal["isotope", "site"] = "isotope",
+    spread: Any = None,
 ) -> Linewidth:
     """Static dipolar second moment and widths of a probe from the nuclear moments around it.
 
@@ -166,17 +177,23 @@ def linewidth(
     nuclei: isotopes ("63Cu") or elements ("Cu") that count; None: all.
     direction: Shape (3,) Cartesian, of the strong field; None: powder average. abundances: fraction of the atoms of an
     element that are an isotope, by its name, where they are not the natural ones. displaced: neighbours that the probe
-    moves. Lattice sums are exact to ten digits or better.
+    moves. spread: of the probe, as `local_field` takes it: rms displacement along each axis in Å (float) or a (3, 3)
+    covariance in Å², of motion that is fast against the linewidth; None: a sharp place. Lattice sums are exact to ten
+    digits or better.
 
     Raises InputError for unknown particles and nuclei, another word for like, a zero direction, a position between 1e-3
-    and 0.1 Å from an atom, a shell that is not there, or a crystal that is periodic in one or two directions.
+    and 0.1 Å from an atom, a shell that is not there, a crystal that is periodic in one or two directions, a spread as
+    `local_field` refuses it, or a flat one that reaches a nucleus; AccuracyError where ten digits would take too many
+    pairs.
     """
     probe = particle_named(particle)
     along = None if direction is None else frozen(as_unit_vector("direction", direction))
     isotopes = isotopes_by_element(crystal, nuclei, abundances)
     place = place_of(crystal, position)
     terms = (displaced,) if isinstance(displaced, Displaced) else tuple(displaced)
-    sums = _site_sums(crystal, place, terms)
+    cloud = as_spread("spread", spread)
+    wanted = np.flatnonzero([symbol in isotopes for symbol in crystal.symbols])
+    sums, reached = _site_sums(crystal, place, terms, wanted, covariance_of(cloud))
     strong, zero = np.zeros((3, 3, 3, 3)), np.zeros((3, 3))
     contributions = []
     own = _like_sites(crystal, place, like)
@@ -209,7 +226,7 @@ def linewidth(
         strong_tensor_T2=frozen(strong),
         zero_tensor_T2=frozen(zero),
         contributions=tuple(contributions),
-        notes=_notes(crystal, place, probe, terms, contributions),
+        notes=(*_notes(crystal, place, probe, terms, contributions), *_spread_notes(cloud, reached)),
     )
 
 
@@ -238,8 +255,13 @@ def _along(tensor: FloatArray, direction: FloatArray | None) -> float:
     return max(0.0, float(direction_sum(tensor, direction)))
 
 
-def _site_sums(crystal: Crystal, place: Place, displaced: tuple[Displaced, ...]) -> FloatArray:
-    """Shape (n_sites, 3, 3, 3, 3) in 1/Å⁶. Σ n_a n_b n_c n_d r⁻⁶ over the atoms of each site, all cells."""
+def _site_sums(
+    crystal: Crystal, place: Place, displaced: tuple[Displaced, ...], sites: np.ndarray, covariance: FloatArray
+) -> tuple[FloatArray, list[str]]:
+    """Shape (n_sites, 3, 3, 3, 3) in 1/Å⁶. Σ n_a n_b n_c n_d r⁻⁶ over the atoms of each site, all cells.
+
+    sites: those that count. covariance: Shape (3, 3) in Å², of the probe. Also the labels of atoms that it reaches.
+    """
     offsets = place.cart - crystal.places_cart
     if all(crystal.pbc):
         sums = power_tensors(crystal.cell, offsets, leave_out_A=OVERLAP_A)
@@ -253,8 +275,29 @@ def _site_sums(crystal: Crystal, place: Place, displaced: tuple[Displaced, ...])
             "directions or none."
         )
     pairs = moved_pairs(crystal, place, displaced)
-    np.add.at(sums, pairs.sites, pair_power_tensors(pairs.after) - pair_power_tensors(pairs.before))
-    return sums
+    if not np.any(covariance) or not len(sites):
+        np.add.at(sums, pairs.sites, pair_power_tensors(pairs.after) - pair_power_tensors(pairs.before))
+        return sums, []
+    averaged = change_by_cloud(crystal, place, sites, covariance, sums)
+    sums = sums + averaged.change
+    change = averaged_power_tensors(pairs.after, covariance) - averaged_power_tensors(pairs.before, covariance)
+    np.add.at(sums, pairs.sites, change)
+    reach = averaged.reach.copy()
+    np.minimum.at(reach, pairs.sites, smeared_pair_tensors(pairs.after, covariance)[2])
+    reach = reach[sites]
+    if cloud_of(covariance).thin:
+        refuse_thin(Ordering(crystal, np.zeros((crystal.n_sites, 3))), sites, reach[None], ["the probe"])
+    return sums, list(dict.fromkeys(crystal.labels[site] for site in sites[reach < REACHED]))
+
+
+def _spread_notes(spread: float | FloatArray | None, reached: list[str]) -> list[str]:
+    if spread is None or not np.any(spread):
+        return []
+    return [
+        f"pair fields averaged over a Gaussian spread of {spread_words(spread)}: motion that is fast against the "
+        "linewidth; a slow one gives a distribution of widths instead",
+        *(reached_words("of the probe", label) for label in reached),
+    ]
 
 
 def _notes(

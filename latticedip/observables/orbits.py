@@ -26,7 +26,7 @@ from latticedip.errors import InputError
 from latticedip.ordering.domains import orthogonal
 from latticedip.ordering.model import Ordering, is_self_conjugate
 from latticedip.ordering.phases import PhaseSpace, nearly_commensurate, phase_space
-from latticedip.physics.contact import shell_neighbours
+from latticedip.physics.contact import carried_contacts, has_direction, shell_neighbours, turned_term
 from latticedip.physics.field import LocalField, local_field
 from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
@@ -123,14 +123,20 @@ class OrbitField:
 
 
 def orbit_field(
-    ordering: Ordering, probe: Probe, *, sample: Sample | None = None, equivalent: bool = True, tol: float = 1e-10
+    ordering: Ordering,
+    probe: Probe,
+    *,
+    moment_spread: Any = None,
+    sample: Sample | None = None,
+    equivalent: bool = True,
+    tol: float = 1e-10,
 ) -> OrbitField:
     """Fields at all positions equivalent to a probe under the space group of the non-magnetic structure.
 
     ordering: periodic in three directions; its non-magnetic structure is that of ``ordering.reference`` where there is
     one. probe: at a position or on a site (then every atom that is equivalent to one of that label). sample: None
-    means N = 0 and no applied field. equivalent: False takes the probe's own position or site alone. tol: as
-    `local_field`. What a probe has of tensors and vectors is turned with its position (`equivalent_probes`).
+    means N = 0 and no applied field. moment_spread, tol: as `local_field`. equivalent: False takes the probe's own
+    position or site alone. What a probe has of tensors and vectors is turned with its position (`equivalent_probes`).
 
     Raises what `local_field` raises, and InputError for a moment density where the orbit has several positions, or a
     contact tensor of a site that lacks its symmetry.
@@ -139,16 +145,17 @@ def orbit_field(
     probes, reached, count = _probes(home, probe, equivalent)
     terms = [found.contact for found in probes]
     probes = [dataclasses.replace(found, contact=()) for found in probes]
-    whole = local_field(ordering, probes, sample=sample, tol=tol)
+    whole = local_field(ordering, probes, moment_spread=moment_spread, sample=sample, tol=tol)
     chosen = _on_sites(home, whole, reached)
     places = whole.reference_points[chosen]
     k = ordering.k
-    waves = np.array([_wave(ordering, i, probes, whole, tol)[chosen] for i in range(len(k))])
+    waves = np.array([_wave(ordering, i, probes, whole, moment_spread, tol)[chosen] for i in range(len(k))])
     if probe.site is None:
         # Every probe gives the same number of rows.
         by_row = [terms[i * len(terms) // len(places)] for i in range(len(places))]
     else:
-        by_row = _site_terms(probe, home, places)
+        first = home.positions[home.find(probe.site)[0]]
+        by_row = carried_contacts(home, first, places, probe.contact, probe.name)
     contact, constant = _contact(ordering, probe.name, whole.points[chosen], by_row)
     waves = waves + contact
     still = np.all(k == np.round(k), axis=1)
@@ -210,7 +217,9 @@ def _on_sites(home: Crystal, whole: LocalField, reached: list[int]) -> np.ndarra
     return np.flatnonzero(gaps.min(axis=1) < SAME_POINT)
 
 
-def _wave(ordering: Ordering, i: int, probes: list[Probe], whole: LocalField, tol: float) -> ComplexArray:
+def _wave(
+    ordering: Ordering, i: int, probes: list[Probe], whole: LocalField, moment_spread: Any, tol: float
+) -> ComplexArray:
     """Shape (n, 3) complex in T. F_k of the dipolar field at one k, at all rows of the probes.
 
     The field is linear in the components: those turned by a quarter give its imaginary part in the home cell.
@@ -224,7 +233,7 @@ def _wave(ordering: Ordering, i: int, probes: list[Probe], whole: LocalField, to
             ordering.crystal, factor * ordering.components[i], ordering.k[i], ordering.name,
             reference=ordering.reference,
         )  # fmt: skip
-        out += unit * local_field(part, probes, tol=tol).dipolar
+        out += unit * local_field(part, probes, moment_spread=moment_spread, tol=tol).dipolar
     return out
 
 
@@ -292,14 +301,10 @@ def equivalent_probes(crystal: Crystal, probe: Probe) -> list[Probe]:
 def _has_direction(probe: Probe) -> bool:
     """True where something of the probe must be turned with its position."""
     return (
-        any(term.coupling_T_per_muB is not None and not _isotropic(term.coupling_T_per_muB) for term in probe.contact)
+        any(has_direction(term) for term in probe.contact)
         or (probe.spread is not None and np.ndim(probe.spread) == 2)
         or any(moved.vector_A is not None or moved.atom is not None for moved in probe.displaced)
     )
-
-
-def _isotropic(tensor: FloatArray) -> bool:
-    return bool(np.abs(tensor - tensor[0, 0] * np.eye(3)).max() <= 1e-12 * np.abs(tensor).max(initial=0.0))
 
 
 def _turned(
@@ -319,17 +324,11 @@ def _turned(
             site, cell = neighbour.atom
             changes["atom"] = _carried_atom(crystal, site, cell, rotation, translation)
         moved.append(dataclasses.replace(neighbour, **changes))
-    contact = tuple(_turned_term(term, turn) for term in probe.contact)
+    contact = tuple(turned_term(term, turn) for term in probe.contact)
     # Uncertainties are of the coordinates as given; the size of the field on an orbit needs none.
     return dataclasses.replace(
         probe, position=position, contact=contact, spread=spread, displaced=tuple(moved), position_su=None
     )
-
-
-def _turned_term(term: Contact, turn: FloatArray) -> Contact:
-    if term.coupling_T_per_muB is None or _isotropic(term.coupling_T_per_muB):
-        return term
-    return dataclasses.replace(term, coupling_T_per_muB=turn @ term.coupling_T_per_muB @ turn.T)
 
 
 def _carried_atom(
@@ -354,32 +353,3 @@ def _name_of(probe: Probe) -> FloatArray:
         parts += [moved.vector_A] if moved.vector_A is not None else []
         parts += [np.array([moved.atom[0], *moved.atom[1]], dtype=float)] if moved.atom is not None else []
     return np.concatenate([np.asarray(part, dtype=float) for part in parts])
-
-
-def _site_terms(probe: Probe, home: Crystal, places: FloatArray) -> list[tuple[Contact, ...]]:
-    """Contact terms at the atoms of a site, where they are stated for the first of them."""
-    assert probe.site is not None
-    first = home.positions[home.find(probe.site)[0]]
-    operations = operations_of(home)
-    images = operations.rotations @ first + operations.translations
-    found: list[tuple[Contact, ...]] = []
-    for place in places:
-        gaps = images - place
-        leads = np.linalg.norm((gaps - np.round(gaps)) @ home.cell, axis=1) < SAME_POSITION_A
-        terms = []
-        for term in probe.contact:
-            if term.coupling_T_per_muB is None or _isotropic(term.coupling_T_per_muB):
-                terms.append(term)
-                continue
-            turned = [_turned_term(term, orthogonal(home, rotation)) for rotation in operations.rotations[leads]]
-            scale = SAME_TENSOR * float(np.abs(term.coupling_T_per_muB).max())
-            if not turned or any(
-                np.abs(other.coupling_T_per_muB - turned[0].coupling_T_per_muB).max() > scale for other in turned
-            ):
-                raise InputError(
-                    f"{probe.name}: its contact tensor is stated for the first atom and does not have the symmetry of "
-                    "that site, so that the other atoms have none of their own. Symmetrize it, or give a number."
-                )
-            terms.append(turned[0])
-        found.append(tuple(terms))
-    return found

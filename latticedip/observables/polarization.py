@@ -6,14 +6,29 @@ that starts along p is
     P(t) = (d·b)(p·b) + [d·p − (d·b)(p·b)] cos ωt − d·(b × p) sin ωt
 
 averaged over all fields that occur. In a powder without applied field every direction of b is alike, and the signal
-along p is 1/3 + 2/3 cos ωt. Nuclear moments add a static random field, taken as Gaussian with the same width Δ/γ in
+along p is 1/3 + 2/3 cos ωt.
+
+In a powder in a field A along h, fixed in the laboratory, the whole internal field I (all but the applied one) turns
+with the grain and points everywhere alike. The cosine u between the two is uniform, B² = A² + I² + 2AIu, and round h
+every azimuth is alike. With c = h·b = (A + Iu)/B and s² = 1 − c² the averages over the azimuth are
+
+    (d·b)(p·b) → c² (d·h)(p·h) + (s²/2) [d·p − (d·h)(p·h)],    d·(b × p) → c d·(h × p)
+
+so that P = ⟨c² + s² cos ωt⟩ along the field and ⟨s²/2 + (1 − s²/2) cos ωt⟩ across it. What stays of the first is
+3/4 − 1/(4β²) + (β² − 1)²/(8β³) ln|(β + 1)/(β − 1)|, β = A/I (Pratt, J. Phys.: Condens. Matter 19, 456207 (2007)).
+The average over u is one over B, du/2 = B dB/(2AI), by Gauss and Legendre in panels short enough for the longest time.
+Where very many internal fields occur their densities over B, polynomials in B and I over BI, are added up first, from
+one edge |A − I| or A + I to the next. Both are right to 1e-9.
+
+Nuclear moments add a static random field, taken as Gaussian with the same width Δ/γ in
 every component: Kubo and Toyabe (1967) without a field, Hayano et al., Phys. Rev. B 20, 850 (1979) along a field B,
 Kornilov and Pomjakushin, Phys. Lett. A 153, 364 (1991) in a powder.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import dataclasses
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -21,9 +36,10 @@ import numpy as np
 from scipy.special import spherical_jn, wofz
 
 from latticedip.checks import FloatArray, as_float, as_floats, as_unit_vector, frozen
-from latticedip.errors import InputError
+from latticedip.errors import InputError, LimitError
+from latticedip.observables.distribution import Part
 from latticedip.observables.orbits import OrbitField
-from latticedip.observables.spectrum import Spectrum, free_turns, kept_samples
+from latticedip.observables.spectrum import Spectrum, field_parts, free_turns, kept_samples
 from latticedip.particles import particle_named
 
 #: Below this ratio of frequency and width the closed form along a field loses digits and is integrated instead.
@@ -40,13 +56,27 @@ GRID_ANGLE, GRID_POINTS = 0.25, 10
 MOST_WAITING = 2**20
 #: Fields times moments in time evaluated together.
 BLOCK = 2_000_000
+#: Nodes of a panel of sizes of the field in a powder, and the largest angle ωt by which its ends differ.
+PANEL_NODES, PANEL_ANGLE = 16, 16.0
+#: Part of the largest size of the field below which the panels of a powder are no longer halved: that share is 1e-16.
+SMALLEST_PANEL = 1e-8
+#: Fields of a powder beyond which the densities of many internal fields are added up first, and most that are taken.
+MANY_FIELDS, MOST_FIELDS = 2**20, 2**25
+#: Internal over applied field between which densities may be added up, and nodes and largest angle of a panel then.
+LEAST_RATIO, MOST_RATIO, SUM_NODES, SUM_ANGLE = 1e-4, 300.0, 8, 2.0
+#: What a report says of a powder in an applied field.
+TURNING = (
+    "polarization of a powder in an applied field: the whole internal field, with its Lorentz and demagnetizing parts, "
+    "turns with the grain; moments that an applied field has turned in the crystal turn along"
+)
 
 
 @dataclass(frozen=True, eq=False)
 class Polarization:
     """A polarization against time. time_us: Shape (n,) in µs. values: Shape (n,), 1 for a spin along the detector.
 
-    powder: True for a powder. initial, detector: Shape (3,) unit vectors, Cartesian; None in a powder.
+    powder: True for a powder. initial, detector: Shape (3,) unit vectors, Cartesian; None in a powder without applied
+    field.
     nuclear_width_per_us: Δ in 1/µs, 0 without nuclear moments. notes: sentences a report must repeat.
     """
 
@@ -65,33 +95,45 @@ def polarization(
     """Polarization against time in the fields of a spectrum.
 
     spectrum: its positions, cells and domains are averaged over; its own smearing is not used. time_us: Shape (n,) in
-    µs, not below zero. initial: for a crystal, Shape (3,) Cartesian, the direction the spin starts along. detector:
-    the direction it is observed along; None: the initial one. nuclear_width_per_us: Δ in 1/µs of a static Gaussian
-    random field.
+    µs, not below zero. initial: Shape (3,) Cartesian, the direction the spin starts along: for a crystal, and for a
+    powder in an applied field, where only the directions relative to that field count; None there: along the field.
+    detector: the direction it is observed along; None: the initial one. nuclear_width_per_us: Δ in 1/µs of a static
+    Gaussian random field, which is added to the field of every grain.
 
-    Raises InputError for a crystal without an initial direction, directions for a powder, a powder in an applied
-    field, or negative times and widths.
+    Raises InputError for a crystal without an initial direction, directions for a powder without an applied field, or
+    negative times and widths; LimitError where a powder in an applied field turns too often.
     """
     time = as_floats("time_us", time_us, (None,))
     if np.any(time < 0):
         raise InputError(f"time_us must not be below zero, got {float(time.min())!r}.")
     delta = as_float("nuclear_width_per_us", nuclear_width_per_us, low=0.0)
-    if spectrum.powder:
+    notes = spectrum.notes
+    if spectrum.powder and not np.any(spectrum.applied_T):
         if initial is not None or detector is not None:
             raise InputError("initial and detector are directions in a crystal; a powder has none. Leave them out.")
-        if np.any(spectrum.applied_T):
-            raise InputError(
-                "the polarization of a powder is that without an applied field. Set the applied field to zero, or ask "
-                "for a crystal."
-            )
         values = _powder(spectrum, time, delta)
-        return Polarization(frozen(time), frozen(values), True, None, None, delta, spectrum.notes)
-    if initial is None:
+        return Polarization(frozen(time), frozen(values), True, None, None, delta, notes)
+    if spectrum.powder:
+        start = as_unit_vector("initial", spectrum.applied_T if initial is None else initial)
+        notes = (*notes, TURNING)
+    elif initial is None:
         raise InputError("the polarization in a crystal needs the initial direction of the spin (Cartesian).")
-    start = as_unit_vector("initial", initial)
+    else:
+        start = as_unit_vector("initial", initial)
     seen = start if detector is None else as_unit_vector("detector", detector)
-    values = _crystal(spectrum, time, start, seen, delta)
-    return Polarization(frozen(time), frozen(values), False, frozen(start), frozen(seen), delta, spectrum.notes)
+    values = (_powder_in_field if spectrum.powder else _crystal)(spectrum, time, start, seen, delta)
+    return Polarization(frozen(time), frozen(values), spectrum.powder, frozen(start), frozen(seen), delta, notes)
+
+
+def direction_at(field: Any, angle_deg: float) -> FloatArray:
+    """Shape (3,) float. A unit vector at an angle in degrees, 0 to 180, from a field (3,), Cartesian.
+
+    Raises InputError for a zero field and an angle out of range.
+    """
+    along = as_unit_vector("field", field)
+    angle = np.radians(as_float("angle_deg", angle_deg, low=0.0, high=180.0))
+    across = np.cross(along, np.eye(3)[int(np.argmin(np.abs(along)))])
+    return np.asarray(np.cos(angle) * along + np.sin(angle) * across / np.linalg.norm(across))
 
 
 def kubo_toyabe(time_us: Any, width_per_us: float) -> FloatArray:
@@ -191,17 +233,136 @@ class _Lines:
 def _powder(spectrum: Spectrum, time: FloatArray, delta: float) -> FloatArray:
     gamma = 2 * np.pi * spectrum.MHz_per_T
     found = spectrum.distribution
-
-    def parts() -> Iterator[_Lines]:
-        for part, weight in zip(found.parts, found.weights, strict=True):
-            nodes = part.nodes(_phases_needed(gamma * part.edges[-1] * float(time.max(initial=0.0))))
-            yield _Lines(gamma * nodes, np.full((1, len(nodes)), weight / len(nodes)), np.zeros(len(nodes)))
-
-    lines = _gathered(parts(), time)
+    lines = _gathered(_sizes(zip(found.parts, found.weights, strict=True), gamma, time), time)
     total = np.zeros(len(time))
     for block in _blocks(len(lines.omega), len(time)):
         total += _powder_signal(time, lines.omega[block], delta) @ lines.even[0, block]
     return total
+
+
+def _sizes(parts: Iterable[tuple[Part, float]], gamma: float, time: FloatArray) -> Iterator[_Lines]:
+    """The sizes of fields that stand for parts of a distribution, as frequencies with one even weight."""
+    for part, weight in parts:
+        nodes = part.nodes(_phases_needed(gamma * part.edges[-1] * float(time.max(initial=0.0))))
+        yield _Lines(gamma * nodes, np.full((1, len(nodes)), weight / len(nodes)), np.zeros(len(nodes)))
+
+
+def _powder_in_field(
+    spectrum: Spectrum, time: FloatArray, start: FloatArray, seen: FloatArray, delta: float
+) -> FloatArray:
+    gamma = 2 * np.pi * spectrum.MHz_per_T
+    sign = particle_named(spectrum.probe.particle).gamma_sign
+    longest = float(time.max(initial=0.0))
+    applied = gamma * float(np.linalg.norm(spectrum.applied_T))
+    along = as_unit_vector("applied_T", spectrum.applied_T)
+    inside: list[tuple[Part, float]] = []
+    for orbit in spectrum.orbits:
+        alone = dataclasses.replace(orbit, steady=frozen(orbit.steady - orbit.applied), applied=frozen(np.zeros(3)))
+        found = field_parts(alone, powder=True, samples=spectrum.samples)
+        inside += [(part, weight / len(spectrum.orbits)) for part, weight in found]
+    # Averaged over the grains a signal is even in the internal field, and turns no faster with it than with time: a
+    # grid of internal fields stands for many as a grid of frequencies does.
+    internal = _gathered(_sizes(inside, gamma, time), time)
+    groups = _groups(internal, applied, longest)
+    both, dot = (start @ along) * (seen @ along), start @ seen
+    turning = -sign * along @ np.cross(start, seen)
+
+    def parts() -> Iterator[_Lines]:
+        for group in groups:
+            size, weight = internal.omega[group], internal.even[0, group]
+            one = len(size) == 1
+            omega, share, across, along_it = (
+                _grains(applied, float(size[0]), float(weight[0]), longest)
+                if one
+                else _summed_grains(applied, size, weight, longest)
+            )
+            even = (share - across) * both + 0.5 * across * (dot - both)
+            yield _Lines(omega, np.array([even, dot * share - even]), turning * along_it)
+
+    return _signal(_gathered(parts(), time), time, delta)
+
+
+def _groups(internal: _Lines, applied: float, longest: float) -> list[np.ndarray]:
+    """Indices of internal fields that are taken together: each alone, or where that is too much, by octaves."""
+    size = internal.omega
+    alone = PANEL_NODES * (1 + 2 * longest * np.minimum(applied, size) / PANEL_ANGLE)
+    groups = [np.array([i]) for i in range(len(size))]
+    fields = float(alone.sum())
+    if fields > MANY_FIELDS:
+        ratio = size / applied
+        summed = (ratio >= LEAST_RATIO) & (ratio <= MOST_RATIO)
+        octaves = np.floor(np.log2(ratio, out=np.zeros(len(size)), where=summed)).astype(int)
+        together = [np.flatnonzero(summed & (octaves == n)) for n in np.unique(octaves[summed])]
+        groups = [*(np.array([i]) for i in np.flatnonzero(~summed)), *together]
+        fields = float(alone[~summed].sum()) + sum(
+            SUM_NODES * (2 * len(some) + 2 * longest * (applied + float(size[some].max())) / SUM_ANGLE)
+            for some in together
+        )
+    if fields > MOST_FIELDS:
+        raise LimitError(
+            f"the polarization of this powder up to {longest:g} µs needs {fields:.2g} fields, more than "
+            f"{MOST_FIELDS:.2g}. Ask for a shorter time."
+        )
+    return groups
+
+
+def _panels(edges: FloatArray, speed: float, angle: float, nodes: int) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Shape (n, nodes) nodes and steps, and shape (n,) middles of panels between edges, none turning beyond an angle.
+
+    speed: by how much one turns per unit.
+    """
+    counts = np.maximum(1, np.ceil(speed * np.diff(edges) / angle)).astype(int)
+    width = np.repeat(np.diff(edges) / counts, counts)[:, None]
+    number = np.arange(len(width)) - np.repeat(np.cumsum(counts) - counts, counts)
+    first = np.repeat(edges[:-1], counts)[:, None] + number[:, None] * width
+    at, weight = np.polynomial.legendre.leggauss(nodes)
+    return first + width * (0.5 + 0.5 * at), 0.5 * width * weight, (first + 0.5 * width)[:, 0]
+
+
+def _grains(applied: float, internal: float, weight: float, longest: float) -> tuple[FloatArray, ...]:
+    """Shape (n,) each. Sizes B of the whole field that stand for all grains, their share, and it times s² and c.
+
+    All fields as frequencies in 1/µs. With M the larger and m the smaller field and B = |A − I| + my nothing cancels:
+    1 + u = y (2|A − I| + my)/(2M), 1 − u = (2 − y)(1 + my/(2M)) and du/2 = B dy/(2M). The integrand has a pole at
+    B = 0: no panel is longer than its distance from there, but for the first, which may hold a share of 1e-16.
+    """
+    gap, small, large = abs(applied - internal), min(applied, internal), max(applied, internal)
+    edges = [0.0]
+    if gap > 0 and small > 0:
+        y = max(gap, SMALLEST_PANEL * (gap + 2 * small)) / small
+        while y < 2.0:
+            edges.append(y)
+            y += y + gap / small
+    nodes, steps, _ = _panels(np.array([*edges, 2.0]), longest * small, PANEL_ANGLE, PANEL_NODES)
+    at, step = nodes.ravel(), weight * steps.ravel() / (2 * large)
+    total = gap + small * at
+    half = at * (2 * gap + small * at) / (2 * large)
+    sine2 = half * (2 - at) * (1 + small * at / (2 * large))
+    return total, total * step, internal**2 * sine2 / total * step, (applied + internal * (half - 1)) * step
+
+
+def _summed_grains(applied: float, internal: FloatArray, weight: FloatArray, longest: float) -> tuple[FloatArray, ...]:
+    """The same for many internal fields (n,) of similar sizes, with their weights.
+
+    In units of A the densities over B of the share and of it times c² and c are B/(2I), (B² + 1 − I²)²/(8BI) and
+    (B² + 1 − I²)/(4I) wherever |1 − B| < I < 1 + B, so that sums of w/I, wI and wI³ over these give them all.
+    """
+    order = np.argsort(internal)
+    ratio, share = internal[order] / applied, weight[order]
+    # Sums over all fields from one on; behind the last there is none.
+    sums = np.zeros((3, len(ratio) + 1))
+    sums[:, :-1] = np.cumsum((share * np.array([1 / ratio, ratio, ratio**3]))[:, ::-1], axis=1)[:, ::-1]
+    edges = np.unique(np.concatenate([np.abs(1 - ratio), 1 + ratio]))
+    low, high = max(float(edges[0]), SMALLEST_PANEL * float(edges[-1])), float(edges[-1])
+    edges = np.union1d(edges, low * 2.0 ** np.arange(int(np.log2(high / low)) + 1))
+    nodes, steps, middle = _panels(edges, longest * applied, SUM_ANGLE, SUM_NODES)
+    first, last = np.searchsorted(ratio, np.abs(1 - middle)), np.searchsorted(ratio, 1 + middle)
+    inverse, plain, cube = (total[:, None] for total in sums[:, first] - sums[:, last])
+    square = nodes**2 + 1
+    whole = nodes * inverse / 2
+    along = (square**2 * inverse - 2 * square * plain + cube) / (8 * nodes)
+    cosine = (square * inverse - plain) / 4
+    return applied * nodes.ravel(), *((density * steps).ravel() for density in (whole, whole - along, cosine))
 
 
 def _crystal(spectrum: Spectrum, time: FloatArray, start: FloatArray, seen: FloatArray, delta: float) -> FloatArray:
@@ -222,7 +383,11 @@ def _crystal(spectrum: Spectrum, time: FloatArray, start: FloatArray, seen: Floa
             share = 1 / (n_positions * len(vectors))
             yield _Lines(gamma * size[:, 0], share * np.array([both, seen @ start - both]), share * odd)
 
-    lines = _gathered(parts(), time)
+    return _signal(_gathered(parts(), time), time, delta)
+
+
+def _signal(lines: _Lines, time: FloatArray, delta: float) -> FloatArray:
+    """Shape (n_t,). The signal of fields with weights of what lies along and across them, and of the odd part."""
     total = np.zeros(len(time))
     for block in _blocks(len(lines.omega), len(time)):
         omega = lines.omega[block]

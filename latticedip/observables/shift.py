@@ -19,6 +19,7 @@ occupancies and the shape of the sample count as exact.
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
@@ -249,13 +250,14 @@ def paramagnetic_shift(
     spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
     position_su: Any = None,
+    moment_spread: Any = None,
     tol: float = 1e-10,
 ) -> Shift:
     """Shift of a probe by the moments that an applied field induces; sign and reference as the module says.
 
-    crystal, position, sample, contact, spread, displaced, position_su, tol: as `coupling_tensor`; the applied field of
-    the sample plays no part. susceptibility: for every magnetic site label or element its Susceptibility.
-    temperature_K: where one of them is a table.
+    crystal, position, sample, contact, spread, displaced, position_su, moment_spread, tol: as `coupling_tensor`; the
+    applied field of the sample plays no part. susceptibility: for every magnetic site label or element its
+    Susceptibility. temperature_K: where one of them is a table.
 
     Raises InputError as `coupling_tensor` and `Susceptibility` do, and where two names mean the same atom.
     """
@@ -269,6 +271,7 @@ def paramagnetic_shift(
         spread=spread,
         displaced=displaced,
         position_su=position_su,
+        moment_spread=moment_spread,
         tol=tol,
     )
     return found
@@ -285,12 +288,13 @@ def shift_curve(
     spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
     position_su: Any = None,
+    moment_spread: Any = None,
     tol: float = 1e-10,
 ) -> ShiftCurve:
     """Shifts of a probe over temperatures.
 
-    crystal, position, susceptibility, sample, contact, spread, displaced, position_su, tol: as `paramagnetic_shift`.
-    temperatures_K: Shape (n,); None: those of the first table.
+    crystal, position, susceptibility, sample, contact, spread, displaced, position_su, moment_spread, tol: as
+    `paramagnetic_shift`. temperatures_K: Shape (n,); None: those of the first table.
 
     Raises InputError as `paramagnetic_shift`, and where no susceptibility is a table.
     """
@@ -308,6 +312,7 @@ def shift_curve(
         spread=spread,
         displaced=displaced,
         position_su=position_su,
+        moment_spread=moment_spread,
         tol=tol,
     )
     return ShiftCurve(tuple(found))
@@ -324,6 +329,7 @@ def shifts_at(
     spread: Any = None,
     displaced: Displaced | Iterable[Displaced] = (),
     position_su: Any = None,
+    moment_spread: Any = None,
     tol: float = 1e-10,
 ) -> list[Shift]:
     """Shifts of a probe at some temperatures (None where no susceptibility is a table), from one set of sums.
@@ -339,9 +345,27 @@ def shifts_at(
         spread=spread,
         displaced=displaced,
         position_su=position_su,
+        moment_spread=moment_spread,
         tol=tol,
     )
     return [_shift(crystal, parts, susceptibility, temperature, sample) for temperature in temperatures_K]
+
+
+def averaged_shift(shifts: Sequence[Shift], weights: FloatArray) -> Shift:
+    """Mean of the shifts at several positions, that of a probe that moves fast between them.
+
+    weights: Shape (n,) float, adding up to 1. shifts: at one temperature and of one susceptibility, which with the
+    sites of the ions bring their uncertainties. The position is that of the first.
+    """
+    shares = np.asarray(weights, dtype=float)
+    return dataclasses.replace(
+        shifts[0],
+        site="",
+        dipolar=frozen(np.einsum("n,nab->ab", shares, [one.dipolar for one in shifts])),
+        contact=frozen(np.einsum("n,nab->ab", shares, [one.contact for one in shifts])),
+        steps=frozen(np.einsum("n,nmab->mab", shares, [one.steps for one in shifts])),
+        notes=tuple(dict.fromkeys(note for one in shifts for note in one.notes)),
+    )
 
 
 def _checked(chi: Susceptibility) -> Susceptibility:

@@ -124,6 +124,7 @@ def spectrum(
     ordering: Ordering,
     probe: Probe,
     *,
+    moment_spread: Any = None,
     sample: Sample | None = None,
     applied_T: Any = None,
     powder: bool = False,
@@ -137,7 +138,7 @@ def spectrum(
 ) -> Spectrum:
     """Distribution of |B| and of frequency at a probe, over all equivalent positions and all cells.
 
-    ordering, probe, equivalent, tol: as `orbit_field`. sample: None means N = 0 and no applied field.
+    ordering, probe, moment_spread, equivalent, tol: as `orbit_field`. sample: None means N = 0 and no applied field.
     applied_T: Shape (3,) in T, Cartesian, in place of the sample's applied field.
     powder: grains in all directions alike; only the size of the applied field counts then, and the demagnetizing
     tensor is that of every grain. average_domains: average over all domains of the ordering, equally large.
@@ -152,7 +153,8 @@ def spectrum(
         raise InputError(f"samples must be a power of two of at least 2, got {samples!r}.")
     found = domains(ordering) if average_domains else (Domain(ordering, 1, "as given", "x,y,z"),)
     orbits = tuple(
-        orbit_field(domain.ordering, probe, sample=sample, equivalent=equivalent, tol=tol) for domain in found
+        orbit_field(domain.ordering, probe, moment_spread=moment_spread, sample=sample, equivalent=equivalent, tol=tol)
+        for domain in found
     )
     if applied_T is not None:
         applied = as_floats("applied_T", applied_T, (3,))

@@ -34,8 +34,9 @@ MUON_CONVENTION = (
     "a direction, of the two components across it, which a polarization along it feels."
 )
 CAVEAT = (
-    "Static nuclear dipoles only, in a field that is stronger than the quadrupole splittings. Left out: motion, "
-    "moments and shielding of electrons, quadrupole effects, and the spread of the applied field."
+    "Static nuclear dipoles only, in a field that is stronger than the quadrupole splittings. Left out: motion but for "
+    "a spread that a probe states, moments and shielding of electrons, quadrupole effects, and the spread of the "
+    "applied field."
 )
 
 
@@ -51,7 +52,8 @@ def linewidth_document(
     """The document of `linewidth`: one row per point of a probe, with what each isotope adds.
 
     direction: of the strong field, a crystal direction; None: powder. nuclei: isotopes or elements that count; none:
-    all. like: as `linewidth`. probes: the names that were asked for; none: all. all_equivalent: as `points_of`.
+    all. like: as `linewidth`. probes: the names that were asked for; none: all. all_equivalent: as `points_of`. The
+    spread of a probe counts as motion that is fast against the linewidth.
 
     Raises InputError for an unknown nucleus or direction, and what `linewidth` raises.
     """
@@ -68,10 +70,10 @@ def linewidth_document(
             abundances=study.abundances,
             displaced=point.displaced,
             like=like,
+            spread=point.spread,
         )
         rows.append(_row(point, found))
-        sharp = "its spread is not taken into account here, the place of the probe is taken as sharp"
-        notes += point.notes(study.crystal, found.notes if point.spread is None else [*found.notes, sharp])
+        notes += point.notes(study.crystal, found.notes)
     _group(rows)
     muon = any(row["zero_field_width_per_us"] is not None for row in rows)
     stated = ", ".join(f"{name} {share:g}" for name, share in study.abundances.items())
