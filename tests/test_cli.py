@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import csv
 import hashlib
-import json
 import os
 import subprocess
 import sys
@@ -12,31 +11,15 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from click.testing import CliRunner, Result
 
 import latticedip
-from latticedip.cli.main import COMMANDS, main
+from latticedip.cli.main import COMMANDS
 from latticedip.study.rankings import rank_table
 from latticedip.units import K_PER_EV
-
-P1 = """data_cube
-_cell_length_a {a}
-_cell_length_b {a}
-_cell_length_c {a}
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P 1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-"""
+from tests.commands import Command, box_cif, enter
 
 # Simple cubic, 2 µB, 4 Å.
-CUBE = P1.format(a=4.0) + "Mn1 Mn 0 0 0\n"
+CUBE = box_cif("Mn1 Mn 0 0 0\n", 4.0)
 STUDY = """title = "A cube"
 [crystal]
 file = "cube.cif"
@@ -66,37 +49,13 @@ site = "Mn1"
 RODS = -2.6767886844
 #: µ0 µB²/(4π Å³) in µeV.
 UEV = 53.68151
+command = Command()
+run, document, refused = command.run, command.document, command.refused
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "cube.cif").write_text(CUBE, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, list(arguments))
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
-
-
-def refused(*arguments: str) -> str:
-    """The message of a refusal: exit status 2, nothing on stdout."""
-    result = run(*arguments)
-    assert result.exit_code == 2
-    assert result.stdout == ""
-    return result.stderr
+    return enter(tmp_path, monkeypatch, {"cube.cif": CUBE, "study.toml": STUDY})
 
 
 # --- rank -----------------------------------------------------------------------------------------------
@@ -332,6 +291,10 @@ def test_field_axes_and_units(folder: Path, axes: str, unit: str) -> None:
         assert row[f"field_size_{unit}"] == pytest.approx(field, rel=1e-6)
         assert row["field_theta_deg"] == pytest.approx(0, abs=1e-6)
         assert row["lorentz_theta_deg"] is None
+        # The gradient has one size, whatever the axes.
+        assert not [key for key in row if "size_size" in key]
+        assert row[f"gradient_of_size_length_{unit}_per_A"] == pytest.approx(0, abs=1e-6 * field)
+        assert {"gradient_of_size_theta_deg", "gradient_of_size_phi_deg"} <= set(row)
     else:
         key = f"field_{unit}" if axes == "cartesian" else f"field_abc_{unit}"
         assert row[key] == pytest.approx([0, 0, field], rel=1e-6, abs=1e-8 * field)

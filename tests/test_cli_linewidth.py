@@ -4,36 +4,19 @@ from __future__ import annotations
 
 import csv
 import dataclasses
-import json
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner, Result
 from scipy import constants
 
-from latticedip import Displaced, Probe, read_study
-from latticedip.cli.main import main
+from latticedip import Displaced, Probe, linewidth, read_study
 from latticedip.study import tasks
+from tests.commands import Command, box_cif, enter
 
 CELL_A = 3.0
-CUBE = f"""data_cube
-_cell_length_a {CELL_A}
-_cell_length_b {CELL_A}
-_cell_length_c {CELL_A}
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P 1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-H1 H 0 0 0
-"""
+CUBE = box_cif("H1 H 0 0 0\n", CELL_A)
 STUDY = """title = "Protons"
 [crystal]
 file = "cube.cif"
@@ -47,32 +30,17 @@ site = "H1"
 """
 #: No isotope but the proton, so that one sum gives everything.
 PURE = "[abundances]\n1H = 1.0\n"
+command = Command(("linewidth", "study.toml"))
+run, document = command.run, command.document
 
 
 @pytest.fixture(autouse=True)
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "cube.cif").write_text(CUBE, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
+    return enter(tmp_path, monkeypatch, {"cube.cif": CUBE})
 
 
 def write(*parts: str) -> None:
     Path("study.toml").write_text(STUDY + "".join(parts), encoding="utf-8")
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, ["linewidth", "study.toml", *arguments])
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
 
 
 def pair_sums(offset: float, direction: tuple[float, float, float] | None) -> float:
@@ -150,10 +118,29 @@ def test_displaced_neighbours_count() -> None:
     assert "muon: displaced: atoms of shell 1: distance times 1.1" in doc["notes"]
 
 
-def test_a_spread_is_said_to_be_left_out() -> None:
-    write(PURE)
-    study = dataclasses.replace(read_study("study.toml"), probes=(Probe([0.5, 0.5, 0.5], name="muon", spread=0.1),))
-    assert any("its spread is not taken into account here" in note for note in tasks.linewidth(study)["notes"])
+@pytest.mark.parametrize(
+    ("key", "spread", "words"),
+    [
+        ("spread_A = 0.7", 0.7, "0.7 Å rms along each axis"),
+        ("covariance_A2 = [[0.01, 0, 0], [0, 0.02, 0], [0, 0, 0.05]]", np.diag([0.01, 0.02, 0.05]),
+         "0.1, 0.1414, 0.2236 Å rms along its principal axes"),
+    ],
+)  # fmt: skip
+def test_a_spread_of_the_probe_counts(key: str, spread: Any, words: str) -> None:
+    text = STUDY.replace("position = [0.5, 0.5, 0.5]\n", f"position = [0.5, 0.45, 0.3]\n{key}\n")
+    Path("study.toml").write_text(text + PURE, encoding="utf-8")
+    doc = document("--direction", "c", "--probe", "muon")
+    crystal = read_study("study.toml").crystal
+    options = {"particle": "muon", "direction": [0, 0, 1], "abundances": {"1H": 1.0}}
+    expected = linewidth(crystal, [0.5, 0.45, 0.3], spread=spread, **options)
+    assert doc["rows"][0]["second_moment_T2"] == pytest.approx(expected.second_moment_T2, rel=1e-12)
+    sharp = linewidth(crystal, [0.5, 0.45, 0.3], **options)
+    assert abs(expected.second_moment_T2 / sharp.second_moment_T2 - 1) > 1e-3
+    assert (
+        f"muon: pair fields averaged over a Gaussian spread of {words}: motion that is fast against the linewidth; a "
+        "slow one gives a distribution of widths instead"
+    ) in doc["notes"]
+    assert any("motion but for a spread that a probe states" in note for note in doc["notes"])
 
 
 def test_on_screen_and_csv() -> None:

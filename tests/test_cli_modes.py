@@ -3,33 +3,15 @@
 from __future__ import annotations
 
 import csv
-import json
 from pathlib import Path
-from typing import Any
 
 import pytest
-from click.testing import CliRunner, Result
 
-from latticedip.cli.main import main
 from latticedip.units import DIPOLE_EV_A3_PER_MUB2, K_PER_EV
+from tests.commands import Command, box_cif, enter
 
 CELL_A = 4.0
-CUBE = f"""data_cube
-_cell_length_a {CELL_A}
-_cell_length_b {CELL_A}
-_cell_length_c {CELL_A}
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P 1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 Mn 0 0 0
-"""
+CUBE = box_cif("Mn1 Mn 0 0 0\n", CELL_A)
 STUDY = """title = "A cube"
 [crystal]
 file = "cube.cif"
@@ -39,29 +21,13 @@ Mn1 = 2.0
 #: Energy per dipole in m²/a³ of the simple cubic array, k = (½,½,0): Luttinger and Tisza, Phys. Rev. 70, 954 (1946).
 RODS = -2.6767886844
 UNIT_UEV = DIPOLE_EV_A3_PER_MUB2 * 4 / CELL_A**3 * 1e6
+command = Command(("modes", "study.toml"), env={"COLUMNS": "80"})
+run, document = command.run, command.document
 
 
 @pytest.fixture(autouse=True)
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "cube.cif").write_text(CUBE, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, ["modes", "study.toml", *arguments], env={"COLUMNS": "80"})
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
+    return enter(tmp_path, monkeypatch, {"cube.cif": CUBE, "study.toml": STUDY})
 
 
 def test_document() -> None:
@@ -159,10 +125,7 @@ def test_plot() -> None:
 )
 def test_refusals(study: str, arguments: list[str], message: str) -> None:
     Path("study.toml").write_text(study, encoding="utf-8")
-    result = run(*arguments)
-    assert result.exit_code == 2
-    assert result.stdout == ""
-    assert result.stderr.endswith(message)
+    assert command.refused(*arguments).endswith(message)
 
 
 def test_a_label_of_size_zero_is_left_out() -> None:

@@ -6,35 +6,17 @@ import csv
 import json
 import tomllib
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner, Result
 
 from latticedip import Crystal, dipolar_energy, propose, read_ordering, read_study
-from latticedip.cli.main import main
 from latticedip.study.written import toml_value
 from latticedip.units import DIPOLE_EV_A3_PER_MUB2
+from tests.commands import Command, box_cif, enter
 
 CELL_A = 4.0
-CUBE = f"""data_cube
-_cell_length_a {CELL_A}
-_cell_length_b {CELL_A}
-_cell_length_c {CELL_A}
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P 1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 Mn 0 0 0
-O1 O 0.5 0.5 0.5
-"""
+CUBE = box_cif("Mn1 Mn 0 0 0\nO1 O 0.5 0.5 0.5\n", CELL_A)
 STUDY = """title = "A \\"cube\\""
 [crystal]
 file = "cube.cif"
@@ -51,29 +33,13 @@ axes = ["a", "b"]
 #: Luttinger and Tisza, Phys. Rev. 70, 954 (1946).
 RODS = -2.6767886844
 UNIT_UEV = DIPOLE_EV_A3_PER_MUB2 * 4 / CELL_A**3 * 1e6
+command = Command(("propose", "study.toml"), env={"COLUMNS": "80"})
+run, document = command.run, command.document
 
 
 @pytest.fixture(autouse=True)
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "cube.cif").write_text(CUBE, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, ["propose", "study.toml", *arguments], env={"COLUMNS": "80"})
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
+    return enter(tmp_path, monkeypatch, {"cube.cif": CUBE, "study.toml": STUDY})
 
 
 def test_it_finds_the_rods() -> None:
@@ -241,10 +207,7 @@ def test_csv() -> None:
 )
 def test_refusals(study: str, arguments: list[str], message: str) -> None:
     Path("study.toml").write_text(study, encoding="utf-8")
-    result = run(*arguments)
-    assert result.exit_code == 2
-    assert result.stdout == ""
-    assert result.stderr.endswith(message)
+    assert command.refused(*arguments).endswith(message)
 
 
 def test_values_are_written_as_toml() -> None:

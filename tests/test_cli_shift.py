@@ -3,38 +3,17 @@
 from __future__ import annotations
 
 import csv
-import json
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner, Result
 from scipy import constants
 
-from latticedip.cli.main import main
 from latticedip.report.su import format_su
+from tests.commands import Command, box_cif, enter
 
 CELL_A = 4.0
-CUBE = f"""data_cube
-_cell_length_a {CELL_A}
-_cell_length_b {CELL_A}
-_cell_length_c {CELL_A}
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P 1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 Mn 0 0 0
-F1 F 0.5 0 0
-F2 F 0 0.5 0
-F3 F 0 0 0.5
-"""
+CUBE = box_cif("Mn1 Mn 0 0 0\nF1 F 0.5 0 0\nF2 F 0 0.5 0\nF3 F 0 0 0.5\n", CELL_A)
 STUDY = """title = "A cube"
 [crystal]
 file = "cube.cif"
@@ -57,38 +36,17 @@ MUB = constants.value("Bohr magneton")
 MAGNETIZATION_T = constants.mu_0 * MUB / (CELL_A * 1e-10) ** 3
 #: 0.01 cm³/mol: a mole of ions has 0.01 emu = 1e-5 A m² in a field of 1 Oe = 1e-4 T.
 INDUCED_MUB_PER_T = 1e-5 / 1e-4 / (constants.N_A * MUB)
+command = Command(("shift", "study.toml"))
+run, document, refused = command.run, command.document, command.refused
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "cube.cif").write_text(CUBE, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
+    return enter(tmp_path, monkeypatch, {"cube.cif": CUBE})
 
 
 def write(*parts: str) -> None:
     Path("study.toml").write_text(STUDY + "".join(parts), encoding="utf-8")
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, ["shift", "study.toml", *arguments])
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
-
-
-def refused(*arguments: str) -> str:
-    result = run(*arguments)
-    assert (result.exit_code, result.stdout) == (2, "")
-    return result.stderr
 
 
 def sphere_sum(offset: tuple[float, float, float]) -> np.ndarray:

@@ -2,35 +2,30 @@
 
 from __future__ import annotations
 
+import json
 import os
 import subprocess
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner, Result
 
-from latticedip.cli.main import main
 from latticedip.errors import InputError
 from latticedip.study import tasks
 from latticedip.study.drawings import drawing_of_study, view_of
 from latticedip.study.rank_options import RankOptions
 from latticedip.study.schema import Study, read_study
+from latticedip.study.spectra import SpectrumOptions
+from tests.commands import LAYER_XYZ, Command, enter
 
 pytest.importorskip("matplotlib")
 
 from latticedip.report import plots
 from latticedip.report.plots import curves, ordering, rank, spectrum, style
 
-CRYSTAL = """3
-Lattice="4.2 0 0 0 4.2 0 0 0 5.1" Properties=species:S:1:pos:R:3 pbc="T T T"
-Mn 0 0 0
-F 2.1 0 1.1
-F 0 2.1 1.1
-"""
 STUDY = """title = "Spiral <or> $wave$?"
 [crystal]
 file = "layer.xyz"
@@ -64,26 +59,17 @@ site = "F"
 [susceptibility]
 Mn = { chi = [0.02, 0.015, 0.01], unit = "cm3/mol", temperatures_K = [50, 70, 100] }
 """
+run = Command().run
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "layer.xyz").write_text(CRYSTAL, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
+    return enter(tmp_path, monkeypatch, {"layer.xyz": LAYER_XYZ, "study.toml": STUDY})
 
 
 @pytest.fixture
 def study(folder: Path) -> Study:
     return read_study(folder / "study.toml")
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, list(arguments))
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
 
 
 @pytest.fixture(scope="module")
@@ -94,7 +80,7 @@ def figures(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Any]:
     from latticedip.study.spectra import SpectrumOptions
 
     where = tmp_path_factory.mktemp("figures")
-    (where / "layer.xyz").write_text(CRYSTAL, encoding="utf-8")
+    (where / "layer.xyz").write_text(LAYER_XYZ, encoding="utf-8")
     (where / "study.toml").write_text(STUDY, encoding="utf-8")
     study = read_study(where / "study.toml")
     one = SpectrumOptions(powder=True, time_us=0.5, bins=20)
@@ -113,6 +99,16 @@ def figures(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Any]:
         for figure in made.values():
             figure.draw_without_rendering()
     return made
+
+
+def laid_out(make: Callable[[], Any]) -> Any:
+    """A figure in the style of all of them, its parts where they end up."""
+    from matplotlib import rc_context
+
+    with rc_context(style.STYLE):
+        figure = make()
+        figure.draw_without_rendering()
+    return figure
 
 
 def texts(figure: Any) -> Iterator[Any]:
@@ -165,13 +161,30 @@ def test_a_view_needs_a_picture() -> None:
     assert result.stderr.endswith("Error: --view goes with --plot.\n")
 
 
+@pytest.mark.usefixtures("folder")
+def test_some_orderings_and_probes_are_shown_and_drawn() -> None:
+    chosen = ("--ordering", "helix", "--probe", "muon A")
+    result = run("show", "study.toml", *chosen, "--plot", "x.svg", "--json")
+    assert result.exit_code == 0
+    document = json.loads(result.stdout)
+    assert document["inputs"]["options"] == {"orderings": ["helix"], "probes": ["muon A"]}
+    assert [entry["ordering"] for entry in document["orderings"]] == ["helix"]
+    assert [probe["probe"] for probe in document["probes"]] == ["muon A"]
+    drawn = tasks.drawing(Path("study.toml"), orderings=["helix"], probes=["muon A"])
+    assert [entry["ordering"] for entry in drawn["orderings"]] == ["helix"]
+    assert {probe["probe"] for probe in drawn["orderings"][0]["probes"]} == {"muon A"}
+    result = run("show", "layer.xyz", "--probe", "muon A")
+    assert result.exit_code == 2
+    assert result.stderr.endswith("Error: --ordering and --probe go with a study.\n")
+
+
 def test_an_input_is_never_drawn_over(folder: Path) -> None:
     os.link(folder / "layer.xyz", folder / "layer.png")
-    for command in ("rank", "field", "show"):
+    for command in ("rank", "field", "show", "modes", "directions", "shift", "spectrum"):
         result = run(command, "study.toml", "--plot", "layer.png")
         assert result.exit_code == 2
         assert result.stderr == "Error: 'layer.png' is read here (as the crystal). Write to another file.\n"
-    assert (folder / "layer.xyz").read_text(encoding="utf-8") == CRYSTAL
+    assert (folder / "layer.xyz").read_text(encoding="utf-8") == LAYER_XYZ
 
 
 @pytest.mark.parametrize("command", ["rank", "field", "show"])
@@ -296,6 +309,22 @@ def test_neighbouring_ties_are_bands_of_their_own() -> None:
     assert list(rank.tie_bands([row(1, False)])) == []
 
 
+def test_long_names_make_room_for_themselves(study: Study) -> None:
+    document = tasks.rank(study)
+    name = "a pattern with moments along the longest axis and a propagation vector at the edge of the zone, number"
+    long = {**document, "rows": [{**row, "ordering": f"{name} {i}"} for i, row in enumerate(document["rows"])]}
+    fields = tasks.field(study)
+    named = [{**entry, "ordering": f"{name} {i}"} for i, entry in enumerate(fields["orderings"])]
+    title = "A title that is far too long for one line of a picture, so that it goes over several of them"
+    for make, shown in ((plots.rank_figure, long), (plots.field_figure, {**fields, "orderings": named})):
+        figure = laid_out(lambda make=make, shown=shown: make({**shown, "title": title}))
+        boxes = [label.get_window_extent() for label in figure.axes[0].get_yticklabels()]
+        assert len(boxes) == 4
+        assert not any(a.overlaps(b) for i, a in enumerate(boxes) for b in boxes[i + 1 :])
+        assert all(item.get_window_extent().x0 >= 0 for item in texts(figure))
+    assert style.in_lines("one two three four five", 6) == "one\ntwo\nthree\nfour …"
+
+
 # --- fields ---------------------------------------------------------------------------------------------
 
 
@@ -313,6 +342,45 @@ def test_fields_are_dots_with_the_number_of_points(study: Study) -> None:
     counts = {text.xy[1]: text.get_text() for text in second.texts}
     assert counts[2] == "× 2"
     assert 0 not in counts
+
+
+# --- spectra --------------------------------------------------------------------------------------------
+
+
+def test_no_field_is_drawn_at_zero_on_the_scale_of_the_others(study: Study) -> None:
+    document = tasks.spectrum(study, SpectrumOptions(), orderings=["ferromagnet"])
+    (entry,) = document["orderings"]
+    line = {**entry["spectra"][0]["lines"][0], "field_T": 1e-17, "share": 1.0}
+    entry["spectra"][0] = {**entry["spectra"][0], "lines": [line]}
+    largest = max(line["field_T"] for found in entry["spectra"] for line in found["lines"])
+    panel = spectrum.spectrum_figure(document).axes[0]
+    assert [item.get_text() for item in panel.texts] == ["0 T"]
+    assert panel.get_xlim() == pytest.approx((-0.0216 * largest, 1.08 * largest))
+    assert list(panel.lines[0].get_xdata()) == [0.0]
+    assert max(panel.get_yticks()) <= 1.0
+
+
+def test_labels_of_close_lines_stand_above_each_other(study: Study) -> None:
+    document = tasks.spectrum(study, SpectrumOptions(), orderings=["ferromagnet"], probes=["muon A"])
+    found = document["orderings"][0]["spectra"][0]
+    line = found["lines"][0]
+    found["lines"] = [{**line, "field_T": x, "share": 0.25} for x in (0.1, 0.5, 0.52, 0.54)]
+    figure = laid_out(lambda: spectrum.spectrum_figure(document))
+    boxes = [item.get_window_extent() for item in figure.axes[0].texts]
+    assert len(boxes) == 4
+    assert not any(a.overlaps(b) for i, a in enumerate(boxes) for b in boxes[i + 1 :])
+
+
+def test_many_spectra_stand_in_two_columns(study: Study) -> None:
+    document = tasks.spectrum(study, SpectrumOptions(bins=20))
+    assert sum(len(entry["spectra"]) for entry in document["orderings"]) == 8
+    figure = spectrum.spectrum_figure(document)
+    places = [panel.get_subplotspec() for panel in figure.axes if panel.get_subplotspec() is not None]
+    assert {(place.get_gridspec().nrows, place.get_gridspec().ncols) for place in places} == {(4, 2)}
+    titles = [panel.get_title("left").replace("\n", " ") for panel in figure.axes if panel.get_title("left")]
+    # The parts of a k stay on one line.
+    blank = "\N{NO-BREAK SPACE}"
+    assert titles[0] == "muon A: stripes along a, moments along b, " + "k = (1/2, 0, 0)".replace(" ", blank)
 
 
 # --- drawings -------------------------------------------------------------------------------------------
@@ -348,6 +416,26 @@ def test_arrows_are_projected_moments_and_fields(study: Study) -> None:
     assert "moment (longest: 2 µB)" in words
     assert f"field (longest: {scale:.4g} T)" in words
     assert "Spiral <or> \\$wave\\$?\nseen from [1 0 0] (components along a, b, c)" in words
+
+
+def test_long_names_of_probes_stand_in_the_legend(study: Study) -> None:
+    document = drawing_of_study(study)
+    for entry in document["orderings"]:
+        for probe in entry["probes"]:
+            probe["probe"] = probe["probe"].replace("muon A", "muon in the channel along the longest axis of the cell")
+    figure = laid_out(lambda: plots.orderings_figure(document))
+    for panel in figure.axes:
+        words = [item.get_text() for item in panel.texts]
+        assert words.count("1") == words.count("2") == 1
+        assert not any("muon" in word for word in words)
+        assert panel.get_window_extent().width > 0.2 * figure.bbox.width
+    labels = [item.get_text() for item in figure.legends[0].get_texts()]
+    assert labels[-2:] == ["muon in the channel along the longest axis …", r"\$19F"]
+
+
+def test_a_wave_is_drawn_over_few_cells(study: Study) -> None:
+    entries = {entry["ordering"]: entry for entry in drawing_of_study(study)["orderings"]}
+    assert entries["helix"]["cells"] == [[0, 0, 0], [0, 0, 1], [0, 0, 2], [0, 0, 3]]
 
 
 def test_moments_along_the_line_of_sight_are_rings(study: Study) -> None:

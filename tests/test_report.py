@@ -13,20 +13,16 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from click.testing import CliRunner, Result
 
-from latticedip.cli.main import main
-from latticedip.report.html import HtmlSetter, escaped, html_table, inline_svg, report_html, set_as_html
+from latticedip.errors import InputError
+from latticedip.report.figures import inline_svg
+from latticedip.report.html import HtmlSetter, escaped, html_table, report_html, set_as_html
 from latticedip.report.tables import Column, bullets, heading, pairs, paragraph, set_by, table
 from latticedip.study import tasks
-from latticedip.study.reports import ReportOptions, report_document
+from latticedip.study.reports import ReportOptions, report_document, shown_time
+from latticedip.study.spectra import SpectrumOptions
+from tests.commands import LAYER_XYZ, Command, enter
 
-CRYSTAL = """3
-Lattice="4.2 0 0 0 4.2 0 0 0 5.1" Properties=species:S:1:pos:R:3 pbc="T T T"
-Mn 0 0 0
-F 2.1 0 1.1
-F 0 2.1 1.1
-"""
 TITLE = "Layers & <script>alert(1)</script> \\u0022quoted\\u0022"
 STUDY = f"""title = "{TITLE}"
 [crystal]
@@ -55,21 +51,12 @@ VOID = {"meta", "br", "use", "path", "rect"}
 CHROMIUM = next(
     (found for found in map(shutil.which, ("chromium", "chromium-browser", "google-chrome")) if found), None
 )
+run = Command(("report",)).run
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "layer.xyz").write_text(CRYSTAL, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, ["report", *arguments])
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
+    return enter(tmp_path, monkeypatch, {"layer.xyz": LAYER_XYZ, "study.toml": STUDY})
 
 
 class Page(HTMLParser):
@@ -104,14 +91,24 @@ class Page(HTMLParser):
         return " ".join(" ".join(self.text).split())
 
 
-@pytest.fixture
-def page(folder: Path) -> Page:
+@pytest.fixture(scope="module")
+def written(tmp_path_factory: pytest.TempPathFactory) -> str:
+    """The page of the study, made once."""
     pytest.importorskip("matplotlib")
-    result = run("study.toml", "-o", "report.html")
+    where = tmp_path_factory.mktemp("page")
+    with pytest.MonkeyPatch.context() as patch:
+        enter(where, patch, {"layer.xyz": LAYER_XYZ, "study.toml": STUDY})
+        result = run("study.toml", "-o", "report.html")
     assert (result.exit_code, result.stderr) == (0, "Wrote report.html.\n")
     assert result.stdout.startswith("Of 2 orderings, the dipolar energy is lowest for stripes <img src=x\nonerror=")
     assert max(len(line) for line in result.stdout.splitlines()) <= 80
-    return Page((folder / "report.html").read_text(encoding="utf-8"))
+    return (where / "report.html").read_text(encoding="utf-8")
+
+
+@pytest.fixture
+def page(folder: Path, written: str) -> Page:
+    (folder / "report.html").write_text(written, encoding="utf-8")
+    return Page(written)
 
 
 # --- the page -------------------------------------------------------------------------------------------
@@ -169,8 +166,17 @@ def test_tables_hold_what_the_commands_print(page: Page) -> None:
     for row in tasks.shift(study)["rows"]:
         for shift in row["shifts"]:
             assert f"{100 * shift['shift_isotropic']:.6f}"[:6] in words
-    headings = ("Inputs", "Assumptions", "What was understood", "Ranking by dipolar energy", "Local fields",
-                "Paramagnetic shifts", "Static widths from nuclear moments", "What this does not say")  # fmt: skip
+    for entry in tasks.spectrum(study, SpectrumOptions(powder=True))["orderings"]:
+        for found in entry["spectra"]:
+            for line in found["lines"]:
+                assert f"{line['frequency_MHz']:.6f}"[:6] in words
+    for mode in tasks.modes(study)["modes"]:
+        assert f"{mode['energy_ueV_per_ion']:.3f}" in words
+    headings = (
+        "Inputs", "Assumptions", "What was understood", "Ranking by dipolar energy", "Dipolar modes", "Local fields",
+        "Spectra and polarization", "Paramagnetic shifts", "Static widths from nuclear moments",
+        "What this does not say",
+    )  # fmt: skip
     places = [words.index(name) for name in headings]
     assert places == sorted(places)
     assert "Of 2 orderings, the dipolar energy is lowest for stripes <img src=x onerror=alert(1)>: −" in words
@@ -178,11 +184,24 @@ def test_tables_hold_what_the_commands_print(page: Page) -> None:
 
 def test_pictures_are_drawn_in_the_page(page: Page) -> None:
     drawings = [attributes for tag, attributes in page.tags if tag == "svg"]
-    assert len(drawings) == 4
+    assert len(drawings) == 6
     assert all(attributes["role"] == "img" and attributes["aria-label"] for attributes in drawings)
     words = page.words()
     assert "Figure 1. Orderings as given, seen from [8 3 2] (components along a, b, c)." in words
-    assert "Figure 4. Shifts against temperature and against the susceptibility." in words
+    assert "Figure 2. Energies per magnetic ion, lowest on top. Exchange and crystal field are left out." in words
+    assert "Figure 3. Energies of all dipolar modes along the band path; the dashed line is the lowest one" in words
+    assert "Figure 5. Spectra of |B| and frequency: lines as stems as high as their share" in words
+    assert "beside them the polarization in a powder in zero field, without relaxation and nuclear moments" in words
+    assert "Figure 6. Shifts against temperature and against the susceptibility." in words
+
+
+def test_every_figure_says_what_it_leaves_out(page: Page) -> None:
+    captions = [attributes["aria-label"] or "" for tag, attributes in page.tags if tag == "svg"]
+    words = page.words()
+    for caption in captions:
+        assert caption in words
+        assert caption.rstrip(".").endswith("left out")
+        assert "distortion" in caption or "Exchange and crystal field are left out." in caption
 
 
 def test_the_same_inputs_give_the_same_page(folder: Path) -> None:
@@ -198,7 +217,7 @@ def test_the_same_inputs_give_the_same_page(folder: Path) -> None:
 def test_the_csv_file_holds_the_ranking() -> None:
     result = run("study.toml", "-o", "x.html", "--no-pictures", "--csv", "-")
     assert result.exit_code == 0
-    expected = CliRunner().invoke(main, ["rank", "study.toml", "--csv", "-"])
+    expected = Command().run("rank", "study.toml", "--csv", "-")
     assert result.stdout == expected.stdout
 
 
@@ -210,9 +229,12 @@ def test_json_and_choices() -> None:
     document = json.loads(result.stdout)
     assert document["schema"] == "latticedip/report/1"
     assert document["inputs"]["options"] == {
-        "orderings": ["ferromagnet"], "probes": ["fluorine"], "rotate": True, "view": "b", "tol": 1e-8,
+        "orderings": ["ferromagnet"], "probes": ["fluorine"], "rotate": True, "view": "b", "spectra": True,
+        "time_us": None, "initial": None, "modes": None, "tol": 1e-8,
     }  # fmt: skip
-    assert set(document["sections"]) == {"show", "drawing", "rank", "field", "shift", "linewidth"}
+    assert set(document["sections"]) == {
+        "show", "drawing", "rank", "modes", "field", "spectrum", "shift", "linewidth",
+    }  # fmt: skip
     assert [row["ordering"] for row in document["sections"]["rank"]["rows"]] == ["ferromagnet"]
     assert document["sections"]["rank"]["rows"][0]["easy_axis_cart"] is not None
     assert document["sections"]["field"]["inputs"]["options"]["tol"] == 1e-8
@@ -226,7 +248,9 @@ def test_what_does_not_apply_is_said(folder: Path) -> None:
     document = report_document(tasks.open_study(Path("study.toml")), ReportOptions())
     assert document["left_out"] == [
         {"section": "rank", "reason": "the study has no ordering"},
+        {"section": "modes", "reason": "the study states no moment sizes in [moments]"},
         {"section": "field", "reason": "the study has no ordering"},
+        {"section": "spectrum", "reason": "the study has no ordering"},
         {"section": "shift", "reason": "the study states no susceptibility"},
         {"section": "linewidth", "reason": "the study has no probe"},
     ]
@@ -236,7 +260,7 @@ def test_what_does_not_apply_is_said(folder: Path) -> None:
 
 
 def test_a_refused_section_is_named_with_its_reason(folder: Path) -> None:
-    sheet = CRYSTAL.replace('pbc="T T T"', 'pbc="T T F"')
+    sheet = LAYER_XYZ.replace('pbc="T T T"', 'pbc="T T F"')
     (folder / "layer.xyz").write_text(sheet, encoding="utf-8")
     text = STUDY[: STUDY.index("[[ordering]]")] + STUDY[STUDY.index("[[probe]]") : STUDY.index("[susceptibility]")]
     (folder / "study.toml").write_text(text, encoding="utf-8")
@@ -247,6 +271,115 @@ def test_a_refused_section_is_named_with_its_reason(folder: Path) -> None:
     document = report_document(study, ReportOptions())
     assert {"section": "linewidth", "reason": reason} in document["left_out"]
     assert f"Static widths from nuclear moments: {reason}" in Page(report_html(document, pictures=False)).words()
+
+
+# --- spectra, polarization and modes --------------------------------------------------------------------
+
+
+@pytest.mark.usefixtures("folder")
+def test_polarization_of_a_powder_and_of_a_crystal() -> None:
+    study = tasks.open_study(Path("study.toml"))
+    powder = report_document(study, ReportOptions(time_us=0.3))["sections"]["spectrum"]
+    assert powder == tasks.spectrum(study, SpectrumOptions(powder=True, time_us=0.3))
+    crystal = report_document(study, ReportOptions(time_us=0.3, initial="b"))["sections"]["spectrum"]
+    assert crystal == tasks.spectrum(study, SpectrumOptions(initial="b", time_us=0.3))
+
+
+@pytest.mark.parametrize(
+    ("frequencies", "time"),
+    [
+        # Four turns of the slowest; thirty of the fastest; what does not turn; the lifetime of a muon.
+        ([10.0, 20.0], 0.2),
+        ([1.0, 100.0], 0.2),
+        ([0.0, 1e-9, 50.0, None, float("nan")], 0.05),
+        ([0.01], 10.0),
+        ([0.0], 10.0),
+    ],
+)
+def test_the_time_of_the_polarization_is_round(frequencies: list[float | None], time: float) -> None:
+    rows = [{"frequency_MHz": value} for value in frequencies]
+    assert shown_time({"orderings": [{"rows": rows[:1]}, {"rows": rows[1:]}]}) == pytest.approx(time)
+
+
+def test_in_an_applied_field_the_spin_needs_a_direction(folder: Path) -> None:
+    (folder / "study.toml").write_text(STUDY + "[sample]\nsphere = true\napplied_T = [0, 0, 0.1]\n", encoding="utf-8")
+    study = tasks.open_study(Path("study.toml"))
+    document = report_document(study, ReportOptions(modes=False))
+    assert document["sections"]["spectrum"] == tasks.spectrum(study, SpectrumOptions())
+    why = "the study applies a field, so P(t) needs the direction that the spin starts along"
+    reason = f"{why} (--initial)"
+    assert document["left_out"] == [
+        {"section": "modes", "reason": "not asked for"},
+        {"section": "polarization", "reason": reason},
+    ]
+    assert f"Polarization with time: {reason}." in Page(report_html(document, pictures=False)).words()
+    with pytest.raises(InputError) as caught:
+        report_document(study, ReportOptions(time_us=0.5))
+    assert str(caught.value) == f"--time: {why} (--initial c, for example)."
+    turned = report_document(study, ReportOptions(modes=False, initial="a", time_us=0.5))
+    assert turned["sections"]["spectrum"]["inputs"]["options"]["time_us"] == 0.5
+    assert [entry["section"] for entry in turned["left_out"]] == ["modes"]
+
+
+@pytest.mark.usefixtures("folder")
+def test_costly_sections_wait_to_be_asked_for(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("latticedip.study.reports.MOST_IONS", 0)
+    monkeypatch.setattr("latticedip.study.reports.MOST_SPECTRA", 3)
+    study = tasks.open_study(Path("study.toml"))
+    document = report_document(study, ReportOptions())
+    assert document["left_out"] == [
+        {"section": "modes", "reason": "1 magnetic ions in the cell take a while; ask for them with --modes"},
+        {"section": "spectrum", "reason": "4 spectra are more than 3. Name some with --ordering or --probe"},
+    ]
+    asked = report_document(study, ReportOptions(modes=True, probes=("fluorine",)))
+    assert asked["left_out"] == []
+    assert {"modes", "spectrum"} <= set(asked["sections"])
+
+
+@pytest.mark.usefixtures("folder")
+def test_sizes_that_modes_cannot_take_are_told(monkeypatch: pytest.MonkeyPatch) -> None:
+    def refuse(study: Any) -> dict[str, float]:
+        raise InputError("the label 'X1' covers atoms of different moments; give each its size by label.")
+
+    monkeypatch.setattr("latticedip.study.reports.stated_sizes", refuse)
+    document = report_document(tasks.open_study(Path("study.toml")), ReportOptions(modes=True))
+    reason = "the label 'X1' covers atoms of different moments; give each its size by label."
+    assert document["left_out"] == [{"section": "modes", "reason": reason}]
+
+
+@pytest.mark.usefixtures("folder")
+def test_spectra_and_modes_can_be_left_out() -> None:
+    result = run("study.toml", "-o", "x.html", "--no-pictures", "--no-spectra", "--no-modes", "--json")
+    document = json.loads(result.stdout)
+    assert not {"spectrum", "modes"} & set(document["sections"])
+    assert {"section": "spectrum", "reason": "not asked for"} in document["left_out"]
+    result = run("study.toml", "-o", "x.html", "--no-pictures", "--no-spectra", "--time", "1")
+    assert result.exit_code == 2
+    assert result.stderr.endswith("Error: --time and --initial go with spectra: leave out --no-spectra.\n")
+    result = run("study.toml", "-o", "x.html", "--no-pictures", "--time", "2", "--initial", "1 1 0", "--json")
+    options = json.loads(result.stdout)["sections"]["spectrum"]["inputs"]["options"]
+    assert (options["time_us"], options["initial"], options["powder"]) == (2.0, "1 1 0", False)
+
+
+def test_many_probes_with_long_names_are_drawn_in_parts(folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    pytest.importorskip("matplotlib")
+    place = "in the middle of the channel that runs along the longest axis of the cell"
+    probes = "".join(f'[[probe]]\nname = "muon {i} {place}"\nposition = [0.5, 0.5, 0.1{i}]\n' for i in range(7))
+    text = STUDY[: STUDY.index("[[probe]]")] + probes
+    (folder / "study.toml").write_text(text, encoding="utf-8")
+    document = report_document(tasks.open_study(Path("study.toml")), ReportOptions(rotate=True))
+    words = Page(report_html(document)).words()
+    # Five probes and two, and spectra of seven probes under two orderings, up to six in a figure.
+    assert words.count("Size of the local field at each probe") == 2
+    assert "(Part 2 of 2.)" in words
+    assert words.count("Spectra of |B| and frequency:") == 4
+    assert words.count("Orderings as given: not turned as in the ranking.") == 2
+    assert "picture:" not in words
+    monkeypatch.setattr("latticedip.report.figures.MOST_ALIKE", 3)
+    words = Page(report_html(document)).words()
+    assert "Spectra of |B| and frequency:" not in words
+    told = "Spectra and polarization, picture: 4 figures of this kind are more than 3. Name some orderings or probes."
+    assert told in words
 
 
 # --- files ----------------------------------------------------------------------------------------------
@@ -269,6 +402,11 @@ def test_a_refused_section_is_named_with_its_reason(folder: Path) -> None:
             "Error: --view: got '0 0 0': [0, 0, 0] has no direction.\n",
         ),
         (
+            ["study.toml", "-o", "x.html", "--initial", "up"],
+            "Error: --initial: got 'up', expected a crystal direction: a, b, c, a*, b*, c*, or three components along "
+            "the axes a, b, c, such as \"1 1 0\".\n",
+        ),
+        (
             ["study.toml", "-o", "x.html", "--ordering", "feromagnet"],
             "Error: the study has no ordering named 'feromagnet'. Those it has: 'stripes <img src=x "
             "onerror=alert(1)>', 'ferromagnet'. Did you mean 'ferromagnet'?\n",
@@ -286,7 +424,7 @@ def test_an_input_is_never_written_over(folder: Path) -> None:
     result = run("study.toml", "-o", "layer.html", "--no-pictures")
     assert result.exit_code == 2
     assert result.stderr == "Error: 'layer.html' is read here (as the crystal). Write to another file.\n"
-    assert (folder / "layer.xyz").read_text(encoding="utf-8") == CRYSTAL
+    assert (folder / "layer.xyz").read_text(encoding="utf-8") == LAYER_XYZ
 
 
 def test_without_matplotlib_the_message_says_what_to_do(folder: Path) -> None:
@@ -319,6 +457,18 @@ def test_tables_as_html() -> None:
         '<tr><th scope="row" class="w">&lt;a&gt;</th><td>1.5<br>2</td><td class="w whole">0 0 1</td></tr>\n'
         "</tbody></table></div>"
     )
+
+
+def test_wide_tables_are_cut_and_short_words_kept_together() -> None:
+    columns = [Column("site", words=True), *(Column(f"cell {i}", "µB") for i in range(14)), Column("why", words=True)]
+    setter = HtmlSetter()
+    setter.table(columns, [["Mn 1", *(["-0.123456"] * 14), "because " * 20]], 1)
+    (piece,) = setter.pieces
+    blocks = piece.split("\n</tbody></table></div>")[:-1]
+    # Eleven columns and a gap each are as wide as a page has letters; the first column leads both tables.
+    assert [block.count("<td") for block in blocks] == [10, 5]
+    assert all('<th scope="row" class="w whole">Mn 1</th>' in block for block in blocks)
+    assert '<td class="w">because' in blocks[1]
 
 
 def test_a_text_report_is_set_as_html() -> None:
@@ -388,6 +538,6 @@ def test_the_page_opens_in_a_browser(page: Page, folder: Path) -> None:
     assert all(dark[top : top + 600].any() for top in range(0, size[1], 600))
     tree = subprocess.run([CHROMIUM, *flags, "--dump-dom", target], check=True, capture_output=True, timeout=180)
     shown = Page(tree.stdout.decode("utf-8"))
-    assert [tag for tag, _ in shown.tags].count("svg") == 4
+    assert [tag for tag, _ in shown.tags].count("svg") == 6
     assert not {tag for tag, _ in shown.tags} & {"script", "img"}
     assert 'Layers & <script>alert(1)</script> "quoted"' in shown.words()

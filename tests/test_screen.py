@@ -10,13 +10,8 @@ from click.testing import CliRunner
 
 from latticedip.cli.main import COMMANDS, main
 from latticedip.report.tables import heading
+from tests.commands import LAYER_XYZ, enter
 
-CRYSTAL = """3
-Lattice="4.2 0 0 0 4.2 0 0 0 5.1" Properties=species:S:1:pos:R:3 pbc="T T T"
-Mn 0 0 0
-F 2.1 0 1.1
-F 0 2.1 1.1
-"""
 STUDY = """title = "Does a title that goes on and on, longer than a screen is wide, still fit on the screen of users?"
 [crystal]
 file = "layer.xyz"
@@ -57,9 +52,7 @@ CALLS = (
 def test_the_screen_is_80_columns_wide(
     call: tuple[str, ...], no_color: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    (tmp_path / "layer.xyz").write_text(CRYSTAL, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
+    enter(tmp_path, monkeypatch, {"layer.xyz": LAYER_XYZ, "study.toml": STUDY})
     result = CliRunner().invoke(main, [call[0], "study.toml", *call[1:]], env={"NO_COLOR": no_color, "COLUMNS": "80"})
     assert result.exit_code == 0, result.output
     assert max(len(line) for line in result.stdout.splitlines()) <= 80

@@ -8,6 +8,7 @@ import click
 
 from latticedip.cli.options import (
     deliver,
+    draw_to,
     ordering_option,
     output_options,
     plot_option,
@@ -54,8 +55,7 @@ def directions(
     if plot_path is not None:
         from latticedip.report.plots import draw_directions
 
-        draw_directions(document, plot_path)
-        click.echo(f"Wrote {plot_path}.", err=True)
+        draw_to(plot_path, document, draw_directions)
     deliver(
         document,
         rows=lambda: directions_table(document),

@@ -51,6 +51,10 @@ def field(
 ) -> None:
     """Print the local field at every probe under every ordering, in its five parts.
 
+    A probe with several `positions` and their `weights` gets a row for each, and averages over them: the mean vector,
+    which one feels that hops fast, the mean and rms size, and the rms deviation from the mean. The study's
+    [moment_spread] extends the moments over their ions.
+
     \b
     Example:
       latticedip field study.toml --axes crystal --csv fields.csv

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import click
 
-from latticedip.cli.options import deliver, output_options, plot_option, study_argument, tol_option
+from latticedip.cli.options import deliver, draw_to, output_options, plot_option, study_argument, tol_option
 
 
 @click.command(short_help="Dipolar modes: the lowest energy of any ordering.")
@@ -50,8 +50,7 @@ def modes(
     if plot_path is not None:
         from latticedip.report.plots import draw_modes
 
-        draw_modes(document, plot_path)
-        click.echo(f"Wrote {plot_path}.", err=True)
+        draw_to(plot_path, document, draw_modes)
     deliver(
         document,
         rows=lambda: modes_table(document),

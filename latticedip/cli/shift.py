@@ -8,6 +8,7 @@ import click
 
 from latticedip.cli.options import (
     deliver,
+    draw_to,
     orbit_option,
     output_options,
     plot_option,
@@ -104,8 +105,7 @@ def shift(
     if plot_path is not None:
         from latticedip.report.plots import draw_shift
 
-        draw_shift(document, plot_path)
-        click.echo(f"Wrote {plot_path}.", err=True)
+        draw_to(plot_path, document, draw_shift)
     deliver(
         document,
         rows=lambda: shift_table(document),

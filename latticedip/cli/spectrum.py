@@ -9,6 +9,7 @@ import click
 
 from latticedip.cli.options import (
     deliver,
+    draw_to,
     ordering_option,
     output_options,
     probe_option,
@@ -73,6 +74,13 @@ class NuclearWidth(click.ParamType):
     '"1 1 0".',
 )
 @click.option("--detector", metavar="AXIS", help="Direction of the detector; the initial one if left out.")
+@click.option(
+    "--angle",
+    type=click.FloatRange(0, 180),
+    metavar="DEG",
+    help="In a powder in an applied field: angle between it and the direction that the spin starts and is seen along; "
+    "0, along the field, if left out.",
+)
 @click.option("--seed", type=click.IntRange(min=0), default=0, show_default=True, help="Of the quasi-random phases.")
 @click.option(
     "--plot", "plot_path", type=click.Path(path_type=Path), metavar="FILE", help="Also draw it: .png, .svg or .pdf."
@@ -93,6 +101,7 @@ def spectrum(
     points: int | None,
     initial: str | None,
     detector: str | None,
+    angle: float | None,
     seed: int,
     plot_path: Path | None,
     tol: float,
@@ -103,8 +112,10 @@ def spectrum(
 
     Counted are all positions that the crystal makes equivalent to a probe, in every cell: lines where a few sizes
     occur, bands between two edges where the ordering is incommensurate. The CSV file holds the histogram, or with
-    --time the polarization. The width of --width is a standard deviation; it smears the spectrum, not P(t). In a
-    powder the polarization is that without an applied field.
+    --time the polarization. The width of --width is a standard deviation; it smears the spectrum, not P(t).
+
+    In a powder in an applied field the whole internal field turns with each grain, and the applied one stays: P(t) is
+    the average over all angles between the two, along the applied field or at --angle to it.
 
     \b
     Example:
@@ -125,6 +136,7 @@ def spectrum(
         points=points,
         initial=initial,
         detector=detector,
+        angle_deg=angle,
         seed=seed,
         tol=tol,
     )
@@ -136,8 +148,7 @@ def spectrum(
     if plot_path is not None:
         from latticedip.report.plots import draw_spectrum
 
-        draw_spectrum(document, plot_path)
-        click.echo(f"Wrote {plot_path}.", err=True)
+        draw_to(plot_path, document, draw_spectrum)
     deliver(
         document,
         rows=lambda: spectrum_table(document),

@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from latticedip.report.averages import averages_lines
 from latticedip.report.su import with_su
 from latticedip.report.tables import (
     Column,
@@ -47,6 +48,7 @@ def field_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
             pairs([*ordering_lines(entry), ("boundary", entry["boundary"])], width=width),
             "",
             _overview(entry, unit, width),
+            *averages_lines(entry, axes, unit, width),
             "",
             _parts_table(entry, axes, unit, width),
         ]

@@ -2,35 +2,47 @@
 
 from __future__ import annotations
 
+import dataclasses
 import html
 import re
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from typing import TYPE_CHECKING, Any
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any
 
-from latticedip.errors import LatticedipError
 from latticedip.report.field import field_text
+from latticedip.report.figures import Figures
 from latticedip.report.linewidth import linewidth_text
+from latticedip.report.modes import modes_text
 from latticedip.report.rank import rank_text
 from latticedip.report.shift import shift_text
 from latticedip.report.show import show_text
-from latticedip.report.tables import Column, clean, direction, fixed, set_by, short, vector
+from latticedip.report.spectrum import spectrum_text
+from latticedip.report.tables import (
+    GAP,
+    Column,
+    blocks_of,
+    clean,
+    fixed,
+    set_by,
+    short,
+    vector,
+    widest,
+)
 
-if TYPE_CHECKING:
-    from matplotlib.figure import Figure
-
-#: Orderings in one drawing.
-DRAWN_TOGETHER = 6
+#: Letters across a table of a page; a wider one is cut into several. Columns of words up to so many letters never wrap.
+TABLE_LETTERS, SHORT_WORDS = 116, 24
 SECTIONS: dict[str, tuple[str, Callable[[Mapping[str, Any]], str]]] = {
     "show": ("What was understood", show_text),
     "rank": ("Ranking by dipolar energy", rank_text),
+    "modes": ("Dipolar modes", modes_text),
     "field": ("Local fields", field_text),
+    "spectrum": ("Spectra and polarization", spectrum_text),
     "shift": ("Paramagnetic shifts", shift_text),
     "linewidth": ("Static widths from nuclear moments", linewidth_text),
 }
 #: Nothing may be fetched or run; the page and its pictures carry their own styles.
 POLICY = "default-src 'none'; style-src 'unsafe-inline'"
 STYLE = """
-body { font: 15px/1.45 "DejaVu Sans", Arial, Helvetica, sans-serif; color: #000; background: #fff;
+body { font: 0.94rem/1.45 "DejaVu Sans", Arial, Helvetica, sans-serif; color: #000; background: #fff;
   max-width: 62rem; margin: 2rem auto; padding: 0 1rem; }
 h1 { font-size: 1.6rem; margin-bottom: 0.2rem; }
 h2 { font-size: 1.25rem; margin-top: 2.4rem; border-bottom: 1px solid #000; padding-bottom: 0.15rem; }
@@ -53,11 +65,13 @@ dl { display: grid; grid-template-columns: max-content 1fr; gap: 0.1rem 1.2rem; 
 dt { color: #444; } dd { margin: 0; overflow-wrap: anywhere; }
 pre { font: 0.82rem/1.35 "DejaVu Sans Mono", monospace; background: #f2f2f2; padding: 0.6rem 0.8rem; overflow-x: auto; }
 code { font: 0.82rem "DejaVu Sans Mono", monospace; }
-figure { margin: 1rem 0 1.6rem; } figure svg { max-width: 100%; height: auto; }
+figure { margin: 1rem 0 1.6rem; overflow-x: auto; } figure svg { max-width: 100%; min-width: 36rem; height: auto; }
 figcaption { font-size: 0.87rem; color: #222; max-width: 46rem; }
 .warning { border-left: 4px solid #000; padding-left: 0.8rem; }
-@media print { body { margin: 0; max-width: none; } h2, h3, h4 { break-after: avoid; }
-  figure, tr { break-inside: avoid; } .wide { overflow: visible; } }
+@media print { html { font-size: 12px; } body { margin: 0; max-width: none; } h2, h3, h4 { break-after: avoid; }
+  figure, tr { break-inside: avoid; } figure, .wide { overflow: visible; }
+  figure svg { min-width: 0; max-height: 230mm; }
+  pre { white-space: pre-wrap; overflow-wrap: anywhere; } .whole { white-space: normal; } nav { display: none; } }
 """
 
 
@@ -68,8 +82,8 @@ def report_html(document: Mapping[str, Any], *, pictures: bool = True) -> str:
 
     Raises InputError where pictures are asked for and matplotlib is missing.
     """
-    figures = _Figures()
-    left_out = [(SECTIONS[entry["section"]][0], entry["reason"]) for entry in document["left_out"]]
+    figures = Figures()
+    left_out = [(_section_title(entry["section"]), entry["reason"]) for entry in document["left_out"]]
     if pictures:
         from latticedip.report.plots import check_library
 
@@ -82,11 +96,15 @@ def report_html(document: Mapping[str, Any], *, pictures: bool = True) -> str:
     for name, (title, text) in SECTIONS.items():
         if name not in sections:
             continue
+        if name == "spectrum" and pictures:
+            text = _without_signals
         body = set_as_html(text, sections[name], document["title"])
         if pictures:
-            drawn, refused = _drawn(figures, name, sections)
+            drawn, refused = figures.of_section(name, sections)
             left_out += [(title + ", picture", reason) for reason in refused]
             body = drawn + body if name != "show" else body + drawn
+        if name in ("field", "spectrum") and document["inputs"]["options"]["rotate"]:
+            body = "<p>Orderings as given: not turned as in the ranking.</p>\n" + body
         parts.append((name, title, body))
     parts.append(("caveats", "What this does not say", _caveats(document, left_out)))
     listed = "".join(f'<li><a href="#{name}">{title}</a></li>' for name, title, _ in parts)
@@ -99,6 +117,15 @@ def report_html(document: Mapping[str, Any], *, pictures: bool = True) -> str:
         f"<h1>{escaped(document['title'])}</h1>\n<p>Report of latticedip {escaped(document['version'])}.</p>\n"
         f"{_summary(document)}\n<nav><ul>{listed}</ul></nav>\n{body}\n</body>\n</html>\n"
     )
+
+
+def _section_title(name: str) -> str:
+    return "Polarization with time" if name == "polarization" else SECTIONS[name][0]
+
+
+def _without_signals(document: Mapping[str, Any]) -> str:
+    """The spectra without a table of P(t), which is drawn."""
+    return spectrum_text(document, signals=False)
 
 
 def escaped(text: str) -> str:
@@ -120,8 +147,25 @@ class HtmlSetter:
         return f"\0{len(self.pieces) - 1}\0"
 
     def table(self, columns: Sequence[Column], rows: Sequence[Sequence[str]], keys: int) -> str:
-        """Set a table whose first ``keys`` columns name the line."""
-        return self._keep(html_table(columns, rows, keys))
+        """Set a table whose first ``keys`` columns name the line; a wide one as several."""
+        sizes = [
+            max(widest(text) for text in (column.head, column.unit, *(row[i] for row in rows)))
+            for i, column in enumerate(columns)
+        ]
+        kept = [
+            dataclasses.replace(column, whole=column.whole or (column.words and size <= SHORT_WORDS))
+            for column, size in zip(columns, sizes, strict=True)
+        ]
+        least = [
+            SHORT_WORDS if column.words and not column.whole else size for column, size in zip(kept, sizes, strict=True)
+        ]
+        blocks = blocks_of(least, TABLE_LETTERS - GAP, keys)
+        return self._keep(
+            "\n".join(
+                html_table([kept[i] for i in block], [[row[i] for i in block] for row in rows], keys)
+                for block in blocks
+            )
+        )
 
     def pairs(self, items: Sequence[tuple[str, str]]) -> str:
         """Set names and values."""
@@ -289,7 +333,9 @@ def _assumptions(document: Mapping[str, Any]) -> str:
 
 def _caveats(document: Mapping[str, Any], left_out: Sequence[tuple[str, str]]) -> str:
     sections = document["sections"]
-    notes = [note for name in ("rank", "shift", "linewidth") if name in sections for note in sections[name]["notes"]]
+    notes = [
+        note for name in ("rank", "modes", "shift", "linewidth") if name in sections for note in sections[name]["notes"]
+    ]
     parts = [_bullets(list(dict.fromkeys(notes)))] if notes else []
     warnings = sections["show"]["warnings"]
     if warnings:
@@ -298,73 +344,3 @@ def _caveats(document: Mapping[str, Any], left_out: Sequence[tuple[str, str]]) -
         sentences = [f"{title}: {reason.rstrip('.')}." for title, reason in left_out]
         parts += ["<h3>Left out of this report</h3>", _bullets(sentences)]
     return "\n".join(parts) or "<p>Nothing was left out.</p>"
-
-
-# --- pictures -------------------------------------------------------------------------------------------
-
-
-class _Figures:
-    """Numbers figures and keeps the names inside one drawing apart from those of the others."""
-
-    def __init__(self) -> None:
-        self.count = 0
-
-    def add(self, make: Callable[[], Figure], caption: str) -> str:
-        """A drawing with its caption; raises LatticedipError where it is refused."""
-        from latticedip.report.plots import render
-
-        drawn = render(make, "svg").decode("utf-8")
-        self.count += 1
-        words = f"Figure {self.count}. {caption}"
-        inline = inline_svg(drawn, f"f{self.count}-", words)
-        return f"<figure>\n{inline}\n<figcaption>{escaped(words)}</figcaption></figure>"
-
-
-def inline_svg(svg: str, prefix: str, words: str) -> str:
-    """An SVG file as an element of a page: no prologue, comments or metadata, its names with a prefix of their own."""
-    body = svg[svg.index("<svg") :].strip()
-    body = re.sub(r"<!--.*?-->|<metadata>.*?</metadata>", "", body, flags=re.DOTALL)
-    body = re.sub(r'\bid="', f'id="{prefix}', body)
-    body = re.sub(r'href="#', f'href="#{prefix}', body)
-    body = body.replace("url(#", f"url(#{prefix}")
-    body = "\n".join(line for line in body.split("\n") if line.strip())
-    return body.replace("<svg", f'<svg role="img" aria-label="{escaped(words)}"', 1)
-
-
-def _drawn(figures: _Figures, name: str, sections: Mapping[str, Any]) -> tuple[str, list[str]]:
-    """The pictures of one section, and why others are not there."""
-    drawn, refused = [], []
-    for make, caption in _pictures(name, sections):
-        try:
-            drawn.append(figures.add(make, caption))
-        except LatticedipError as error:
-            refused.append(str(error))
-    return "\n".join(drawn), refused
-
-
-def _pictures(name: str, sections: Mapping[str, Any]) -> Iterator[tuple[Callable[[], Figure], str]]:
-    from latticedip.report.plots import field_figure, orderings_figure, rank_figure, shift_figure, shift_has_curve
-
-    if name == "show":
-        drawing = sections["drawing"]
-        seen = direction(drawing["view"]["eye_abc"])
-        caption = (
-            f"Orderings as given, seen from {seen} (components along a, b, c). Black arrows are moments, centred on "
-            "their ions; open arrows are fields, beginning at the probes; both on one scale for all orderings. The "
-            "home cell is black."
-        )
-        for first in range(0, len(drawing["orderings"]), DRAWN_TOGETHER):
-            some = {**drawing, "orderings": drawing["orderings"][first : first + DRAWN_TOGETHER]}
-            yield _figure_of(orderings_figure, some), caption
-    elif name == "rank":
-        caption = "Energies per magnetic ion, lowest on top; grey bands join ties."
-        yield _figure_of(rank_figure, sections["rank"]), caption
-    elif name == "field":
-        caption = "Size of the local field at each probe; × n: at n of its points; bars: standard uncertainties."
-        yield _figure_of(field_figure, sections["field"]), caption
-    elif name == "shift" and shift_has_curve(sections["shift"]):
-        yield _figure_of(shift_figure, sections["shift"]), "Shifts against temperature and against the susceptibility."
-
-
-def _figure_of(make: Callable[[Mapping[str, Any]], Figure], document: Mapping[str, Any]) -> Callable[[], Figure]:
-    return lambda: make(document)

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from latticedip.checks import FloatArray
+from latticedip.report.averages import weight_lines
 from latticedip.report.points import kind_lines, kind_name, kinds
 from latticedip.report.su import with_su
 from latticedip.report.tables import (
@@ -49,6 +50,13 @@ def shift_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
             parts += ["", f"Coupling to {coupling['ion']}, {short(coupling['ions_per_cell'])} per cell", ""]
             parts += [_coupling(coupling, width)]
         parts += _shifts(group[0]["shifts"], document, width)
+    for mean in document["means"]:
+        lines = [kind_lines([{**mean, "position": mean["positions"][0], "site": None}])[0], *weight_lines(mean)]
+        parts += ["", "", heading(f"{mean['probe']}, mean over its positions"), pairs(lines, width=width)]
+        for coupling in mean["couplings"]:
+            parts += ["", f"Coupling to {coupling['ion']}, {short(coupling['ions_per_cell'])} per cell", ""]
+            parts += [_coupling(coupling, width)]
+        parts += _shifts(mean["shifts"], document, width)
     return "\n".join([*parts, "", bullets([*document["conventions"], *document["notes"]], width=width)])
 
 

@@ -33,6 +33,8 @@ def show_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
             for name, size in document["moments_muB"].items()
         ]
         parts += ["", "Moments stated", "", pairs(listed, width=width)]
+    if document["moment_spread"]:
+        parts += ["", "Spread of the moments", "", pairs(document["moment_spread"].items(), width=width)]
     for entry in document["orderings"]:
         parts += ["", caption(f"Ordering: {entry['ordering']}"), "", _ordering(entry, width)]
     if document["neighbours"]:
@@ -128,11 +130,17 @@ def _collinear(entry: Mapping[str, Any], width: int | None) -> str:
             atom["label"],
             str(atom["atom"]),
             coordinates(atom["position"]),
-            *(with_su(v, 4, atom["along_su_muB"] if len(cells) == 1 else None) for v in atom["along_muB"]),
+            *(with_su(v, 4, su) for v, su in zip(atom["along_muB"], _along_su(atom, len(cells)), strict=True)),
         ]
         for atom in entry["atoms"]
     ]
     return table(columns, rows, width=width, keys=2)
+
+
+def _along_su(atom: Mapping[str, Any], n_cells: int) -> Sequence[float | None]:
+    """The uncertainty of the moment of an atom in every cell: where amplitudes state it, or where one cell is all."""
+    known: Sequence[float | None] | None = atom.get("moments_su_along_muB")
+    return known or [atom["along_su_muB"] if n_cells == 1 else None] * n_cells
 
 
 def _vectors(entry: Mapping[str, Any], width: int | None) -> str:
@@ -147,7 +155,8 @@ def _vectors(entry: Mapping[str, Any], width: int | None) -> str:
             lead = [atom["label"], str(atom["atom"]), coordinates(atom["position"])] if i == 0 else ["", "", ""]
             lead += [",".join(str(n) for n in cell)] if several else []
             components = atom["moments_abc_muB"][i]
-            su = (atom["moment_su_muB"] if not several else None) or [None] * 3
+            known = atom.get("moments_su_abc_muB")
+            su = known[i] if known else (atom["moment_su_muB"] if not several else None) or [None] * 3
             shown = [with_su(v, 4, s) for v, s in zip(components, su, strict=True)]
             rows.append([*lead, *shown, fixed(atom["sizes_muB"][i], 4)])
     return table(columns, rows, width=width, keys=2)

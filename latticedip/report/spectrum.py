@@ -16,8 +16,8 @@ TIMES_SHOWN = 21
 MOST_ROWS = 40
 
 
-def spectrum_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
-    """Return the spectra of every ordering as tables."""
+def spectrum_text(document: Mapping[str, Any], *, signals: bool = True, width: int | None = None) -> str:
+    """Return the spectra of every ordering as tables; signals: P(t), too, where the document holds it."""
     options = document["inputs"]["options"]
     lead = [("specimen", document["specimen"])]
     if any(document["applied_T"]):
@@ -41,7 +41,7 @@ def spectrum_text(document: Mapping[str, Any], *, width: int | None = None) -> s
         ]
         if options["domains"] == "list":
             parts += ["", _domains(entry, width)]
-        if options["time_us"] is not None:
+        if signals and options["time_us"] is not None:
             parts += ["", _signals(document, entry, width)]
         if entry["notes"]:
             parts += ["", bullets(entry["notes"], width=width)]
@@ -52,6 +52,14 @@ def spectrum_name(found: Mapping[str, Any]) -> str:
     """The probe of a spectrum, with its domain where domains are listed."""
     domain = found["domain"]
     return str(found["probe"]) + ("" if domain is None else f", domain {domain['number']}")
+
+
+def field_words(document: Mapping[str, Any]) -> str:
+    """How the polarization of a powder lies to the applied field; nothing where none is applied."""
+    if not any(document["applied_T"]):
+        return ""
+    angle = document["inputs"]["options"]["angle_deg"]
+    return f", at {angle:g}° to the applied field" if angle else ", along the applied field"
 
 
 def _cells(entry: Mapping[str, Any]) -> list[tuple[str, str]]:
@@ -125,7 +133,7 @@ def _signals(document: Mapping[str, Any], entry: Mapping[str, Any], width: int |
         [fixed(time[i], digits), *(fixed(found["polarization"]["polarization"][i], 4) for found in entry["spectra"])]
         for i in shown
     ]
-    title = "Polarization in a powder"
+    title = f"Polarization in a powder{field_words(document)}"
     if document["specimen"] == "crystal":
         seen = options["detector"] or options["initial"]
         title = f"Polarization along {seen} of a spin that starts along {options['initial']}"

@@ -107,7 +107,7 @@ def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], *, width: in
     if (setter := _SETTER.get()) is not None:
         return setter.table(columns, cells, keys)
     natural = [
-        max(_widest(text) for text in (column.head, column.unit, *(row[i] for row in cells)))
+        max(widest(text) for text in (column.head, column.unit, *(row[i] for row in cells)))
         for i, column in enumerate(columns)
     ]
     least = [
@@ -116,12 +116,13 @@ def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], *, width: in
     ]
     blocks = [
         _set(columns, cells, block, _share(block, natural, least, columns, width))
-        for block in _blocks(least, width, keys)
+        for block in blocks_of(least, width, keys)
     ]
     return "\n\n".join(blocks)
 
 
-def _widest(cell: str) -> int:
+def widest(cell: str) -> int:
+    """Columns of the screen that the longest line of a cell takes."""
     return max(text_width(line) for line in cell.split("\n"))
 
 
@@ -129,8 +130,8 @@ def _longest_word(text: str) -> int:
     return max((text_width(word) for word in text.split()), default=0)
 
 
-def _blocks(least: Sequence[int], width: int, keys: int) -> list[list[int]]:
-    """Column numbers of each block; every block fits the width where a single column can."""
+def blocks_of(least: Sequence[int], width: int, keys: int) -> list[list[int]]:
+    """Column numbers of each block, with the first ``keys`` ones in all; it fits the width where a column can."""
     repeated = list(range(min(keys, len(least))))
     start = sum(least[i] + GAP for i in repeated)
     blocks, block, used = [], list(repeated), start - GAP

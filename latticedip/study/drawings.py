@@ -13,7 +13,7 @@ from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal
 from latticedip.ordering.model import Ordering
 from latticedip.physics.boundary import boundary_words
-from latticedip.study.describe import first_cells
+from latticedip.study.describe import FIRST_CELLS, first_cells
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import NO_SUM, document, ordering_head
 from latticedip.study.fields import common_boundary
@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 
 #: Where a drawing is seen from unless it is said: from a, a little from b and from above.
 VIEW = "8 3 2"
+#: Cells of an ordering without a short period that are drawn along each axis.
+ALONG = 4
 #: An atom this close to a face of the cell (fractional) is drawn on the opposite face, too.
 ON_FACE = 1e-6
 
@@ -49,7 +51,8 @@ def drawing_of_study(
     for ordering in study.orderings:
         entry = _ordering(ordering)
         if study.probes:
-            found = local_field(ordering, study.probes, sample=study.sample, tol=tol)
+            spread = study.moment_spread or None
+            found = local_field(ordering, study.probes, moment_spread=spread, sample=study.sample, tol=tol)
             places = found.points @ ordering.crystal.cell
             entry["probes"] = [
                 {"probe": name, "position_cart_A": place.tolist(), "field_T": field.tolist()}
@@ -104,6 +107,8 @@ def view_of(crystal: Crystal, view: str | None) -> dict[str, Any]:
 def _ordering(ordering: Ordering) -> dict[str, Any]:
     crystal = ordering.crystal
     cells, words = first_cells(ordering)
+    if words == FIRST_CELLS:
+        cells = [cell for cell in cells if max(cell) < ALONG]
     atoms = []
     for site in range(crystal.n_sites):
         magnetic = bool(ordering.is_magnetic[site])

@@ -3,24 +3,36 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Callable
+import math
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from latticedip.errors import LatticedipError
+from latticedip.errors import InputError, LatticedipError
 from latticedip.study import tasks
 from latticedip.study.describe import describe_study, show_table
+from latticedip.study.directions import direction_of
 from latticedip.study.documents import document
 from latticedip.study.drawings import drawing_of_study
 from latticedip.study.rank_options import RankOptions
 from latticedip.study.rankings import rank_table
 from latticedip.study.schema import LARGEST_FILE, load_bytes
+from latticedip.study.search import stated_sizes
+from latticedip.study.spectra import SpectrumOptions
 
 if TYPE_CHECKING:
     from latticedip.study.schema import Study
 
 #: A study file longer than this (letters) is not printed in a report.
 LONGEST_TEXT = 100_000
+#: Spectra in a report at most, and magnetic ions up to which it holds the modes without being asked.
+MOST_SPECTRA, MOST_IONS = 60, 8
+#: P(t) is shown over so many turns of the slowest precession, at most over so many of the fastest, and at most this
+#: long (µs). Frequencies below a part of the largest one do not count.
+SLOW_TURNS, FAST_TURNS, LONGEST_US, NO_FREQUENCY = 4.0, 30.0, 10.0, 1e-3
+
+#: Why there is no P(t) in an applied field without a direction.
+APPLIED = "the study applies a field, so P(t) needs the direction that the spin starts along"
 
 _log = logging.getLogger(__name__)
 
@@ -30,25 +42,38 @@ class ReportOptions:
     """What a report holds.
 
     orderings, probes: names of those that count; none: all. rotate: turn each pattern to its lowest energy, too.
-    view: the crystal direction that drawings are seen from; None: that of `drawings`. tol: bound of the lattice sums.
+    view: the crystal direction that drawings are seen from; None: that of `drawings`. spectra: spectra and P(t).
+    time_us: the last moment of P(t); None: a few turns of the precessions. initial: the direction in the crystal that
+    the spin starts along and is seen along; None: P(t) is that of a powder. modes: the dipolar modes; None: for up to 8
+    magnetic ions. tol: bound of the lattice sums.
     """
 
     orderings: tuple[str, ...] = ()
     probes: tuple[str, ...] = ()
     rotate: bool = False
     view: str | None = None
+    spectra: bool = True
+    time_us: float | None = None
+    initial: str | None = None
+    modes: bool | None = None
     tol: float = 1e-10
 
 
 def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
-    """The document of `report`: those of `show`, `rank`, `field`, `shift` and `linewidth`, and what drawings show.
+    """The document of `report`: those of `show`, `rank`, `modes`, `field`, `spectrum`, `shift` and `linewidth`, and
+    what drawings show.
 
-    Rank and field need orderings, field, shift and linewidth probes, shift a susceptibility; what does not apply, and
-    a shift, a linewidth or a drawing that is refused, is listed with the reason.
+    Rank, field and spectrum need orderings, field, spectrum, shift and linewidth probes, shift a susceptibility, modes
+    the sizes of moments; what does not apply, and modes, a spectrum, a shift or a linewidth that is refused, is listed
+    with the reason.
 
-    Raises InputError for an unknown name and for a view that is no direction, and what `show`, `rank` and `field`
-    raise.
+    Raises InputError for an unknown name, for a view or an initial direction that is none, and for a time in an applied
+    field without an initial direction; and what `show`, `rank` and `field` raise.
     """
+    if options.initial is not None:
+        direction_of(study.crystal, options.initial, "--initial")
+    elif options.time_us is not None and study.sample.applied_T.any():
+        raise InputError(f"--time: {APPLIED} (--initial c, for example).")
     study = tasks.choose(study, orderings=options.orderings, probes=options.probes)
     sections: dict[str, Any] = {"show": describe_study(study)}
     left_out: list[dict[str, str]] = []
@@ -69,10 +94,23 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
         sections["rank"] = tasks.rank(study, RankOptions(rotate=options.rotate, tol=options.tol))
     else:
         skip("rank", "the study has no ordering")
+    if (reason := _without_modes(study, options)) is not None:
+        skip("modes", reason)
+    else:
+        attempt("modes", lambda: tasks.modes(study, tol=options.tol))
     if study.orderings and study.probes:
         sections["field"] = tasks.field(study, tol=options.tol)
+        if (reason := _without_spectra(study, options)) is not None:
+            skip("spectrum", reason)
+        else:
+            wanted = _spectrum_options(study, options, sections["field"])
+            attempt("spectrum", lambda: tasks.spectrum(study, wanted))
+            if wanted.time_us is None:
+                skip("polarization", f"{APPLIED} (--initial)")
     else:
-        skip("field", "the study has no probe" if study.orderings else "the study has no ordering")
+        reason = "the study has no probe" if study.orderings else "the study has no ordering"
+        skip("field", reason)
+        skip("spectrum", reason)
     if study.probes and study.susceptibility:
         attempt("shift", lambda: tasks.shift(study, tol=options.tol))
     else:
@@ -90,6 +128,10 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
             "probes": list(options.probes) or None,
             "rotate": options.rotate,
             "view": options.view,
+            "spectra": options.spectra,
+            "time_us": options.time_us,
+            "initial": options.initial,
+            "modes": options.modes,
             "tol": options.tol,
         },
         boundary=main["boundary"],
@@ -100,6 +142,58 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
             "left_out": left_out,
         },
     )
+
+
+def _without_modes(study: Study, options: ReportOptions) -> str | None:
+    """Why a report has no modes; None where it has."""
+    if options.modes is False:
+        return "not asked for"
+    if not any(size > 0 for size in study.moments.values()):
+        return "the study states no moment sizes in [moments]"
+    try:
+        sizes = stated_sizes(study)
+    except LatticedipError as error:
+        return str(error)
+    ions = sum(
+        1 for pair in zip(study.crystal.labels, study.crystal.symbols, strict=True) if not sizes.keys().isdisjoint(pair)
+    )
+    if options.modes is None and ions > MOST_IONS:
+        return f"{ions} magnetic ions in the cell take a while; ask for them with --modes"
+    return None
+
+
+def _without_spectra(study: Study, options: ReportOptions) -> str | None:
+    """Why a report has no spectra; None where it has."""
+    if not options.spectra:
+        return "not asked for"
+    count = len(study.orderings) * len(study.probes)
+    if count > MOST_SPECTRA:
+        return f"{count} spectra are more than {MOST_SPECTRA}. Name some with --ordering or --probe"
+    return None
+
+
+def _spectrum_options(study: Study, options: ReportOptions, fields: Mapping[str, Any]) -> SpectrumOptions:
+    """Spectra with P(t): of a powder in zero field or, where a direction is given or a field applied, of a crystal.
+
+    Without a direction there is no P(t) in an applied field.
+    """
+    powder = options.initial is None and not study.sample.applied_T.any()
+    time = None
+    if powder or options.initial is not None:
+        time = options.time_us or shown_time(fields)
+    return SpectrumOptions(powder=powder, time_us=time, initial=options.initial, tol=options.tol)
+
+
+def shown_time(fields: Mapping[str, Any]) -> float:
+    """The last moment of P(t) in µs, a round number, from the frequencies in the home cell."""
+    found = [row["frequency_MHz"] for entry in fields["orderings"] for row in entry["rows"]]
+    found = [value for value in found if value is not None and math.isfinite(value)]
+    turning = [value for value in found if value > NO_FREQUENCY * max(found)]
+    if not turning:
+        return LONGEST_US
+    time = min(SLOW_TURNS / min(turning), FAST_TURNS / max(turning), LONGEST_US)
+    step = 10.0 ** math.floor(math.log10(time))
+    return step * max(round_number for round_number in (1.0, 2.0, 5.0) if round_number * step <= time * (1 + 1e-9))
 
 
 def report_table(doc: dict[str, Any]) -> list[dict[str, Any]]:

@@ -5,12 +5,12 @@ differ, or curves stand in panels of their own, so that a print in grey says the
 returns it as a figure of matplotlib, and one that writes it to a file.
 """
 
-from latticedip.report.plots.curves import draw_directions, draw_modes
+from latticedip.report.plots.curves import draw_directions, draw_modes, modes_figure
 from latticedip.report.plots.field import draw_field, field_figure
 from latticedip.report.plots.ordering import draw_orderings, orderings_figure
 from latticedip.report.plots.rank import draw_rank, rank_figure
 from latticedip.report.plots.shift import draw_shift, shift_figure, shift_has_curve
-from latticedip.report.plots.spectrum import draw_spectrum
+from latticedip.report.plots.spectrum import draw_spectrum, spectrum_figure
 from latticedip.report.plots.style import SUFFIXES, check_library, check_plot, render
 
 __all__ = [
@@ -25,9 +25,11 @@ __all__ = [
     "draw_shift",
     "draw_spectrum",
     "field_figure",
+    "modes_figure",
     "orderings_figure",
     "rank_figure",
     "render",
     "shift_figure",
     "shift_has_curve",
+    "spectrum_figure",
 ]

@@ -14,12 +14,15 @@ from latticedip.report.plots.style import (
     PALE,
     ROW_IN,
     SMALL_PT,
+    TITLE_LETTERS,
     WIDTH_IN,
     check_count,
     check_plot,
     flat_stays_flat,
+    in_lines,
     plain,
     save,
+    set_title,
     signed,
 )
 
@@ -48,7 +51,7 @@ def modes_figure(document: Mapping[str, Any]) -> Figure:
     distance, energies = np.array(found["distance_per_A"]), np.array(found["energies_ueV_per_ion"])
     segment = np.array(found["segment"])
     figure = Figure(figsize=(WIDTH_IN, 2 * ROW_IN), layout="constrained")
-    figure.suptitle(plain(document["title"]))
+    set_title(figure, document["title"])
     panel = figure.subplots()
     for number in np.unique(segment):
         on = segment == number
@@ -93,7 +96,7 @@ def directions_figure(document: Mapping[str, Any]) -> Figure:
     from matplotlib.figure import Figure
 
     figure = Figure(figsize=(WIDTH_IN, ROW_IN * len(entries) + 0.5), layout="constrained")
-    figure.suptitle(plain(document["title"]))
+    set_title(figure, document["title"])
     panels = figure.subplots(len(entries), 3, squeeze=False, sharey="row")
     for entry, row in zip(entries, panels, strict=True):
         circles = list(dict.fromkeys((point["from"], point["towards"]) for point in entry["rows"]))
@@ -105,6 +108,6 @@ def directions_figure(document: Mapping[str, Any]) -> Figure:
             panel.set_xticks(np.arange(0, angle[-1] + 1, 45 if angle[-1] <= 180 else 90))
             panel.set_xlabel(f"{circle[0]} to {circle[1]} (degrees)")
         row[0].set_ylabel("energy (µeV per ion)")
-        row[0].set_title(plain(entry["ordering"]), loc="left")
+        row[0].set_title(in_lines(entry["ordering"], TITLE_LETTERS), loc="left")
         flat_stays_flat(row[0], [point["energy_ueV_per_ion"] for point in entry["rows"]])
     return figure

@@ -13,13 +13,16 @@ from latticedip.report.plots.style import (
     MIDDLE,
     PALE,
     SMALL_PT,
+    TITLE_LETTERS,
     WIDTH_IN,
     above_axis,
     check_count,
     check_plot,
     in_lines,
-    plain,
+    line_height,
     save,
+    set_title,
+    title_height,
 )
 from latticedip.study.rankings import field_levels
 
@@ -27,8 +30,9 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-#: Height of one ordering in a panel and of what is round the panel, in inches.
-LINE_IN, AROUND_IN, HEAD_IN = 0.3, 1.15, 0.4
+#: Height of one ordering in a panel, of what is round the panel and of the title, in inches; lines left free at the
+#: edges of the panel.
+LINE_IN, AROUND_IN, HEAD_IN, EDGE = 0.3, 1.15, 0.4, 0.3
 #: A picture holds at most this many lines, panels and levels of one line with their number of points beside them.
 MOST_LINES, MOST_LABELLED = 150, 6
 
@@ -59,9 +63,10 @@ def field_figure(document: Mapping[str, Any]) -> Figure:
     from matplotlib.figure import Figure
 
     unit = document["inputs"]["options"]["unit"]
-    height = len(probes) * (LINE_IN * len(entries) + AROUND_IN) + HEAD_IN
+    line = line_height((entry["ordering"] for entry in entries), LINE_IN)
+    height = len(probes) * (line * (len(entries) + EDGE) + AROUND_IN) + HEAD_IN + title_height(document["title"])
     figure = Figure(figsize=(WIDTH_IN, height), layout="constrained")
-    figure.suptitle(plain(document["title"]))
+    set_title(figure, document["title"])
     panels = figure.subplots(len(probes), 1, squeeze=False)[:, 0]
     waves = any(not float(x).is_integer() for entry in entries for k in entry["k"] for x in k)
     for probe, panel in zip(probes, panels, strict=True):
@@ -86,8 +91,8 @@ def _panel(panel: Axes, probe: str, entries: Sequence[Mapping[str, Any]], unit: 
                     size, place, xerr=row[f"field_size_su_{unit}"], color=MIDDLE, capsize=2.5, linewidth=1.0, zorder=2
                 )
         _levels(panel, place, levels(rows, unit))
-    title = plain(probe) + (f" ({plain(particle)})" if particle and particle != probe else "")
-    panel.set_title(title, loc="left", fontweight="bold")
+    title = probe + (f" ({particle})" if particle and particle != probe else "")
+    panel.set_title(in_lines(title, TITLE_LETTERS - 18), loc="left", fontweight="bold")
     panel.hlines(range(len(entries)), 0, 1, transform=panel.get_yaxis_transform(), color=PALE, linewidth=0.5, zorder=0)
     panel.set_yticks(range(len(entries)), [in_lines(entry["ordering"]) for entry in entries])
     panel.set_ylim(len(entries) - 0.4, -0.7)

@@ -22,6 +22,7 @@ from latticedip.report.plots.style import (
     in_lines,
     plain,
     save,
+    set_title,
 )
 from latticedip.report.tables import direction, short
 
@@ -38,11 +39,15 @@ FIELD_LENGTH = 0.17
 #: Arrows with less than this part of their length in the plane of the drawing are seen from their tip or tail; what is
 #: shorter than the second part of the longest is not drawn.
 END_ON, NOTHING = 0.12, 0.02
-#: Tallest and flattest panel, as height over width.
-TALLEST, FLATTEST = 1.5, 0.5
+#: Tallest and flattest panel, as height over width; cells in a row that ask for wide panels.
+TALLEST, FLATTEST, MANY_CELLS = 1.5, 0.4, 3
 HEAD_IN, FOOT_IN = 0.5, 0.6
 #: Rings of arrows seen end on, and the width of a letter of a name, in points.
 RING_PT, LETTER_PT = 8, 4.4
+#: Names of probes longer than this, or more than so many, stand in the legend; beside the probes are numbers then.
+LONGEST_NAME, MOST_NAMES = 14, 6
+#: Letters of a name in the legend, its columns then, and the height of a line there in inches.
+KEY_LETTERS, KEY_COLUMNS, KEY_LINE_IN = 46, 2, 0.17
 #: Sides of a mark that its name may stand on: x and y in half its size.
 SIDES = ((1, 0), (1, -1), (1, 1), (-1, 0), (-1, -1), (-1, 1), (0, -1), (0, 1))
 
@@ -100,16 +105,21 @@ def orderings_figure(document: Mapping[str, Any]) -> Figure:
 
     view = View.of(document["view"])
     scale = _scale(entries, view)
-    columns = min(len(entries), 2 if len(entries) in (2, 4) else 3)
+    # A row of many cells needs width.
+    long = any(max(max(cell) for cell in entry["cells"]) >= MANY_CELLS for entry in entries)
+    columns = min(len(entries), 2 if long or len(entries) in (2, 4) else 3)
     lines = -(-len(entries) // columns)
     shapes = [_extent(entry, view) for entry in entries]
     ratios = [float(np.clip(y / x, FLATTEST, TALLEST)) for x, y in shapes]
     by_line = [max(ratios[i * columns : (i + 1) * columns]) for i in range(lines)]
     wide = WIDTH_IN / columns if columns > 1 else 0.75 * WIDTH_IN
     heights = [wide * ratio + HEAD_IN for ratio in by_line]
-    figure = Figure(figsize=(WIDTH_IN, sum(heights) + HEAD_IN + FOOT_IN), layout="constrained")
+    tags = _tags(entries)
+    key = {tag: name for name, tag in tags.items() if tag != name}
+    foot = FOOT_IN + KEY_LINE_IN * -(-len(key) // KEY_COLUMNS)
+    figure = Figure(figsize=(WIDTH_IN, sum(heights) + HEAD_IN + foot), layout="constrained")
     seen = direction(document["view"]["eye_abc"])
-    figure.suptitle(plain(f"{document['title']}\nseen from {seen} (components along a, b, c)"))
+    set_title(figure, document["title"], f"seen from {seen} (components along a, b, c)")
     panels = figure.subplots(lines, columns, squeeze=False, height_ratios=heights).ravel()
     marks = _marks(entries)
     for panel in panels:
@@ -117,11 +127,23 @@ def orderings_figure(document: Mapping[str, Any]) -> Figure:
     end_on: set[int] = set()
     for number, (panel, entry, (x, y)) in enumerate(zip(panels, entries, shapes, strict=False)):
         per_point = float(max(x, y / by_line[number // columns])) / (72 * wide)
-        end_on |= _panel(panel, entry, view, scale, marks, per_point)
+        end_on |= _panel(panel, entry, view, scale, marks, tags, per_point)
     handles = _legend(entries, scale, marks, end_on)
     labels = [(handle[0] if isinstance(handle, tuple) else handle).get_label() for handle in handles]
-    figure.legend(handles, labels, loc="outside lower center", ncols=3, frameon=False)
+    if key:
+        handles += [_key_mark(tag) for tag in key]
+        labels += [in_lines(name, KEY_LETTERS, 1) for name in key.values()]
+    columns = KEY_COLUMNS if key else 3
+    figure.legend(handles, labels, loc="outside lower center", ncols=columns, frameon=False)
     return figure
+
+
+def _tags(entries: Sequence[Mapping[str, Any]]) -> dict[str, str]:
+    """What stands beside each probe: its name or, where one is long or there are many, its number."""
+    names = list(dict.fromkeys(probe["probe"] for entry in entries for probe in entry["probes"]))
+    if len(names) <= MOST_NAMES and all(len(name) <= LONGEST_NAME for name in names):
+        return {name: name for name in names}
+    return {name: str(number) for number, name in enumerate(names, start=1)}
 
 
 def _positions(entry: Mapping[str, Any], key: str) -> FloatArray:
@@ -177,7 +199,7 @@ def _marks(entries: Sequence[Mapping[str, Any]]) -> dict[tuple[str, bool], str]:
 
 def _panel(
     panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, marks: Mapping[tuple[str, bool], str],
-    per_point: float,
+    tags: Mapping[str, str], per_point: float,
 ) -> set[int]:  # fmt: skip
     """Draw one ordering. per_point: Å of the drawing in a point of print. Returns as `_arrows`, for all arrows."""
     wave = f"\nk = {k_text(entry['k'])}" if any(x for k in entry["k"] for x in k) else ""
@@ -198,7 +220,7 @@ def _panel(
         panel, view, _positions({"atoms": magnetic_atoms}, "atoms"), [a["moment_muB"] for a in magnetic_atoms],
         scale.per_muB, scale.largest_muB, per_point, pivot="mid", facecolor=INK, edgecolor="1.0", zorder=4,
     )  # fmt: skip
-    end_on |= _probes(panel, entry, view, scale, per_point)
+    end_on |= _probes(panel, entry, view, scale, tags, per_point)
     panel.margins(0.06)
     return end_on
 
@@ -278,7 +300,9 @@ def _along(at: FloatArray, arrows: FloatArray, pivot: str, count: int) -> FloatA
     return np.asarray(at[:, None] + part[:, None] * arrows[:, None])
 
 
-def _probes(panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, per_point: float) -> set[int]:
+def _probes(
+    panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, tags: Mapping[str, str], per_point: float
+) -> set[int]:
     if not entry["probes"]:
         return set()
     places = _positions(entry, "probes")
@@ -297,7 +321,7 @@ def _probes(panel: Axes, entry: Mapping[str, Any], view: View, scale: Scale, per
         # Where a ring would stand.
         taken.append(flat[given] + 0.8 * RING_PT * per_point)
         taken.append(_along(flat[given], view.flat(fields) * scale.per_T, "tail", 9).reshape(-1, 2))
-    _names(panel, [probe["probe"] for probe in entry["probes"]], flat, np.concatenate(taken), per_point)
+    _names(panel, [tags[probe["probe"]] for probe in entry["probes"]], flat, np.concatenate(taken), per_point)
     return end_on
 
 
@@ -322,6 +346,15 @@ def _names(panel: Axes, names: Sequence[str], flat: FloatArray, taken: FloatArra
         grid = [best + half * np.array([x, y]) for x in (-1, -0.5, 0, 0.5, 1) for y in (-1, 0, 1)]
         taken = np.concatenate([taken, grid])
         panel.update_datalim([best - half, best + half])
+
+
+def _key_mark(tag: str) -> Any:
+    """The number of a probe as a mark of the legend."""
+    from matplotlib.lines import Line2D
+
+    # Of a mark the longer side is given: two digits are wider than high.
+    size = 5.5 * max(1.0, 0.64 * len(tag))
+    return Line2D([], [], linestyle="", marker=f"$\\mathrm{{{tag}}}$", color=INK, markersize=size, markeredgewidth=0.2)
 
 
 def _legend(

@@ -16,17 +16,19 @@ from latticedip.report.plots.style import (
     check_count,
     check_plot,
     in_lines,
-    plain,
+    line_height,
     save,
+    set_title,
     signed,
+    title_height,
 )
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-#: Height of one ordering and of all that is round them, in inches.
-LINE_IN, AROUND_IN = 0.34, 1.5
+#: Height of one ordering and of all that is round them, in inches; lines left free at the edges of the panel.
+LINE_IN, AROUND_IN, EDGE = 0.34, 1.5, 0.35
 MOST_ORDERINGS = 60
 #: Rounding of an energy, as a part of its size, beside its error bound.
 ROUNDING = 1e-13
@@ -52,8 +54,10 @@ def rank_figure(document: Mapping[str, Any]) -> Figure:
     check_count(len(rows), "orderings", "Name some with --ordering.", MOST_ORDERINGS)
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(WIDTH_IN, LINE_IN * len(rows) + AROUND_IN), layout="constrained")
-    figure.suptitle(plain(document["title"]))
+    line = line_height((f"00  {row['ordering']}" for row in rows), LINE_IN)
+    height = line * (len(rows) + EDGE) + AROUND_IN + title_height(document["title"])
+    figure = Figure(figsize=(WIDTH_IN, height), layout="constrained")
+    set_title(figure, document["title"])
     panel = figure.subplots()
     energies = [row["energy_ueV_per_ion"] for row in rows]
     banded: set[int] = set()
@@ -73,7 +77,7 @@ def rank_figure(document: Mapping[str, Any]) -> Figure:
             textcoords="offset points", fontsize=SMALL_PT, ha="center", va="bottom",
             bbox={"facecolor": FAINT if place in banded else "1.0", "edgecolor": "none", "pad": 0.3},
         )  # fmt: skip
-    panel.set_yticks(range(len(rows)), [f"{row['rank']}  {in_lines(row['ordering'])}" for row in rows])
+    panel.set_yticks(range(len(rows)), [in_lines(f"{row['rank']}  {row['ordering']}") for row in rows])
     panel.set_ylim(len(rows) - 0.4, -0.75)
     _limits(panel)
     panel.set_xlabel("energy (µeV per ion)")

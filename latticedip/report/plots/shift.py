@@ -13,12 +13,15 @@ from latticedip.report.plots.style import (
     DASHES,
     INK,
     ROW_IN,
+    TITLE_LETTERS,
     WIDTH_IN,
     check_count,
     check_plot,
     flat_stays_flat,
+    in_lines,
     plain,
     save,
+    set_title,
 )
 from latticedip.report.points import kind_name, kinds
 from latticedip.report.tables import direction
@@ -64,16 +67,14 @@ def shift_figure(document: Mapping[str, Any]) -> Figure:
     from matplotlib.figure import Figure
 
     figure = Figure(figsize=(WIDTH_IN, (ROW_IN + 0.3) * len(groups) + 0.5), layout="constrained")
-    figure.suptitle(plain(document["title"]))
+    set_title(figure, document["title"])
     panels = figure.subplots(len(groups), 1 if turned or powder else 2, squeeze=False)
     for group, row in zip(groups, panels, strict=True):
-        row[0].set_title(plain(kind_name(group, rows)), loc="left")
+        row[0].set_title(in_lines(kind_name(group, rows), TITLE_LETTERS), loc="left")
         found = group[0]["shifts"]
         if turned or powder:
             draw = _rotation_panel if turned else _powder_panel
             draw(row[0], found, document)
-            if len(found) > 1:
-                row[0].legend(frameon=False, ncols=2)
             continue
         _curve_panel(row[0], found, "temperature_K")
         _curve_panel(row[1], found, "chi_cm3_per_mol")
@@ -81,7 +82,10 @@ def shift_figure(document: Mapping[str, Any]) -> Figure:
         row[1].set_xlabel("χ (cm³/mol of ions)")
         row[1].locator_params(axis="x", nbins=5)
         row[0].set_ylabel("shift (%)")
-        row[0].legend(frameon=False)
+    handles, labels = panels[0, 0].get_legend_handles_labels()
+    if len(handles) > 1:
+        # The same curves in every panel; below them, no curve runs through their names.
+        figure.legend(handles, labels, loc="outside lower center", ncols=4, frameon=False)
     return figure
 
 

@@ -44,8 +44,12 @@ DASHES: Any = ("-", (0, (5, 2)), (0, (1, 1.5)), (0, (6, 2, 1, 2)), (0, (10, 3)),
 WIDTH_IN, ROW_IN, HEAD_IN = 6.8, 2.1, 0.9
 #: Rows of panels in one picture.
 MOST_PANELS = 12
-#: Names longer than this (letters) go over several lines beside an axis.
-NAME_WIDTH = 26
+#: Names longer than this (letters) go over several lines beside an axis; more lines than these are cut off.
+NAME_WIDTH, MOST_LINES = 26, 4
+#: Letters of a title as wide as a picture, and of one as wide as half of it.
+TITLE_LETTERS, HALF_LETTERS = 76, 42
+#: Height of a line of a name beside an axis and of one of a title, in inches.
+NAME_LINE_IN, TITLE_LINE_IN = 0.135, 0.17
 
 
 def check_plot(path: Path) -> None:
@@ -74,9 +78,31 @@ def plain(text: str) -> str:
     return clean(text).replace("$", r"\$")
 
 
-def in_lines(name: str, width: int = NAME_WIDTH) -> str:
-    """A name broken into lines at blanks, plain."""
-    return plain("\n".join(textwrap.wrap(clean(name), width)) or name)
+def in_lines(name: str, width: int = NAME_WIDTH, most: int = MOST_LINES) -> str:
+    """A name broken into lines at blanks, plain; dots where it is longer than all lines that it may have."""
+    return plain("\n".join(_broken(name, width, most)))
+
+
+def line_height(names: Iterable[str], least: float) -> float:
+    """Height in inches of one line of a panel that has room for each of the names beside it, ``least`` at least."""
+    tallest = max((len(_broken(name, NAME_WIDTH, MOST_LINES)) for name in names), default=1)
+    return max(least, NAME_LINE_IN * tallest + 0.06)
+
+
+def _broken(name: str, width: int, most: int) -> list[str]:
+    return textwrap.wrap(clean(name), width, max_lines=most, placeholder=" …") or [name]
+
+
+def title_height(title: str) -> float:
+    """Height in inches of the lines of a title after its first."""
+    return TITLE_LINE_IN * (len(_broken(title, TITLE_LETTERS, MOST_LINES)) - 1)
+
+
+def set_title(figure: Figure, title: str, below: str = "") -> None:
+    """The title of a picture, over several lines where it is long, and what else is said below it."""
+    lines = [in_lines(title, TITLE_LETTERS) if title else "", plain(below)]
+    if any(lines):
+        figure.suptitle("\n".join(line for line in lines if line))
 
 
 def signed(value: float, format_spec: str) -> str:
@@ -95,6 +121,14 @@ def above_axis(panel: Axes, factor: float, label: str) -> None:
 
     above = panel.secondary_xaxis("top", functions=(times, back))
     above.set_xlabel(label)
+    few_ticks(above)
+
+
+def few_ticks(panel: Any, most: int = 6) -> None:
+    """At most so many steps of the x axis, so that their numbers stand apart in half a picture, too."""
+    from matplotlib.ticker import MaxNLocator
+
+    panel.xaxis.set_major_locator(MaxNLocator(most, steps=[1, 2, 2.5, 5, 10]))
 
 
 def flat_stays_flat(panel: Axes, values: Iterable[float], around: float = 0.08) -> None:
