@@ -320,7 +320,7 @@ MAGCIF = {
     ),
     "list not closed": (
         change(("_cell_length_a 6", "_k [0 0\n_cell_length_a 6")),
-        "bad.mcif: line 2: a list that begins with '[' is not closed by ']'.",
+        "bad.mcif: line 2: a list that begins with '[' is not closed by ']' in '_k [0 0'.",
     ),
     "loop of the wrong length": (
         change(("\nFe1 0 0 2 2", "\nFe1 0 0 2")),
@@ -328,11 +328,12 @@ MAGCIF = {
     ),
     "string not closed": (
         change(("'a,b,c;0,0,0'", "'a,b,c;0,0,0")),
-        "bad.mcif: line 8: the CIF syntax is broken (unterminated 'string').",
+        "bad.mcif: line 8: the CIF syntax is broken (unterminated 'string') in "
+        '"_parent_space_group.child_transform_Pp_abc \'a,b,c;0,0,0".',
     ),
     "tag twice": (
         change(("_cell_length_a 6", "_cell_length_a 6\n_cell_length_A 6")),
-        "bad.mcif: line 3: the CIF syntax is broken (duplicate tag _cell_length_A).",
+        "bad.mcif: line 3: the CIF syntax is broken (duplicate tag _cell_length_A) in '_cell_length_A 6'.",
     ),
     "zero bytes": (GOOD.encode() + b"\x00\x01", "bad.mcif: this is not a text file (it holds zero bytes)."),
     "UTF-16": (GOOD.encode("utf-16"), "bad.mcif: this is not a text file (it holds zero bytes)."),
@@ -346,7 +347,7 @@ MAGCIF = {
     ),
     "a page of text": (
         "Dear reader, this is no CIF.\n",
-        "bad.mcif: line 1: the CIF syntax is broken (expected block header (data_)).",
+        "bad.mcif: line 1: the CIF syntax is broken (expected block header (data_)) in 'Dear reader, this is no CIF.'.",
     ),
     "empty": ("", "bad.mcif: the file is empty."),
     "only blanks": (" \n\n", "bad.mcif: the file is empty."),

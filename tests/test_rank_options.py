@@ -3,33 +3,16 @@
 from __future__ import annotations
 
 import csv
-import json
 from pathlib import Path
 from typing import Any
 
 import pytest
-from click.testing import CliRunner, Result
+from click.testing import Result
 
-from latticedip.cli.main import main
 from latticedip.units import DIPOLE_EV_A3_PER_MUB2
+from tests.commands import Command, box_cif, enter
 
-CUBE = """data_rock_salt
-_cell_length_a 4.4
-_cell_length_b 4.4
-_cell_length_c 4.4
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'F m -3 m'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 Mn 0 0 0
-O1 O 0.5 0.5 0.5
-"""
+CUBE = box_cif("Mn1 Mn 0 0 0\nO1 O 0.5 0.5 0.5\n", 4.4, name="rock_salt", group="F m -3 m")
 STUDY = """title = "Rock salt"
 [crystal]
 file = "rock.cif"
@@ -58,29 +41,21 @@ other_energy_meV_per_ion = -31.0
 #: Luttinger and Tisza, Phys. Rev. 70, 954 (1946): type II of the fcc array, n = 4 per a³; a ferromagnet has −2π/3.
 TYPE_TWO, FERRO = -1.8075736338, -2.0943951024
 UNIT_UEV = 4 * DIPOLE_EV_A3_PER_MUB2 * 25 / 4.4**3 * 1e6
+#: Every call names its command first.
+CALLS = Command(env={"COLUMNS": "80"})
 
 
 @pytest.fixture(autouse=True)
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "rock.cif").write_text(CUBE, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
+    return enter(tmp_path, monkeypatch, {"rock.cif": CUBE, "study.toml": STUDY})
 
 
 def run(command: str, *arguments: str) -> Result:
-    result = CliRunner().invoke(main, [command, "study.toml", *arguments], env={"COLUMNS": "80"})
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
+    return CALLS.run(command, "study.toml", *arguments)
 
 
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
+def document(command: str, *arguments: str) -> dict[str, Any]:
+    return CALLS.document(command, "study.toml", *arguments)
 
 
 def test_the_bound_is_there_by_itself() -> None:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import csv
 import io
-import json
 import subprocess
 import sys
 from pathlib import Path
@@ -12,12 +11,11 @@ from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner, Result
 
 import latticedip as ld
-from latticedip.cli.main import main
 from latticedip.errors import InputError
 from latticedip.report import plots
+from tests.commands import Command, enter
 
 CRYSTAL = """1
 Lattice="4.2 0 0 0 4.2 0 0 0 5.1" Properties=species:S:1:pos:R:3 pbc="T T T"
@@ -42,29 +40,13 @@ name = "nucleus"
 particle = "55Mn"
 site = "Mn"
 """
+command = Command(("spectrum", "study.toml"))
+run, document = command.run, command.document
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "layer.xyz").write_text(CRYSTAL, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
-
-
-def run(*arguments: str) -> Result:
-    result = CliRunner().invoke(main, ["spectrum", "study.toml", *arguments])
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(*arguments: str) -> dict[str, Any]:
-    result = run(*arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
+    return enter(tmp_path, monkeypatch, {"layer.xyz": CRYSTAL, "study.toml": STUDY})
 
 
 def spectra(doc: dict[str, Any]) -> list[dict[str, Any]]:
@@ -131,12 +113,51 @@ def test_the_polarization_is_that_of_the_api(folder: Path) -> None:
 
 
 @pytest.mark.usefixtures("folder")
+def test_a_powder_in_an_applied_field(folder: Path) -> None:
+    """Along the field, and at an angle to it; the study's applied field counts as that of the option does."""
+    options = (
+        "--ordering",
+        "third",
+        "--probe",
+        "muon A",
+        "--powder",
+        "--time",
+        "1",
+        "--points",
+        "11",
+        "--nuclear",
+        "1",
+    )
+    study = ld.read_study(folder / "study.toml")
+    found = ld.spectrum(study.orderings[1], study.probes[0], powder=True, applied_T=[0, 0.03, 0.04])
+    for angle, start in (([], [0, 3, 4]), (["--angle", "90"], [1, 0, 0])):
+        doc = document(*options, "--applied", "0", "0.03", "0.04", *angle)
+        signal = spectra(doc)[0]["polarization"]
+        expected = ld.polarization(found, np.linspace(0, 1, 11), initial=start, nuclear_width_per_us=1.0)
+        assert signal["polarization"] == pytest.approx(expected.values, abs=1e-12)
+        assert doc["orderings"][0]["notes"][-2:] == list(expected.notes[-2:])
+        assert doc["inputs"]["options"]["angle_deg"] == (90.0 if angle else None)
+    text = run(*options, "--applied", "0", "0.03", "0.04").stdout
+    assert "Polarization in a powder, along the applied field, nuclear moments with a width of 1 1/µs" in text
+    assert "the whole internal field" in text
+    (folder / "study.toml").write_text(STUDY + "[sample]\napplied_T = [0, 0.03, 0.04]\n", encoding="utf-8")
+    again = spectra(document(*options, "--angle", "90"))[0]["polarization"]
+    assert again["polarization"] == pytest.approx(signal["polarization"], abs=1e-12)
+    assert "Polarization in a powder, at 90° to the applied field" in run(*options, "--angle", "90").stdout
+
+
+@pytest.mark.usefixtures("folder")
 def test_the_width_of_nuclear_moments_is_worked_out(folder: Path) -> None:
     found = spectra(document("--nuclear", "auto", "--probe", "muon A", "--ordering", "third"))[0]
     study = ld.read_study(folder / "study.toml")
     expected = ld.linewidth(study.crystal, [0.5, 0.5, 0.12], particle="muon").zero_field_width_per_us
     assert found["nuclear_width_per_us"] == pytest.approx(expected)
     assert found["nuclear_width_T"] == pytest.approx(expected / (2 * np.pi * 135.53881), rel=1e-7)
+    (folder / "study.toml").write_text(STUDY.replace("0.12]\n", "0.12]\nspread_A = 1.2\n"), encoding="utf-8")
+    moving = spectra(document("--nuclear", "auto", "--probe", "muon A", "--ordering", "third"))[0]
+    expected = ld.linewidth(study.crystal, [0.5, 0.5, 0.12], particle="muon", spread=1.2).zero_field_width_per_us
+    assert moving["nuclear_width_per_us"] == pytest.approx(expected)
+    assert moving["nuclear_width_per_us"] < 0.99 * found["nuclear_width_per_us"]
 
 
 @pytest.mark.usefixtures("folder")
@@ -174,6 +195,14 @@ def test_domains_are_listed_or_averaged() -> None:
          "(--initial c, for example); for a powder say so (--powder).\n"),
         (["--initial", "c"], "Error: an initial direction or a detector belongs to a polarization: ask for one with a "
          "time.\n"),
+        (["--time", "1", "--powder", "--initial", "c"], "Error: --initial and --detector are directions in a crystal, "
+         "which a powder does not have. Leave them out; in an applied field --angle says how the spin starts to it.\n"),
+        (["--time", "1", "--powder", "--angle", "90"], "Error: --angle is that between an applied field and the spin "
+         "in a powder; leave it out here.\n"),
+        (["--time", "1", "--initial", "c", "--angle", "90", "--applied", "0", "0", "1"], "Error: --angle is that "
+         "between an applied field and the spin in a powder; leave it out here.\n"),
+        (["--powder", "--angle", "90", "--applied", "0", "0", "1"], "Error: an initial direction or a detector belongs "
+         "to a polarization: ask for one with a time.\n"),
         (["--time", "-1", "--powder"], "Error: the time must be a finite number of µs above 0, got -1.0.\n"),
         (["--bins", "1"], "Error: bins must lie between 2 and 100000, got 1.\n"),
         (["--points", "1", "--time", "1", "--powder"], "Error: points must lie between 2 and 100000, got 1.\n"),
@@ -236,10 +265,10 @@ def test_axes_carry_units() -> None:
 def test_too_many_panels_are_refused() -> None:
     pytest.importorskip("matplotlib")
     doc = document()
-    doc["orderings"] = doc["orderings"] * 4
+    doc["orderings"] = doc["orderings"] * 8
     with pytest.raises(InputError) as caught:
         plots.draw_spectrum(doc, Path("picture.png"))
-    assert str(caught.value) == ("16 spectra do not fit into one picture of at most 12. Name an ordering or a probe.")
+    assert str(caught.value) == ("32 spectra do not fit into one picture of at most 24. Name an ordering or a probe.")
 
 
 def test_without_matplotlib_the_message_says_what_to_install(folder: Path) -> None:

@@ -155,7 +155,9 @@ def test_extended_moments_are_a_spread_probe():
         alone = ld.Ordering(ordering.crystal, components, ordering.k)
         parts.append(ld.local_field(alone, POINTS, moment_spread=spread).total)
     assert np.abs(sum(parts) - each.total).max() < 1e-11
-    assert each.notes[0] == "moments are extended: Gaussian spread {'Mn': 0.7, 'Fe': 0.5} (Å rms, or Å²)"
+    assert each.notes[0] == (
+        "moments are extended: Gaussian spread of Mn 0.7 Å rms along each axis; Fe 0.5 Å rms along each axis"
+    )
 
 
 @pytest.mark.parametrize("name", CASES)

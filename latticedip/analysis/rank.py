@@ -18,6 +18,7 @@ from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.physics.energy import Energy, dipolar_energy
 from latticedip.physics.field import LocalField, local_field
+from latticedip.physics.spread import moment_spread_words
 from latticedip.probe import Probe
 from latticedip.sample import Sample
 from latticedip.units import J_PER_M3_PER_EV_A3
@@ -26,6 +27,8 @@ CAVEAT = (
     "Dipolar energies only: exchange, crystal field and the probe's own distortion of its surroundings are left out. "
     "A ranking is no proof of an ordering."
 )
+#: What is said of energies where moments are extended.
+POINT_ENERGIES = "energies are those of point dipoles: the spread of the moments counts in fields at probes alone"
 #: Rounding of an energy, as a part of its size; added to the bound that follows from tol when ties are found.
 ROUNDING = 1e-13
 
@@ -132,13 +135,15 @@ def rank(
     sample: Sample | None = None,
     rotate: bool = False,
     probes: Sequence[Probe] = (),
+    moment_spread: Any = None,
     tol: float = 1e-10,
 ) -> Ranking:
     """Rank orderings by energy per magnetic ion (dipolar, shape and applied field), lowest first, ties as given.
 
     orderings: in one Cartesian frame, each on its own crystal. sample: one for all; None means N = 0.
     rotate: also turn each pattern rigidly as a whole to its best orientation, and rank those.
-    probes: fields are worked out at each, under every ordering as ranked. tol: as `dipole_tensor`.
+    probes: fields are worked out at each, under every ordering as ranked. moment_spread: of the moments, as
+    `local_field`, in these fields alone; energies stay those of point dipoles. tol: as `dipole_tensor`.
 
     Raises InputError for an empty list, an ordering without moments, two probes of one name, or another kind of object.
     """
@@ -165,7 +170,10 @@ def rank(
             orientation = best_orientation(ordering, sample=sample, tol=tol)
             ordering = ordering.rotated(orientation.easy_rotation)
             energy = dipolar_energy(ordering, sample=sample, tol=tol)
-        fields = {probe.name: local_field(ordering, probe, sample=sample, tol=tol) for probe in probes}
+        fields = {
+            probe.name: local_field(ordering, probe, moment_spread=moment_spread, sample=sample, tol=tol)
+            for probe in probes
+        }
         evaluated.append((ordering, energy, orientation, fields))
     numbers, ties = _ranked([energy for _, energy, _, _ in evaluated])
     evaluated = [evaluated[number] for number in numbers]
@@ -174,7 +182,8 @@ def rank(
         RankingRow(ordering, energy, energy.per_ion_eV - lowest, tie, fields, orientation)
         for (ordering, energy, orientation, fields), tie in zip(evaluated, ties, strict=True)
     )
-    return Ranking(rows, rotate, _boundary(rows), (CAVEAT,))
+    notes = [] if moment_spread is None else [*moment_spread_words(moment_spread), POINT_ENERGIES]
+    return Ranking(rows, rotate, _boundary(rows), (*notes, CAVEAT))
 
 
 def _ranked(energies: list[Energy]) -> tuple[list[int], list[bool]]:

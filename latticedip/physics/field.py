@@ -2,42 +2,40 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from latticedip.checks import ComplexArray, FloatArray, as_floats, check_tol, frozen
+from latticedip.checks import ComplexArray, FloatArray, check_tol, frozen
 from latticedip.crystal.displace import MovedPairs
-from latticedip.crystal.model import OVERLAP_A, SAME_PLACE_A, Crystal
-from latticedip.crystal.spread import as_spread, carried_spreads, covariance_of
+from latticedip.crystal.model import Crystal
+from latticedip.crystal.spread import as_spread
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.physics.boundary import boundary_words, check_sample, magnetization_T
 from latticedip.physics.contact import contact_field
 from latticedip.physics.coupling import require_bulk
+from latticedip.physics.places import Places, places_of, targets_cart
 from latticedip.physics.spread import (
     cloud_fields,
     cloud_gradients,
     exchanged,
     exchanged_tensors,
     moment_clouds,
+    moment_spread_words,
     moments_of,
-    probe_words,
 )
-from latticedip.probe import Contact, Probe
+from latticedip.probe import Contact
 from latticedip.sample import Sample
 from latticedip.sums.bulk import lattice_sum
 from latticedip.sums.fields import field_plan, lattice_field
-from latticedip.sums.lattice import reduce_cell
 
 if TYPE_CHECKING:
     from latticedip.physics.uncertainty import FieldUncertainty
 
-#: A site carried over from another crystal is the atom of its element this close (Å): as far as matching lets it lie.
-CARRIED_SITE_A = 0.2
 #: Points evaluated together, for gradients and for fields.
 BLOCK, FIELD_BLOCK = 4096, 2**18
 #: Below this field (T) the direction of B, and so the gradient of |B|, has no meaning.
@@ -139,7 +137,7 @@ class LocalField:
     @property
     def targets_cart(self) -> FloatArray:
         """Shape (n, 3) float in Å. Cartesian points; on a site with the rounding of the site itself."""
-        return _targets_cart(self.crystal, self.points, self.sites)
+        return targets_cart(self.crystal, self.points, self.sites)
 
     @cached_property
     def uncertainty(self) -> FieldUncertainty:
@@ -200,27 +198,6 @@ class LocalField:
         }
 
 
-@dataclass(eq=False, slots=True)
-class _Row:
-    """One point to evaluate: where it is, what it was called and which contact terms act there.
-
-    site: the site it sits on, where that is known. element: of the site it stands for, carried from another crystal.
-    spread: None, rms displacement or covariance. probe: None for a bare point.
-    """
-
-    point: FloatArray
-    reference: FloatArray
-    name: str
-    particle: str
-    MHz_per_T: float
-    contact: tuple[Contact, ...]
-    multiplicity: int
-    site: int = -1
-    element: str = ""
-    spread: float | FloatArray | None = None
-    probe: Probe | None = None
-
-
 def local_field(
     ordering: Ordering,
     points: Any,
@@ -240,7 +217,8 @@ def local_field(
         Cartesian covariance in Å². The dipolar part is then the average over a Gaussian cloud. An isotropic cloud
         changes nothing until it reaches an ion; where it does, the traceless (principal-value) part is meant, and the
         rest is contact. An atom that a point sits on stays left out.
-    moment_spread: the same for the moments (extended ions), for all or as a mapping of labels or elements to spreads.
+    moment_spread: the same for the moments (extended ions), one for all as it stands, or by label or element (of the
+        crystal that probes are given in): there a covariance is that of the first atom, carried to the others.
     A point within 1e-3 Å of an atom is that site, and leaves that atom out.
 
     Raises InputError for a point between 1e-3 and 0.1 Å from an atom (on a site: from another magnetic one), an unknown
@@ -253,57 +231,54 @@ def local_field(
     check_tol(tol)
     check_sample(sample)
     specimen = Sample() if sample is None else sample
-    rows = _rows(ordering, points, as_spread("spread", spread))
-    crystal = ordering.crystal
-    placed, sites = _snap(ordering, rows)
-    clouds = _filled(rows, (3, 3), lambda i, row: None if row.spread is None else covariance_of(row.spread))
-    extended = moment_clouds(ordering, moment_spread)
-    targets = _targets_cart(crystal, placed, sites)
+    places = places_of(ordering, points, as_spread("spread", spread))
+    crystal, n = ordering.crystal, len(places)
+    home = crystal if ordering.reference is None else ordering.reference.crystal
+    clouds, extended = places.clouds(), moment_clouds(ordering, moment_spread)
+    targets = targets_cart(crystal, places.points, places.sites)
     smeared = _is_smeared(clouds, extended)
-    whole, bound = np.zeros((len(rows), 3)), np.zeros(len(rows))
-    whole[~smeared], bound[~smeared] = _whole_sum(ordering, targets[~smeared], tol)
     reached: list[str] = []
     if np.any(smeared):
-        names = [row.name for row, is_smeared in zip(rows, smeared, strict=True) if is_smeared]
+        whole, bound = np.zeros((n, 3)), np.zeros(n)
+        whole[~smeared], bound[~smeared] = _whole_sum(ordering, targets[~smeared], tol)
+        names = [name for name, is_smeared in zip(places.names, smeared, strict=True) if is_smeared]
         whole[smeared], bound[smeared], reached = cloud_fields(
             ordering, targets[smeared], clouds[smeared], extended, tol, names
         )
-    moved: tuple[MovedPairs | None, ...] = (None,) * len(rows)
-    if not _are_bare(rows):
-        moved = tuple(_moved(ordering, row, point) for row, point in zip(rows, placed, strict=True))
+    else:
+        whole, bound = _whole_sum(ordering, targets, tol)
+    moved = _moved(ordering, places)
     for i, pairs in enumerate(moved):
         if pairs is not None:
-            change, _ = exchanged_tensors(ordering, pairs, clouds[i], extended, rows[i].name)
+            change, _ = exchanged_tensors(ordering, pairs, clouds[i], extended, places.names[i])
             whole[i] += np.einsum("nab,nb->a", change, moments_of(ordering, pairs))
     magnetization = magnetization_T(ordering)
-    n = len(rows)
-    contact = _filled(rows, (3,), lambda i, row: _contact_at(ordering, row, placed[i]))
-    notes = [*crystal.notes, *ordering.notes, *_spread_notes(rows, moment_spread), *reached]
-    if ordering.reference is not None and any(row.particle for row in rows):
+    notes = [*crystal.notes, *ordering.notes, *moment_spread_words(moment_spread), *places.notes(), *reached]
+    if ordering.reference is not None and places.probes:
         notes.append(ordering.reference.how)
     return LocalField(
         ordering=ordering,
-        points=frozen(placed),
-        reference_points=frozen(_stacked([row.reference for row in rows])),
-        probe_names=tuple(row.name for row in rows),
-        particles=tuple(row.particle for row in rows),
-        sites=frozen(sites),
-        multiplicity=frozen(np.array([row.multiplicity for row in rows], dtype=int)),
-        MHz_per_T=frozen(np.array([row.MHz_per_T for row in rows], dtype=float)),
+        points=frozen(places.points),
+        reference_points=frozen(places.reference),
+        probe_names=places.names,
+        particles=places.particles,
+        sites=frozen(places.sites),
+        multiplicity=frozen(places.multiplicity),
+        MHz_per_T=frozen(places.MHz_per_T),
         dipolar=frozen(whole - magnetization / 3),
         lorentz=frozen(np.tile(magnetization / 3, (n, 1))),
         demagnetizing=frozen(np.tile(-specimen.demagnetizing_tensor @ magnetization, (n, 1))),
-        contact=frozen(contact),
+        contact=frozen(_contact(ordering, places)),
         applied=frozen(np.tile(specimen.applied_T, (n, 1))),
         error_bound_T=frozen(bound),
         boundary=boundary_words(ordering, sample),
         tol=tol,
         demagnetizing_tensor=frozen(specimen.demagnetizing_tensor),
-        contacts=tuple(row.contact for row in rows),
+        contacts=places.contacts,
         moved=moved,
         clouds_A2=frozen(clouds),
         moment_clouds_A2=extended,
-        position_su_cart=frozen(_filled(rows, (3, 3), lambda i, row: _position_su(ordering, row))),
+        position_su_cart=frozen(places.position_su_cart(home)),
         notes=tuple(dict.fromkeys(note for note in notes if note)),
     )
 
@@ -313,159 +288,34 @@ def _is_smeared(clouds: FloatArray, of_moments: FloatArray) -> np.ndarray:
     return np.any(clouds != 0.0, axis=(1, 2)) | bool(np.any(of_moments))
 
 
-def _moved(ordering: Ordering, row: _Row, point: FloatArray) -> MovedPairs | None:
-    if row.probe is None or not row.probe.displaced:
-        return None
-    return exchanged(ordering, point, row.reference, row.probe)
+def _moved(ordering: Ordering, places: Places) -> tuple[MovedPairs | None, ...]:
+    """Per row, the pairs that displaced neighbours change."""
+    found: list[MovedPairs | None] = [None] * len(places)
+    for row, probe in enumerate(places.probes):
+        if probe.displaced:
+            found[row] = exchanged(ordering, places.points[row], places.reference[row], probe)
+    return tuple(found)
 
 
-def _stacked(vectors: list[FloatArray]) -> FloatArray:
-    """Shape (n, 3) float. Several times faster than an array of a list of small arrays."""
-    return np.concatenate(vectors).reshape(-1, 3) if vectors else np.zeros((0, 3))
-
-
-def _are_bare(rows: list[_Row]) -> bool:
-    """True for points without a Probe and without a spread: rows are all of one kind, and a million may come."""
-    return not rows or (rows[0].probe is None and rows[0].spread is None)
-
-
-def _filled(rows: list[_Row], shape: tuple[int, ...], value: Callable[[int, _Row], FloatArray | None]) -> FloatArray:
-    """Shape (n, *shape) float. One value per row, zero where there is none, as for most of a million points."""
-    out = np.zeros((len(rows), *shape))
-    if _are_bare(rows):
-        return out
-    for i, row in enumerate(rows):
-        found = value(i, row)
-        if found is not None:
-            out[i] = found
+def _contact(ordering: Ordering, places: Places) -> FloatArray:
+    """Shape (n, 3) float in T. Contact fields, zero for bare points."""
+    out = np.zeros((len(places), 3))
+    for row in range(len(places.probes)):
+        terms = places.contacts[row]
+        if not terms:
+            continue
+        try:
+            out[row] = contact_field(ordering, places.points[row], terms)
+        except InputError as error:
+            raise InputError(f"{places.names[row]}, ordering {ordering.name!r}: {error}") from None
     return out
-
-
-def _contact_at(ordering: Ordering, row: _Row, point: FloatArray) -> FloatArray | None:
-    if not row.contact:
-        return None
-    try:
-        return contact_field(ordering, point, row.contact)
-    except InputError as error:
-        raise InputError(f"{row.name}, ordering {ordering.name!r}: {error}") from None
-
-
-def _position_su(ordering: Ordering, row: _Row) -> FloatArray | None:
-    """Shape (3, 3) float in Å. Rows: the cell vectors times the standard uncertainties of the coordinates."""
-    if row.probe is None or row.probe.position_su is None:
-        return None
-    home = ordering.crystal if ordering.reference is None else ordering.reference.crystal
-    return np.asarray(row.probe.position_su[:, None] * home.cell)
-
-
-def _spread_notes(rows: list[_Row], moment_spread: Any) -> list[str]:
-    notes = [] if moment_spread is None else [f"moments are extended: Gaussian spread {moment_spread} (Å rms, or Å²)"]
-    for row in rows[:1] if _are_bare(rows) else rows:
-        name = "every point" if row.probe is None else row.name
-        notes += probe_words(name, row.spread, () if row.probe is None else row.probe.displaced)
-    return notes
-
-
-def _rows(ordering: Ordering, points: Any, spread: float | FloatArray | None) -> list[_Row]:
-    if isinstance(points, Probe):
-        points = [points]
-    if isinstance(points, Sequence) and points and all(isinstance(p, Probe) for p in points):
-        return [row for probe in points for row in _probe_rows(ordering, probe, spread)]
-    if isinstance(points, Sequence) and any(isinstance(p, Probe) for p in points):
-        raise InputError("points must be all Probes or all fractional positions, not a mixture.")
-    positions = np.zeros((0, 3)) if np.size(points) == 0 else as_floats("points", points, (None, 3))
-    return [_Row(p, p, f"point {i + 1}", "", float("nan"), (), 1, spread=spread) for i, p in enumerate(positions)]
-
-
-def _probe_rows(ordering: Ordering, probe: Probe, spread: float | FloatArray | None) -> Iterator[_Row]:
-    home = ordering.crystal if ordering.reference is None else ordering.reference.crystal
-    sites = [-1] if probe.site is None else list(home.find(probe.site))
-    own = spread if probe.spread is None else probe.spread
-    spreads = [own] if probe.site is None else carried_spreads(home, sites, own, probe.name)
-    found = []
-    for site, cloud in zip(sites, spreads, strict=True):
-        position = probe.position if site < 0 else home.positions[site]
-        if ordering.reference is None:
-            found.append((position, position, site, "", cloud))
-        else:
-            element = "" if site < 0 else home.symbols[site]
-            found += [(point, position, -1, element, cloud) for point in ordering.reference.carry(position)]
-    for point, position, site, element, cloud in found:
-        yield _Row(
-            point, position, probe.name, probe.particle, probe.MHz_per_T, probe.contact, len(found), site, element,
-            cloud, probe,
-        )  # fmt: skip
-
-
-def _snap(ordering: Ordering, rows: list[_Row]) -> tuple[FloatArray, np.ndarray]:
-    """Put points within 1e-3 Å of an atom onto it; returns points and the site of each (−1: none)."""
-    crystal = ordering.crystal
-    placed = _stacked([row.point for row in rows])
-    sites = np.array([row.site for row in rows], dtype=int)
-    carried = np.array([bool(row.element) for row in rows], dtype=bool)
-    if crystal.n_sites == 0:
-        return placed, sites
-    lattice = reduce_cell(crystal.cell)
-    for block in _blocks(len(rows), max(1, 2**20 // crystal.n_sites)):
-        # In a reduced cell rounding each coordinate finds the nearest image, wherever that is as near as matters here.
-        gap = (placed[block, None, :] - crystal.positions[None]) @ crystal.cell @ lattice.inverse
-        whole = np.round(gap)
-        distance = np.linalg.norm((gap - whole) @ lattice.cell, axis=2)
-        close = (distance.min(axis=1) < OVERLAP_A) | carried[block]
-        for i in np.flatnonzero(close):
-            row = block.start + int(i)
-            site = sites[row] if sites[row] >= 0 else _site_at(ordering, rows[row], distance[i])
-            sites[row] = site
-            placed[row] = crystal.positions[site] + whole[i, site] @ lattice.steps
-            apart = np.linalg.norm((gap[i] - whole[i] - (gap[i, site] - whole[i, site])) @ lattice.cell, axis=1)
-            split = np.flatnonzero(ordering.is_magnetic & (apart > SAME_PLACE_A) & (apart < OVERLAP_A))
-            if len(split):
-                other = int(split[0])
-                raise InputError(
-                    f"{rows[row].name} sits on atom {crystal.labels[site]} at {_text(placed[row])}, "
-                    f"{apart[other]:.4f} Å from the magnetic atom {crystal.labels[other]}: only one of them is there "
-                    "at a time. Give both the same position."
-                )
-    return placed, sites
-
-
-def _site_at(ordering: Ordering, row: _Row, distance: FloatArray) -> int:
-    """The site a row near an atom sits on; InputError where it is too close to an atom without being on it."""
-    crystal = ordering.crystal
-    if row.element:
-        alike = np.where([symbol == row.element for symbol in crystal.symbols], distance, np.inf)
-        site = int(np.argmin(alike))
-        if alike[site] > CARRIED_SITE_A:
-            raise InputError(
-                f"{row.name}: the ordering {ordering.name!r} has no {row.element} within {CARRIED_SITE_A} Å of "
-                f"{_text(row.point)}, where the site comes to lie in its cell."
-            )
-        return site
-    site = int(np.argmin(distance))
-    if distance[site] > SAME_PLACE_A:
-        raise InputError(
-            f"{row.name} at {_text(row.point)} lies {distance[site]:.4f} Å from atom {crystal.labels[site]} at "
-            f"{_text(crystal.positions[site])}. A point must be at least {OVERLAP_A} Å from every atom, or on a site "
-            f"(within {SAME_PLACE_A} Å)."
-        )
-    return site
-
-
-def _targets_cart(crystal: Crystal, points: FloatArray, sites: np.ndarray) -> FloatArray:
-    targets = points @ crystal.cell
-    on = sites >= 0
-    if np.any(on):
-        # On a site the same rounding as the site itself, so that the source is recognised as its own.
-        cells = np.round(points[on] - crystal.positions[sites[on]])
-        targets[on] = crystal.places_cart[sites[on]] + cells @ crystal.cell
-    return np.asarray(targets)
 
 
 def _whole_sum(ordering: Ordering, targets: FloatArray, tol: float) -> tuple[FloatArray, FloatArray]:
     """N = 0 lattice sum at Cartesian targets in T, and the bound of its error."""
     total, bound = np.zeros((len(targets), 3)), np.zeros(len(targets))
     for k, moments, sources in _components(ordering):
-        plan = field_plan(ordering.crystal.cell, k, tol, len(sources))
+        plan = field_plan(ordering.crystal.cell, k, tol, len(sources), len(targets))
         placed = plan.place(sources)
         size = float(np.abs(moments).sum())
         for rows in _blocks(len(targets), FIELD_BLOCK):
@@ -487,7 +337,3 @@ def _components(ordering: Ordering) -> Iterator[tuple[FloatArray, ComplexArray, 
 def _blocks(n: int, size: int = BLOCK) -> Iterator[slice]:
     for start in range(0, n, size):
         yield slice(start, min(n, start + size))
-
-
-def _text(position: FloatArray) -> str:
-    return "(" + ", ".join(f"{x:.5g}" for x in position) + ")"

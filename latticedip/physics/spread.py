@@ -14,10 +14,11 @@ import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, frozen
 from latticedip.crystal.displace import Displaced, MovedPairs, moved_pairs
-from latticedip.crystal.model import OVERLAP_A
+from latticedip.crystal.model import OVERLAP_A, Crystal
 from latticedip.crystal.neighbours import neighbours_of
 from latticedip.crystal.place import place_of
-from latticedip.crystal.spread import as_spread, covariance_of
+from latticedip.crystal.spread import SAME_TENSOR, as_spread, carriers, covariance_of, turned_covariance
+from latticedip.crystal.symmetry import operations_of
 from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.probe import Probe
@@ -64,18 +65,75 @@ class PairSums:
 def moment_clouds(ordering: Ordering, spread: Any) -> FloatArray:
     """Shape (n_sites, 3, 3) float in Å². Covariances of moments, from one spread for all or one by label or element.
 
-    Raises InputError for an unknown label and as `as_spread`.
+    Names are those of the crystal that probes are given in: that of ``ordering.reference`` where there is one.
+
+    Raises InputError as `named_clouds` and `as_spread`, and for an ion that the reference crystal does not have.
     """
     crystal = ordering.crystal
+    if not isinstance(spread, Mapping):
+        one = covariance_of(as_spread("moment_spread", spread))
+        return frozen(np.tile(one, (crystal.n_sites, 1, 1)))
+    if ordering.reference is None:
+        return named_clouds(crystal, spread)
+    home, transform = ordering.reference.crystal, ordering.reference.transform
+    named = named_clouds(home, spread)
     clouds = np.zeros((crystal.n_sites, 3, 3))
-    if isinstance(spread, Mapping):
-        # Labels win over elements, as everywhere.
-        for name in sorted(spread, key=lambda name: name in crystal.labels):
-            value = as_spread(f"moment_spread of {name}", spread[name])
-            clouds[list(crystal.find(name))] = covariance_of(value)
-    else:
-        clouds[:] = covariance_of(as_spread("moment_spread", spread))
+    for site in np.flatnonzero(ordering.is_magnetic if np.any(named) else []):
+        gaps = transform.P @ crystal.positions[site] + transform.p - home.positions
+        alike = np.array([symbol == crystal.symbols[site] for symbol in home.symbols])
+        distance = np.where(alike, np.linalg.norm((gaps - np.round(gaps)) @ home.cell, axis=1), np.inf)
+        if distance.min(initial=np.inf) > SAME_ATOM_A:
+            raise InputError(
+                f"moment_spread: the crystal of the study has no {crystal.symbols[site]} within {SAME_ATOM_A} Å of the "
+                f"place of atom {crystal.labels[site]} of the ordering {ordering.name!r}."
+            )
+        clouds[site] = named[int(np.argmin(distance))]
     return frozen(clouds)
+
+
+def named_clouds(crystal: Crystal, spread: Mapping[str, Any]) -> FloatArray:
+    """Shape (n_sites, 3, 3) float in Å². Covariances by label or element (the label wins); zero where none is named.
+
+    A covariance is that of the first atom of its name; the operations of the crystal carry it to the others.
+
+    Raises InputError for an unknown name, as `as_spread`, and for a covariance without the symmetry of its site or
+    under a name whose atoms are of several kinds.
+    """
+    clouds = np.zeros((crystal.n_sites, 3, 3))
+    # Labels win over elements, as everywhere.
+    for name in sorted(spread, key=lambda name: name in crystal.labels):
+        value = as_spread(f"moment_spread of {name}", spread[name])
+        sites = list(crystal.find(name))
+        one = covariance_of(value)
+        alone = len(sites) == 1 or not isinstance(value, np.ndarray)
+        clouds[sites] = one if alone else _carried_clouds(crystal, name, sites, one)
+    return frozen(clouds)
+
+
+def _carried_clouds(crystal: Crystal, name: str, sites: list[int], covariance: FloatArray) -> FloatArray:
+    """Shape (n, 3, 3) float in Å². The covariance of the first of some sites, carried to all of them."""
+    operations = operations_of(crystal)
+    found = []
+    for site in sites:
+        chosen = operations.rotations[carriers(crystal, operations, sites[0], site)]
+        turned = [turned_covariance(crystal, rotation, covariance) for rotation in chosen]
+        if site == sites[0]:
+            turned.insert(0, covariance)
+        if not turned:
+            raise InputError(
+                f"moment_spread of {name}: a covariance is stated for the first of {len(sites)} atoms, but no "
+                f"operation of the crystal carries it to atom {crystal.labels[site]} (number {site + 1}). State a "
+                "number, or a covariance for each label."
+            )
+        slack = SAME_TENSOR * float(np.abs(covariance).max())
+        if any(np.abs(other - turned[0]).max() > slack for other in turned):
+            raise InputError(
+                f"moment_spread of {name}: the covariance {covariance.tolist()} does not have the symmetry of its site "
+                f"{crystal.labels[sites[0]]}, so that it does not say how the other {len(sites) - 1} moments extend. "
+                "Symmetrize it, or state a number."
+            )
+        found.append(turned[0])
+    return np.array(found)
 
 
 def pair_sums(
@@ -96,8 +154,8 @@ def pair_sums(
     """
     ions = np.flatnonzero(ordering.is_magnetic)
     for index, k in enumerate(ordering.k if len(ions) else ()):
-        for rows in _alike(clouds):
-            for some in _alike(of_moments[ions]):
+        for rows in equal_covariances(clouds):
+            for some in equal_covariances(of_moments[ions]):
                 covariance = clouds[rows[0]] + of_moments[ions[some[0]]]
                 plan = smeared_sum(ordering.crystal.cell, k, tol, covariance)
                 sources = plan.place(ordering.crystal.places_cart[ions[some]])
@@ -132,14 +190,18 @@ def cloud_fields(
 ) -> tuple[FloatArray, FloatArray, list[str]]:
     """Averaged N = 0 sums at Cartesian targets in T, bounds of their error, and notes on what the clouds reach."""
     total, bound = np.zeros((len(targets), 3)), np.zeros(len(targets))
-    reached: dict[tuple[str, str], None] = {}
+    reached: dict[tuple[str, str, bool], None] = {}
     for part in pair_sums(ordering, targets, clouds, of_moments, tol, names=names):
         total[part.rows] += part.fields(ordering)
         sizes = np.abs(ordering.mean_components[part.index][part.ions]).sum(axis=1)
         bound[part.rows] += tol * np.maximum(1.0, np.abs(part.tensors).max(axis=(2, 3))) @ sizes
         for row, ion in np.argwhere(part.reach < REACHED):
-            reached[names[part.rows[row]], ordering.crystal.labels[part.ions[ion]]] = None
-    notes = [reached_words(f"of {who}", label) for who, label in list(reached)[:REACHED_SHOWN]]
+            still = not np.any(clouds[part.rows[row]])
+            reached[names[part.rows[row]], ordering.crystal.labels[part.ions[ion]], still] = None
+    notes = [
+        extended_words(who, label) if still else reached_words(f"of {who}", label)
+        for who, label, still in list(reached)[:REACHED_SHOWN]
+    ]
     if len(reached) > REACHED_SHOWN:
         notes.append(f"so does that of {len(reached) - REACHED_SHOWN} more pairs of a point and a label")
     return total, bound, notes
@@ -148,6 +210,12 @@ def cloud_fields(
 def reached_words(who: str, label: str) -> str:
     """What is said of a spread that reaches an atom; who: whose spread it is, "of ..." or "of the probe"."""
     return f"the spread {who} reaches atom {label}: the traceless (principal-value) part is given; the rest is contact"
+
+
+def extended_words(who: str, label: str) -> str:
+    """What is said of an extended moment that reaches a probe without a spread; who: its name, or "the probe"."""
+    rest = "the traceless (principal-value) part is given; the rest is contact"
+    return f"the extended moment of {label} reaches {who}: {rest}"
 
 
 def cloud_gradients(
@@ -160,8 +228,8 @@ def cloud_gradients(
     return total
 
 
-def _alike(covariances: FloatArray) -> list[np.ndarray]:
-    """Indices of equal covariances, together."""
+def equal_covariances(covariances: FloatArray) -> list[np.ndarray]:
+    """Indices of equal covariances (n, 3, 3), together."""
     groups: dict[bytes, list[int]] = {}
     for i, covariance in enumerate(covariances):
         # Adding zero makes −0 into 0.
@@ -222,7 +290,7 @@ def exchanged_tensors(
     Raises InputError where a cloud without thickness reaches an atom at its new place.
     """
     change, slopes = np.zeros((len(pairs), 3, 3)), np.zeros((len(pairs), 3, 3, 3))
-    for some in _alike(of_moments[pairs.sites]):
+    for some in equal_covariances(of_moments[pairs.sites]):
         covariance = cloud + of_moments[pairs.sites[some[0]]]
         new, new_slopes, reach = smeared_pair_tensors(pairs.after[some], covariance)
         old, old_slopes, _ = smeared_pair_tensors(pairs.before[some], covariance)
@@ -244,9 +312,23 @@ def probe_words(name: str, spread: float | FloatArray | None, displaced: Sequenc
     words = [f"{name}: displaced {term.words()}" for term in displaced]
     if spread is None or not np.any(spread):
         return words
+    return [*words, f"{name}: field averaged over a Gaussian spread of {spread_words(spread)}"]
+
+
+def moment_spread_words(spread: Any) -> list[str]:
+    """A sentence on the spread of moments as `moment_clouds` takes it, for reports; none where there is none."""
+    named = {"all ions": spread} if not isinstance(spread, Mapping) else spread
+    listed = [
+        f"{name} {spread_words(value)}"
+        for name, value in ((name, as_spread("moment_spread", value)) for name, value in named.items())
+        if value is not None and np.any(value)
+    ]
+    return [f"moments are extended: Gaussian spread of {'; '.join(listed)}"] if listed else []
+
+
+def spread_words(spread: float | FloatArray) -> str:
+    """The size of a checked spread in words."""
     if isinstance(spread, float):
-        size = f"{spread:g} Å rms along each axis"
-    else:
-        rms = np.sqrt(np.maximum(0.0, np.linalg.eigvalsh(spread)))
-        size = f"{', '.join(f'{x:.4g}' for x in rms)} Å rms along its principal axes"
-    return [*words, f"{name}: field averaged over a Gaussian spread of {size}"]
+        return f"{spread:g} Å rms along each axis"
+    rms = np.sqrt(np.maximum(0.0, np.linalg.eigvalsh(spread)))
+    return f"{', '.join(f'{x:.4g}' for x in rms)} Å rms along its principal axes"

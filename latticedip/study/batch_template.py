@@ -7,8 +7,8 @@ Tables beside those of a study:
            rotate and bound (for rank; the bound is worked out only where it is asked for), axes (for field), tol
 [propose]  as in a study; here the orderings it finds are candidates
 
-Names in [moments] and [susceptibility] that a structure does not have are passed over, as long as it has one of them:
-a template lists the elements of a whole family of compounds.
+Names in [moments], [moment_spread] and [susceptibility] that a structure does not have are passed over, as long as it
+has one of them: a template lists the elements of a whole family of compounds.
 """
 
 from __future__ import annotations
@@ -193,7 +193,7 @@ class Template:
         Raises StudyError where the template does not fit the structure.
         """
         table = {name: key for name, key in self.table.items() if name not in ("title", "batch")}
-        for name in ("moments", "susceptibility"):
+        for name in ("moments", "moment_spread", "susceptibility"):
             if name in table:
                 table[name] = _present_names(table[name], crystal)
         if "template" not in self.sources:

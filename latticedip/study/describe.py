@@ -22,7 +22,7 @@ from latticedip.ordering.patterns import triple
 from latticedip.particles import particle_named
 from latticedip.physics.boundary import boundary_words
 from latticedip.physics.contact import shell_neighbours
-from latticedip.physics.spread import probe_words
+from latticedip.physics.spread import probe_words, spread_words
 from latticedip.probe import SHELL_TOLERANCE_A, Contact, Probe
 from latticedip.study.documents import NO_SUM, document
 from latticedip.study.start import formula
@@ -35,14 +35,16 @@ if TYPE_CHECKING:
 #: Cells shown for one ordering at most, and along one axis where k has no short period.
 MOST_CELLS = 16
 CELLS_ALONG = 8
+#: What the cells listed are where the pattern has no period that short.
+FIRST_CELLS = "the first cells along each axis; the pattern goes on"
 #: Shells of magnetic neighbours listed for one site label.
 SHELLS = 3
 #: Neighbours are looked for up to this distance (Å).
 FARTHEST_A = 60.0
 
 
-def describe_study(study: Study) -> dict[str, Any]:
-    """The document of `show` for a study."""
+def describe_study(study: Study, *, orderings: Sequence[str] = (), probes: Sequence[str] = ()) -> dict[str, Any]:
+    """The document of `show` for a study. orderings, probes: the names that were asked for, recorded only."""
     own = [ordering for ordering in study.orderings if ordering.reference is None]
     sizes = dict(moment_sizes(own))
     for name, size in study.moments.items():
@@ -55,7 +57,7 @@ def describe_study(study: Study) -> dict[str, Any]:
     return document(
         "show",
         files=study.files,
-        options={},
+        options={"orderings": list(orderings) or None, "probes": list(probes) or None},
         boundary="; ".join(dict.fromkeys(boundaries)) or NO_SUM,
         results={
             "title": study.title,
@@ -64,9 +66,11 @@ def describe_study(study: Study) -> dict[str, Any]:
             "moments_su_muB": dict(study.moments_su),
             "orderings": [describe_ordering(ordering) for ordering in study.orderings],
             "neighbours": magnetic_neighbours(where, sizes),
-            "probes": [
-                describe_probe(probe, study.crystal, set(sizes), own[0] if own else None) for probe in study.probes
-            ],
+            "moment_spread": {name: spread_words(spread) for name, spread in study.moment_spread.items()},
+            "probes": _with_weights(
+                study,
+                [describe_probe(probe, study.crystal, set(sizes), own[0] if own else None) for probe in study.probes],
+            ),
             "sample": study.sample.to_dict(),
             "susceptibility": {name: chi.words() for name, chi in study.susceptibility.items()},
             "abundances": dict(study.abundances),
@@ -92,6 +96,7 @@ def describe_structure(path: Path, found: Crystal | Ordering) -> dict[str, Any]:
             "moments_su_muB": {},
             "orderings": [describe_ordering(ordering) for ordering in orderings],
             "neighbours": magnetic_neighbours(crystal, sizes),
+            "moment_spread": {},
             "probes": [],
             "sample": None,
             "susceptibility": {},
@@ -172,7 +177,7 @@ def first_cells(ordering: Ordering) -> tuple[list[tuple[int, ...]], str]:
     for axis, period in enumerate(periods):
         for step in range(1, min(period or CELLS_ALONG, CELLS_ALONG)):
             cells.append((step * (axis == 0), step * (axis == 1), step * (axis == 2)))
-    return cells, "the first cells along each axis; the pattern goes on"
+    return cells, FIRST_CELLS
 
 
 def _period(coordinates: FloatArray) -> int | None:
@@ -193,6 +198,7 @@ def describe_ordering(ordering: Ordering) -> dict[str, Any]:
     moments = ordering.moments(cells)
     listed = [site for label in dict.fromkeys(crystal.labels) for site in crystal.find(label)]
     along = _common_direction(moments[:, listed])
+    covariance = ordering.moments_covariance(cells)
     atoms = []
     for label in dict.fromkeys(crystal.labels):
         for number, site in enumerate(crystal.find(label), start=1):
@@ -211,6 +217,7 @@ def describe_ordering(ordering: Ordering) -> dict[str, Any]:
                     if np.all(np.isnan(ordering.moment_su[site]))
                     else [None if np.isnan(x) else float(x) for x in ordering.moment_su[site]],
                     "along_su_muB": None if along is None else _along_su(ordering, site, along),
+                    **_cell_by_cell(crystal, covariance[:, site], along),
                 }
             )
     return {
@@ -236,6 +243,27 @@ def _along_su(ordering: Ordering, site: int, along: FloatArray) -> float | None:
     if np.all(np.isnan(su)):
         return None
     return float(np.linalg.norm(np.nan_to_num(su) * (ordering.crystal.axes_unit @ along)))
+
+
+def _cell_by_cell(crystal: Crystal, covariance: FloatArray, along: FloatArray | None) -> dict[str, Any]:
+    """Standard uncertainties of the moment of an atom in every cell, where those of its amplitudes are stated.
+
+    covariance: Shape (n_cells, 3, 3) in µB², NaN where none is stated; the document then has no such entries.
+    """
+    if np.any(np.isnan(covariance)):
+        return {}
+
+    def su(directions: FloatArray) -> FloatArray:
+        return np.asarray(np.sqrt(np.maximum(0.0, np.einsum("ba,cbd,da->ca", directions, covariance, directions))))
+
+    to_axes = np.asarray(np.linalg.inv(crystal.axes_unit), dtype=np.float64)
+    found: dict[str, Any] = {"moments_su_abc_muB": su(to_axes).tolist()}
+    if along is not None:
+        found["moments_su_along_muB"] = su(along[:, None])[:, 0].tolist()
+    if len(covariance) == 1:
+        found["moment_su_muB"] = found["moments_su_abc_muB"][0]
+        found["along_su_muB"] = None if along is None else found["moments_su_along_muB"][0]
+    return found
 
 
 def _own_cell(ordering: Ordering) -> dict[str, Any]:
@@ -344,6 +372,22 @@ def describe_probe(
         "spread": probe.spread.tolist() if isinstance(probe.spread, np.ndarray) else probe.spread,
         "motion": [words.removeprefix(f"{probe.name}: ") for words in _motion(probe)],
     }
+
+
+def _with_weights(study: Study, probes: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """Probes with what is said of those that are one position of several."""
+    shares = {
+        member: (whole, float(weight))
+        for whole in study.weighted
+        for member, weight in zip(whole.members, whole.weights, strict=True)
+    }
+    for probe in probes:
+        whole, weight = shares.get(probe["probe"], (None, None))
+        probe["weight"] = weight
+        if whole is not None:
+            words = f"one of {len(whole.members)} positions of {whole.name}, weight {weight:.4g}"
+            probe["motion"] = [words, *probe["motion"]]
+    return probes
 
 
 def _motion(probe: Probe) -> list[str]:

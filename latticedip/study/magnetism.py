@@ -1,4 +1,4 @@
-"""The [susceptibility] and [abundances] tables of a study, and which ions of its crystal are magnetic."""
+"""The [susceptibility], [moment_spread] and [abundances] tables of a study, and which ions of it are magnetic."""
 
 from __future__ import annotations
 
@@ -7,10 +7,13 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal
+from latticedip.crystal.spread import as_spread
 from latticedip.errors import StudyError
 from latticedip.observables.isotopes import isotopes_by_element
 from latticedip.observables.susceptibility import UNITS, Susceptibility
+from latticedip.physics.spread import named_clouds
 from latticedip.study.keys import Key
 
 if TYPE_CHECKING:
@@ -20,6 +23,8 @@ SUSCEPTIBILITY_KEYS = ("chi", "chi_su", "unit", "temperatures_K", "local")
 _EXAMPLE = '{ chi = 0.012, unit = "cm3/mol" }'
 _UNITS = '"cm3/mol" (cgs, the same as emu/mol; per mole of ions), "m3/mol" (SI) or "muB/T" (per ion)'
 _CHI = "a number, a tensor (three lists of three numbers, Cartesian), or a list of them over temperatures_K"
+_MOMENT_SPREAD = "one table, headed [moment_spread], such as Mn = 0.4 (Å rms)"
+_EXTENT = "the rms extent along each axis in Å, at least 0, or a covariance (three lists of three numbers, Å²)"
 _TEMPERATURES = "a list of temperatures in K, each larger than 0"
 
 
@@ -87,6 +92,30 @@ def _susceptibility(item: Key) -> Susceptibility:
 def _number_or_tensor(key: Key) -> Any:
     what = "a number or three lists of three numbers (Cartesian)"
     return key.matrix(what) if isinstance(key.value, list) else key.number(what)
+
+
+def read_moment_spread(key: Key | None, crystal: Crystal) -> dict[str, float | FloatArray]:
+    """The [moment_spread] table: how far the moment of an ion extends, by site label or element (the label wins).
+
+    A number is the rms extent along each axis in Å; three lists of three numbers are a Cartesian covariance in Å², that
+    of the first atom of the name.
+    """
+    found: dict[str, float | FloatArray] = {}
+    for name, child in ({} if key is None else key.table(header=_MOMENT_SPREAD)).items():
+        with child.located():
+            crystal.find(name)
+        value: Any = child.value
+        if isinstance(value, list):
+            value = child.matrix("three lists of three numbers (Cartesian): the covariance of the moment in Å²")
+        else:
+            value = child.number(_EXTENT, low=0.0)
+        with child.located():
+            # Symmetry is looked at here, so that a misfit is told with its key.
+            named_clouds(crystal, {name: value})
+            spread = as_spread("moment_spread", value)
+        if spread is not None and np.any(spread):
+            found[name] = spread
+    return found
 
 
 def read_abundances(key: Key | None, crystal: Crystal) -> dict[str, float]:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import dataclasses
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -9,6 +11,7 @@ import numpy as np
 from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal
 from latticedip.ordering.patterns import unit_direction
+from latticedip.physics.weighted import normalized_weights
 from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
 from latticedip.study.directions import named_directions
@@ -16,20 +19,38 @@ from latticedip.study.keys import Key
 from latticedip.study.motion import MOTION_KEYS, read_motion
 from latticedip.study.probe_rules import RULE_KEYS, probes_by_rule
 
-PROBE_KEYS = ("name", "particle", "position", "site", "rule", "contact", *MOTION_KEYS)
+PROBE_KEYS = ("name", "particle", "position", "site", "positions", "weights", "rule", "contact", *MOTION_KEYS)
 CONTACT_KEYS = ("coupling_T_per_muB", "shell", "within", "moment_density_muB_per_A3")
 SHAPES = ("ellipsoid", "prism", "cylinder", "sphere", "plate", "needle", "tensor")
 SAMPLE_KEYS = (*SHAPES, "axes", "applied_T")
 
 _POSITION = 'three fractional coordinates, such as [0.5, 0.5, 0.12] or ["1/3", "2/3", 0]'
+_POSITIONS = "a list of positions, each of three fractional coordinates, such as [[0.5, 0.5, 0.12], [0.5, 0.5, 0.88]]"
+_WEIGHTS = "a list of numbers, one for each of `positions`, such as [1, 1]"
 _AXIS = 'a crystal direction ("a", "b", "c", "a*", "b*", "c*") or a vector in crystal axes a, b, c'
 
 
-def read_probes(key: Key | None, crystal: Crystal) -> tuple[Probe, ...]:
-    """All [[probe]] tables, in order. Positions are fractional in the cell of [crystal]."""
+@dataclass(frozen=True, eq=False)
+class WeightedProbe:
+    """A probe of a study that is found at several positions, each of which is a Probe of its own in the study.
+
+    name: of the whole. members: names of the probes at its positions. weights: Shape (n,) float, adding up to 1.
+    """
+
+    name: str
+    members: tuple[str, ...]
+    weights: FloatArray
+
+
+def read_probes(key: Key | None, crystal: Crystal) -> tuple[tuple[Probe, ...], tuple[WeightedProbe, ...]]:
+    """All [[probe]] tables, in order, and which of them are one probe at several positions.
+
+    Positions are fractional in the cell of [crystal].
+    """
     if key is None:
-        return ()
+        return (), ()
     probes: list[Probe] = []
+    weighted: list[WeightedProbe] = []
     taken: dict[str, str] = {}
     for item in key.items("a list of tables, each headed [[probe]]"):
         if isinstance(item.value, dict) and "rule" in item.value:
@@ -37,19 +58,57 @@ def read_probes(key: Key | None, crystal: Crystal) -> tuple[Probe, ...]:
             found = probes_by_rule(item, table, crystal)
         else:
             table = item.table(PROBE_KEYS)
-            found = [_probe(item, table, crystal)]
-        for probe in found:
-            if probe.name in taken:
-                where = taken[probe.name]
+            if "positions" in table:
+                whole, found = _weighted(item, table, crystal)
+                weighted.append(whole)
+            else:
+                found = [_probe(item, table, crystal)]
+        for name in [*(whole.name for whole in weighted[-1:] if "positions" in table), *(p.name for p in found)]:
+            if name in taken:
+                where = taken[name]
                 if "name" in table:
                     raise table["name"].expected(f"a name of its own ({where} has this one)")
-                raise item.refuse(f"without `name` it is called {probe.name!r}, as {where} is already. Give it a name.")
-            taken[probe.name] = item.path
-            probes.append(probe)
-    return tuple(probes)
+                raise item.refuse(f"without `name` it is called {name!r}, as {where} is already. Give it a name.")
+            taken[name] = item.path
+        probes += found
+    return tuple(probes), tuple(weighted)
+
+
+def _weighted(item: Key, table: dict[str, Key], crystal: Crystal) -> tuple[WeightedProbe, list[Probe]]:
+    """A probe with `positions` and `weights`, and the probes at its positions."""
+    for other in ("position", "site"):
+        if other in table:
+            raise item.refuse(f"`{other}` and `positions` name two places. Leave one out.")
+    if "position_su" in table:
+        raise table["position_su"].refuse("goes with `position`, and the probe has `positions`. Leave it out.")
+    places = table["positions"].items(_POSITIONS)
+    if not places:
+        raise table["positions"].expected(_POSITIONS)
+    if "weights" not in table:
+        raise item.missing("weights", "one number of at least 0 for each of `positions`")
+    shares = [share.number("a number of at least 0", low=0.0) for share in table["weights"].items(_WEIGHTS)]
+    if len(shares) != len(places):
+        raise table["weights"].refuse(
+            f"has {len(shares)} entries, expected {len(places)}, one for each of `positions`."
+        )
+    with table["weights"].located():
+        weights = normalized_weights(shares)
+    base = {key: value for key, value in table.items() if key not in ("name", "positions", "weights")}
+    particle = "muon"
+    if "particle" in table:
+        particle = table["particle"].text('"muon" or an isotope such as "19F"')
+    name = f"{particle} at {len(places)} positions"
+    if "name" in table:
+        name = table["name"].text("a name in one line")
+    probes = [_probe(item, {**base, "position": place}, crystal) for place in places]
+    members = tuple(f"{name}, position {number}" for number in range(1, len(probes) + 1))
+    renamed = [dataclasses.replace(probe, name=member) for probe, member in zip(probes, members, strict=True)]
+    return WeightedProbe(name, members, weights), renamed
 
 
 def _probe(item: Key, table: dict[str, Key], crystal: Crystal) -> Probe:
+    if "weights" in table:
+        raise table["weights"].refuse("goes with `positions`, and the probe has none. Leave it out.")
     if "position" in table and "site" in table:
         raise item.refuse("`position` and `site` name two places. Leave one out.")
     if "position" not in table and "site" not in table:

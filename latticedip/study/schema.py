@@ -1,8 +1,9 @@
 """The study file: a crystal, orderings, probes and a sample, read from TOML into the objects the calls take.
 
-Tables: title, [crystal], [moments], [[ordering]], [[probe]], [sample], [susceptibility], [abundances], [propose]. A key
-that is not known, a value of another type and a value that is missing are refused with the path of the key, the value,
-what was expected and the nearest known word. Items are counted from 1. Paths are relative to the study file.
+Tables: title, [crystal], [moments], [moment_spread], [[ordering]], [[probe]], [sample], [susceptibility], [abundances],
+[propose]. A key that is not known, a value of another type and a value that is missing are refused with the path of the
+key, the value, what was expected and the nearest known word. Items are counted from 1. Paths are relative to the study
+file.
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal
 from latticedip.errors import StudyError
 from latticedip.observables.susceptibility import Susceptibility
@@ -21,12 +23,23 @@ from latticedip.ordering.model import Ordering
 from latticedip.probe import Probe
 from latticedip.sample import Sample
 from latticedip.study.keys import Key
-from latticedip.study.magnetism import read_abundances, read_susceptibility
+from latticedip.study.magnetism import read_abundances, read_moment_spread, read_susceptibility
 from latticedip.study.orderings import existing_file, read_block, read_moments, read_orderings
-from latticedip.study.probes import read_probes, read_sample
+from latticedip.study.probes import WeightedProbe, read_probes, read_sample
 from latticedip.study.search import Search, read_search
 
-STUDY_KEYS = ("title", "crystal", "moments", "ordering", "probe", "sample", "susceptibility", "abundances", "propose")
+STUDY_KEYS = (
+    "title",
+    "crystal",
+    "moments",
+    "moment_spread",
+    "ordering",
+    "probe",
+    "sample",
+    "susceptibility",
+    "abundances",
+    "propose",
+)
 CRYSTAL_KEYS = ("file", "block")
 #: A study file larger than this (bytes) is some other file.
 LARGEST_FILE = 10_000_000
@@ -40,10 +53,13 @@ class Study:
     path: the study file.
     crystal: the Crystal of [crystal]; its Cartesian frame is that of everything else.
     orderings: all [[ordering]]s, turned into that frame.
-    probes: all [[probe]]s, positions in the cell of ``crystal``.
+    probes: all [[probe]]s, positions in the cell of ``crystal``. weighted: which of them are one probe at several
+        positions, and with which weights.
     sample: the Sample; N = 0 and no applied field where [sample] is left out.
     moments: sizes in µB as [moments] gives them, by site label or element. moments_su: their standard uncertainties in
         µB, of those that state one.
+    moment_spread: rms extent in Å or covariance in Å² of the moments that are extended, by site label or element, as
+        `local_field` takes it.
     susceptibility: of the magnetic ions in the paramagnetic state, by site label or element.
     abundances: fractions of an element's atoms that are an isotope, by its name, where not the natural ones.
     other_energies_meV_per_ion: energies from elsewhere (exchange, single ion) by the name of the ordering.
@@ -66,6 +82,8 @@ class Study:
     other_energies_meV_per_ion: Mapping[str, float] = field(default_factory=dict)
     search: Search = field(default_factory=Search)
     moments_su: Mapping[str, float] = field(default_factory=dict)
+    moment_spread: Mapping[str, float | FloatArray] = field(default_factory=dict)
+    weighted: tuple[WeightedProbe, ...] = ()
 
 
 def read_study(path: str | os.PathLike[str]) -> Study:
@@ -105,7 +123,7 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
     sizes = read_moments(table.get("moments"), crystal)
     others: dict[str, float] = {}
     orderings = read_orderings(table.get("ordering"), crystal, sizes, path.parent, files, others)
-    probes = read_probes(table.get("probe"), crystal)
+    probes, weighted = read_probes(table.get("probe"), crystal)
     sample = read_sample(table.get("sample"), crystal)
     return Study(
         title,
@@ -122,6 +140,8 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
         other_energies_meV_per_ion=others,
         search=read_search(table.get("propose"), crystal, sizes),
         moments_su=sizes.su_by_name,
+        moment_spread=read_moment_spread(table.get("moment_spread"), crystal),
+        weighted=weighted,
     )
 
 

@@ -9,9 +9,10 @@ import numpy as np
 
 from latticedip.checks import FloatArray
 from latticedip.errors import InputError
-from latticedip.observables.coupling_tensor import CouplingTensor, site_couplings, summed
-from latticedip.observables.shift import Rotation, Shift, shifts_at
+from latticedip.observables.coupling_tensor import CouplingTensor, averaged, site_couplings, summed
+from latticedip.observables.shift import Rotation, Shift, averaged_shift, shifts_at
 from latticedip.observables.tensor import PrincipalFrame
+from latticedip.physics.spread import moment_spread_words
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import document
 from latticedip.study.fields import common_boundary
@@ -19,7 +20,10 @@ from latticedip.study.magnetism import common_temperatures, magnetic_groups
 from latticedip.study.points import Point, alike, points_of
 
 if TYPE_CHECKING:
+    from latticedip.study.probes import WeightedProbe
     from latticedip.study.schema import Study
+
+_Found = tuple[Point, dict[str, CouplingTensor], list[Shift]]
 
 #: Step (degrees) at which a shift against rotation is listed.
 STEP_DEG = 5.0
@@ -53,6 +57,12 @@ SHIFT_CONVENTIONS = (
 COUPLING_CAVEAT = (
     "Left out: moments on other sites, the spread of the moment over its ion, and the probe's own effect on the "
     "moments around it."
+)
+#: The same where the study states the spread of the moments.
+COUPLING_CAVEAT_EXTENDED = "Left out: moments on other sites, and the probe's own effect on the moments around it."
+MEANS_NOTE = (
+    "Means over positions with weights are those of a probe that hops between them fast; one that stays at a position "
+    "has the tensors there."
 )
 SHIFT_CAVEAT = (
     "Left out: shielding by the probe's own electrons (chemical shift), conduction electrons and moments on other "
@@ -98,13 +108,15 @@ def shift_document(
         if axis is not None:
             raise InputError("--powder and --rotate-about are of a powder and of a crystal. Leave one out.")
     rows: list[dict[str, Any]] = []
+    kept: list[_Found] = []
+    extended = moment_spread_words(study.moment_spread)
     boundaries: list[str] = []
     notes: list[str] = []
     for point in points_of(study.crystal, study.probes, all_equivalent=all_equivalent):
         couplings, found = _couplings(study, point, groups, tol)
         shifts = _shifts(study, point, temperatures, tol)
         boundaries += [coupling.boundary for coupling in couplings.values()]
-        notes += point.notes(study.crystal, found)
+        notes += point.notes(study.crystal, (text for text in found if text not in extended))
         rows.append(
             {
                 **point.head(),
@@ -114,6 +126,14 @@ def shift_document(
                 "shifts": [_shift_row(study, shift, axis, powder_bins) for shift in shifts],
             }
         )
+        kept.append((point, couplings, shifts))
+    means = []
+    for whole in study.weighted:
+        if all_equivalent:
+            notes.append(f"{whole.name}: no mean over its positions beside those equivalent to each; leave --orbit out")
+            continue
+        members = [next(one for one in kept if one[0].probe.name == member) for member in whole.members]
+        means.append(_mean_row(study, whole, members, axis, powder_bins))
     _group(rows)
     shifted = bool(study.susceptibility)
     return document(
@@ -135,10 +155,38 @@ def shift_document(
             "magnetic_from": source,
             "rotate_about": None if axis is None else _direction_row(study, axis),
             "rows": rows,
+            "means": means,
             "conventions": [*COUPLING_CONVENTIONS, *(SHIFT_CONVENTIONS if shifted else ())],
-            "notes": [*dict.fromkeys(notes), *_su_notes(rows), SHIFT_CAVEAT if shifted else COUPLING_CAVEAT],
+            "notes": [
+                *dict.fromkeys(notes),
+                *extended,
+                *([MEANS_NOTE] if means else []),
+                *_su_notes(rows),
+                SHIFT_CAVEAT if shifted else _coupling_caveat(study),
+            ],
         },
     )
+
+
+def _coupling_caveat(study: Study) -> str:
+    return COUPLING_CAVEAT_EXTENDED if study.moment_spread else COUPLING_CAVEAT
+
+
+def _mean_row(
+    study: Study, whole: WeightedProbe, found: Sequence[_Found], axis: FloatArray | None, powder_bins: int | None
+) -> dict[str, Any]:
+    """The mean of the tensors of a probe over its positions; found: at each of them."""
+    couplings = {name: averaged([one[1][name] for one in found], whole.weights) for name in found[0][1]}
+    shifts = [averaged_shift(at, whole.weights) for at in zip(*(one[2] for one in found), strict=True)]
+    return {
+        **found[0][0].head(),
+        "probe": whole.name,
+        "multiplicity": len(found),
+        "positions": [one[0].position.tolist() for one in found],
+        "weights": whole.weights.tolist(),
+        "couplings": [_coupling_row(study, name, coupling) for name, coupling in couplings.items()],
+        "shifts": [_shift_row(study, shift, axis, powder_bins) for shift in shifts],
+    }
 
 
 def _su_notes(rows: Sequence[Mapping[str, Any]]) -> list[str]:
@@ -173,7 +221,7 @@ def _couplings(
 ) -> tuple[dict[str, CouplingTensor], tuple[str, ...]]:
     """Coupling tensor to each kind of ion; shells of contact terms count the ions of all kinds together."""
     sites = sorted(site for group in groups.values() for site in group)
-    parts = site_couplings(study.crystal, point.position, sites, tol=tol, **_surroundings(point))
+    parts = site_couplings(study.crystal, point.position, sites, tol=tol, **_surroundings(study, point))
     tensors = {
         name: summed(study.crystal, parts, np.searchsorted(sites, sorted(group)), (name,), study.sample)
         for name, group in groups.items()
@@ -191,13 +239,14 @@ def _shifts(study: Study, point: Point, temperatures: Sequence[float | None], to
         temperatures,
         sample=study.sample,
         tol=tol,
-        **_surroundings(point),
+        **_surroundings(study, point),
     )
 
 
-def _surroundings(point: Point) -> dict[str, Any]:
-    """What a point brings to the sums: its contact terms, spread, displaced neighbours and uncertainty."""
+def _surroundings(study: Study, point: Point) -> dict[str, Any]:
+    """What a point brings to the sums (contact terms, spread, displaced neighbours, uncertainty), and extended ions."""
     return {
+        "moment_spread": study.moment_spread or None,
         "contact": point.probe.contact,
         "spread": point.spread,
         "displaced": point.displaced,
@@ -276,8 +325,10 @@ def shift_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
     coupling tensors.
     """
     table: list[dict[str, Any]] = []
-    for row in doc["rows"]:
-        head = {key: row[key] for key in ("probe", "particle", "position", "site", "multiplicity", "distinct")}
+    for row in [*doc["rows"], *doc["means"]]:
+        head = {key: row.get(key) for key in ("probe", "particle", "position", "site", "multiplicity", "distinct")}
+        # The mean over positions has none of its own.
+        head["position"] = head["position"] or [None, None, None]
         for shift in row["shifts"]:
             lead = {**head, "temperature_K": shift["temperature_K"], "chi_cm3_per_mol": shift["chi_cm3_per_mol"]}
             if "rotation" in shift:

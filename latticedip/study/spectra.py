@@ -14,12 +14,13 @@ import numpy as np
 from latticedip.checks import FloatArray
 from latticedip.errors import InputError
 from latticedip.observables.linewidth import linewidth
-from latticedip.observables.polarization import polarization
+from latticedip.observables.polarization import TURNING, direction_at, polarization
 from latticedip.observables.spectrum import Spectrum, spectrum
 from latticedip.ordering.domains import Domain, domains
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import document, ordering_head
 from latticedip.study.fields import common_boundary
+from latticedip.study.mixtures import mixed_entries, mixture_notes
 
 if TYPE_CHECKING:
     from latticedip.ordering.model import Ordering
@@ -44,7 +45,8 @@ class SpectrumOptions:
     place of the study's applied field, Cartesian. bins: of the histogram. width_T: standard deviation of a Gaussian.
     nuclear_per_us: Δ of the static field of nuclear moments in 1/µs, or "auto" to work it out. time_us: the last
     moment of P(t); None: no P(t). points: moments in time; None: enough for the fastest precession. initial, detector:
-    directions in a crystal, as `direction_of` takes them. seed: of the quasi-random phases.
+    directions in a crystal, as `direction_of` takes them. angle_deg: for a powder in an applied field, between it and
+    the direction the spin starts and is seen along; None: 0. seed: of the quasi-random phases.
     """
 
     powder: bool = False
@@ -57,6 +59,7 @@ class SpectrumOptions:
     points: int | None = None
     initial: str | None = None
     detector: str | None = None
+    angle_deg: float | None = None
     seed: int = 0
     tol: float = 1e-10
 
@@ -71,25 +74,24 @@ def spectrum_document(
     Raises InputError for options that do not fit, and what the spectra raise.
     """
     _check(options)
-    directions = {
-        name: None if text is None else direction_of(study.crystal, text, f"--{name}")
-        for name, text in (("initial", options.initial), ("detector", options.detector))
-    }
+    directions = _directions(study, options)
     widths = {probe.name: _nuclear_width(study, probe, options) for probe in study.probes}
     found = [_spectra(study, ordering, options, widths) for ordering in study.orderings]
     time = _times(options, [result for results in found for _, result in results])
     entries = []
     for ordering, results in zip(study.orderings, found, strict=True):
         placed_by = "" if ordering.reference is None else ordering.reference.how
-        notes = dict.fromkeys(note for _, result in results for note in result.notes)
+        turning = options.powder and time is not None and np.any(results[0][1].applied_T)
+        of_results = [note for _, result in results for note in result.notes]
+        notes = dict.fromkeys([*mixture_notes(study), *of_results, *([TURNING] if turning else [])])
+        spectra = [
+            _entry(result, domain, options, widths[result.probe.name], time, directions) for domain, result in results
+        ]
         entries.append(
             {
                 **ordering_head(ordering),
                 "boundary": results[0][1].boundary,
-                "spectra": [
-                    _entry(result, domain, options, widths[result.probe.name], time, directions)
-                    for domain, result in results
-                ],
+                "spectra": [*spectra, *mixed_entries(study, results, spectra, options.bins)],
                 "notes": [note for note in notes if note not in placed_by],
             }
         )
@@ -140,6 +142,19 @@ def spectrum_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
     return rows
 
 
+def _directions(study: Study, options: SpectrumOptions) -> dict[str, FloatArray | None]:
+    """Cartesian directions that the spin starts along and is seen along, where they are stated."""
+    if options.angle_deg is not None:
+        applied = study.sample.applied_T if options.applied_T is None else np.array(options.applied_T)
+        if not options.powder or not np.any(applied):
+            raise InputError("--angle is that between an applied field and the spin in a powder; leave it out here.")
+        return {"initial": direction_at(applied, options.angle_deg), "detector": None}
+    return {
+        name: None if text is None else direction_of(study.crystal, text, f"--{name}")
+        for name, text in (("initial", options.initial), ("detector", options.detector))
+    }
+
+
 def _spectra(
     study: Study, ordering: Ordering, options: SpectrumOptions, widths: Mapping[str, float]
 ) -> list[tuple[Domain | None, Spectrum]]:
@@ -152,6 +167,7 @@ def _spectra(
             result = spectrum(
                 ordering if domain is None else domain.ordering,
                 probe,
+                moment_spread=study.moment_spread or None,
                 sample=study.sample,
                 applied_T=options.applied_T,
                 powder=options.powder,
@@ -235,7 +251,9 @@ def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> floa
     position = probe.position
     if probe.site is not None:
         position = study.crystal.positions[study.crystal.find(probe.site)[0]]
-    found = linewidth(study.crystal, position, particle="muon", displaced=probe.displaced).zero_field_width_per_us
+    found = linewidth(
+        study.crystal, position, particle="muon", displaced=probe.displaced, spread=probe.spread
+    ).zero_field_width_per_us
     assert found is not None
     return found
 
@@ -246,8 +264,14 @@ def _check(options: SpectrumOptions) -> None:
             raise InputError(f"{name} must lie between 2 and {most}, got {value}.")
     if options.time_us is not None and not (math.isfinite(options.time_us) and options.time_us > 0):
         raise InputError(f"the time must be a finite number of µs above 0, got {options.time_us}.")
-    if options.time_us is None and (options.initial is not None or options.detector is not None):
+    stated = (options.initial, options.detector, options.angle_deg)
+    if options.time_us is None and any(value is not None for value in stated):
         raise InputError("an initial direction or a detector belongs to a polarization: ask for one with a time.")
+    if options.powder and (options.initial is not None or options.detector is not None):
+        raise InputError(
+            "--initial and --detector are directions in a crystal, which a powder does not have. Leave them out; in an "
+            "applied field --angle says how the spin starts to it."
+        )
     if options.time_us is not None and not options.powder and options.initial is None:
         raise InputError(
             "the polarization in a crystal needs the direction in which the spin starts (--initial c, for "

@@ -101,23 +101,36 @@ def start(
     )
 
 
-def show(path: Path, *, block: str | None = None) -> dict[str, Any]:
+def show(
+    path: Path, *, block: str | None = None, orderings: Sequence[str] = (), probes: Sequence[str] = ()
+) -> dict[str, Any]:
     """The document of `show` for a study or a structure file.
 
-    Raises what `read_study`, `read_crystal` and `read_ordering` raise.
+    orderings, probes: names of those of a study that count; none: all.
+
+    Raises InputError for a name that the study does not have, and what `read_study`, `read_crystal` and
+    `read_ordering` raise.
     """
     from latticedip.files.read import read_file
     from latticedip.study.describe import describe_structure, describe_study
 
     if is_study(path):
-        return describe_study(open_study(path))
+        study = choose(open_study(path), orderings=orderings, probes=probes)
+        return describe_study(study, orderings=orderings, probes=probes)
     return describe_structure(path, read_file(path, block=block))
 
 
-def drawing(path: Path, *, block: str | None = None, view: str | None = None) -> dict[str, Any]:
+def drawing(
+    path: Path,
+    *,
+    block: str | None = None,
+    view: str | None = None,
+    orderings: Sequence[str] = (),
+    probes: Sequence[str] = (),
+) -> dict[str, Any]:
     """What a drawing of a study or a structure file shows: cells, atoms with their moments, probes with their fields.
 
-    view: the crystal direction that it is seen from, such as "a" or "1 1 0".
+    view: the crystal direction that it is seen from, such as "a" or "1 1 0". orderings, probes: as `show`.
 
     Raises what `show` and `local_field` raise, and InputError for a view that is no direction.
     """
@@ -125,7 +138,8 @@ def drawing(path: Path, *, block: str | None = None, view: str | None = None) ->
     from latticedip.study.drawings import drawing_of_structure, drawing_of_study
 
     if is_study(path):
-        return drawing_of_study(open_study(path), view=view)
+        study = choose(open_study(path), orderings=orderings, probes=probes)
+        return drawing_of_study(study, view=view, orderings=orderings, probes=probes)
     return drawing_of_structure(path, read_file(path, block=block), view=view)
 
 
@@ -154,7 +168,8 @@ def field(
     fields = []
     for ordering in study.orderings:
         _log.info("field under %s", ordering.name)
-        fields.append(local_field(ordering, study.probes, sample=study.sample, tol=tol))
+        spread = study.moment_spread or None
+        fields.append(local_field(ordering, study.probes, moment_spread=spread, sample=study.sample, tol=tol))
     return field_document(study, fields, axes=axes, unit=unit, orderings=orderings, probes=probes, tol=tol)
 
 
@@ -173,9 +188,14 @@ def rank(study: Study, options: RankOptions | None = None) -> dict[str, Any]:
     check_bound(study, options)
     study = choose(study, orderings=options.orderings)
     ranking = rank_orderings(
-        study.orderings, sample=study.sample, rotate=options.rotate, probes=study.probes, tol=options.tol
+        study.orderings,
+        sample=study.sample,
+        rotate=options.rotate,
+        probes=study.probes,
+        moment_spread=study.moment_spread or None,
+        tol=options.tol,
     )
-    return rank_document(study, ranking, options)
+    return _noted(rank_document(study, ranking, options), _each_position(study, "fields are", "`field`"))
 
 
 def directions(study: Study, *, steps: int = 18, orderings: Sequence[str] = (), tol: float = 1e-10) -> dict[str, Any]:
@@ -189,7 +209,8 @@ def directions(study: Study, *, steps: int = 18, orderings: Sequence[str] = (), 
     from latticedip.study.turns import directions_document
 
     _need_orderings(study)
-    return directions_document(choose(study, orderings=orderings), steps=steps, orderings=orderings, tol=tol)
+    found = directions_document(choose(study, orderings=orderings), steps=steps, orderings=orderings, tol=tol)
+    return _noted(found, _point_energies(study))
 
 
 def modes(
@@ -201,7 +222,8 @@ def modes(
     """
     from latticedip.study.modes import modes_document
 
-    return modes_document(study, points=points, keep=keep, need_path=need_path, tol=tol)
+    found = modes_document(study, points=points, keep=keep, need_path=need_path, tol=tol)
+    return _noted(found, _point_energies(study))
 
 
 def propose(study: Study, search: Search, *, tol: float = 1e-10) -> tuple[dict[str, Any], Proposal]:
@@ -211,7 +233,8 @@ def propose(study: Study, search: Search, *, tol: float = 1e-10) -> tuple[dict[s
     """
     from latticedip.study.proposals import propose_document
 
-    return propose_document(study, search, tol=tol)
+    found, proposal = propose_document(study, search, tol=tol)
+    return _noted(found, _point_energies(study)), proposal
 
 
 def search_of(
@@ -312,14 +335,16 @@ def linewidth(
     from latticedip.study.linewidths import linewidth_document
 
     _need_probes(study, "a linewidth")
-    return linewidth_document(
-        choose(study, probes=probes),
+    chosen = choose(study, probes=probes)
+    found = linewidth_document(
+        chosen,
         direction=direction,
         nuclei=nuclei,
         like=like,
         probes=probes,
         all_equivalent=all_equivalent,
     )
+    return _noted(found, _each_position(chosen, "widths are"))
 
 
 def spectrum(
@@ -353,22 +378,55 @@ def demag(kind: str, lengths: Sequence[float] = ()) -> dict[str, Any]:
 def choose(study: Study, *, orderings: Sequence[str] = (), probes: Sequence[str] = ()) -> Study:
     """A study with the orderings and probes of these names only, in the order of the file; no names: all of them.
 
+    A probe at several positions goes by its own name or by those of single positions.
+
     Raises InputError for a name that the study does not have, with the nearest that it has.
     """
     kept_orderings = _named("ordering", study.orderings, orderings)
-    kept_probes = _named("probe", study.probes, probes)
-    return dataclasses.replace(study, orderings=kept_orderings, probes=kept_probes)
+    members = {whole.name: whole.members for whole in study.weighted}
+    asked = [member for name in probes for member in members.get(name, (name,))]
+    kept_probes = _named("probe", study.probes, asked, tuple(members))
+    left = {probe.name for probe in kept_probes}
+    weighted = tuple(whole for whole in study.weighted if left.issuperset(whole.members))
+    return dataclasses.replace(study, orderings=kept_orderings, probes=kept_probes, weighted=weighted)
 
 
-def _named(kind: str, items: tuple[T, ...], names: Sequence[str]) -> tuple[T, ...]:
-    known = [item.name for item in items]
+def _named(kind: str, items: tuple[T, ...], names: Sequence[str], more: Sequence[str] = ()) -> tuple[T, ...]:
+    """The items of these names; more: other names that a user may have meant."""
+    own: list[str] = [item.name for item in items]
+    known = [*more, *own]
     for name in names:
-        if name not in known:
+        if name not in own:
             listed = ", ".join(repr(other) for other in known) or "none"
             raise InputError(
                 f"the study has no {kind} named {name!r}. Those it has: {listed}.{near_match(name, known)}"
             )
     return tuple(item for item in items if not names or item.name in names)
+
+
+def _noted(found: dict[str, Any], notes: Sequence[str]) -> dict[str, Any]:
+    """A document with more notes in front of its own."""
+    return {**found, "notes": [*notes, *found["notes"]]} if notes else found
+
+
+def _each_position(study: Study, what: str, averages: str = "") -> list[str]:
+    """What is said of probes at several positions where a command does not average over them.
+
+    what: "fields are", for example. averages: the command that does.
+    """
+    told = f"not averaged with their weights{f'; {averages} gives the averages' if averages else ''}"
+    return [
+        f"{whole.name}: {what} given at each of its {len(whole.members)} positions, {told}"
+        for whole in study.weighted
+        if {probe.name for probe in study.probes}.issuperset(whole.members)
+    ]
+
+
+def _point_energies(study: Study) -> list[str]:
+    """What is said of energies where the study states a spread of moments."""
+    from latticedip.analysis.rank import POINT_ENERGIES
+
+    return [POINT_ENERGIES] if study.moment_spread else []
 
 
 def _need_probes(study: Study, what: str) -> None:
