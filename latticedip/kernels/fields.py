@@ -51,7 +51,7 @@ def real_fields(
     images (3, n): Cartesian positions of all images of all sources that can come within the cut-off of a target.
     moments (parts, 3, n): real and, where parts is 2, imaginary parts of their moments in µB, phases included.
     sizes (n,): |m| of each. alpha 1/Å, cutoff Å; an image closer than on_site Å is left out and self_term times its
-    moment added. out (parts, n_t, 1, 3); weight (n_t,) receives Σ B₂ r² |m|.
+    moment added. out (parts, n_t, 3); weight (n_t,) receives Σ B₂ r² |m|.
     """
     n_images = images.shape[1]
     parts = moments.shape[0]
@@ -100,12 +100,12 @@ def real_fields(
                 bx, by, bz, added = summed(
                     n, x, y, z, square, b1, b2, moment[part, 0], moment[part, 1], moment[part, 2], size
                 )
-                out[part, t, 0, 0] += bx
-                out[part, t, 0, 1] += by
-                out[part, t, 0, 2] += bz
+                out[part, t, 0] += bx
+                out[part, t, 1] += by
+                out[part, t, 2] += bz
                 weight[t] = added
             for i in range(n):
                 if x[i] * x[i] + y[i] * y[i] + z[i] * z[i] < site2:
                     for part in range(parts):
                         for c in range(3):
-                            out[part, t, 0, c] += self_term * moment[part, c, i]
+                            out[part, t, c] += self_term * moment[part, c, i]

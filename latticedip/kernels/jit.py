@@ -107,7 +107,17 @@ def over_rows(function: Callable[..., Any], n_rows: int, *arguments: Any, at_lea
     blocks = min(n_rows, 4 * threads)
     # Edges at multiples of four: kernels that take four rows at a time then never see a broken group inside.
     edges = [min(n_rows, (n_rows * i // blocks + 3) // 4 * 4) for i in range(blocks)] + [n_rows]
-    pool = _pool(threads, os.getpid())
-    calls = [pool.submit(function, a, b, *arguments) for a, b in pairwise(edges) if a < b]
-    for call in calls:
-        call.result()
+    # Every thread, this one among them, takes the next block until none is left.
+    waiting = iter([(a, b) for a, b in pairwise(edges) if a < b])
+    helpers = [_pool(threads, os.getpid()).submit(_work, function, waiting, arguments) for _ in range(threads - 1)]
+    try:
+        _work(function, waiting, arguments)
+    finally:
+        for helper in helpers:
+            helper.result()
+
+
+def _work(function: Callable[..., Any], waiting: Iterator[tuple[int, int]], arguments: tuple[Any, ...]) -> None:
+    # Taking from a list's iterator is one step of the interpreter: no two threads get the same block.
+    for first, last in waiting:
+        function(first, last, *arguments)

@@ -31,6 +31,19 @@ def two_product(a, b):
     return product, ((a_high * b_high - product) + a_high * b_low + a_low * b_high) + a_low * b_low
 
 
+@kernel(inline=True)
+def without(offset, cells, cell, rest):
+    """offset − cells @ cell, exact to the last place of every component."""
+    for c in range(3):
+        high = offset[c]
+        low = 0.0
+        for axis in range(3):
+            product, error = two_product(-cells[axis], cell[axis, c])
+            high, carry = two_sum(high, product)
+            low += carry + error
+        rest[c] = high + low
+
+
 @kernel()
 def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, k, out, out_cells, out_turns):
     """Take whole lattice vectors from rows first..last of ``offsets``, in compensated arithmetic.
@@ -40,7 +53,7 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
     out (n, 3): the rest, within half a reduced cell vector; out_cells (n, 3): the lattice vector taken away, in
     the cell as given; out_turns (n,): k·cells modulo 1. Every rest is exact to its own last place.
     """
-    rough = np.empty(3)
+    rest = np.empty(3)
     total = np.empty(3)
     extra = np.empty(3)
     for row in range(first, last):
@@ -51,35 +64,27 @@ def reduce_offsets(first, last, offsets, cell, inverse, steps, reduced_inverse, 
                 + offsets[row, 2] * inverse[2, axis]
             )
             total[axis] = np.rint(f)
-        # Twice: the first pass lands in the given cell, the second in the reduced one.
+        without(offsets[row], total, cell, rest)
+        # Twice at most: from the given cell into the reduced one, then over an edge where rounding erred.
         for _ in range(2):
-            for c in range(3):
-                high = offsets[row, c]
-                low = 0.0
-                for axis in range(3):
-                    product, error = two_product(-total[axis], cell[axis, c])
-                    high, carry = two_sum(high, product)
-                    low += carry + error
-                rough[c] = high + low
+            moved = False
             for axis in range(3):
                 f = (
-                    rough[0] * reduced_inverse[0, axis]
-                    + rough[1] * reduced_inverse[1, axis]
-                    + rough[2] * reduced_inverse[2, axis]
+                    rest[0] * reduced_inverse[0, axis]
+                    + rest[1] * reduced_inverse[1, axis]
+                    + rest[2] * reduced_inverse[2, axis]
                 )
                 extra[axis] = np.rint(f)
+                moved = moved or extra[axis] != 0.0
+            if not moved:
+                break
             for axis in range(3):
                 for step in range(3):
                     total[axis] += extra[step] * steps[step, axis]
+            without(offsets[row], total, cell, rest)
         turns = 0.0
         for c in range(3):
-            high = offsets[row, c]
-            low = 0.0
-            for axis in range(3):
-                product, error = two_product(-total[axis], cell[axis, c])
-                high, carry = two_sum(high, product)
-                low += carry + error
-            out[row, c] = high + low
+            out[row, c] = rest[c]
             out_cells[row, c] = total[c]
             product, error = two_product(total[c], k[c])
             turns += (product - np.rint(product)) + error

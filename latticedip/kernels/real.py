@@ -148,7 +148,6 @@ def group_sums(n, apart, b1, b2, weights, sums):
 def real_tensors(
     first,
     last,
-    order,
     starts,
     centres,
     radii,
@@ -168,7 +167,7 @@ def real_tensors(
 ):
     """Add the real part and the self term of T/C at the targets of boxes first..last to ``out``.
 
-    order (n_t,), starts (n_boxes + 1,): the rows of targets in each box. centres (n_boxes, 3), radii (n_boxes,): Å.
+    starts (n_boxes + 1,): the rows of targets in each box. centres (n_boxes, 3), radii (n_boxes,): Å.
     targets (n_t, 3), sources (n_s, 3): Cartesian Å, reduced into the cell. cell, inverse (3, 3).
     images (3, n): lattice vectors by increasing length, zero first; lengths (n,); phase (2, n): cos and −sin of
     2π k·n for each. k (3,). alpha 1/Å, cutoff Å; a source closer than on_site Å is left out and self_term (1/Å³)
@@ -233,8 +232,7 @@ def real_tensors(
                 for lane in range(LANES):
                     for j in range(groups, n):
                         weights[part, lane * GROUPS + j] = 0.0
-            for row in range(starts[box], starts[box + 1]):
-                t = order[row]
+            for t in range(starts[box], starts[box + 1]):
                 found = 0
                 for lane in range(LANES):
                     found += separations(

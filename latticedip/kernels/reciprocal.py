@@ -49,6 +49,16 @@ def powers_of(n, unit, top, phases):
 
 
 @kernel(fastmath=ORDERED, inline=True)
+def times(n, first, second, sign, out):
+    """Products of phases (2, LANES), flat, the second conjugated where sign is −1."""
+    for i in range(n):
+        j = np.uint64(i + LANES)
+        b = sign * second[j]
+        out[i] = first[i] * second[i] - first[j] * b
+        out[j] = first[i] * b + first[j] * second[i]
+
+
+@kernel(fastmath=ORDERED, inline=True)
 def held(fresh, value):
     """What a sum holds: nothing where it is fresh."""
     return 0.0 if fresh else value
@@ -99,20 +109,17 @@ def add_four_field_orders(n, fresh, a, b, e, f, phases, sums):
 
 
 @kernel(fastmath=ORDERED, inline=True)
-def add_field_stretch(n, first, first_sign, second, second_sign, lead, sums, n1, n2, both, total):
+def add_field_stretch(n, lead, second, sign, sums, n1, n2, both, total):
     """Add n₁ Re(e p), n₂ Re(e p) and Re(e q) to a vector, and the imaginary parts to another where ``both``.
 
-    e = lead · first · second for unit phases (2, LANES), conjugated where their sign is −1; p, q: sums (4, LANES);
+    e = lead · second for unit phases (2, LANES), the second conjugated where sign is −1; p, q: sums (4, LANES);
     total (6, LANES); all flat.
     """
     for i in range(n):
         j, k, l = np.uint64(i + LANES), np.uint64(i + 2 * LANES), np.uint64(i + 3 * LANES)
-        a = first_sign * first[j]
-        b = second_sign * second[j]
-        x = first[i] * second[i] - a * b
-        y = first[i] * b + a * second[i]
-        er = x * lead[i] - y * lead[j]
-        ei = x * lead[j] + y * lead[i]
+        b = sign * second[j]
+        er = lead[i] * second[i] - lead[j] * b
+        ei = lead[i] * b + lead[j] * second[i]
         p = er * sums[i] - ei * sums[j]
         total[i] += n1 * p
         total[j] += n2 * p
@@ -132,7 +139,7 @@ def reciprocal_fields(first, last, targets, waves, k, limits, stretches, coeffic
     k (3,); limits (3,): largest |m| per axis. stretches (n, 3): m₁, m₂ and the number of orders |m₃| from 0, made even.
     coefficients (n, orders, 8): for each stretch and order |m₃| the factors of cosine and sine in the real and in the
     imaginary part of Σ f e^m, and the same of Σ (m − k₃) f e^m; zero beyond the largest order.
-    out (parts, n_t, 1, 3).
+    out (parts, n_t, 3).
     """
     parts = out.shape[0]
     unit = np.empty((3, 2, LANES))
@@ -140,6 +147,7 @@ def reciprocal_fields(first, last, targets, waves, k, limits, stretches, coeffic
     two = np.empty(2 * LANES * (limits[1] + 1))
     three = np.empty(2 * LANES * coefficients.shape[1])
     lead = np.empty(2 * LANES)
+    shared = np.empty(2 * LANES)
     sums = np.empty(4 * LANES)
     total = np.empty(6 * LANES)
     for start in range(first, last, LANES):
@@ -162,6 +170,8 @@ def reciprocal_fields(first, last, targets, waves, k, limits, stretches, coeffic
         for r in range(stretches.shape[0]):
             m1 = stretches[r, 0]
             m2 = stretches[r, 1]
+            if r == 0 or m1 != stretches[r - 1, 0]:
+                times(n, lead, one[2 * LANES * abs(m1) :], 1.0 if m1 >= 0 else -1.0, shared)
             c = coefficients[r]
             m = 0
             while m + 4 <= stretches[r, 2]:
@@ -170,13 +180,13 @@ def reciprocal_fields(first, last, targets, waves, k, limits, stretches, coeffic
             if m < stretches[r, 2]:
                 add_two_field_orders(n, m == 0, c[m], c[m + 1], three[2 * LANES * m :], sums)
             add_field_stretch(
-                n, one[2 * LANES * abs(m1) :], 1.0 if m1 >= 0 else -1.0, two[2 * LANES * abs(m2) :],
-                1.0 if m2 >= 0 else -1.0, lead, sums, m1 - k[0], m2 - k[1], parts == 2, total,
+                n, shared, two[2 * LANES * abs(m2) :], 1.0 if m2 >= 0 else -1.0, sums, m1 - k[0], m2 - k[1],
+                parts == 2, total,
             )  # fmt: skip
         for part in range(parts):
             for i in range(count):
                 for c in range(3):
-                    out[part, start + i, 0, c] = (
+                    out[part, start + i, c] = (
                         total[3 * part * LANES + i] * waves[0, c]
                         + total[(3 * part + 1) * LANES + i] * waves[1, c]
                         + total[(3 * part + 2) * LANES + i] * waves[2, c]
@@ -219,22 +229,19 @@ def add_four_tensor_orders(n, fresh, a, b, e, f, phases, sums):
 
 
 @kernel(fastmath=ORDERED, inline=True)
-def add_tensor_stretch(n, first, first_sign, second, second_sign, lead, sums, n1, n2, both, total):
+def add_tensor_stretch(n, lead, second, sign, sums, n1, n2, both, total):
     """Add n₁², n₁n₂ and n₂² Re(e p), n₁ and n₂ Re(e q) and Re(e r), and the imaginary parts where ``both``.
 
-    e = lead · first · second for unit phases (2, LANES), conjugated where their sign is −1; p, q, r: sums (6, LANES);
+    e = lead · second for unit phases (2, LANES), the second conjugated where sign is −1; p, q, r: sums (6, LANES);
     total (12, LANES); all flat.
     """
     n11, n12, n22 = n1 * n1, n1 * n2, n2 * n2
     for i in range(n):
         j, k, l = np.uint64(i + LANES), np.uint64(i + 2 * LANES), np.uint64(i + 3 * LANES)
         four, five = np.uint64(i + 4 * LANES), np.uint64(i + 5 * LANES)
-        a = first_sign * first[j]
-        b = second_sign * second[j]
-        x = first[i] * second[i] - a * b
-        y = first[i] * b + a * second[i]
-        er = x * lead[i] - y * lead[j]
-        ei = x * lead[j] + y * lead[i]
+        b = sign * second[j]
+        er = lead[i] * second[i] - lead[j] * b
+        ei = lead[i] * b + lead[j] * second[i]
         p = er * sums[i] - ei * sums[j]
         q = er * sums[k] - ei * sums[l]
         total[i] += n11 * p
@@ -270,6 +277,7 @@ def reciprocal_tensors(first, last, targets, sources, waves, k, limits, stretche
     two = np.empty(2 * LANES * (limits[1] + 1))
     three = np.empty(2 * LANES * coefficients.shape[1])
     lead = np.empty(2 * LANES)
+    shared = np.empty(2 * LANES)
     sums = np.empty(6 * LANES)
     total = np.empty(12 * LANES)
     element = np.empty(LANES)
@@ -299,6 +307,8 @@ def reciprocal_tensors(first, last, targets, sources, waves, k, limits, stretche
         for r in range(stretches.shape[0]):
             m1 = stretches[r, 0]
             m2 = stretches[r, 1]
+            if r == 0 or m1 != stretches[r - 1, 0]:
+                times(n, lead, one[2 * LANES * abs(m1) :], 1.0 if m1 >= 0 else -1.0, shared)
             c = coefficients[r]
             m = 0
             while m + 4 <= stretches[r, 2]:
@@ -307,8 +317,8 @@ def reciprocal_tensors(first, last, targets, sources, waves, k, limits, stretche
             if m < stretches[r, 2]:
                 add_two_tensor_orders(n, m == 0, c[m], c[m + 1], three[2 * LANES * m :], sums)
             add_tensor_stretch(
-                n, one[2 * LANES * abs(m1) :], 1.0 if m1 >= 0 else -1.0, two[2 * LANES * abs(m2) :],
-                1.0 if m2 >= 0 else -1.0, lead, sums, m1 - k[0], m2 - k[1], parts == 2, total,
+                n, shared, two[2 * LANES * abs(m2) :], 1.0 if m2 >= 0 else -1.0, sums, m1 - k[0], m2 - k[1],
+                parts == 2, total,
             )  # fmt: skip
         for part in range(parts):
             for e in range(5):

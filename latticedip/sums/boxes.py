@@ -29,6 +29,12 @@ class Boxes:
     def __len__(self) -> int:
         return len(self.radii)
 
+    def part(self, first: int, last: int) -> tuple[Boxes, slice]:
+        """Boxes first..last by themselves, and the stretch of sorted targets that they hold."""
+        rows = slice(int(self.starts[first]), int(self.starts[last]))
+        starts = self.starts[first : last + 1] - rows.start
+        return Boxes(self.order[rows], starts, self.centres[first:last], self.radii[first:last]), rows
+
 
 def largest_radius(lattice: ReducedLattice) -> float:
     """No box of this lattice has a larger radius (Å)."""
@@ -43,13 +49,17 @@ def boxes(lattice: ReducedLattice, targets: FloatArray) -> Boxes:
     if np.prod(count.astype(float)) > n:
         return Boxes(np.arange(n), np.arange(n + 1), np.ascontiguousarray(targets), np.zeros(n))
     place = np.clip(((targets @ lattice.inverse + 0.5) * count).astype(int), 0, count - 1)
-    index = np.ravel_multi_index(tuple(place.T), tuple(count))
+    index = (place[:, 0] * count[1] + place[:, 1]) * count[2] + place[:, 2]
+    if np.prod(count) <= np.iinfo(np.uint16).max:
+        # Short numbers are sorted digit by digit, in a fraction of the time.
+        index = index.astype(np.uint16)
     order = np.argsort(index, kind="stable")
-    kinds, first = np.unique(index[order], return_index=True)
-    corner = np.array(np.unravel_index(kinds, tuple(count))).T
+    found = index[order]
+    first = np.flatnonzero(np.append(True, found[1:] != found[:-1]))
+    corner = np.array(np.unravel_index(found[first], tuple(count))).T
     centres = ((corner + 0.5) / count - 0.5) @ lattice.cell
     radius = _radius(lattice.cell / count[:, None])
-    return Boxes(order, np.append(first, n), np.ascontiguousarray(centres), np.full(len(kinds), radius))
+    return Boxes(order, np.append(first, n), np.ascontiguousarray(centres), np.full(len(first), radius))
 
 
 def _radius(edges: FloatArray) -> float:

@@ -29,7 +29,7 @@ from latticedip.kernels.phases import phase_table, reduce_offsets
 from latticedip.kernels.real import real_gradients, real_tensors
 from latticedip.kernels.reciprocal import reciprocal_tensors
 from latticedip.sums.accuracy import choose_splitting, real_cutoffs, reciprocal_cutoffs
-from latticedip.sums.boxes import boxes, largest_radius
+from latticedip.sums.boxes import Boxes, boxes, largest_radius
 from latticedip.sums.lattice import ReducedLattice, reduce_cell, reduce_k, stable_inverse
 from latticedip.units import DIPOLE_T_A3_PER_MUB
 
@@ -38,6 +38,8 @@ ON_SITE_A = 1e-6
 #: Share of ``tol`` given to each of the two tails. An element of the diagonal found from the trace collects the
 #: tails of two others, two tails each; the rest is left for rounding.
 TAIL_SHARE = 0.2
+#: Pairs of target and source whose parts are held at one time: they stay in the second cache.
+PAIRS_AT_A_TIME = 4096
 #: Largest number of lattice or reciprocal vectors one sum may hold.
 MAX_VECTORS = 20_000_000
 #: Whole numbers above this cannot be taken from an offset exactly.
@@ -111,6 +113,11 @@ class LatticeSum:
     wave_factors: FloatArray
 
     @cached_property
+    def given_inverse(self) -> FloatArray:
+        """Shape (3, 3) float in 1/Å. Inverse of the cell as given."""
+        return stable_inverse(self.given_cell)
+
+    @cached_property
     def stretches(self) -> Stretches:
         """The waves by stretches of m₃."""
         runs = self.runs
@@ -137,7 +144,7 @@ class LatticeSum:
     def place(self, positions_cart: Any) -> Points:
         """Reduce Cartesian positions (n, 3) in Å by lattice vectors, exactly for the doubles as given."""
         positions = np.ascontiguousarray(positions_cart, dtype=float)
-        inverse = stable_inverse(self.given_cell)
+        inverse = self.given_inverse
         if len(positions) and np.abs(positions @ inverse).max() > MAX_CELLS:
             raise InputError(f"an offset lies more than {MAX_CELLS} cells away; reduce it by lattice vectors.")
         reduced, cells, turns = (
@@ -157,16 +164,14 @@ class LatticeSum:
         A source on its target (within 1e-6 Å) is left out.
         """
         n_t, n_s = len(targets), len(sources)
-        parts = 1 if self.is_real else 2
-        flat = np.empty((parts, n_t, n_s, 5))
-        if n_t and n_s:
-            reciprocal_part(self, targets.reduced, sources.reduced, flat)
-            real_part(self, targets.reduced, sources.reduced, flat)
         out = np.empty((n_t, n_s, 3, 3), dtype=float if self.is_real else complex)
-        over_rows(
-            finish_tensors, n_t, flat, boundary_trace(self), targets.turns, sources.turns, out,
-            at_least=max(1, 20_000 // max(1, n_s)),
-        )  # fmt: skip
+        if out.size:
+            found = boxes(self.lattice, targets.reduced)
+            by_box = Points(targets.reduced[found.order], targets.turns[found.order])
+            over_rows(
+                _tensors_of_boxes, len(found), self, found, by_box, sources, unit_phases(self, sources.reduced), out,
+                at_least=max(1, 400 * len(found) // (n_s * n_t)),
+            )  # fmt: skip
         return out
 
     def field_gradient(self, targets: Points, sources: Points, components: ComplexArray) -> ComplexArray:
@@ -194,13 +199,35 @@ class LatticeSum:
         return out * DIPOLE_T_A3_PER_MUB * np.exp(-2j * np.pi * targets.turns)[:, None, None]
 
 
-def real_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
-    """Add the real part and the self term, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³."""
-    found = boxes(plan.lattice, targets)
-    over_rows(
-        real_tensors, len(found), found.order, found.starts, found.centres, found.radii, targets, sources,
-        plan.lattice.cell, plan.lattice.inverse, plan.images, plan.lengths, plan.phase, plan.k, plan.alpha, plan.cutoff,
-        ON_SITE_A, self_term(plan.alpha), flat, at_least=max(1, 400 * len(found) // (len(sources) * len(targets))),
+def _tensors_of_boxes(
+    first: int,
+    last: int,
+    plan: LatticeSum,
+    found: Boxes,
+    targets: Points,
+    sources: Points,
+    source_phases: ComplexArray,
+    out: FloatArray | ComplexArray,
+) -> None:
+    """Write the rows of ``out`` whose targets lie in boxes first..last; targets are sorted by box."""
+    step = max(1, PAIRS_AT_A_TIME * len(found) // (len(targets) * len(sources)))
+    for begin in range(first, last, step):
+        part, rows = found.part(begin, min(last, begin + step))
+        flat = np.empty((1 if plan.is_real else 2, len(part.order), len(sources), 5))
+        reciprocal_part(plan, unit_phases(plan, targets.reduced[rows]), source_phases, flat)
+        real_part(plan, part, targets.reduced[rows], sources.reduced, flat)
+        out[part.order] = whole_tensors(flat, boundary_trace(plan), targets.turns[rows], sources.turns)
+
+
+def real_part(plan: LatticeSum, found: Boxes, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
+    """Add the real part and the self term, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³.
+
+    targets (n_t, 3), sorted by box, and sources (n_s, 3): reduced, in Å.
+    """
+    real_tensors(
+        0, len(found), found.starts, found.centres, found.radii, targets, sources, plan.lattice.cell,
+        plan.lattice.inverse, plan.images, plan.lengths, plan.phase, plan.k, plan.alpha, plan.cutoff, ON_SITE_A,
+        self_term(plan.alpha), flat,
     )  # fmt: skip
 
 
@@ -221,47 +248,41 @@ def wave_table(plan: LatticeSum, points: FloatArray) -> FloatArray:
     return table
 
 
-def reciprocal_part(plan: LatticeSum, targets: FloatArray, sources: FloatArray, flat: FloatArray) -> None:
+def reciprocal_part(plan: LatticeSum, targets: ComplexArray, sources: ComplexArray, flat: FloatArray) -> None:
     """Write the reciprocal part, divided by C, to ``flat`` (parts, n_t, n_s, 5) in 1/Å³.
 
-    Every pair of target and source has phases of its own, products of those of its two points.
+    targets (n_t, 4), sources (n_s, 4): `unit_phases` of the points. Every pair has the products of those of its two.
     """
     parts, n_t, n_s, _ = flat.shape
-    over_rows(
-        reciprocal_tensors, n_t * n_s, _unit_phases(plan, targets), _unit_phases(plan, sources), plan.lattice.waves,
-        plan.k, plan.limits, plan.stretches.rows, plan.tensor_factors, flat.reshape(parts, n_t * n_s, 5),
-        at_least=max(16, 400_000 // max(1, len(plan.q))),
+    reciprocal_tensors(
+        0, n_t * n_s, targets, sources, plan.lattice.waves, plan.k, plan.limits, plan.stretches.rows,
+        plan.tensor_factors, flat.reshape(parts, n_t * n_s, 5),
     )  # fmt: skip
 
 
-def _unit_phases(plan: LatticeSum, points: FloatArray) -> ComplexArray:
-    """Shape (n, 4) complex. exp(i b·x) for the three reciprocal vectors b, and exp(−i k·x)."""
+def unit_phases(plan: LatticeSum, points: FloatArray) -> ComplexArray:
+    """Shape (n, 4) complex. exp(i b·x) for the three reciprocal vectors b, and exp(−i k·x), of reduced positions."""
     angles = points @ plan.lattice.waves.T
     return np.ascontiguousarray(np.exp(1j * np.column_stack([angles, -angles @ plan.k])))
 
 
-def finish_tensors(
-    first: int,
-    last: int,
-    flat: FloatArray,
-    trace: float,
-    target_turns: FloatArray,
-    source_turns: FloatArray,
-    out: FloatArray | ComplexArray,
-) -> None:
-    """Write rows first..last of ``out`` (n_t, n_s, 3, 3) in T/µB: whole tensors, with the phases of the turns taken.
+def whole_tensors(
+    flat: FloatArray, trace: float, target_turns: FloatArray, source_turns: FloatArray
+) -> FloatArray | ComplexArray:
+    """Shape (n_t, n_s, 3, 3) in T/µB. Symmetric tensors times exp(−2πi (turns of target − turns of source)).
 
     flat (parts, n_t, n_s, 5): xx, yy, xy, xz, yz divided by C. trace in T/µB, real.
     """
-    rows = slice(first, last)
-    _unpack(flat[0, rows], trace, out.real[rows])
+    out = np.empty((*flat.shape[1:3], 3, 3), dtype=float if len(flat) == 1 else complex)
+    _unpack(flat[0], trace, out.real)
     if len(flat) == 2:
-        _unpack(flat[1, rows], 0.0, out.imag[rows])
-    turns = target_turns[rows, None] - source_turns[None, :]
+        _unpack(flat[1], 0.0, out.imag)
+    turns = target_turns[:, None] - source_turns[None, :]
     if np.any(turns):
         # Where the sum is real turns are multiples of one half, so that the phase is a sign.
         phase = np.exp(-2j * np.pi * turns) if len(flat) == 2 else np.cos(2 * np.pi * turns)
-        out[rows] *= phase[:, :, None, None]
+        out *= phase[:, :, None, None]
+    return out
 
 
 def _unpack(flat: FloatArray, trace: float, out: FloatArray) -> None:

@@ -7,6 +7,7 @@ for that, so that it differs from the one for tensors.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
@@ -23,7 +24,7 @@ from latticedip.sums.accuracy import (
     COST_FIELD_WAVE_ONCE,
     choose_splitting,
 )
-from latticedip.sums.boxes import boxes
+from latticedip.sums.boxes import Boxes, boxes
 from latticedip.sums.bulk import ON_SITE_A, TAIL_SHARE, LatticeSum, Points, lattice_sum, self_term, wave_table
 from latticedip.sums.lattice import reduce_cell
 from latticedip.units import DIPOLE_T_A3_PER_MUB
@@ -72,34 +73,70 @@ def lattice_field(
         # The phases are signs here; cut what rounding leaves of their imaginary parts.
         moments = np.asarray(components, dtype=complex) * np.round(np.cos(2 * np.pi * sources.turns))[:, None]
     parts = 1 if plan.is_real and not np.any(moments.imag) else 2
-    out = np.zeros((parts, n_t, 1, 3))
-    weight = np.zeros(n_t)
+    out, weight = np.zeros((parts, n_t, 3)), np.zeros(n_t)
     if n_t and len(sources):
-        _reciprocal(plan, targets.reduced, sources.reduced, moments, out)
-        _real(plan, targets.reduced, sources.reduced, moments, out, weight)
+        found = boxes(plan.lattice, targets.reduced)
+        over_rows(
+            _fields_of_boxes, len(found), plan, found, targets.reduced[found.order],
+            _wave_coefficients(plan, sources.reduced, moments, parts), _images(plan, sources.reduced, moments, parts),
+            out, weight, at_least=max(4, 32 * len(found) // n_t),
+        )  # fmt: skip
     out *= DIPOLE_T_A3_PER_MUB
-    total = out[0, :, 0].astype(complex) if parts == 1 else out[0, :, 0] + 1j * out[1, :, 0]
+    total = out[0].astype(complex) if parts == 1 else out[0] + 1j * out[1]
     if np.any(targets.turns):
         total *= np.exp(-2j * np.pi * targets.turns)[:, None]
     return total, weight * DIPOLE_T_A3_PER_MUB
 
 
-def _reciprocal(
-    plan: LatticeSum, targets: FloatArray, sources: FloatArray, moments: ComplexArray, out: FloatArray
+def _fields_of_boxes(
+    first: int,
+    last: int,
+    plan: LatticeSum,
+    found: Boxes,
+    targets: FloatArray,
+    coefficients: list[FloatArray],
+    images: Images,
+    out: FloatArray,
+    weight: FloatArray,
 ) -> None:
-    """Write the reciprocal part, divided by C, to ``out`` (parts, n_t, 1, 3) in µB/Å³."""
-    n_q = len(plan.q)
+    """Write the rows of ``out`` (parts, n_t, 3) in µB/Å³ and ``weight`` (n_t,) of boxes first..last.
+
+    targets (n_t, 3): reduced and sorted by box.
+    """
+    part, rows = found.part(first, last)
+    here, added = np.zeros((len(out), len(part.order), 3)), np.zeros(len(part.order))
+    _reciprocal_part(plan, targets[rows], coefficients, here)
+    _real_part(plan, part, targets[rows], images, here, added)
+    out[:, part.order], weight[part.order] = here, added
+
+
+def _reciprocal_part(plan: LatticeSum, targets: FloatArray, coefficients: list[FloatArray], out: FloatArray) -> None:
+    """Write the reciprocal part, divided by C, to ``out`` (parts, n_t, 3) in µB/Å³."""
+    for factors, written in zip(coefficients, np.split(out, len(coefficients)), strict=True):
+        reciprocal_fields(
+            0, len(targets), targets, plan.lattice.waves, plan.k, plan.limits, plan.stretches.rows, factors, written
+        )
+
+
+def _real_part(
+    plan: LatticeSum, found: Boxes, targets: FloatArray, images: Images, out: FloatArray, weight: FloatArray
+) -> None:
+    """Add the real part and the self term, divided by C, to ``out`` (parts, n_t, 3) in µB/Å³."""
+    real_fields(
+        0, len(found), found.starts, found.centres, found.radii, targets, images.positions, images.moments,
+        images.sizes, plan.alpha, plan.cutoff, ON_SITE_A, self_term(plan.alpha), out, weight,
+    )  # fmt: skip
+
+
+def _wave_coefficients(plan: LatticeSum, sources: FloatArray, moments: ComplexArray, parts: int) -> list[FloatArray]:
+    """What `reciprocal_fields` takes, once for all parts or once for each."""
     table = wave_table(plan, sources)
     if plan.is_real:
         # One of each pair ±q is kept, and the other is its conjugate. Real and imaginary parts of the moments go apart.
-        structures = [_structure(plan, table, part) for part in (moments.real, moments.imag)[: len(out)]]
+        structures = [_structure(plan, table, part) for part in (moments.real, moments.imag)[:parts]]
     else:
         structures = [_structure(plan, table, moments.real) + 1j * _structure(plan, table, moments.imag)]
-    for structure, written in zip(structures, np.split(out, len(structures)), strict=True):
-        over_rows(
-            reciprocal_fields, len(targets), targets, plan.lattice.waves, plan.k, plan.limits, plan.stretches.rows,
-            _coefficients(plan, plan.wave_factors * structure), written, at_least=max(16, 200_000 // max(1, n_q)),
-        )  # fmt: skip
+    return [_coefficients(plan, plan.wave_factors * structure) for structure in structures]
 
 
 def _structure(plan: LatticeSum, table: FloatArray, moments: FloatArray) -> ComplexArray:
@@ -122,27 +159,23 @@ def _coefficients(plan: LatticeSum, factors: ComplexArray) -> FloatArray:
     return out
 
 
-def _real(
-    plan: LatticeSum,
-    targets: FloatArray,
-    sources: FloatArray,
-    moments: ComplexArray,
-    out: FloatArray,
-    weight: FloatArray,
-) -> None:
-    """Add the real part and the self term, divided by C, to ``out`` (parts, n_t, 1, 3) in µB/Å³."""
+@dataclass(frozen=True, eq=False)
+class Images:
+    """Images of all sources that can come within the cut-off of a target in the home cell.
+
+    positions: Shape (3, n) float in Å. moments: Shape (parts, 3, n) float in µB, phases included; sizes: Shape (n,).
+    """
+
+    positions: FloatArray
+    moments: FloatArray
+    sizes: FloatArray
+
+
+def _images(plan: LatticeSum, sources: FloatArray, moments: ComplexArray, parts: int) -> Images:
     positions, owner, phase = _source_images(plan, sources)
     carried = moments[owner] * phase[:, None]
-    split = np.ascontiguousarray(np.stack([carried.real.T, carried.imag.T][: len(out)]))
-    found = boxes(plan.lattice, targets)
-    sorted_out, sorted_weight = np.zeros(out.shape), np.zeros(len(targets))
-    over_rows(
-        real_fields, len(found), found.starts, found.centres, found.radii, targets[found.order], positions, split,
-        np.abs(carried).sum(axis=1), plan.alpha, plan.cutoff, ON_SITE_A, self_term(plan.alpha),
-        sorted_out, sorted_weight, at_least=4,
-    )  # fmt: skip
-    out[:, found.order] += sorted_out
-    weight[found.order] = sorted_weight
+    split = np.ascontiguousarray(np.stack([carried.real.T, carried.imag.T][:parts]))
+    return Images(positions, split, np.abs(carried).sum(axis=1))
 
 
 def _source_images(plan: LatticeSum, sources: FloatArray) -> tuple[FloatArray, np.ndarray, ComplexArray]:
