@@ -41,11 +41,8 @@ def field_plan(cell: FloatArray, k: FloatArray, tol: float, n_sources: int, n_ta
 
 
 def _bucket(n: int, base: int) -> int:
-    """The lowest power of a base that is at least n, up to a million."""
-    power = 1
-    while power < min(n, 10**6):
-        power *= base
-    return power
+    """The power of a base that is nearest to n by ratio, up to a million."""
+    return int(base ** round(np.log(min(max(1, n), 10**6)) / np.log(base)))
 
 
 @lru_cache(maxsize=64)
