@@ -11,7 +11,6 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from scipy.optimize import minimize
 
 from latticedip.analysis.modes_bands import MagneticSites
 from latticedip.analysis.modes_search import magnetic_lattice
@@ -75,6 +74,9 @@ def _sharpen(
         total = weights.sum()
         shares = np.einsum("kn,kin->i", weights / total, np.abs(vectors) ** 2) @ per_kind
         return float(np.log(total) / sharpness - values.min()), shares @ free
+
+    # Imported here: loading it takes a fifth of a second, and few couplings need it.
+    from scipy.optimize import minimize
 
     return np.asarray(minimize(value, start, jac=True, method="L-BFGS-B", options=STOP).x)
 

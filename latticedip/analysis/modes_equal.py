@@ -12,7 +12,6 @@ from dataclasses import dataclass
 from fractions import Fraction
 
 import numpy as np
-from scipy.optimize import least_squares
 
 from latticedip.checks import ComplexArray, FloatArray
 from latticedip.ordering.model import is_self_conjugate
@@ -128,5 +127,8 @@ def _solve(linear: FloatArray, start: FloatArray) -> FloatArray:
 
     def slope(p: FloatArray) -> FloatArray:
         return np.asarray(2 * np.einsum("ia,iap->ip", linear @ p, linear))
+
+    # Imported here: loading it takes a fifth of a second, and few couplings need it.
+    from scipy.optimize import least_squares
 
     return np.asarray(least_squares(residual, start, slope, xtol=1e-15, ftol=1e-15, gtol=1e-15, max_nfev=200).x)

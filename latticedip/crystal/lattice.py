@@ -9,7 +9,6 @@ import itertools
 from typing import Any
 
 import numpy as np
-from scipy.spatial import cKDTree
 
 from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal, site_order
@@ -163,6 +162,9 @@ def _images(crystal: Crystal, translations: FloatArray) -> np.ndarray:
     targets = np.tile(np.arange(crystal.n_sites), (len(translations), 1))
     if len(translations) == 1:
         return targets
+    # Imported here: loading it takes a quarter of a second, which primitive cells do without.
+    from scipy.spatial import cKDTree
+
     for symbol in dict.fromkeys(crystal.symbols):
         alike = np.array([i for i, other in enumerate(crystal.symbols) if other == symbol])
         home = crystal.positions[alike]

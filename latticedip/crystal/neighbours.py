@@ -5,7 +5,6 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.spatial import cKDTree
 
 from latticedip.checks import FloatArray
 from latticedip.errors import LimitError
@@ -15,6 +14,19 @@ if TYPE_CHECKING:
 
 #: Images of atoms held at one time.
 MAX_IMAGES = 20_000_000
+#: Pairs of images and atoms up to which every distance is worked out.
+FEW_PAIRS = 200_000
+
+
+def _within(images: FloatArray, centres: FloatArray, radius: float) -> list[list[int]]:
+    """For each centre (n, 3) the images (m, 3) within a radius, all in Å."""
+    if len(images) * len(centres) <= FEW_PAIRS:
+        apart = np.linalg.norm(images[None] - centres[:, None], axis=2) <= radius
+        return [[int(hit) for hit in np.flatnonzero(row)] for row in apart]
+    # Imported here: loading it takes a quarter of a second, which small structures do without.
+    from scipy.spatial import cKDTree
+
+    return list(cKDTree(images).query_ball_point(centres, radius))
 
 
 def image_shifts(crystal: Crystal, radius: float) -> FloatArray:
@@ -44,10 +56,8 @@ def close_pairs(crystal: Crystal, radius: float) -> list[tuple[int, int, float]]
     home[:, periodic] %= 1.0
     shifts = image_shifts(crystal, radius)
     images = (home[None, :, :] + shifts[:, None, :]).reshape(-1, 3) @ crystal.cell
-    tree = cKDTree(images)
     found = []
-    hits_of_all: list[list[int]] = list(tree.query_ball_point(home @ crystal.cell, radius))
-    for i, hits in enumerate(hits_of_all):
+    for i, hits in enumerate(_within(images, home @ crystal.cell, radius)):
         for hit in sorted(hits):
             j = hit % crystal.n_sites
             shift = shifts[hit // crystal.n_sites]

@@ -10,9 +10,9 @@ Rules are short sentences, because a template says them of crystals nobody has l
 from __future__ import annotations
 
 import re
+from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.spatial import cKDTree
 
 from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal
@@ -23,6 +23,9 @@ from latticedip.observables.isotopes import isotopes_by_element
 from latticedip.probe import Probe
 from latticedip.study.keys import Key
 from latticedip.study.motion import RULE_MOTION_KEYS, read_motion
+
+if TYPE_CHECKING:
+    from scipy.spatial import cKDTree
 
 RULE_KEYS = ("rule", "name", "particle", "spacing_A", *RULE_MOTION_KEYS)
 #: Points that one rule may make in one crystal.
@@ -145,6 +148,8 @@ def far_points(crystal: Crystal, distance_A: float, spacing_A: float) -> FloatAr
 
 
 def _atom_images(crystal: Crystal, distance_A: float) -> cKDTree:
+    from scipy.spatial import cKDTree
+
     home = crystal.positions.copy()
     periodic = np.asarray(crystal.pbc)
     home[:, periodic] %= 1.0
