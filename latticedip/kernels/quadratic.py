@@ -1,7 +1,8 @@
 """Quadratic forms of many rows, Σ_ij x_i H_ij x_j, with H real and symmetric.
 
-Only half of H is multiplied. The product is written here and not handed to BLAS for the reasons given in
-`latticedip.kernels.reciprocal`; beside that, no product is ever stored: it is contracted with its row at once.
+Only half of H is multiplied. The product is written here and not handed to BLAS: in four-by-four blocks of dot products
+it runs at the speed of a tuned library on one core, no second pool of threads gets in the way, and no product is ever
+stored: it is contracted with its row at once.
 """
 
 from __future__ import annotations
