@@ -8,6 +8,7 @@ import pytest
 import latticedip as ld
 from latticedip.errors import InputError
 from latticedip.physics.contact import contact_field, shell_neighbours
+from latticedip.study.points import points_of
 from latticedip.units import MU0_T_A3_PER_MUB
 
 A = 4.0
@@ -133,3 +134,37 @@ def test_a_field_names_the_probe_and_the_ordering_of_a_term_that_finds_nothing()
     assert str(caught.value) == (
         f"muon A, ordering {cubic().name!r}: contact: no magnetic ion lies within 0.2 Å of the probe."
     )
+
+
+#: Metal atoms at the corners of a cube, fluorine in the middle of its edges: one site of three atoms.
+EDGES = ld.Crystal(A * np.eye(3), [[0, 0, 0], [0, 0, 0.5], [0, 0.5, 0], [0.5, 0, 0]], ["Mn", "F", "F", "F"])
+#: Along the bond of the first fluorine atom, which is c, and across it.
+BOND, ACROSS = 0.07, -0.02
+
+
+def test_a_tensor_of_a_site_turns_with_its_atoms():
+    term = ld.Contact(np.diag([ACROSS, ACROSS, BOND]), shell=1)
+    ordering = ld.Ordering(EDGES, [M, [0, 0, 0], [0, 0, 0], [0, 0, 0]], name="edges")
+    probe = ld.Probe(site="F", particle="19F", contact=term)
+    found = ld.local_field(ordering, probe).contact
+    # Two metal neighbours each; the bond of the second and third atom lies along b and a.
+    tensors = [np.diag(d) for d in ([ACROSS, ACROSS, BOND], [ACROSS, BOND, ACROSS], [BOND, ACROSS, ACROSS])]
+    assert np.allclose(found, [2 * tensor @ M for tensor in tensors], atol=1e-14)
+    points = points_of(EDGES, [probe])
+    assert [np.allclose(p.contact[0].coupling_T_per_muB, t) for p, t in zip(points, tensors, strict=True)] == [True] * 3
+    # At a position of its own the tensor is that of the position, whichever atom is there.
+    alone = ld.Probe(EDGES.positions[3], particle="19F", contact=term)
+    assert np.allclose(ld.local_field(ordering, alone).contact[0], 2 * tensors[0] @ M, atol=1e-14)
+
+
+def test_a_tensor_without_the_symmetry_of_its_site_is_refused():
+    ordering = ld.Ordering(EDGES, [M, [0, 0, 0], [0, 0, 0], [0, 0, 0]], name="edges")
+    probe = ld.Probe(site="F", particle="19F", name="fluorine", contact=ld.Contact(np.diag([0.1, 0.2, 0.3]), shell=1))
+    message = (
+        "fluorine: its contact tensor is stated for the first atom and does not have the symmetry of that site, so "
+        "that the other atoms have none of their own. Symmetrize it, or give a number."
+    )
+    for call in (lambda: ld.local_field(ordering, probe), lambda: points_of(EDGES, [probe])):
+        with pytest.raises(InputError) as caught:
+            call()
+        assert str(caught.value) == message

@@ -117,6 +117,16 @@ def carried_contacts(
     return found
 
 
+def contacts_of_site(
+    home: Crystal, places: FloatArray, terms: Sequence[Contact], name: str
+) -> list[tuple[Contact, ...]]:
+    """Contact terms of each atom of a site at places (n, 3) fractional, where they are stated for the first of them.
+
+    One atom alone keeps what is stated for it, whatever its symmetry says. Raises what `carried_contacts` raises.
+    """
+    return [tuple(terms)] if len(places) == 1 else carried_contacts(home, places[0], places, terms, name)
+
+
 def _agreed(term: Contact, turns: list[FloatArray], name: str) -> Contact:
     turned = [turned_term(term, turn) for turn in turns]
     scale = SAME_TENSOR * float(np.abs(term.coupling_T_per_muB).max())

@@ -15,7 +15,8 @@ from latticedip.crystal.spread import carried_spreads
 from latticedip.crystal.symmetry import operations_of
 from latticedip.crystal.uncertain import carried_su
 from latticedip.observables.orbits import equivalent_probes
-from latticedip.probe import Probe
+from latticedip.physics.contact import contacts_of_site
+from latticedip.probe import Contact, Probe
 
 
 @dataclass(frozen=True, eq=False)
@@ -23,7 +24,8 @@ class Point:
     """One point that a probe stands for: its position, Shape (3,) fractional, and how many the probe has.
 
     probe: the probe, its tensors turned where the point is one that symmetry makes equal to its position. spread: that
-    of the probe, turned for the other atoms of a site. position_su: Shape (3,) fractional, where the probe states it.
+    of the probe, turned for the other atoms of a site, as are its contact terms. position_su: Shape (3,) fractional,
+    where the probe states it.
     """
 
     probe: Probe
@@ -31,6 +33,7 @@ class Point:
     multiplicity: int
     spread: float | FloatArray | None = None
     position_su: FloatArray | None = None
+    contact: tuple[Contact, ...] = ()
 
     @property
     def displaced(self) -> tuple[Displaced, ...]:
@@ -58,20 +61,25 @@ def points_of(crystal: Crystal, probes: Iterable[Probe], *, all_equivalent: bool
     all_equivalent: a position stands for every one that the symmetry of the crystal makes equal to it; contact tensors,
     covariances and displaced neighbours are turned with it.
 
-    Raises InputError for a covariance without the symmetry of its site, and what `equivalent_probes` raises.
+    Raises InputError for a covariance or contact tensor without the symmetry of its site, and what `equivalent_probes`
+    raises.
     """
     points: list[Point] = []
     for probe in probes:
         if probe.site is not None:
             sites = crystal.find(probe.site)
+            places = crystal.positions[list(sites)]
             spreads = carried_spreads(crystal, sites, probe.spread, probe.name)
-            pairs = zip(crystal.positions[list(sites)], spreads, strict=True)
-            points += [Point(probe, position, len(sites), spread) for position, spread in pairs]
+            contacts = contacts_of_site(crystal, places, probe.contact, probe.name)
+            points += [
+                Point(probe, position, len(sites), spread, contact=contact)
+                for position, spread, contact in zip(places, spreads, contacts, strict=True)
+            ]
             continue
         images = equivalent_probes(crystal, probe) if all_equivalent else [probe]
         for image in images:
             su = probe.position_su if image is probe else _su_there(crystal, probe, np.asarray(image.position))
-            points.append(Point(image, np.asarray(image.position), len(images), image.spread, su))
+            points.append(Point(image, np.asarray(image.position), len(images), image.spread, su, image.contact))
     return points
 
 

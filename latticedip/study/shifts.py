@@ -247,7 +247,7 @@ def _surroundings(study: Study, point: Point) -> dict[str, Any]:
     """What a point brings to the sums (contact terms, spread, displaced neighbours, uncertainty), and extended ions."""
     return {
         "moment_spread": study.moment_spread or None,
-        "contact": point.probe.contact,
+        "contact": point.contact,
         "spread": point.spread,
         "displaced": point.displaced,
         "position_su": point.position_su,
