@@ -7,6 +7,7 @@ import pytest
 
 import latticedip as ld
 from latticedip.errors import InputError
+from latticedip.observables.orbits import orbit_field
 from latticedip.physics.contact import contact_field, shell_neighbours
 from latticedip.study.points import points_of
 from latticedip.units import MU0_T_A3_PER_MUB
@@ -168,3 +169,26 @@ def test_a_tensor_without_the_symmetry_of_its_site_is_refused():
         with pytest.raises(InputError) as caught:
             call()
         assert str(caught.value) == message
+
+
+def test_a_tensor_that_no_operation_carries_to_the_other_atoms_is_refused():
+    cell = np.diag([4.0, 5.0, 6.0])
+    crystal = ld.Crystal(cell, [[0, 0, 0], [0.5, 0.5, 0.3], [0.1, 0.2, 0.5]], ["Mn", "O", "O"])
+    ordering = ld.Ordering(crystal, [M, [0, 0, 0], [0, 0, 0]], name="two kinds")
+    probe = ld.Probe(site="O", particle="17O", name="oxygen", contact=ld.Contact(np.diag([0.1, 0.2, 0.3]), shell=1))
+    with pytest.raises(InputError) as caught:
+        ld.local_field(ordering, probe)
+    assert str(caught.value) == (
+        "oxygen: its contact tensor is stated for the first atom, and no operation of the crystal carries it to all "
+        "the others. Give each kind of atom a probe of its own, or give a number."
+    )
+
+
+def test_one_atom_keeps_a_tensor_without_its_symmetry():
+    crystal = ld.Crystal(A * np.eye(3), [[0, 0, 0], CENTRE], ["Mn", "O"])
+    ordering = ld.Ordering(crystal, [M, [0, 0, 0]], name="cube")
+    tensor = np.diag([0.1, 0.2, 0.3])
+    probe = ld.Probe(site="O", particle="17O", contact=ld.Contact(tensor, shell=1))
+    found = ld.local_field(ordering, probe)
+    assert np.allclose(found.contact, [8 * tensor @ M])
+    assert np.allclose(orbit_field(ordering, probe).fields([[0, 0, 0]])[:, 0], found.total)

@@ -17,6 +17,7 @@ from latticedip.kernels import jit
 from latticedip.kernels.phases import reduce_offsets
 from latticedip.kernels.radial import U_MAX, exp_negative, radial_functions, scaled_erfc
 from latticedip.sums.bulk import lattice_sum
+from latticedip.sums.fields import field_plan, lattice_field
 from latticedip.sums.lattice import stable_inverse
 
 #: Names that would change what a child process does.
@@ -83,6 +84,53 @@ def test_the_same_with_the_compiler_off(compiled):
 
 def test_a_cache_that_cannot_be_written():
     assert run(ONE, NUMBA_CACHE_DIR="/dev/null/x") == run(ONE)
+
+
+@pytest.mark.parametrize("k", [(0, 0, 0), (0.213, 0.1, -0.37)])
+@pytest.mark.parametrize(("n_targets", "n_sources"), [(7, 300), (150, 40), (1500, 2), (5000, 3)])
+@pytest.mark.parametrize("cell", [np.diag([2.0, 2.0, 200.0]), [[5, 0, 0], [4.7, 1.7, 0], [1.1, 0.3, 6.0]]])
+def test_every_digit_is_the_same_on_one_thread(cell, n_targets, n_sources, k):
+    rng = np.random.default_rng(n_targets)
+    targets, sources = (rng.uniform(0, 1, (n, 3)) @ np.asarray(cell) for n in (n_targets, n_sources))
+    moments = rng.normal(size=(n_sources, 3)) + 0j
+    plan, splitting = lattice_sum(cell, k, 1e-6), field_plan(np.asarray(cell, dtype=float), np.array(k), 1e-6, 2, 1000)
+
+    def tensors():
+        return plan.tensors(plan.place(targets), plan.place(sources))
+
+    def fields():
+        return lattice_field(splitting, splitting.place(targets), splitting.place(sources), moments)[0]
+
+    for sums in (tensors, fields):
+        with jit.one_thread():
+            alone = sums()
+        assert np.array_equal(sums(), alone)
+
+
+def test_fields_in_a_cell_much_smaller_than_the_boxes_are_finite():
+    cell = np.diag([0.01, 0.01, 1.0])
+    rng = np.random.default_rng(8)
+    targets, sources = rng.uniform(0, 1, (2000, 3)) @ cell, rng.uniform(0, 1, (2, 3)) @ cell
+    moments = rng.normal(size=(2, 3)) + 0j
+    plan = field_plan(cell, np.zeros(3), 1e-10, 2, 2000)
+    field, weight = lattice_field(plan, plan.place(targets), plan.place(sources), moments)
+    tensors = lattice_sum(cell, (0, 0, 0), 1e-10)
+    expected = np.einsum("tsab,sb->ta", tensors.tensors(tensors.place(targets[:50]), tensors.place(sources)), moments)
+    assert np.all(np.isfinite(weight))
+    assert np.abs(field[:50] - expected).max() < 1e-9 * np.abs(expected).max()
+
+
+def test_an_error_in_a_block_of_rows_is_told_and_ends_the_work(monkeypatch):
+    monkeypatch.setattr(jit, "thread_count", lambda: 2)
+    done = []
+
+    def fails(first, last):
+        done.append((first, last))
+        raise ValueError(f"rows {first} to {last}")
+
+    with pytest.raises(ValueError, match=r"^rows \d+ to \d+$"):
+        jit.over_rows(fails, 1000, at_least=1)
+    assert len(done) <= 2
 
 
 @pytest.mark.slow

@@ -13,7 +13,7 @@ from latticedip.kernels.radial import U_MAX, radial_functions
 
 @kernel(fastmath=ORDERED, inline=True)
 def separations(n, tx, ty, tz, sx, sy, sz, site2, far2, x, y, z, square):
-    """Separations target − image and their squares; an image on the target is moved out to far2."""
+    """Separations target − image and their squares; an image on the target, or beyond far2, is put at far2."""
     for i in range(n):
         px = tx - sx[i]
         py = ty - sy[i]
@@ -22,7 +22,7 @@ def separations(n, tx, ty, tz, sx, sy, sz, site2, far2, x, y, z, square):
         x[i] = px
         y[i] = py
         z[i] = pz
-        square[i] = far2 if r2 < site2 else r2
+        square[i] = far2 if (r2 < site2 or r2 > far2) else r2
 
 
 @kernel(fastmath=True, inline=True)

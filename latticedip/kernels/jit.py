@@ -119,5 +119,11 @@ def over_rows(function: Callable[..., Any], n_rows: int, *arguments: Any, at_lea
 
 def _work(function: Callable[..., Any], waiting: Iterator[tuple[int, int]], arguments: tuple[Any, ...]) -> None:
     # Taking from a list's iterator is one step of the interpreter: no two threads get the same block.
-    for first, last in waiting:
-        function(first, last, *arguments)
+    try:
+        for first, last in waiting:
+            function(first, last, *arguments)
+    except BaseException:
+        # Nothing more is worth doing, for the other threads either.
+        for _ in waiting:
+            pass
+        raise

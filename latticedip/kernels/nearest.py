@@ -14,8 +14,8 @@ from latticedip.kernels.jit import ORDERED, kernel
 def nearest_distances(first, last, points, sites, cell, out):
     """Write to rows first..last of ``out`` (n,) the distance in Å to the nearest image of any site.
 
-    points (n, 3), sites (n_sites, 3): fractional in the reduced cell (3, 3). The image is the one that rounding each
-    coordinate finds, which is the nearest one wherever two images are not about equally far.
+    points (n, 3), sites (n_sites, 3), at least one: fractional in the reduced cell (3, 3). The image is the one that
+    rounding each coordinate finds, which is the nearest one wherever two images are not about equally far.
     """
     n_sites = sites.shape[0]
     square = np.empty(n_sites)
@@ -34,7 +34,7 @@ def nearest_distances(first, last, points, sites, cell, out):
             y = a * cell[0, 1] + b * cell[1, 1] + c * cell[2, 1]
             z = a * cell[0, 2] + b * cell[1, 2] + c * cell[2, 2]
             square[s] = x * x + y * y + z * z
-        least = np.inf
-        for s in range(n_sites):
+        least = square[0]
+        for s in range(1, n_sites):
             least = min(least, square[s])
         out[row] = np.sqrt(least)

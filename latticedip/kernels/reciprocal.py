@@ -19,6 +19,9 @@ from latticedip.kernels.jit import ORDERED, kernel
 
 #: Places taken together: long enough to vectorise, and all their phases stay in the fastest cache.
 LANES = 192
+#: Loops run over whole multiples of this: places that a vectorised loop left over would be rounded in another way, and
+#: results would depend on how places are spread over threads.
+WHOLE = 32
 #: Axes of the elements xx, yy, xy, xz, yz, and of the products n₁n₁, n₁n₂, n₂n₂, n₁n₃, n₂n₃, n₃n₃.
 ROW, COLUMN = (0, 1, 0, 0, 1), (0, 1, 1, 2, 2)
 ROW_OF_SIX, COLUMN_OF_SIX = (0, 0, 1, 0, 1, 2), (0, 1, 1, 2, 2, 2)
@@ -152,7 +155,7 @@ def reciprocal_fields(first, last, targets, waves, k, limits, stretches, coeffic
     total = np.empty(6 * LANES)
     for start in range(first, last, LANES):
         count = min(LANES, last - start)
-        n = (count + 7) // 8 * 8
+        n = (count + WHOLE - 1) // WHOLE * WHOLE
         for i in range(n):
             t = start + min(i, count - 1)
             turn = 0.0
@@ -288,7 +291,7 @@ def reciprocal_tensors(first, last, targets, sources, waves, k, limits, stretche
             factors[e, j] = waves[u, a] * waves[v, b] + (waves[v, a] * waves[u, b] if u != v else 0.0)
     for start in range(first, last, LANES):
         count = min(LANES, last - start)
-        n = (count + 7) // 8 * 8
+        n = (count + WHOLE - 1) // WHOLE * WHOLE
         for i in range(n):
             pair = start + min(i, count - 1)
             t = pair // n_sources

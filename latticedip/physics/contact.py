@@ -99,12 +99,13 @@ def carried_contacts(
 ) -> list[tuple[Contact, ...]]:
     """Contact terms at equivalent places (n, 3) fractional, where they are stated for the place ``first`` (3,).
 
-    A tensor is turned by an operation of the crystal that carries the first place onto the other.
+    A tensor is turned by an operation of the crystal that carries the first place onto the other. One place alone keeps
+    what is stated for it, whatever its symmetry says.
 
     Raises InputError, naming ``name``, where there is no such operation or where two of them disagree: the tensor then
     lacks the symmetry of its place.
     """
-    if not any(has_direction(term) for term in terms):
+    if len(places) <= 1 or not any(has_direction(term) for term in terms):
         return [tuple(terms)] * len(places)
     operations = operations_of(home)
     images = operations.rotations @ first + operations.translations
@@ -117,22 +118,15 @@ def carried_contacts(
     return found
 
 
-def contacts_of_site(
-    home: Crystal, places: FloatArray, terms: Sequence[Contact], name: str
-) -> list[tuple[Contact, ...]]:
-    """Contact terms of each atom of a site at places (n, 3) fractional, where they are stated for the first of them.
-
-    One atom alone keeps what is stated for it, whatever its symmetry says. Raises what `carried_contacts` raises.
-    """
-    return [tuple(terms)] if len(places) == 1 else carried_contacts(home, places[0], places, terms, name)
-
-
 def _agreed(term: Contact, turns: list[FloatArray], name: str) -> Contact:
+    if not turns:
+        raise InputError(
+            f"{name}: its contact tensor is stated for the first atom, and no operation of the crystal carries it to "
+            "all the others. Give each kind of atom a probe of its own, or give a number."
+        )
     turned = [turned_term(term, turn) for turn in turns]
     scale = SAME_TENSOR * float(np.abs(term.coupling_T_per_muB).max())
-    if not turned or any(
-        np.abs(other.coupling_T_per_muB - turned[0].coupling_T_per_muB).max() > scale for other in turned
-    ):
+    if any(np.abs(other.coupling_T_per_muB - turned[0].coupling_T_per_muB).max() > scale for other in turned):
         raise InputError(
             f"{name}: its contact tensor is stated for the first atom and does not have the symmetry of "
             "that site, so that the other atoms have none of their own. Symmetrize it, or give a number."

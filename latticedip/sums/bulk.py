@@ -262,8 +262,11 @@ def reciprocal_part(plan: LatticeSum, targets: ComplexArray, sources: ComplexArr
 
 def unit_phases(plan: LatticeSum, points: FloatArray) -> ComplexArray:
     """Shape (n, 4) complex. exp(i b·x) for the three reciprocal vectors b, and exp(−i k·x), of reduced positions."""
-    angles = points @ plan.lattice.waves.T
-    return np.ascontiguousarray(np.exp(1j * np.column_stack([angles, -angles @ plan.k])))
+    waves, k = plan.lattice.waves, plan.k
+    # Term by term: a matrix product rounds a row by how many rows come with it.
+    angles = points[:, :1] * waves[:, 0] + points[:, 1:2] * waves[:, 1] + points[:, 2:] * waves[:, 2]
+    shift = -(angles[:, :1] * k[0] + angles[:, 1:2] * k[1] + angles[:, 2:] * k[2])
+    return np.ascontiguousarray(np.exp(1j * np.hstack([angles, shift])))
 
 
 def whole_tensors(
