@@ -11,6 +11,7 @@ import numpy as np
 from latticedip.checks import FloatArray, as_float, as_floats, frozen
 from latticedip.crystal.displace import Displaced
 from latticedip.crystal.spread import as_spread
+from latticedip.crystal.uncertain import checked_su
 from latticedip.errors import InputError
 
 #: Neighbours whose distances differ by less than this (Å) belong to one shell.
@@ -137,6 +138,7 @@ class Probe:
             position_su = frozen(as_floats("position_su", position_su, (3,)))
             if np.any(position_su < 0):
                 raise InputError(f"position_su must hold numbers of at least 0, got {position_su.tolist()}.")
+            checked_su("position_su", position_su, (3,))
         known = particle_named(particle)
         where = site if site is not None else "(" + ", ".join(f"{x:.4g}" for x in position) + ")"
         object.__setattr__(self, "position", position)

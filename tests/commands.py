@@ -25,8 +25,8 @@ _cell_length_a {a}
 _cell_length_b {b}
 _cell_length_c {c}
 _cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
+_cell_angle_beta {beta}
+_cell_angle_gamma {gamma}
 _space_group_name_H-M_alt '{group}'
 loop_
 _atom_site_label
@@ -38,9 +38,10 @@ _atom_site_fract_z
 
 
 def box_cif(atoms: str, a: float, b: float | None = None, c: float | None = None, *, name: str = "cube",
-            group: str = "P 1") -> str:  # fmt: skip
-    """A CIF with a rectangular cell (edges in Å; a cube where only one is given) and these lines of atoms."""
-    return _BOX.format(name=name, a=a, b=a if b is None else b, c=a if c is None else c, group=group, atoms=atoms)
+            group: str = "P 1", beta: float = 90, gamma: float = 90) -> str:  # fmt: skip
+    """A CIF with a cell (edges in Å, a cube where only one is given; angles in degrees) and these lines of atoms."""
+    cell = {"a": a, "b": a if b is None else b, "c": a if c is None else c, "beta": beta, "gamma": gamma}
+    return _BOX.format(name=name, group=group, atoms=atoms, **cell)
 
 
 def enter(folder: Path, monkeypatch: pytest.MonkeyPatch, files: Mapping[str, str]) -> Path:

@@ -620,3 +620,25 @@ def test_a_crowded_structure_is_shown_without_a_flood(folder: Path) -> None:
     warnings = document("show", "cube.cif")["warnings"]
     assert len(warnings) == 11
     assert warnings[-1].startswith("and ") and warnings[-1].endswith(" more pairs of atoms that are too close.")
+
+
+@pytest.mark.parametrize(
+    ("arguments", "option"),
+    [
+        (["spectrum", "study.toml", "--powder", "--time", "nan"], "--time"),
+        (["spectrum", "study.toml", "--width", "inf"], "--width"),
+        (["spectrum", "study.toml", "--applied", "0", "nan", "0"], "--applied"),
+        (["spectrum", "study.toml", "--powder", "--time", "1", "--angle", "nan"], "--angle"),
+        (["report", "study.toml", "-o", "x.html", "--time", "nan"], "--time"),
+        (["shift", "study.toml", "--temperature", "nan"], "--temperature"),
+        (["demag", "--ellipsoid", "1", "nan", "1"], "--ellipsoid"),
+        (["batch", "study.toml", "x.cif", "-o", "out", "--timeout", "nan"], "--timeout"),
+        (["batch", "study.toml", "x.cif", "-o", "out", "--memory", "inf"], "--memory"),
+    ],
+)
+def test_a_number_without_end_is_refused(arguments, option):
+    result = run(*arguments)
+    assert result.exit_code == 2 and result.stdout == ""
+    value = next(x for x in arguments if x in ("nan", "inf"))
+    number = "nan" if value == "nan" else "inf"
+    assert result.stderr.endswith(f"Error: Invalid value for '{option}': {number} is not a finite number.\n")

@@ -9,7 +9,8 @@ import latticedip as ld
 from latticedip.errors import InputError
 from latticedip.ordering.model import ParentTransform, Reference
 from tests.reference.constants import DIPOLE_T
-from tests.test_spread import CASES, CELL, PLACES, S
+from tests.refusals import refusal
+from tests.test_spread import CASES, CELL, PLACES, STUDY, S
 from tests.test_study import study_of
 
 POINT = np.array([0.5, 0.15, 0.2])
@@ -236,21 +237,7 @@ BAD = {
 @pytest.mark.parametrize("case", BAD)
 def test_refused(case):
     call, message = BAD[case]
-    with pytest.raises(InputError) as caught:
-        call()
-    assert str(caught.value) == message
-
-
-STUDY = """
-[[ordering]]
-name = "one"
-k = [0, 0, 0]
-along = [0, 0, 1]
-[moments]
-Co1 = 2
-[[probe]]
-position = [0.1, 0.2, 0.3]
-"""
+    assert refusal(call) == message
 
 
 def test_study_keys(tmp_path):

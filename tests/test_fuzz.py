@@ -32,6 +32,7 @@ from latticedip.files.read import read_file
 from latticedip.study import tasks
 from latticedip.study.batch_journal import RESULTS, Journal
 from latticedip.study.batch_template import Template
+from tests.commands import box_cif
 from tests.fuzzing import as_toml, broken, broken_study, corpus, places
 
 DATA = Path(__file__).parent / "data"
@@ -312,22 +313,6 @@ def test_a_count_that_the_file_does_not_keep_is_refused(tmp_path, name, text, me
 
 # Limits of size, before memory is taken
 
-P1 = """data_x
-_cell_length_a {a}
-_cell_length_b {b}
-_cell_length_c {c}
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P 1'
-loop_
-_atom_site_label
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 0 0 0
-"""
-
 
 @pytest.fixture
 def little_room():
@@ -343,7 +328,7 @@ def little_room():
 @pytest.mark.parametrize("cell", [(1e6, 1e6, 1e6), (1e6, 0.02, 0.02), (0.2, 0.2, 1e6), (1e7, 4, 4), (4, 4, 1e5)])
 def test_enormous_cells_are_read_or_refused(tmp_path, cell):
     path = tmp_path / "x.cif"
-    path.write_text(P1.format(a=cell[0], b=cell[1], c=cell[2]), encoding="utf-8")
+    path.write_text(box_cif("Mn1 Mn 0 0 0\n", *cell), encoding="utf-8")
     try:
         crystal = ld.read_crystal(path)
         ld.dipolar_energy(ld.Ordering(crystal, [[0, 0, 1.0]]))
@@ -353,7 +338,7 @@ def test_enormous_cells_are_read_or_refused(tmp_path, cell):
 
 @pytest.mark.usefixtures("little_room")
 def test_a_thousand_million_grid_points_are_refused(tmp_path):
-    (tmp_path / "x.cif").write_text(P1.format(a=1000, b=1000, c=1000), encoding="utf-8")
+    (tmp_path / "x.cif").write_text(box_cif("Mn1 Mn 0 0 0\n", 1000), encoding="utf-8")
     (tmp_path / "s.toml").write_text(
         '[crystal]\nfile = "x.cif"\n[[probe]]\nrule = "points at least 1 Å from any atom"\n', encoding="utf-8"
     )

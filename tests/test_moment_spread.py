@@ -285,3 +285,39 @@ def test_nothing_is_said_of_no_spread():
         "principal axes"
     ]
     assert moment_spread_words(0.5) == ["moments are extended: Gaussian spread of all ions 0.5 Å rms along each axis"]
+
+
+def test_a_spread_without_effect_is_refused(folder):
+    with pytest.raises(StudyError) as caught:
+        study(folder, "[moment_spread]\nMn = 0.3\nF = 0.3\n")
+    assert str(caught.value) == (
+        f"{folder / 'study.toml'}: `moment_spread.F`: F carries no moment, so that its spread has no effect; magnetic "
+        "are Mn1."
+    )
+    # Magnetic by a susceptibility or a size is enough, and by another ordering.
+    study(folder, '[moment_spread]\nF = 0.3\n[susceptibility]\nF = { chi = 0.01, unit = "cm3/mol" }\n')
+
+
+def test_words_tell_of_spreads_with_an_effect_only(folder):
+    text = (
+        '[moment_spread]\nMn = 0.3\nF = 0.2\n[[ordering]]\nname = "F too"\nk = [0, 0, 0]\ncosine = { F = [1, 0, 0] }\n'
+    )
+    found = study(folder, text)
+    entries = {entry["ordering"]: entry["notes"] for entry in tasks.field(found)["orderings"]}
+    of_mn, of_f = (
+        f"moments are extended: Gaussian spread of {ion} Å rms along each axis" for ion in ("Mn 0.3", "F 0.2")
+    )
+    assert of_mn in entries["up"] and of_f not in entries["up"]
+    assert of_f in entries["F too"] and of_mn not in entries["F too"]
+
+
+def test_a_shift_tells_that_point_ions_are_left(folder):
+    """Only where every magnetic ion is extended is the spread of the moment not left out."""
+    chi = "[moments]\nMn = 4\nF = 1\n"
+    both = "Mn = 0.3\nF = 0.2\n"
+    for text, kept in (("Mn = 0.3\n", True), (both, False), (both + "F1 = 0\n", True)):
+        found = study_of(folder, f"{chi}[moment_spread]\n{text}" + PROBE, crystal=str(folder / "cube.xyz"))
+        assert ("the spread of the moment over its ion" in tasks.shift(found)["notes"][-1]) is kept
+
+
+PROBE = '[[probe]]\nname = "A"\nposition = [0.1, 0.2, 0.4]\n'

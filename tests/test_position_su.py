@@ -9,25 +9,13 @@ import latticedip as ld
 from latticedip.crystal.uncertain import carried_su, parameter_steps
 from latticedip.errors import FileError, InputError
 from latticedip.files.write import write_ordering
+from tests.commands import box_cif
 
-HEXAGONAL = """data_hexagonal
-_cell_length_a 5.0
-_cell_length_b 5.0
-_cell_length_c 7.0
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 120
-_space_group_name_H-M_alt 'P 3 m 1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 Mn 0 0 0.1230(4)
+ATOMS = """Mn1 Mn 0 0 0.1230(4)
 F1 F 0.2000(3) 0.4000(6) 0.41(1)
 O1 O 0.13(2) 0.66 0.7
 """
+HEXAGONAL = box_cif(ATOMS, 5.0, 5.0, 7.0, gamma=120, name="hexagonal", group="P 3 m 1")
 
 
 def read(tmp_path, text: str, name: str = "a.cif") -> ld.Crystal:
@@ -191,3 +179,20 @@ def test_fields_take_the_uncertainties_of_the_sites(tmp_path):
     assert np.isfinite(base.size_su_T).all()
     plain = field(build())
     assert np.isnan(plain.size_su_T).all()
+
+
+def test_uncertainties_beyond_a_cell_are_refused(tmp_path):
+    column = "_atom_site_fract_z\n"
+    text = box_cif("Mn1 Mn 0 0 0.123 1e300\n", 5.0).replace(column, f"{column}_atom_site_fract_z_su\n")
+    with pytest.raises(FileError) as caught:
+        read(tmp_path, text)
+    assert str(caught.value).endswith(
+        "the standard uncertainty of a fractional coordinate of Mn1 is 1e+300; at most 1, a whole cell, is taken."
+    )
+    why = (
+        "position_su holds a standard uncertainty of 1e+300 in a fractional coordinate; at most 1, a whole cell, is "
+        "taken."
+    )
+    with pytest.raises(InputError) as caught:
+        ld.Probe([0.1, 0.2, 0.3], position_su=[0, 0, 1e300])
+    assert str(caught.value) == why

@@ -301,24 +301,29 @@ def test_the_time_of_the_polarization_is_round(frequencies: list[float | None], 
     assert shown_time({"orderings": [{"rows": rows[:1]}, {"rows": rows[1:]}]}) == pytest.approx(time)
 
 
-def test_in_an_applied_field_the_spin_needs_a_direction(folder: Path) -> None:
+def test_in_an_applied_field_the_polarization_is_that_of_a_powder(folder: Path) -> None:
     (folder / "study.toml").write_text(STUDY + "[sample]\nsphere = true\napplied_T = [0, 0, 0.1]\n", encoding="utf-8")
     study = tasks.open_study(Path("study.toml"))
-    document = report_document(study, ReportOptions(modes=False))
-    assert document["sections"]["spectrum"] == tasks.spectrum(study, SpectrumOptions())
-    why = "the study applies a field, so P(t) needs the direction that the spin starts along"
-    reason = f"{why} (--initial)"
-    assert document["left_out"] == [
-        {"section": "modes", "reason": "not asked for"},
-        {"section": "polarization", "reason": reason},
-    ]
-    assert f"Polarization with time: {reason}." in Page(report_html(document, pictures=False)).words()
-    with pytest.raises(InputError) as caught:
-        report_document(study, ReportOptions(time_us=0.5))
-    assert str(caught.value) == f"--time: {why} (--initial c, for example)."
+    document = report_document(study, ReportOptions(modes=False, time_us=0.5))
+    assert document["sections"]["spectrum"] == tasks.spectrum(study, SpectrumOptions(powder=True, time_us=0.5))
+    assert document["left_out"] == [{"section": "modes", "reason": "not asked for"}]
+    words = Page(report_html(document, pictures=False)).words()
+    assert "Polarization in a powder, along the applied field" in words
     turned = report_document(study, ReportOptions(modes=False, initial="a", time_us=0.5))
-    assert turned["sections"]["spectrum"]["inputs"]["options"]["time_us"] == 0.5
+    assert turned["sections"]["spectrum"] == tasks.spectrum(study, SpectrumOptions(initial="a", time_us=0.5))
     assert [entry["section"] for entry in turned["left_out"]] == ["modes"]
+
+
+def test_without_orderings_the_options_of_the_polarization_are_told_to_have_no_effect(folder: Path) -> None:
+    text = STUDY[: STUDY.index("[[ordering]]")] + STUDY[STUDY.index("[[probe]]") :]
+    (folder / "study.toml").write_text(text, encoding="utf-8")
+    both = "--time and --initial have"
+    for options, names in ((["--time", "2"], "--time has"), (["--time", "2", "--initial", "c"], both)):
+        result = run("study.toml", "-o", "x.html", "--no-pictures", *options)
+        assert f"{names} no effect: the study has no ordering." in " ".join(result.stdout.split())
+        words = Page(Path("x.html").read_text(encoding="utf-8")).words()
+        assert f"Polarization with time: {names} no effect: the study has no ordering." in words
+    assert "no effect" not in run("study.toml", "-o", "x.html", "--no-pictures").stdout
 
 
 @pytest.mark.usefixtures("folder")

@@ -196,6 +196,7 @@ def test_a_local_tensor_has_the_parameters_of_its_site():
     ("arguments", "message"),
     [
         ({"chi": 0.1, "chi_su": -0.1}, "chi_su must hold numbers of at least 0, got -0.1."),
+        ({"chi": 0.1, "chi_su": 1e300}, "chi_su must hold numbers of at most 1e+06, got 1e+300."),
         ({"chi": CHI, "chi_su": 0.1}, "chi_su must have shape (3, 3), got ()."),
         ({"chi": CHI, "chi_su": np.triu(CHI_SU)}, "chi_su must be symmetric, as chi is."),
         ({"chi": [0.1, 0.2], "temperatures_K": [1, 2], "chi_su": [0.1]}, "chi_su must have shape (2), got (1,)."),

@@ -137,7 +137,7 @@ def test_a_powder_in_an_applied_field(folder: Path) -> None:
         assert signal["polarization"] == pytest.approx(expected.values, abs=1e-12)
         assert doc["orderings"][0]["notes"][-2:] == list(expected.notes[-2:])
         assert doc["inputs"]["options"]["angle_deg"] == (90.0 if angle else None)
-    text = run(*options, "--applied", "0", "0.03", "0.04").stdout
+    text = " ".join(run(*options, "--applied", "0", "0.03", "0.04").stdout.split())
     assert "Polarization in a powder, along the applied field, nuclear moments with a width of 1 1/µs" in text
     assert "the whole internal field" in text
     (folder / "study.toml").write_text(STUDY + "[sample]\napplied_T = [0, 0.03, 0.04]\n", encoding="utf-8")
@@ -201,8 +201,8 @@ def test_domains_are_listed_or_averaged() -> None:
          "in a powder; leave it out here.\n"),
         (["--time", "1", "--initial", "c", "--angle", "90", "--applied", "0", "0", "1"], "Error: --angle is that "
          "between an applied field and the spin in a powder; leave it out here.\n"),
-        (["--powder", "--angle", "90", "--applied", "0", "0", "1"], "Error: an initial direction or a detector belongs "
-         "to a polarization: ask for one with a time.\n"),
+        (["--powder", "--angle", "90", "--applied", "0", "0", "1"], "Error: --angle belongs to the polarization P(t): "
+         "ask for one with --time, or leave it out.\n"),
         (["--time", "-1", "--powder"], "Error: the time must be a finite number of µs above 0, got -1.0.\n"),
         (["--bins", "1"], "Error: bins must lie between 2 and 100000, got 1.\n"),
         (["--points", "1", "--time", "1", "--powder"], "Error: points must lie between 2 and 100000, got 1.\n"),
@@ -280,3 +280,94 @@ def test_without_matplotlib_the_message_says_what_to_install(folder: Path) -> No
     result = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, cwd=folder)
     assert result.returncode == 2
     assert result.stderr == "Error: pictures need matplotlib. Install it with: pip install 'latticedip[plot]'\n"
+
+
+STAGGERED = """title = "residue"
+[crystal]
+file = "layer.xyz"
+[[ordering]]
+name = "AFM"
+k = [0, 0, 0.5]
+cosine = { Mn = [0, 0, 3.1] }
+[[probe]]
+name = "c"
+position = [0.5, 0.5, 0.5]
+[sample]
+applied_T = [0, 0, 0.1]
+"""
+
+
+@pytest.mark.parametrize("powder", ["--powder", "--crystal"])
+def test_a_field_that_symmetry_cancels_leaves_the_applied_one(folder: Path, powder: str) -> None:
+    """Between two planes of opposite moments nothing is left but rounding: one line at the applied field."""
+    (folder / "study.toml").write_text(STAGGERED, encoding="utf-8")
+    (found,) = spectra(document(powder, "--plot", "z.svg"))
+    assert found["bands"] == [] and Path("z.svg").stat().st_size > 0
+    ((field, share),) = [(line["field_T"], line["share"]) for line in found["lines"]]
+    assert field == pytest.approx(0.1, abs=1e-12) and share == pytest.approx(1)
+    assert sum(found["histogram"]["share"]) == pytest.approx(1) and None not in found["histogram"]["density_per_T"]
+
+
+MIXTURE = """[[probe]]
+name = "a muon with a long name"
+positions = [[0.5, 0.5, 0.12], [0.5, 0.1, 0.4], [0.2, 0.3, 0.4]]
+weights = [2, 1, 0]
+spread_A = 0.3
+"""
+
+
+def test_nuclear_moments_of_a_mixture(folder: Path) -> None:
+    """A heading that fits the screen, the widths that P(t) has, what is told of the motion; positions that count."""
+    head = STUDY[: STUDY.index("[[probe]]")]
+    (folder / "study.toml").write_text(head + MIXTURE, encoding="utf-8")
+    asked = ("--ordering", "third", "--powder", "--nuclear", "auto", "--time", "0.1", "--points", "101")
+    doc = document(*asked)
+    *places, whole = spectra(doc)
+    assert whole["equivalent_positions"] == places[0]["equivalent_positions"] + places[1]["equivalent_positions"]
+    text = run(*asked).stdout
+    assert max(map(len, text.splitlines())) <= 80
+    words = " ".join(text.split())
+    widths = [f"{width:.4g}" for width in sorted(place["nuclear_width_per_us"] for place in places)]
+    title = f"nuclear moments with a width of {', '.join(dict.fromkeys(widths[:-1]))} and {widths[-1]} 1/µs"
+    assert title in words and f"{whole['nuclear_width_per_us']:.4g} 1/µs" not in words
+    motion = (
+        "nuclear moments: pair fields averaged over a Gaussian spread of 0.3 Å rms along each axis: motion that is "
+        "fast against the linewidth; a slow one gives a distribution of widths instead"
+    )
+    for place in places:
+        assert f"{place['probe']}: {motion}" in doc["orderings"][0]["notes"]
+
+
+def test_abundances_of_a_study_count_in_the_nuclear_width(folder: Path) -> None:
+    text = STUDY[: STUDY.index("[[probe]]")] + "[[probe]]\nposition = [0.5, 0.5, 0.12]\n[abundances]\n"
+    widths = []
+    for share in (1.0, 0.25):
+        (folder / "study.toml").write_text(f"{text}55Mn = {share}\n", encoding="utf-8")
+        widths.append(spectra(document("--ordering", "third", "--nuclear", "auto"))[0]["nuclear_width_per_us"])
+    # A mean square is proportional to the share of the nuclei.
+    assert widths[1] == pytest.approx(widths[0] / 2)
+
+
+@pytest.mark.usefixtures("folder")
+def test_too_few_moments_in_time_are_told() -> None:
+    asked = ("--powder", "--probe", "muon A", "--ordering", "third", "--time")
+    fastest = max(line["frequency_MHz"] for line in spectra(document(*asked, "1"))[0]["lines"])
+    (note,) = [x for x in document(*asked, "1e5")["orderings"][0]["notes"] if "unresolved" in x]
+    assert note == (
+        f"P(t) is unresolved: 100000 moments for {fastest * 1e5:.6g} turns of the fastest precession "
+        f"({fastest:.6g} MHz) are fewer than 4 in a turn, and what lies between them is not shown. Ask for a shorter "
+        "time"
+    )
+    for points, told in ((int(4 * fastest) + 2, False), (int(4 * fastest) - 1, True)):
+        notes = document(*asked, "1", "--points", str(points))["orderings"][0]["notes"]
+        assert any(note.endswith("Ask for a shorter time or more points") for note in notes) is told
+
+
+@pytest.mark.usefixtures("folder")
+def test_a_powder_that_turns_without_end_is_refused_at_once() -> None:
+    result = run("--powder", "--probe", "muon A", "--ordering", "third", "--time", "1", "--applied", "0", "0", "1e9")
+    assert (result.exit_code, result.stdout) == (2, "")
+    assert result.stderr == (
+        "Error: the polarization of this powder up to 1 µs turns by 8.5e+11 rad, more than 1.7e+07. Ask for a shorter "
+        "time or a smaller field.\n"
+    )

@@ -21,6 +21,7 @@ from latticedip.study.start import (
     starting_study,
 )
 from latticedip.study.tasks import rank, start
+from tests.commands import box_cif
 
 CUBE = np.eye(3) * 4.0
 
@@ -127,24 +128,7 @@ def test_sign_patterns_are_balanced_and_distinct() -> None:
     assert sign_patterns([]) == []
 
 
-CIF = """data_x
-_cell_length_a 5.1
-_cell_length_b 6.3
-_cell_length_c 7.2
-_cell_angle_alpha 90
-_cell_angle_beta 100
-_cell_angle_gamma 90
-_space_group_name_H-M_alt '{group}'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Ni1 Ni 0 0 0
-Cu1 Cu 0.13 0.21 0.34
-F1 F 0.31 0.42 0.17
-"""
+ATOMS = "Ni1 Ni 0 0 0\nCu1 Cu 0.13 0.21 0.34\nF1 F 0.31 0.42 0.17\n"
 
 
 @pytest.mark.parametrize("group", ["P 1", "P 1 21/c 1", "C 1 2/m 1", "I 1 2/a 1"])
@@ -152,7 +136,7 @@ def test_the_study_runs_and_its_paths_lead_back(tmp_path: Path, group: str) -> N
     (tmp_path / "structures").mkdir()
     (tmp_path / "work").mkdir()
     structure = tmp_path / "structures" / "x.cif"
-    structure.write_text(CIF.format(group=group), encoding="utf-8")
+    structure.write_text(box_cif(ATOMS, 5.1, 6.3, 7.2, beta=100, name="x", group=group), encoding="utf-8")
     output = tmp_path / "work" / "study.toml"
     document = start(structure, output=output)
     output.write_text(document["study"], encoding="utf-8")

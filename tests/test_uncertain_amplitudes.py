@@ -17,7 +17,7 @@ from latticedip.report.show import show_text
 from latticedip.report.su import format_su
 from latticedip.study.fields import field_document
 from latticedip.study.frames import place_in_frame
-from latticedip.study.tasks import show
+from latticedip.study.tasks import field, shift, show
 from tests.reference.superspace import (
     CELLS,
     ONE,
@@ -31,6 +31,7 @@ from tests.reference.superspace import (
     replaced,
     swap_series,
 )
+from tests.refusals import refusal
 from tests.test_study import study_of
 
 POINT = np.array([0.37, 0.71, 0.12])
@@ -446,9 +447,7 @@ BAD = {
 @pytest.mark.parametrize("case", BAD)
 def test_refused(case):
     call, message = BAD[case]
-    with pytest.raises(InputError) as caught:
-        call()
-    assert str(caught.value) == message
+    assert refusal(call) == message
 
 
 # --- written files --------------------------------------------------------------------------------------
@@ -623,9 +622,11 @@ REFUSED = {
     "uncertainties in µB, as `ordering[1].sine.Co1` has 2.",
     "sine_su = { Co1 = [[0.1, 0, 0], [0.1, 0]] }": "`ordering[1].sine_su.Co1[2]`: got [0.1, 0], expected three "
     "standard uncertainties in µB, each at least 0.",
-    "cosine_su = { Co1 = [0.1, -1, 0] }": "`ordering[1].cosine_su.Co1[2]`: got -1, expected a number of at least 0.",
-    "sine_su = { Co1 = [[0.1, 0, 0], [0, 0, -2]] }": "`ordering[1].sine_su.Co1[2][3]`: got -2, expected a number of at "
-    "least 0.",
+    "cosine_su = { Co1 = [0.1, -1, 0] }": "`ordering[1].cosine_su.Co1[2]`: got -1, expected a number from 0 to 1e+06.",
+    "sine_su = { Co1 = [[0.1, 0, 0], [0, 0, -2]] }": "`ordering[1].sine_su.Co1[2][3]`: got -2, expected a number from "
+    "0 to 1e+06.",
+    "cosine_su = { Co1 = [1e300, 0, 0] }": "`ordering[1].cosine_su.Co1[1]`: got 1e+300, expected a number from 0 to "
+    "1e+06.",
 }
 
 
@@ -648,3 +649,64 @@ def test_uncertainties_without_their_amplitudes(tmp_path):
         with pytest.raises(StudyError) as caught:
             study_of(tmp_path, f"[[ordering]]\nk = [0.2, 0, 0]\n{text}\n")
         assert str(caught.value) == f"{tmp_path / 'study.toml'}: {message}"
+
+
+HALF = """[[ordering]]
+name = "half"
+k = [0.5, 0, 0]
+cosine = { Co1 = [3, 0, 0] }
+sine = { Co1 = [0, 0, 0] }
+"""
+
+
+def test_a_sine_has_no_uncertainty_where_it_has_no_effect(tmp_path):
+    path = tmp_path / "study.toml"
+    with pytest.raises(StudyError) as caught:
+        study_of(tmp_path, HALF + "sine_su = { Co1 = [0.1, 0, 0] }", crystal=str(one_atom(tmp_path)))
+    assert str(caught.value) == (
+        f"{path}: `ordering[1].sine_su.Co1`: at k = (0.5, 0, 0), where k and −k are the same vector, a sine amplitude "
+        "has no effect on these atoms, nor has its uncertainty. Leave it out, or give that of the cosine."
+    )
+    exact = study_of(tmp_path, HALF + "sine_su = { Co1 = [0, 0, 0] }", crystal=str(one_atom(tmp_path)))
+    assert not exact.orderings[0].amplitude_su
+
+
+def test_one_triple_is_counted_as_one(tmp_path):
+    text = HALF.replace("[3, 0, 0]", "[[3, 0, 0]]") + "cosine_su = { Co1 = [0.1, 0, 0] }"
+    with pytest.raises(StudyError) as caught:
+        study_of(tmp_path, text, crystal=str(one_atom(tmp_path)))
+    assert str(caught.value) == (
+        f"{tmp_path / 'study.toml'}: `ordering[1].cosine_su.Co1`: got [0.1, 0, 0], expected 1 triple of standard "
+        "uncertainties in µB, as `ordering[1].cosine.Co1` has 1."
+    )
+
+
+def one_atom(folder):
+    path = folder / "one.xyz"
+    cell = 'Lattice="4 0 0 0 4 0 0 0 5" Properties=species:S:1:pos:R:3 pbc="T T T"'
+    path.write_text(f"1\n{cell}\nCo 0 0 0\n", encoding="utf-8")
+    return path
+
+
+def test_uncertainties_beyond_every_moment_are_refused():
+    home = ld.Crystal(np.diag([4.0, 4, 6]), [[0, 0, 0]], ["Mn"])
+    for arguments, message in (
+        ({"amplitude_su": 5}, "amplitude_su must be a tuple of AmplitudeUncertainty objects, got int."),
+        ({"moment_su": [[1e300, 0, 0]]}, "moment_su holds 1e+300 µB, beyond 1e+06 µB. Give Bohr magnetons."),
+    ):
+        with pytest.raises(InputError) as caught:
+            ld.Ordering(home, [[1.0, 0, 0]], **arguments)
+        assert str(caught.value) == message
+    with pytest.raises(InputError) as caught:
+        independent_amplitudes(home, np.array([[[1e300, 0, 0]]]))
+    assert str(caught.value) == "a standard uncertainty of 1e+300 µB is beyond 1e+06 µB. Give Bohr magnetons."
+
+
+@pytest.mark.parametrize(("su", "told"), [("[0, 0, 0]", False), ("[0, 0, 0.01]", True)])
+def test_digits_in_brackets_are_explained_where_there_are_any(tmp_path, su, told):
+    """A standard uncertainty of exactly zero is none."""
+    more = f'[moments]\nCo = 2\n[[probe]]\nname = "A"\nposition = [0.1, 0.2, 0.3]\nposition_su = {su}\n'
+    study = study_of(tmp_path, HALF + more, crystal=str(one_atom(tmp_path)))
+    text = field_text(field(study), width=100)
+    assert ("digits in brackets" in " ".join(text.split())) is told
+    assert any("Digits in brackets" in note for note in shift(study)["notes"]) is told

@@ -5,30 +5,12 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
-from click.testing import CliRunner
 
-from latticedip.cli.main import main
 from latticedip.study.schema import read_study
 from latticedip.study.warnings import crystal_warnings, study_warnings
+from tests.commands import Command, box_cif, enter
 
-CRYSTAL = """data_pair
-_cell_length_a 6
-_cell_length_b 7
-_cell_length_c 8
-_cell_angle_alpha 90
-_cell_angle_beta 90
-_cell_angle_gamma 90
-_space_group_name_H-M_alt 'P -1'
-loop_
-_atom_site_label
-_atom_site_type_symbol
-_atom_site_fract_x
-_atom_site_fract_y
-_atom_site_fract_z
-Mn1 Mn 0.25 0 0
-Co1 Co 0 0 0.5
-O1 O 0.5 0.45 0.5
-"""
+CRYSTAL = box_cif("Mn1 Mn 0.25 0 0\nCo1 Co 0 0 0.5\nO1 O 0.5 0.45 0.5\n", 6, 7, 8, name="pair", group="P -1")
 #: Co carries no moment in this file.
 MANGANESE_ONLY = """8
 Lattice="6 0 0 0 7 0 0 0 8" Properties=species:S:1:pos:R:3:initial_magmoms:R:3 pbc="T T T"
@@ -62,14 +44,12 @@ name = "nucleus"
 particle = "55Mn"
 site = "O1"
 """
+command_line = Command()
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "pair.cif").write_text(CRYSTAL, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
+    return enter(tmp_path, monkeypatch, {"pair.cif": CRYSTAL, "study.toml": STUDY})
 
 
 def test_a_study_with_slips(folder: Path) -> None:
@@ -97,7 +77,7 @@ def test_a_contact_term_that_means_other_ions_in_another_ordering(folder: Path) 
 
 
 def test_crystal_warnings_are_those_of_show(folder: Path) -> None:
-    shown = CliRunner().invoke(main, ["show", "pair.cif"]).stdout
+    shown = command_line.run("show", "pair.cif").stdout
     for words in crystal_warnings(read_study("study.toml").crystal):
         assert words in " ".join(shown.split())
 
@@ -107,16 +87,14 @@ def test_crystal_warnings_are_those_of_show(folder: Path) -> None:
 def test_no_csv_over_a_file_that_was_read(folder: Path, command: str, name: str, role: str) -> None:
     Path("link").symlink_to("study.toml")
     before = Path(name).read_bytes()
-    result = CliRunner().invoke(main, [command, "study.toml", "--csv", name])
-    assert (result.exit_code, result.stdout) == (2, "")
-    assert result.stderr == f"Error: '{name}' is read here (as the {role}). Write to another file.\n"
+    message = command_line.refused(command, "study.toml", "--csv", name)
+    assert message == f"Error: '{name}' is read here (as the {role}). Write to another file.\n"
     assert Path(name).read_bytes() == before
 
 
 def test_start_does_not_write_over_its_structure(folder: Path) -> None:
-    result = CliRunner().invoke(main, ["start", "pair.cif", "-o", "pair.cif", "--force"])
-    assert (result.exit_code, result.stdout) == (2, "")
-    assert result.stderr == "Error: 'pair.cif' is read here (as the structure). Write to another file.\n"
+    message = command_line.refused("start", "pair.cif", "-o", "pair.cif", "--force")
+    assert message == "Error: 'pair.cif' is read here (as the structure). Write to another file.\n"
     assert Path("pair.cif").read_text(encoding="utf-8") == CRYSTAL
 
 

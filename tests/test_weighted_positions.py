@@ -3,22 +3,19 @@
 from __future__ import annotations
 
 import csv
-import json
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner, Result
 
 import latticedip as ld
-from latticedip.cli.main import main
 from latticedip.errors import InputError, StudyError
 from latticedip.observables.mixed import MixedSpectrum
 from latticedip.ordering.model import ParentTransform, Reference
 from latticedip.physics.weighted import weighted_rows
 from latticedip.study import tasks
 from latticedip.study.spectra import SpectrumOptions
+from tests.commands import Command, enter
 from tests.reference.constants import DIPOLE_T
 
 CELL_A = 4.0
@@ -52,29 +49,13 @@ name = "muon B"
 position = [0.5, 0.5, 0.5]
 """
 EDGES = np.eye(3) / 2
+command = Command()
+run, document = command.run, command.document
 
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
-    (tmp_path / "cube.xyz").write_text(CUBE, encoding="utf-8")
-    (tmp_path / "study.toml").write_text(STUDY + PROBE, encoding="utf-8")
-    monkeypatch.chdir(tmp_path)
-    return tmp_path
-
-
-def run(command: str, *arguments: str) -> Result:
-    result = CliRunner().invoke(main, [command, "study.toml", *arguments])
-    if result.exception is not None and not isinstance(result.exception, SystemExit):
-        raise result.exception
-    return result
-
-
-def document(command: str, *arguments: str) -> dict[str, Any]:
-    result = run(command, *arguments, "--json")
-    assert result.exit_code == 0, result.stderr
-    loaded = json.loads(result.stdout)
-    assert isinstance(loaded, dict)
-    return loaded
+    return enter(tmp_path, monkeypatch, {"cube.xyz": CUBE, "study.toml": STUDY + PROBE})
 
 
 def edge_coupling() -> float:
@@ -91,7 +72,7 @@ def edge_coupling() -> float:
 
 def test_averages_of_a_case_solved_by_hand(folder):
     """Moments along z in a sphere: the fields are −t, −t and 2t along z, with 2t the coupling along the edge."""
-    doc = document("field", "--ordering", "up")
+    doc = document("field", "study.toml", "--ordering", "up")
     entry = doc["orderings"][0]
     (found,) = entry["averages"]
     field = 2.0 * edge_coupling()
@@ -151,31 +132,31 @@ def test_fields_come_from_separate_calls_with_all_that_a_probe_states(folder):
 
 
 def test_every_kind_of_axes_and_unit(folder):
-    tesla = document("field")["orderings"][0]["averages"][0]
-    polar = document("field", "--axes", "polar", "--unit", "G")["orderings"][0]["averages"][0]
+    tesla = document("field", "study.toml")["orderings"][0]["averages"][0]
+    polar = document("field", "study.toml", "--axes", "polar", "--unit", "G")["orderings"][0]["averages"][0]
     assert polar["mean_field_size_G"] == pytest.approx(1e4 * tesla["size_of_mean_field_T"])
     assert polar["mean_field_theta_deg"] == pytest.approx(0.0, abs=1e-9) and polar["mean_field_phi_deg"] is None
     assert polar["mean_size_G"] == pytest.approx(1e4 * tesla["mean_size_T"])
-    crystal = document("field", "--axes", "crystal")["orderings"][0]["averages"][0]
+    crystal = document("field", "study.toml", "--axes", "crystal")["orderings"][0]["averages"][0]
     assert crystal["mean_field_abc_T"] == pytest.approx(tesla["mean_field_T"], abs=1e-12)
     for arguments in ((), ("--axes", "polar"), ("--axes", "crystal", "--unit", "G")):
-        text = run("field", *arguments).stdout
+        text = run("field", "study.toml", *arguments).stdout
         assert "rms\n" in text.replace(" ", "") or "deviation" in text
         assert "muon A" in text and "0.2500" in text and "0.5000" in text
 
 
 def test_the_flat_table_repeats_the_averages(folder):
-    assert run("field", "--csv", "out.csv").exit_code == 0
+    assert run("field", "study.toml", "--csv", "out.csv").exit_code == 0
     with open("out.csv", encoding="utf-8") as stream:
         rows = list(csv.DictReader(stream))
-    entry = document("field")["orderings"][0]["averages"][0]
+    entry = document("field", "study.toml")["orderings"][0]["averages"][0]
     for row, weight in zip(rows[:3], (0.25, 0.25, 0.5), strict=True):
         assert (row["of_probe"], float(row["weight"])) == ("muon A", weight)
         assert float(row["mean_field_z_T"]) == entry["mean_field_T"][2]
         assert float(row["rms_size_T"]) == entry["rms_size_T"]
     assert (rows[3]["of_probe"], rows[3]["weight"], rows[3]["mean_field_z_T"]) == ("", "", "")
     Path("study.toml").write_text(STUDY + PROBE[PROBE.rindex("[[probe]]") :], encoding="utf-8")
-    assert run("field", "--csv", "out.csv").exit_code == 0
+    assert run("field", "study.toml", "--csv", "out.csv").exit_code == 0
     assert "weight" not in Path("out.csv").read_text(encoding="utf-8").splitlines()[0]
 
 
@@ -226,7 +207,7 @@ Mn = { chi = [0.02, 0.01], chi_su = [0.001, 0.001], unit = "muB/T", temperatures
 def test_mean_couplings_and_shifts(folder):
     """Over the three edges with weights ¼, ¼ and ½ the mean of diag(2, −1, −1) t and its turns is diag(−¼, −¼, ½) t."""
     Path("study.toml").write_text(STUDY + PROBE + CHI, encoding="utf-8")
-    doc = document("shift")
+    doc = document("shift", "study.toml")
     (mean,) = doc["means"]
     assert (mean["probe"], mean["multiplicity"], mean["particle"]) == ("muon A", 3, "muon")
     assert mean["positions"] == EDGES.tolist() and mean["weights"] == [0.25, 0.25, 0.5]
@@ -242,10 +223,10 @@ def test_mean_couplings_and_shifts(folder):
     # All of the uncertainty is that of chi, which the positions share.
     np.testing.assert_allclose(mean["shifts"][0]["shift_su"], np.abs(0.001 * expected), atol=1e-12)
     assert any(note.startswith("Means over positions with weights") for note in doc["notes"])
-    text = run("shift").stdout
+    text = run("shift", "study.toml").stdout
     assert "muon A, mean over its positions\n" in text
     assert "0.5 0 0 (weight 0.25)" in text
-    assert run("shift", "--csv", "out.csv").exit_code == 0
+    assert run("shift", "study.toml", "--csv", "out.csv").exit_code == 0
     with open("out.csv", encoding="utf-8") as stream:
         rows = [row for row in csv.DictReader(stream) if row["probe"] == "muon A"]
     assert [(row["position_x"], row["multiplicity"], row["temperature_K"]) for row in rows] == [
@@ -253,7 +234,7 @@ def test_mean_couplings_and_shifts(folder):
         ("", "3", "100.0"),
     ]
     assert float(rows[0]["shift_dipolar_zz"]) == mean["shifts"][0]["shift_dipolar"][2][2]
-    wide = document("shift", "--orbit")
+    wide = document("shift", "study.toml", "--orbit")
     assert wide["means"] == []
     assert "muon A: no mean over its positions beside those equivalent to each; leave --orbit out" in wide["notes"]
 
@@ -303,7 +284,7 @@ def test_the_lines_of_a_mixture(folder):
         "weights say"
     )
     assert note in tasks.spectrum(study, SpectrumOptions())["orderings"][0]["notes"]
-    table = run("spectrum", "--ordering", "up", "--csv", "out.csv")
+    table = run("spectrum", "study.toml", "--ordering", "up", "--csv", "out.csv")
     assert table.exit_code == 0 and "muon A  " in table.stdout
 
 
@@ -411,7 +392,12 @@ TRIPLE = 'expected three fractional coordinates, such as [0.5, 0.5, 0.12] or ["1
     [
         ("positions = []\nweights = []", f"`probe[1].positions`: got [], expected {LIST}"),
         ('positions = "x"\nweights = [1]', f'`probe[1].positions`: got "x", expected {LIST}'),
-        ("positions = [0.1, 0.2, 0.3]\nweights = [1, 1, 1]", f"`probe[1].positions[1]`: got 0.1, {TRIPLE}"),
+        (
+            "positions = [0.1, 0.2, 0.3]\nweights = [1]",
+            f"`probe[1].positions`: got [0.1, 0.2, 0.3], expected {LIST} One position, too, stands in brackets of its "
+            "own.",
+        ),
+        ("positions = [[0.1, 0.2, 0.3], 0.5]\nweights = [1, 1]", f"`probe[1].positions[2]`: got 0.5, {TRIPLE}"),
         ("positions = [[0.1, 0.2]]\nweights = [1]", f"`probe[1].positions[1]`: got [0.1, 0.2], {TRIPLE}"),
         (
             'positions = [[0, 0, 0.2], [0.1, "x", 0]]\nweights = [1, 1]',

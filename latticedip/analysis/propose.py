@@ -21,7 +21,7 @@ from latticedip.analysis.exhaustive import exhaustive, free_signs, is_searchable
 from latticedip.analysis.modes import LowestMode, lowest_mode
 from latticedip.analysis.modes_bands import magnetic_sites
 from latticedip.analysis.problem import Found, SearchProblem, sign_list, unit_vectors, wave_list, wave_words
-from latticedip.analysis.rank import CAVEAT, Ranking, RankingRow, _boundary, _ranked
+from latticedip.analysis.rank import CAVEAT, Ranking, RankingRow, by_energy, ranking_boundary
 from latticedip.analysis.symmetry_patterns import MOST_SITES, commensurate_waves, symmetry_patterns
 from latticedip.checks import FloatArray, as_unit_vector, check_tol
 from latticedip.crystal.magnetic_group import magnetic_group
@@ -174,7 +174,7 @@ def propose(
             "supercell=(2, 2, 2), or other constraints."
         )
     rows = _rows(whole, _merged(whole, candidates)[: options.keep], sample, tol)
-    return Proposal(rows, False, _boundary(rows), (CAVEAT, *notes), mode, *counts)
+    return Proposal(rows, False, ranking_boundary(rows), (CAVEAT, *notes), mode, *counts)
 
 
 @dataclass(frozen=True)
@@ -363,7 +363,7 @@ def _rows(
             else _table_energy(problem, candidate.found.moments, ordering, sample, tol)
         )
         rated.append((ordering, energy, candidate))
-    places, ties = _ranked([energy for _, energy, _ in rated])
+    places, ties = by_energy([energy for _, energy, _ in rated])
     lowest = min(energy.per_ion_eV for _, energy, _ in rated)
     rows = []
     for number, (place, tie) in enumerate(zip(places, ties, strict=True), start=1):

@@ -18,7 +18,7 @@ from latticedip.errors import InputError
 from latticedip.ordering.model import Ordering
 from latticedip.physics.energy import Energy, dipolar_energy
 from latticedip.physics.field import LocalField, local_field
-from latticedip.physics.spread import moment_spread_words
+from latticedip.physics.spread import counting_spread, moment_spread_words
 from latticedip.probe import Probe
 from latticedip.sample import Sample
 from latticedip.units import J_PER_M3_PER_EV_A3
@@ -175,18 +175,19 @@ def rank(
             for probe in probes
         }
         evaluated.append((ordering, energy, orientation, fields))
-    numbers, ties = _ranked([energy for _, energy, _, _ in evaluated])
+    numbers, ties = by_energy([energy for _, energy, _, _ in evaluated])
     evaluated = [evaluated[number] for number in numbers]
     lowest = min(energy.per_ion_eV for _, energy, _, _ in evaluated)
     rows = tuple(
         RankingRow(ordering, energy, energy.per_ion_eV - lowest, tie, fields, orientation)
         for (ordering, energy, orientation, fields), tie in zip(evaluated, ties, strict=True)
     )
-    notes = [] if moment_spread is None else [*moment_spread_words(moment_spread), POINT_ENERGIES]
-    return Ranking(rows, rotate, _boundary(rows), (*notes, CAVEAT))
+    extended = moment_spread_words(counting_spread(orderings, moment_spread))
+    notes = [*extended, POINT_ENERGIES] if extended else []
+    return Ranking(rows, rotate, ranking_boundary(rows), (*notes, CAVEAT))
 
 
-def _ranked(energies: list[Energy]) -> tuple[list[int], list[bool]]:
+def by_energy(energies: list[Energy]) -> tuple[list[int], list[bool]]:
     """Numbers of the energies, lowest first and tied ones in the order given; and for each place whether it is tied."""
     numbers = sorted(range(len(energies)), key=lambda i: energies[i].per_ion_eV)
     close = _close_to_next([energies[i] for i in numbers])
@@ -208,7 +209,7 @@ def _close_to_next(energies: list[Energy]) -> list[bool]:
     return [bool(close) for close in np.diff(values) <= bounds[:-1] + bounds[1:]]
 
 
-def _boundary(rows: tuple[RankingRow, ...]) -> str:
+def ranking_boundary(rows: tuple[RankingRow, ...]) -> str:
     """The assumed boundary of all rows in one sentence; rows with a net moment speak for the shape."""
     words = dict.fromkeys(row.energy.boundary for row in rows)
     with_moment = [text for text in words if not text.startswith("no net moment")]

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from latticedip.cli.options import verbose_option
+from latticedip.cli.options import FiniteRange, verbose_option
 
 if TYPE_CHECKING:
     from latticedip.study.batch import Progress
@@ -67,13 +67,13 @@ def _clock(seconds: float) -> str:
 @click.option("--cluster", metavar="ADDRESS", help="Work on this dask.distributed scheduler instead.")
 @click.option(
     "--timeout",
-    type=click.FloatRange(min=0, min_open=True),
+    type=FiniteRange(min=0, min_open=True),
     metavar="S",
     help="Seconds that one input may take; one that takes longer is stopped and reported.",
 )
 @click.option(
     "--memory",
-    type=click.FloatRange(min=0, min_open=True),
+    type=FiniteRange(min=0, min_open=True),
     metavar="MB",
     help="Resident size that a process may reach; an input that takes more is stopped and reported.",
 )

@@ -6,13 +6,13 @@ from pathlib import Path
 
 import click
 
-from latticedip.cli.options import deliver, output_options
+from latticedip.cli.options import FiniteFloat, deliver, output_options
 
 
 @click.command(short_help="Demagnetizing factors of a shape alone.")
-@click.option("--ellipsoid", type=float, nargs=3, metavar="A B C", help="Lengths of the three axes, any unit.")
-@click.option("--prism", type=float, nargs=3, metavar="A B C", help="Lengths of the three edges, any unit.")
-@click.option("--cylinder", type=float, nargs=2, metavar="D H", help="Diameter and height, any unit.")
+@click.option("--ellipsoid", type=FiniteFloat(), nargs=3, metavar="A B C", help="Lengths of the three axes, any unit.")
+@click.option("--prism", type=FiniteFloat(), nargs=3, metavar="A B C", help="Lengths of the three edges, any unit.")
+@click.option("--cylinder", type=FiniteFloat(), nargs=2, metavar="D H", help="Diameter and height, any unit.")
 @click.option("--sphere", is_flag=True)
 @click.option("--plate", is_flag=True, help="An endless plate.")
 @click.option("--needle", is_flag=True, help="An endless needle.")

@@ -46,6 +46,24 @@ def verbose_option(function: F) -> F:
     )(function)
 
 
+class _Finite(click.ParamType):
+    """Refuses what is no number or has no end, which a plain float of click takes."""
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float:
+        number = float(super().convert(value, param, ctx))
+        if not math.isfinite(number):
+            self.fail(f"{value} is not a finite number.", param, ctx)
+        return number
+
+
+class FiniteFloat(_Finite, type(click.FLOAT)):  # type: ignore[misc]
+    """A finite number."""
+
+
+class FiniteRange(_Finite, click.FloatRange):
+    """A finite number within a range."""
+
+
 class Tolerance(click.ParamType):
     """A number that bounds the error of every tensor."""
 

@@ -7,6 +7,7 @@ from pathlib import Path
 import click
 
 from latticedip.cli.options import (
+    FiniteRange,
     deliver,
     ordering_option,
     output_options,
@@ -29,7 +30,7 @@ SUFFIXES = (".html", ".htm")
 @click.option("--no-spectra", is_flag=True, help="Leave out spectra and P(t).")
 @click.option(
     "--time",
-    type=click.FloatRange(0, 1e6, min_open=True),
+    type=FiniteRange(0, 1e6, min_open=True),
     metavar="US",
     help="P(t) up to this time in µs; a few turns of the precessions if left out.",
 )
@@ -37,7 +38,7 @@ SUFFIXES = (".html", ".htm")
     "--initial",
     metavar="AXIS",
     help="P(t) in a crystal, for a spin that starts along this direction and is seen along it: a, b, c, a*, b*, c* or "
-    'components along a, b, c such as "1 1 0"; without it P(t) is that of a powder in zero field.',
+    'components along a, b, c such as "1 1 0"; without it P(t) is that of a powder, in an applied field along it.',
 )
 @click.option(
     "--modes/--no-modes",

@@ -7,6 +7,7 @@ from pathlib import Path
 import click
 
 from latticedip.cli.options import (
+    FiniteRange,
     deliver,
     draw_to,
     orbit_option,
@@ -23,7 +24,7 @@ from latticedip.cli.options import (
 @click.option(
     "--temperature",
     "temperatures",
-    type=click.FloatRange(min=0.0, min_open=True),
+    type=FiniteRange(min=0.0, min_open=True),
     multiple=True,
     metavar="K",
     help="Temperature in K, where the study tabulates a susceptibility; may be given several times. Without it every "

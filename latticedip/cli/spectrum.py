@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING, Any, Literal
 import click
 
 from latticedip.cli.options import (
+    FiniteFloat,
+    FiniteRange,
     deliver,
     draw_to,
     ordering_option,
@@ -52,21 +54,28 @@ class NuclearWidth(click.ParamType):
 )
 @click.option(
     "--applied",
-    type=float,
+    type=FiniteFloat(),
     nargs=3,
     metavar="X Y Z",
     help="Applied field in T, Cartesian, in place of the study's; in a powder only its size counts.",
 )
 @click.option("--bins", type=int, default=200, show_default=True, help="Bins of the histogram.")
-@click.option("--width", type=float, default=0.0, metavar="T", help="Smear every field by a Gaussian of this width.")
+@click.option(
+    "--width", type=FiniteFloat(), default=0.0, metavar="T", help="Smear every field by a Gaussian of this width."
+)
 @click.option(
     "--nuclear",
     type=NuclearWidth(),
     default=0.0,
     help="Add the static random field of nuclear moments, of this width in 1/µs; auto works it out for a muon.",
 )
-@click.option("--time", type=float, metavar="US", help="Also the polarization P(t) up to this time in µs.")
-@click.option("--points", type=int, help="Moments in time of P(t); enough for the fastest precession if left out.")
+@click.option("--time", type=FiniteFloat(), metavar="US", help="Also the polarization P(t) up to this time in µs.")
+@click.option(
+    "--points",
+    type=int,
+    help="Moments in time of P(t), 2 to 100000; if left out, 12 in a turn of the fastest precession, 401 at least and "
+    "100000 at most.",
+)
 @click.option(
     "--initial",
     metavar="AXIS",
@@ -76,7 +85,7 @@ class NuclearWidth(click.ParamType):
 @click.option("--detector", metavar="AXIS", help="Direction of the detector; the initial one if left out.")
 @click.option(
     "--angle",
-    type=click.FloatRange(0, 180),
+    type=FiniteRange(0, 180),
     metavar="DEG",
     help="In a powder in an applied field: angle between it and the direction that the spin starts and is seen along; "
     "0, along the field, if left out.",

@@ -20,6 +20,8 @@ if TYPE_CHECKING:
 
 #: A stated uncertainty may miss what the symmetry makes of the others by this fraction: it has one or two digits.
 ROUNDED = 0.34
+#: Largest standard uncertainty of a fractional coordinate.
+LARGEST_SU = 1.0
 #: Below this a number of a projector is rounding.
 ROUNDING = 1e-6
 
@@ -27,13 +29,18 @@ ROUNDING = 1e-6
 def checked_su(name: str, value: Any, shape: tuple[int, ...]) -> FloatArray:
     """Return standard uncertainties as a float array of a shape, NaN where unknown; None gives NaN throughout.
 
-    Raises InputError for another shape, negative and infinite numbers.
+    Raises InputError for another shape, negative and infinite numbers, and numbers beyond 1 (a cell).
     """
     if value is None:
         return np.full(shape, np.nan)
     su = np.asarray(value)
     if su.dtype.kind not in "iuf" or su.shape != shape or np.any(su < 0) or np.any(np.isinf(su)):
         raise InputError(f"{name} must hold numbers of at least 0 or NaN in shape {shape}.")
+    if np.any(su > LARGEST_SU):
+        raise InputError(
+            f"{name} holds a standard uncertainty of {np.nanmax(su):.6g} in a fractional coordinate; at most "
+            f"{LARGEST_SU:g}, a whole cell, is taken."
+        )
     return np.array(su, dtype=float)
 
 

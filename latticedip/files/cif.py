@@ -11,7 +11,7 @@ import numpy as np
 
 from latticedip.checks import FloatArray
 from latticedip.crystal.model import Crystal, Operations
-from latticedip.crystal.uncertain import carried_su
+from latticedip.crystal.uncertain import LARGEST_SU, carried_su
 from latticedip.errors import FileError, InputError
 from latticedip.files.cifsyntax import Block, Column
 from latticedip.files.expand import Group, Orbit, build_group, orbit_of
@@ -349,6 +349,11 @@ def read_sites(block: Block, *, magnetic: bool = True) -> tuple[tuple[Site, ...]
         position, su = np.array([read_with_su(block, column, row) for column in coordinates]).T
         if np.abs(position).max() > 1000:
             raise block.error(f"the fractional coordinates of {label} are {position.tolist()}, far outside any cell.")
+        if np.any(su > LARGEST_SU):
+            raise block.error(
+                f"the standard uncertainty of a fractional coordinate of {label} is {np.nanmax(su):g}; at most "
+                f"{LARGEST_SU:g}, a whole cell, is taken."
+            )
         multiplicity = _optional(optional["symmetry_multiplicity"] or optional["site_symmetry_multiplicity"], row)
         sites[label] = Site(
             label,

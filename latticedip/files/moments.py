@@ -154,7 +154,11 @@ def _to_crystal_axes(
 ) -> SiteMoment:
     """Components of one system as crystal-axis components; uncertainties propagated as uncorrelated ones."""
     numbers, su = values
-    if np.nanmax(np.abs(np.concatenate([numbers, su]))) > LARGEST:
+    if np.any(su > LARGEST):
+        raise block.error(
+            f"the moment of {label} has a standard uncertainty of {np.nanmax(su):g}, beyond {LARGEST:g} µB."
+        )
+    if np.abs(numbers).max() > LARGEST:
         raise block.error(f"the moment of {label} is given as {numbers.tolist()}, beyond {LARGEST:g} µB.")
     if system == "crystalaxis":
         return SiteMoment(numbers, su)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -16,13 +16,14 @@ from latticedip.crystal.place import Place, place_of
 from latticedip.crystal.spread import as_spread, covariance_of
 from latticedip.crystal.uncertain import Moves
 from latticedip.errors import InputError
-from latticedip.observables.tensor import PrincipalFrame, added, known, principal_frame
+from latticedip.observables.tensor import PrincipalFrame, ProbeTensor, added, known, mean_tensor, principal_frame
 from latticedip.ordering.model import Ordering
 from latticedip.physics.boundary import boundary_words
 from latticedip.physics.contact import shell_neighbours
 from latticedip.physics.coupling import require_bulk
 from latticedip.physics.spread import (
     REACHED,
+    counting_spread,
     equal_covariances,
     exchanged_tensors,
     extended_words,
@@ -63,8 +64,8 @@ class SiteCouplings:
     notes: tuple[str, ...]
 
 
-@dataclass(frozen=True, eq=False)
-class CouplingTensor:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class CouplingTensor(ProbeTensor):
     """Field at a probe per Bohr magneton on every magnetic ion, B = A m, in its parts; Cartesian, T/µB.
 
     position: Shape (3,) fractional. site: label of the atom the position is on, empty where it is on none.
@@ -78,18 +79,9 @@ class CouplingTensor:
     steps: Shape (m, 3, 3). Changes of the dipolar part by one standard uncertainty of each parameter of the positions.
     """
 
-    position: FloatArray
-    site: str
     magnetic: tuple[str, ...]
     n_ions: float
-    dipolar: FloatArray
-    lorentz: FloatArray
-    demagnetizing: FloatArray
-    contact: FloatArray
     error_bound: float
-    boundary: str
-    notes: tuple[str, ...] = field(default=(), repr=False)
-    steps: FloatArray = field(default_factory=lambda: np.zeros((0, 3, 3)), repr=False)
 
     @property
     def total(self) -> FloatArray:
@@ -238,16 +230,8 @@ def averaged(tensors: Sequence[CouplingTensor], weights: FloatArray) -> Coupling
     which all tensors share, so that each must count the same parameters.
     """
     shares = np.asarray(weights, dtype=float)
-    first = tensors[0]
-    return dataclasses.replace(
-        first,
-        site="",
-        dipolar=frozen(np.einsum("n,nab->ab", shares, [one.dipolar for one in tensors])),
-        contact=frozen(np.einsum("n,nab->ab", shares, [one.contact for one in tensors])),
-        error_bound=float(shares @ [one.error_bound for one in tensors]),
-        steps=frozen(np.einsum("n,nmab->mab", shares, [one.steps for one in tensors])),
-        notes=tuple(dict.fromkeys(note for one in tensors for note in one.notes)),
-    )
+    bound = float(shares @ [one.error_bound for one in tensors])
+    return dataclasses.replace(mean_tensor(tensors, shares), error_bound=bound)
 
 
 def site_couplings(
@@ -283,7 +267,7 @@ def site_couplings(
     rows = {int(site): row for row, site in enumerate(chosen)}
     notes = [*crystal.notes, *(f"displaced: {term.words()}" for term in terms)]
     notes += [words.removeprefix(": ") for words in probe_words("", cloud, ())]
-    notes += [*moment_spread_words(moment_spread), *reached]
+    notes += [*moment_spread_words(counting_spread([ordering], moment_spread)), *reached]
     if place.site >= 0:
         notes.append(f"the position is that of atom {crystal.labels[place.site]}, which does not act on itself")
     return SiteCouplings(

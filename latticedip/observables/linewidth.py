@@ -86,7 +86,7 @@ class Linewidth:
     strong_tensor_T2: Shape (3, 3, 3, 3) in T². Σ p (1/3 or 3/4) I(I+1) b² n_a n_b n_c n_d, for all directions; with a
         spread the tensor that gives the averaged sums in the same way.
     zero_tensor_T2: Shape (3, 3) in T². ⟨B_a B_b⟩ in zero field.
-    contributions: by isotope. notes: sentences a report must repeat.
+    contributions: by isotope. notes: sentences a report must repeat. motion_notes: those of them on its spread.
     """
 
     position: FloatArray
@@ -98,6 +98,7 @@ class Linewidth:
     zero_tensor_T2: FloatArray
     contributions: tuple[Contribution, ...]
     notes: tuple[str, ...] = field(default=(), repr=False)
+    motion_notes: tuple[str, ...] = field(default=(), repr=False)
 
     @property
     def second_moment_T2(self) -> float:
@@ -217,6 +218,7 @@ def linewidth(
                 contributions.append(
                     Contribution(isotope.name, flips, atoms, _along(part, along), float(np.trace(random)))
                 )
+    moving = _spread_notes(cloud, reached)
     return Linewidth(
         position=place.position,
         site=crystal.labels[place.site] if place.site >= 0 else "",
@@ -226,7 +228,8 @@ def linewidth(
         strong_tensor_T2=frozen(strong),
         zero_tensor_T2=frozen(zero),
         contributions=tuple(contributions),
-        notes=(*_notes(crystal, place, probe, terms, contributions), *_spread_notes(cloud, reached)),
+        notes=(*_notes(crystal, place, probe, terms, contributions), *moving),
+        motion_notes=moving,
     )
 
 
@@ -290,14 +293,14 @@ def _site_sums(
     return sums, list(dict.fromkeys(crystal.labels[site] for site in sites[reach < REACHED]))
 
 
-def _spread_notes(spread: float | FloatArray | None, reached: list[str]) -> list[str]:
+def _spread_notes(spread: float | FloatArray | None, reached: list[str]) -> tuple[str, ...]:
     if spread is None or not np.any(spread):
-        return []
-    return [
+        return ()
+    return (
         f"pair fields averaged over a Gaussian spread of {spread_words(spread)}: motion that is fast against the "
         "linewidth; a slow one gives a distribution of widths instead",
         *(reached_words("of the probe", label) for label in reached),
-    ]
+    )
 
 
 def _notes(

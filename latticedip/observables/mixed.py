@@ -10,7 +10,7 @@ import numpy as np
 
 from latticedip.checks import FloatArray, frozen
 from latticedip.observables.distribution import FieldDistribution, mixture
-from latticedip.observables.spectrum import Spectrum, same_size_T
+from latticedip.observables.spectrum import Spectrum, distribution_entries, same_size_T
 
 #: What is told of every mixture, behind the name of the probe.
 MIXED_NOTE = (
@@ -61,7 +61,6 @@ class MixedSpectrum:
         """Plain dict as that of a Spectrum; keys carry their units."""
         first, found = self.spectra[0], self.distribution
         listed = [one.to_dict() for one, _ in self._counting]
-        factor = first.MHz_per_T
         shares = [weight for _, weight in self._counting]
         bands = [
             {**band, "share": band["share"] * weight}
@@ -72,13 +71,8 @@ class MixedSpectrum:
         return {
             **first.to_dict(),
             "probe": self.name,
-            "equivalent_positions": sum(one.multiplicity for one in self.spectra),
-            "lines": [{"field_T": at, "frequency_MHz": at * factor, "share": share} for at, share in found.lines],
-            "bands": sorted(bands, key=lambda band: band["edges_T"]),
-            "mean_T": found.mean_T,
-            "rms_T": found.rms_T,
-            "mean_MHz": found.mean_T * factor,
-            "rms_MHz": found.rms_T * factor,
+            "equivalent_positions": sum(one.multiplicity for one, _ in self._counting),
+            **distribution_entries(found, bands, first.MHz_per_T),
             "nuclear_width_T": float(np.sqrt(np.array(shares) @ nuclear**2)),
             "error_bound_T": max(one["error_bound_T"] for one in listed),
             "notes": [f"{self.name}: {MIXED_NOTE}", *dict.fromkeys(note for one in listed for note in one["notes"])],

@@ -26,7 +26,7 @@ from latticedip.errors import InputError
 from latticedip.ordering.domains import orthogonal
 from latticedip.ordering.model import Ordering, is_self_conjugate
 from latticedip.ordering.phases import PhaseSpace, nearly_commensurate, phase_space
-from latticedip.physics.contact import carried_contacts, has_direction, shell_neighbours, turned_term
+from latticedip.physics.contact import carried_contacts, contacts_of_site, has_direction, shell_neighbours, turned_term
 from latticedip.physics.field import LocalField, local_field
 from latticedip.probe import Contact, Probe
 from latticedip.sample import Sample
@@ -153,6 +153,8 @@ def orbit_field(
     if probe.site is None:
         # Every probe gives the same number of rows.
         by_row = [terms[i * len(terms) // len(places)] for i in range(len(places))]
+    elif not equivalent:
+        by_row = contacts_of_site(home, places, probe.contact, probe.name)
     else:
         first = home.positions[home.find(probe.site)[0]]
         by_row = carried_contacts(home, first, places, probe.contact, probe.name)

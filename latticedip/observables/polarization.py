@@ -62,6 +62,8 @@ PANEL_NODES, PANEL_ANGLE = 16, 16.0
 SMALLEST_PANEL = 1e-8
 #: Fields of a powder beyond which the densities of many internal fields are added up first, and most that are taken.
 MANY_FIELDS, MOST_FIELDS = 2**20, 2**25
+#: Largest angle ωt of a powder in an applied field: what its panels can turn by with as many fields.
+MOST_ANGLE = PANEL_ANGLE * MOST_FIELDS / (2 * PANEL_NODES)
 #: Internal over applied field between which densities may be added up, and nodes and largest angle of a panel then.
 LEAST_RATIO, MOST_RATIO, SUM_NODES, SUM_ANGLE = 1e-4, 300.0, 8, 2.0
 #: What a report says of a powder in an applied field.
@@ -264,6 +266,12 @@ def _powder_in_field(
     # grid of internal fields stands for many as a grid of frequencies does.
     internal = _gathered(_sizes(inside, gamma, time), time)
     groups = _groups(internal, applied, longest)
+    turned = (applied + float(internal.omega.max(initial=0.0))) * longest
+    if turned > MOST_ANGLE:
+        raise LimitError(
+            f"the polarization of this powder up to {longest:g} µs turns by {turned:.2g} rad, more than "
+            f"{MOST_ANGLE:.2g}. Ask for a shorter time or a smaller field."
+        )
     both, dot = (start @ along) * (seen @ along), start @ seen
     turning = -sign * along @ np.cross(start, seen)
 

@@ -19,9 +19,8 @@ occupancies and the shape of the sample count as exact.
 
 from __future__ import annotations
 
-import dataclasses
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
 
@@ -34,7 +33,7 @@ from latticedip.errors import InputError
 from latticedip.observables.coupling_tensor import SiteCouplings, site_couplings
 from latticedip.observables.powder import PowderLine
 from latticedip.observables.susceptibility import UNITS, Susceptibility
-from latticedip.observables.tensor import PrincipalFrame, added, known, principal_frame
+from latticedip.observables.tensor import PrincipalFrame, ProbeTensor, added, known, mean_tensor, principal_frame
 from latticedip.physics.boundary import boundary_words
 from latticedip.probe import Contact
 from latticedip.sample import Sample
@@ -70,8 +69,8 @@ class Rotation:
         }
 
 
-@dataclass(frozen=True, eq=False)
-class Shift:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Shift(ProbeTensor):
     """Shift of a probe in its parts, as fractions of the applied field; Cartesian tensors (3, 3).
 
     position: Shape (3,) fractional. site: label of the atom it is on, empty where it is on none.
@@ -84,18 +83,9 @@ class Shift:
         and χ state none, and all uncertainties are NaN then.
     """
 
-    position: FloatArray
-    site: str
     temperature_K: float | None
-    dipolar: FloatArray
-    contact: FloatArray
-    lorentz: FloatArray
-    demagnetizing: FloatArray
     volume_susceptibility: FloatArray
     chi_cm3_per_mol: float
-    boundary: str
-    notes: tuple[str, ...] = field(default=(), repr=False)
-    steps: FloatArray = field(default_factory=lambda: np.zeros((0, 3, 3)), repr=False)
 
     @cached_property
     def total(self) -> FloatArray:
@@ -357,15 +347,7 @@ def averaged_shift(shifts: Sequence[Shift], weights: FloatArray) -> Shift:
     weights: Shape (n,) float, adding up to 1. shifts: at one temperature and of one susceptibility, which with the
     sites of the ions bring their uncertainties. The position is that of the first.
     """
-    shares = np.asarray(weights, dtype=float)
-    return dataclasses.replace(
-        shifts[0],
-        site="",
-        dipolar=frozen(np.einsum("n,nab->ab", shares, [one.dipolar for one in shifts])),
-        contact=frozen(np.einsum("n,nab->ab", shares, [one.contact for one in shifts])),
-        steps=frozen(np.einsum("n,nmab->mab", shares, [one.steps for one in shifts])),
-        notes=tuple(dict.fromkeys(note for one in shifts for note in one.notes)),
-    )
+    return mean_tensor(shifts, np.asarray(weights, dtype=float))
 
 
 def _checked(chi: Susceptibility) -> Susceptibility:

@@ -8,6 +8,7 @@ their arrangement in each.
 from __future__ import annotations
 
 import dataclasses
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from math import gcd
@@ -106,18 +107,27 @@ class Spectrum:
             "equivalent_positions": self.multiplicity,
             "cells": self.in_words,
             "domains": len(self.domains),
-            "lines": [{"field_T": at, "frequency_MHz": at * factor, "share": share} for at, share in found.lines],
-            "bands": sorted(waves, key=lambda band: band["edges_T"]),
-            "mean_T": found.mean_T,
-            "rms_T": found.rms_T,
-            "mean_MHz": found.mean_T * factor,
-            "rms_MHz": found.rms_T * factor,
+            **distribution_entries(found, waves, factor),
             "width_T": found.width_T,
             "nuclear_width_T": found.nuclear_width_T,
             "error_bound_T": float(np.sqrt(3) * max(fields.error_bound_T for fields in self.orbits)),
             "boundary": self.boundary,
             "notes": list(self.notes),
         }
+
+
+def distribution_entries(
+    found: FieldDistribution, bands: Sequence[Mapping[str, Any]], MHz_per_T: float
+) -> dict[str, Any]:
+    """Lines, bands (sorted by their edges) and moments of a distribution of |B|, as the dict of a Spectrum has them."""
+    return {
+        "lines": [{"field_T": at, "frequency_MHz": at * MHz_per_T, "share": share} for at, share in found.lines],
+        "bands": sorted(bands, key=lambda band: band["edges_T"]),
+        "mean_T": found.mean_T,
+        "rms_T": found.rms_T,
+        "mean_MHz": found.mean_T * MHz_per_T,
+        "rms_MHz": found.rms_T * MHz_per_T,
+    }
 
 
 def spectrum(
@@ -200,13 +210,13 @@ def field_parts(
     applied = float(np.linalg.norm(fields.applied))
     internal = fields.steady - fields.applied if powder else fields.steady
     n = len(internal) * len(fields.phases.listed)
+    same = same_size_T(fields)
     if fields.phases.n_free == 0:
         vectors = internal[:, None] + moving_fields(fields, fields.phases.listed)
         sizes = np.linalg.norm(vectors, axis=2).ravel()
         if not fields.phases.complete:
-            return [(_shell_of(sizes, applied) if in_field else Sampled(sizes), 1.0)]
-        return [(Shell(np.array([s]), applied) if in_field else Line(float(s)), 1 / n) for s in sizes]
-    same = same_size_T(fields)
+            return [(_shell_of(sizes, applied, same) if in_field else Sampled(sizes), 1.0)]
+        return [(_shell_of(s, applied, same) if in_field else Line(float(s[0])), 1 / n) for s in sizes[:, None]]
     if fields.phases.n_free == 1:
         found: list[tuple[Part, float]] = []
         for wave in free_waves(fields, internal):
@@ -214,7 +224,7 @@ def field_parts(
             if high - low <= same:
                 # A circle: its radius is the root of the mean square.
                 radius = float(np.sqrt(wave.square[0].real))
-                found.append((Shell(np.array([radius]), applied) if in_field else Line(radius), 1 / n))
+                found.append((_shell_of(np.array([radius]), applied, same) if in_field else Line(radius), 1 / n))
             else:
                 found.append((Shell(wave.nodes(POWDER_PHASES), applied, (low, high)) if in_field else wave, 1 / n))
         return found
@@ -223,13 +233,18 @@ def field_parts(
     sizes = np.concatenate(
         [np.linalg.norm(steady + (phases @ fields.waves[:, row]).real, axis=1) for row, steady in enumerate(internal)]
     )
-    return [(_shell_of(sizes, applied) if in_field else Sampled(sizes), 1.0)]
+    return [(_shell_of(sizes, applied, same) if in_field else Sampled(sizes), 1.0)]
 
 
-def _shell_of(sizes: FloatArray, applied: float) -> Shell:
-    """A powder of many internal fields, which a smaller number of their quantiles stands for."""
+def _shell_of(sizes: FloatArray, applied: float, same_T: float) -> Shell | Line:
+    """A powder of internal fields in an applied one; a smaller number of quantiles stands for many.
+
+    same_T: sizes of the whole field that differ by no more are one, so that smaller internal fields are none.
+    """
     ordered = np.sort(sizes)
     reach = float(ordered[0]), float(ordered[-1])
+    if 2 * reach[1] <= same_T:
+        return Line(applied)
     if len(ordered) > POWDER_PHASES:
         ordered = ordered[((np.arange(POWDER_PHASES) + 0.5) / POWDER_PHASES * len(ordered)).astype(int)]
     return Shell(ordered, applied, reach)

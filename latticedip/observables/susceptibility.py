@@ -24,6 +24,8 @@ UNITS = {
 }
 #: How far a tensor may be from symmetric, and from the symmetry of its site, relative to its largest element.
 TENSOR_TOLERANCE = 1e-6
+#: Largest standard uncertainty, in any unit.
+LARGEST_CHI_SU = 1e6
 #: Elements of a symmetric tensor.
 ELEMENTS = ((0, 0), (1, 1), (2, 2), (1, 2), (0, 2), (0, 1))
 #: An operation carries an atom onto another within this distance (Å).
@@ -105,6 +107,8 @@ class Susceptibility:
         su = as_floats("chi_su", su, chi.shape) if chi.ndim else np.array(as_float("chi_su", su))
         if np.any(su < 0):
             raise InputError(f"chi_su must hold numbers of at least 0, got {float(su.min())!r}.")
+        if np.any(su > LARGEST_CHI_SU):
+            raise InputError(f"chi_su must hold numbers of at most {LARGEST_CHI_SU:g}, got {float(su.max())!r}.")
         if chi.ndim >= 2 and np.abs(su - np.swapaxes(su, -1, -2)).max() > TENSOR_TOLERANCE * np.abs(su).max():
             raise InputError("chi_su must be symmetric, as chi is.")
         return su

@@ -1,13 +1,55 @@
-"""Principal values and axes of a symmetric tensor, in the words of the trade."""
+"""Tensors at a probe in their parts; principal values and axes of a symmetric tensor, in the words of the trade."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Any
+import dataclasses
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any, TypeVar
 
 import numpy as np
 
 from latticedip.checks import FloatArray, frozen
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class ProbeTensor:
+    """What every tensor at a probe that comes in parts has; all parts of one unit, Cartesian, Shape (3, 3) each.
+
+    position: Shape (3,) fractional. site: label of the atom the position is on, empty where it is on none.
+    dipolar: Lorentz-sphere sum. lorentz, demagnetizing: of the magnetization. contact: of the contact couplings.
+    boundary: the boundary assumed, in words. notes: sentences a report must repeat.
+    steps: Shape (m, 3, 3). Changes by one standard uncertainty of each of m independent parameters.
+    """
+
+    position: FloatArray
+    site: str
+    dipolar: FloatArray
+    lorentz: FloatArray
+    demagnetizing: FloatArray
+    contact: FloatArray
+    boundary: str
+    notes: tuple[str, ...] = field(default=(), repr=False)
+    steps: FloatArray = field(default_factory=lambda: np.zeros((0, 3, 3)), repr=False)
+
+
+AnyProbeTensor = TypeVar("AnyProbeTensor", bound=ProbeTensor)
+
+
+def mean_tensor(found: Sequence[AnyProbeTensor], weights: FloatArray) -> AnyProbeTensor:
+    """The first of the tensors of a probe at several positions, with the mean of all in dipolar, contact and steps.
+
+    weights: Shape (n,) float, adding up to 1. Lorentz and demagnetizing parts are the same at every position; the steps
+    must be those of the same parameters. The notes are those of all, each once.
+    """
+    return dataclasses.replace(
+        found[0],
+        site="",
+        dipolar=frozen(np.einsum("n,nab->ab", weights, [one.dipolar for one in found])),
+        contact=frozen(np.einsum("n,nab->ab", weights, [one.contact for one in found])),
+        steps=frozen(np.einsum("n,nmab->mab", weights, [one.steps for one in found])),
+        notes=tuple(dict.fromkeys(note for one in found for note in one.notes)),
+    )
 
 
 @dataclass(frozen=True, eq=False)

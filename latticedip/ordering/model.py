@@ -119,8 +119,8 @@ class Ordering:
     Components at k equal or opposite modulo 1 are merged (S_k + conj S_−k). Where k and −k are the same vector
     only the real part has a meaning.
 
-    Raises InputError for wrong shapes, values that are not finite, components beyond 1e6 µB, an imaginary part at
-    such a k, or an atom in both size_su and amplitude_su.
+    Raises InputError for wrong shapes, values that are not finite, components or uncertainties beyond 1e6 µB, an
+    imaginary part at such a k,    such a k, or an atom in both size_su and amplitude_su.
     """
 
     crystal: Crystal
@@ -175,6 +175,10 @@ class Ordering:
             su = np.asarray(self.moment_su)
             if su.dtype.kind not in "iuf" or su.shape != (n, 3) or np.any(su < 0):
                 raise InputError(f"moment_su must hold numbers of at least 0 or NaN in shape ({n}, 3).")
+            if np.any(su > LARGEST_MOMENT_MUB):
+                raise InputError(
+                    f"moment_su holds {np.nanmax(su):.6g} µB, beyond {LARGEST_MOMENT_MUB:g} µB. Give Bohr magnetons."
+                )
             su = su.astype(float)
         for key, value in (("components", components), ("k", k), ("moment_su", su)):
             object.__setattr__(self, key, frozen(value))

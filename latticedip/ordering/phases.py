@@ -9,6 +9,7 @@ occurs alike; a third harmonic follows its fundamental, and two independent k ta
 from __future__ import annotations
 
 import itertools
+from collections.abc import Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from math import lcm
@@ -90,14 +91,17 @@ def phase_space(k: FloatArray, *, samples: int = 2**14, seed: int = 0) -> PhaseS
 
 def nearly_commensurate(k: FloatArray) -> list[tuple[float, str]]:
     """Coordinates of k close to a simple fraction without being it, each with that fraction ("1/3")."""
-    found = []
-    for value in np.ravel(k):
-        for denominator in SMALL_DENOMINATORS:
-            whole = round(float(value) * denominator)
-            if whole and SAME_K < abs(value - whole / denominator) < NEARLY:
-                found.append((float(value), str(Fraction(whole, denominator))))
-                break
-    return list(dict.fromkeys(found))
+    close = [(float(value), close_fraction(float(value), SMALL_DENOMINATORS, NEARLY)) for value in np.ravel(k)]
+    return list(dict.fromkeys((value, str(fraction)) for value, fraction in close if fraction))
+
+
+def close_fraction(value: float, denominators: Sequence[int], within: float) -> Fraction | None:
+    """The first fraction with one of the denominators (0 among them) closer to a value than ``within``, but not it."""
+    for denominator in denominators:
+        whole = round(value * denominator)
+        if SAME_K < abs(value - whole / denominator) < within:
+            return Fraction(whole, denominator)
+    return None
 
 
 def _periods(k: FloatArray) -> list[int] | None:

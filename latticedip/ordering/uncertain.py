@@ -21,6 +21,10 @@ if TYPE_CHECKING:
     from latticedip.crystal.model import Crystal
 
 
+#: Largest change by one standard uncertainty (µB), as large as the largest moment.
+LARGEST_STEP_MUB = 1e6
+
+
 @dataclass(frozen=True, eq=False)
 class AmplitudeUncertainty:
     """One independent parameter of the Fourier amplitudes of an ordering.
@@ -30,7 +34,7 @@ class AmplitudeUncertainty:
         their order, by one standard uncertainty; a step of a cosine amplitude counted in cells is real, one of a sine
         amplitude imaginary.
 
-    Raises InputError for sites that are no distinct indices, and steps of another shape.
+    Raises InputError for sites that are no distinct indices, steps of another shape, and steps beyond 1e6 µB.
     """
 
     sites: tuple[int, ...]
@@ -41,7 +45,12 @@ class AmplitudeUncertainty:
         if sites.ndim != 1 or sites.dtype.kind not in "iu" or np.any(sites < 0) or len(set(sites)) != len(sites):
             raise InputError(f"sites of an AmplitudeUncertainty must be distinct indices of atoms, got {self.sites!r}.")
         object.__setattr__(self, "sites", tuple(int(site) for site in sites))
-        object.__setattr__(self, "steps", frozen(as_complex("steps", self.steps, (None, len(sites), 3))))
+        steps = as_complex("steps", self.steps, (None, len(sites), 3))
+        if (largest := float(np.abs(steps).max(initial=0.0))) > LARGEST_STEP_MUB:
+            raise InputError(
+                f"a standard uncertainty of {largest:.6g} µB is beyond {LARGEST_STEP_MUB:g} µB. Give Bohr magnetons."
+            )
+        object.__setattr__(self, "steps", frozen(steps))
 
     def turned(self, matrix: FloatArray) -> AmplitudeUncertainty:
         """The same parameter where every moment is turned by a (3, 3) matrix."""
@@ -54,7 +63,7 @@ def independent_amplitudes(crystal: Crystal, su: Any) -> tuple[AmplitudeUncertai
     su: Shape (n_k, n_sites, 3) complex in µB, crystal-axis components: the real part is the standard uncertainty of
     the cosine amplitude, the imaginary part that of the sine amplitude; 0 or NaN where exact or unknown.
 
-    Raises InputError for another shape, negative and infinite numbers.
+    Raises InputError for another shape, negative and infinite numbers, and numbers beyond 1e6 µB.
     """
     stated = np.asarray(su)
     if stated.dtype.kind not in "iufc" or stated.ndim != 3 or stated.shape[1:] != (crystal.n_sites, 3):
@@ -96,6 +105,10 @@ def aligned_parameters(
 
     Raises InputError for other objects, for steps at another number of k, and for atoms that are not there.
     """
+    if not isinstance(parameters, (tuple, list)):
+        raise InputError(
+            f"amplitude_su must be a tuple of AmplitudeUncertainty objects, got {type(parameters).__name__}."
+        )
     for i, parameter in enumerate(parameters):
         if not isinstance(parameter, AmplitudeUncertainty):
             raise InputError(

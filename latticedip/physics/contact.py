@@ -18,6 +18,8 @@ from latticedip.ordering.model import Ordering
 from latticedip.probe import SHELL_TOLERANCE_A, Contact
 from latticedip.units import MU0_T_A3_PER_MUB
 
+#: Places closer than this (fractional) are one, listed once for each cell of an ordering.
+ONE_PLACE = 1e-6
 #: Neighbours are looked for up to this distance (Å).
 MAX_RADIUS_A = 200.0
 
@@ -99,13 +101,12 @@ def carried_contacts(
 ) -> list[tuple[Contact, ...]]:
     """Contact terms at equivalent places (n, 3) fractional, where they are stated for the place ``first`` (3,).
 
-    A tensor is turned by an operation of the crystal that carries the first place onto the other. One place alone keeps
-    what is stated for it, whatever its symmetry says.
+    A tensor is turned by an operation of the crystal that carries the first place onto the other.
 
     Raises InputError, naming ``name``, where there is no such operation or where two of them disagree: the tensor then
     lacks the symmetry of its place.
     """
-    if len(places) <= 1 or not any(has_direction(term) for term in terms):
+    if not any(has_direction(term) for term in terms):
         return [tuple(terms)] * len(places)
     operations = operations_of(home)
     images = operations.rotations @ first + operations.translations
@@ -116,6 +117,18 @@ def carried_contacts(
         turns = [orthogonal(home, rotation) for rotation in operations.rotations[leads]]
         found.append(tuple(_agreed(term, turns, name) if has_direction(term) else term for term in terms))
     return found
+
+
+def contacts_of_site(
+    home: Crystal, places: FloatArray, terms: Sequence[Contact], name: str
+) -> list[tuple[Contact, ...]]:
+    """Contact terms of each atom of a site at places (n, 3) fractional, where they are stated for the first of them.
+
+    One atom alone keeps what is stated for it, whatever its symmetry says. Raises what `carried_contacts` raises.
+    """
+    if np.abs(places - places[0]).max() < ONE_PLACE:
+        return [tuple(terms)] * len(places)
+    return carried_contacts(home, places[0], places, terms, name)
 
 
 def _agreed(term: Contact, turns: list[FloatArray], name: str) -> Contact:

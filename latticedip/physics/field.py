@@ -22,6 +22,7 @@ from latticedip.physics.places import Places, places_of, targets_cart
 from latticedip.physics.spread import (
     cloud_fields,
     cloud_gradients,
+    counting_spread,
     exchanged,
     exchanged_tensors,
     moment_clouds,
@@ -253,7 +254,8 @@ def local_field(
             change, _ = exchanged_tensors(ordering, pairs, clouds[i], extended, places.names[i])
             whole[i] += np.einsum("nab,nb->a", change, moments_of(ordering, pairs))
     magnetization = magnetization_T(ordering)
-    notes = [*crystal.notes, *ordering.notes, *moment_spread_words(moment_spread), *places.notes(), *reached]
+    spreads = moment_spread_words(counting_spread([ordering], moment_spread))
+    notes = [*crystal.notes, *ordering.notes, *spreads, *places.notes(), *reached]
     if ordering.reference is not None and places.probes:
         notes.append(ordering.reference.how)
     return LocalField(

@@ -15,7 +15,7 @@ from latticedip.errors import InputError
 from latticedip.kernels.jit import over_rows
 from latticedip.kernels.nearest import nearest_distances
 from latticedip.ordering.model import Ordering
-from latticedip.physics.contact import carried_contacts
+from latticedip.physics.contact import contacts_of_site
 from latticedip.physics.spread import probe_words
 from latticedip.probe import Contact, Probe
 from latticedip.sums.lattice import reduce_cell
@@ -156,7 +156,7 @@ def _rows_of(ordering: Ordering, probe: Probe, spread: float | FloatArray | None
     else:
         sites = [int(site) for site in home.find(probe.site)]
         spreads = carried_spreads(home, sites, own, probe.name)
-        contacts = carried_contacts(home, home.positions[sites[0]], home.positions[sites], probe.contact, probe.name)
+        contacts = contacts_of_site(home, home.positions[sites], probe.contact, probe.name)
     found: list[tuple[Any, ...]] = []
     for site, cloud, terms in zip(sites, spreads, contacts, strict=True):
         position = probe.position if site < 0 else home.positions[site]

@@ -6,7 +6,7 @@ Gaussian clouds is that over one whose covariance is the sum.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -75,10 +75,24 @@ def moment_clouds(ordering: Ordering, spread: Any) -> FloatArray:
         return frozen(np.tile(one, (crystal.n_sites, 1, 1)))
     if ordering.reference is None:
         return named_clouds(crystal, spread)
-    home, transform = ordering.reference.crystal, ordering.reference.transform
-    named = named_clouds(home, spread)
+    named = named_clouds(ordering.reference.crystal, spread)
     clouds = np.zeros((crystal.n_sites, 3, 3))
-    for site in np.flatnonzero(ordering.is_magnetic if np.any(named) else []):
+    if np.any(named):
+        ions = np.flatnonzero(ordering.is_magnetic)
+        clouds[ions] = named[_home_sites(ordering, ions)]
+    return frozen(clouds)
+
+
+def _home_sites(ordering: Ordering, ions: np.ndarray) -> list[int]:
+    """The sites, in the crystal that probes are given in, on which some sites of an ordering lie.
+
+    Raises InputError for one that lies on none.
+    """
+    if ordering.reference is None:
+        return [int(site) for site in ions]
+    crystal, home, transform = ordering.crystal, ordering.reference.crystal, ordering.reference.transform
+    found = []
+    for site in ions:
         gaps = transform.P @ crystal.positions[site] + transform.p - home.positions
         alike = np.array([symbol == crystal.symbols[site] for symbol in home.symbols])
         distance = np.where(alike, np.linalg.norm((gaps - np.round(gaps)) @ home.cell, axis=1), np.inf)
@@ -87,8 +101,8 @@ def moment_clouds(ordering: Ordering, spread: Any) -> FloatArray:
                 f"moment_spread: the crystal of the study has no {crystal.symbols[site]} within {SAME_ATOM_A} Å of the "
                 f"place of atom {crystal.labels[site]} of the ordering {ordering.name!r}."
             )
-        clouds[site] = named[int(np.argmin(distance))]
-    return frozen(clouds)
+        found.append(int(np.argmin(distance)))
+    return found
 
 
 def named_clouds(crystal: Crystal, spread: Mapping[str, Any]) -> FloatArray:
@@ -313,6 +327,19 @@ def probe_words(name: str, spread: float | FloatArray | None, displaced: Sequenc
     if spread is None or not np.any(spread):
         return words
     return [*words, f"{name}: field averaged over a Gaussian spread of {spread_words(spread)}"]
+
+
+def counting_spread(orderings: Iterable[Ordering], spread: Any) -> Any:
+    """Of spreads of moments by label or element those that have an effect: of an ion that is magnetic somewhere."""
+    if not isinstance(spread, Mapping) or not any(np.any(value) for value in spread.values()):
+        return spread
+    counting: set[str] = set()
+    for ordering in orderings:
+        home = ordering.crystal if ordering.reference is None else ordering.reference.crystal
+        for site in _home_sites(ordering, np.flatnonzero(ordering.is_magnetic)):
+            # The label wins over the element.
+            counting.add(home.labels[site] if home.labels[site] in spread else home.symbols[site])
+    return {name: value for name, value in spread.items() if name in counting}
 
 
 def moment_spread_words(spread: Any) -> list[str]:

@@ -22,7 +22,7 @@ from latticedip.report.tables import (
     table,
     vector,
 )
-from latticedip.study.fields import PARTS
+from latticedip.study.fields import PARTS, SU_NOTE
 
 _COMPONENTS = {"cartesian": ("x", "y", "z"), "crystal": ("along a", "along b", "along c")}
 _AXES_WORDS = {
@@ -52,8 +52,10 @@ def field_text(document: Mapping[str, Any], *, width: int | None = None) -> str:
             "",
             _parts_table(entry, axes, unit, width),
         ]
-        if entry["notes"]:
-            parts += ["", bullets(entry["notes"], width=width)]
+        bracketed = any("(" in text for texts in _sizes_shown(entry["rows"], unit) for text in texts)
+        notes = [note for note in entry["notes"] if bracketed or note != SU_NOTE]
+        if notes:
+            parts += ["", bullets(notes, width=width)]
     return "\n".join(parts)
 
 
@@ -91,30 +93,37 @@ def _overview(entry: Mapping[str, Any], unit: str, width: int | None) -> str:
         Column("position", "in the study's cell", words=True, whole=True),
     ]
     columns += [Column("position", "in its own cell", words=True, whole=True)] if elsewhere else []
-    sizes = [row[f"field_size_{unit}"] for row in rows]
     slopes = [_length(row, unit) for row in rows]
-    frequencies = [math.nan if row["frequency_MHz"] is None else row["frequency_MHz"] for row in rows]
-    error = _error_bound(rows, unit)
-    digits = decimals_for(sizes, error=error)
-    slope_digits = decimals_for(slopes, significant=4, error=error)
-    per_unit = max((f / s for f, s in zip(frequencies, sizes, strict=True) if f > 0), default=0.0)
-    frequency_digits = decimals_for(frequencies, error=error * per_unit)
+    slope_digits = decimals_for(slopes, significant=4, error=_error_bound(rows, unit))
+    shown = _sizes_shown(rows, unit)
     cells = []
     counted: dict[str, int] = {}
     for number, row in enumerate(rows, start=1):
         counted[row["probe"]] = counted.get(row["probe"], 0) + 1
         name = row["probe"] + (f" ({row['site']})" if row["site"] and row["site"] not in row["probe"] else "")
         name += f", {counted[row['probe']]} of {row['multiplicity']}" if row["multiplicity"] > 1 else ""
-        line = [
-            str(number),
-            name,
-            with_su(sizes[number - 1], digits, row.get(f"field_size_su_{unit}")),
-            with_su(frequencies[number - 1], frequency_digits, row.get("frequency_su_MHz")),
-        ]
+        line = [str(number), name, *shown[number - 1]]
         line += [fixed(slopes[number - 1], slope_digits), coordinates(row["position_in_reference_cell"])]
         line += [coordinates(row["position"])] if elsewhere else []
         cells.append(line)
     return table(columns, cells, width=width, keys=1)
+
+
+def _sizes_shown(rows: Sequence[Mapping[str, Any]], unit: str) -> list[tuple[str, str]]:
+    """|B| and frequency of every row, with uncertainties in brackets where they show."""
+    sizes = [row[f"field_size_{unit}"] for row in rows]
+    frequencies = [math.nan if row["frequency_MHz"] is None else row["frequency_MHz"] for row in rows]
+    error = _error_bound(rows, unit)
+    digits = decimals_for(sizes, error=error)
+    per_unit = max((f / s for f, s in zip(frequencies, sizes, strict=True) if f > 0), default=0.0)
+    frequency_digits = decimals_for(frequencies, error=error * per_unit)
+    return [
+        (
+            with_su(size, digits, row.get(f"field_size_su_{unit}")),
+            with_su(frequency, frequency_digits, row.get("frequency_su_MHz")),
+        )
+        for row, size, frequency in zip(rows, sizes, frequencies, strict=True)
+    ]
 
 
 def _error_bound(rows: Sequence[Mapping[str, Any]], unit: str) -> float:

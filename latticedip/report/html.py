@@ -267,6 +267,7 @@ def summary_sentences(document: Mapping[str, Any]) -> list[str]:
                 f"{rows[1]['ordering']}."
             )
     sentences.append(f"Boundary assumed: {document['boundary']}.")
+    sentences += [f"{entry['reason']}." for entry in document["left_out"] if entry["section"] == "polarization"]
     warnings = len(document["sections"]["show"]["warnings"])
     if warnings:
         sentences.append(f"{warnings} warning{'s' if warnings > 1 else ''}, listed at the end.")

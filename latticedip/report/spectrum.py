@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from latticedip.report.field import k_text, ordering_lines
-from latticedip.report.tables import Column, bullets, decimals_for, fixed, heading, pairs, short, table, vector
+from latticedip.report.tables import Column, bullets, caption, decimals_for, fixed, heading, pairs, short, table, vector
 
 #: Moments in time shown on screen; the document and the CSV file hold all.
 TIMES_SHOWN = 21
@@ -137,7 +137,10 @@ def _signals(document: Mapping[str, Any], entry: Mapping[str, Any], width: int |
     if document["specimen"] == "crystal":
         seen = options["detector"] or options["initial"]
         title = f"Polarization along {seen} of a spin that starts along {options['initial']}"
-    widths = {short(found["nuclear_width_per_us"], 4) for found in entry["spectra"]} - {"0"}
+    # A mixture has no width of its own in P(t): it is the mean of signals, each with the width at its position.
+    used = {found["nuclear_width_per_us"] for found in entry["spectra"] if "weights" not in found}
+    widths = list(dict.fromkeys(short(value, 4) for value in sorted(used - {0.0})))
     if widths:
-        title += f", nuclear moments with a width of {' and '.join(sorted(widths))} 1/µs"
-    return f"{title}\n\n" + table(columns, rows, width=width, keys=1)
+        listed = " and ".join([", ".join(widths[:-1]), widths[-1]] if len(widths) > 1 else widths)
+        title += f", nuclear moments with a width of {listed} 1/µs"
+    return f"{caption(title)}\n\n" + table(columns, rows, width=width, keys=1)

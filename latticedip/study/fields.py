@@ -62,7 +62,7 @@ def field_document(
         averages = _averages(study, result, axes, unit)
         _add_averages(rows, study, averages)
         placed = "" if ordering.reference is None else ordering.reference.how
-        uncertain = [SU_NOTE] if any("field_size_su_T" in row for row in plain["rows"]) else []
+        uncertain = [SU_NOTE] if any(row.get("field_size_su_T") for row in plain["rows"]) else []
         notes = [note for note in [*plain["notes"], *uncertain, *home_cell_notes([ordering])] if note not in placed]
         notes += [AVERAGES_NOTE] if averages else []
         entries.append({**ordering_head(ordering), **plain, "rows": rows, "averages": averages, "notes": notes})

@@ -92,15 +92,15 @@ class Key:
             raise self.expected(" or ".join(json.dumps(choice) for choice in choices), hint)
         return str(self.value)
 
-    def number(self, what: str, *, low: float = -math.inf, above: float = -math.inf) -> float:
-        """A finite number, at least ``low`` and larger than ``above``."""
+    def number(self, what: str, *, low: float = -math.inf, above: float = -math.inf, high: float = math.inf) -> float:
+        """A finite number, at least ``low``, larger than ``above`` and at most ``high``."""
         if isinstance(self.value, bool) or not isinstance(self.value, (int, float)):
             raise self.expected(what)
         try:
             number = float(self.value)
         except OverflowError:
             raise self.expected(what) from None
-        if not math.isfinite(number) or number < low or number <= above:
+        if not math.isfinite(number) or not low <= number <= high or number <= above:
             raise self.expected(what)
         return number
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping, Set
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -17,6 +17,7 @@ from latticedip.physics.spread import named_clouds
 from latticedip.study.keys import Key
 
 if TYPE_CHECKING:
+    from latticedip.ordering.model import Ordering
     from latticedip.study.schema import Study
 
 SUSCEPTIBILITY_KEYS = ("chi", "chi_su", "unit", "temperatures_K", "local")
@@ -94,16 +95,34 @@ def _number_or_tensor(key: Key) -> Any:
     return key.matrix(what) if isinstance(key.value, list) else key.number(what)
 
 
-def read_moment_spread(key: Key | None, crystal: Crystal) -> dict[str, float | FloatArray]:
+def magnetic_sites(
+    crystal: Crystal, moments: Mapping[str, float], susceptibility: Mapping[str, Any], orderings: Iterable[Ordering]
+) -> set[int]:
+    """Sites of the crystal of a study that its tables or any of its orderings make magnetic."""
+    named = [*susceptibility, *(name for name, size in moments.items() if size > 0)]
+    found = {site for name in named for site in crystal.find(name)}
+    for ordering in orderings:
+        ions = np.flatnonzero(ordering.is_magnetic)
+        if ordering.reference is None:
+            found.update(int(site) for site in ions)
+        else:
+            elements = {ordering.crystal.symbols[site] for site in ions}
+            found.update(site for site, symbol in enumerate(crystal.symbols) if symbol in elements)
+    return found
+
+
+def read_moment_spread(key: Key | None, crystal: Crystal, magnetic: Set[int]) -> dict[str, float | FloatArray]:
     """The [moment_spread] table: how far the moment of an ion extends, by site label or element (the label wins).
 
     A number is the rms extent along each axis in Å; three lists of three numbers are a Cartesian covariance in Å², that
-    of the first atom of the name.
+    of the first atom of the name. magnetic: the sites that carry a moment; where there are any, a spread of others is
+    refused, for it has no effect.
     """
     found: dict[str, float | FloatArray] = {}
-    for name, child in ({} if key is None else key.table(header=_MOMENT_SPREAD)).items():
+    table = {} if key is None else key.table(header=_MOMENT_SPREAD)
+    for name, child in table.items():
         with child.located():
-            crystal.find(name)
+            sites = crystal.find(name)
         value: Any = child.value
         if isinstance(value, list):
             value = child.matrix("three lists of three numbers (Cartesian): the covariance of the moment in Å²")
@@ -113,7 +132,11 @@ def read_moment_spread(key: Key | None, crystal: Crystal) -> dict[str, float | F
             # Symmetry is looked at here, so that a misfit is told with its key.
             named_clouds(crystal, {name: value})
             spread = as_spread("moment_spread", value)
-        if spread is not None and np.any(spread):
+        if np.any(spread) and magnetic and not magnetic & set(sites):
+            known = ", ".join(dict.fromkeys(crystal.labels[site] for site in sorted(magnetic)))
+            raise child.refuse(f"{name} carries no moment, so that its spread has no effect; magnetic are {known}.")
+        # A label without a spread counts beside the spread of its element.
+        if spread is not None and (np.any(spread) or crystal.symbols[sites[0]] in table.keys() - {name}):
             found[name] = spread
     return found
 

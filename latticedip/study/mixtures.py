@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from latticedip.checks import FloatArray
 from latticedip.observables.mixed import MIXED_NOTE, MixedSpectrum
 from latticedip.observables.spectrum import Spectrum
 from latticedip.ordering.domains import Domain
@@ -46,8 +47,6 @@ def _is(domain: Domain | None, number: int | None) -> bool:
 def _entry(mixed: MixedSpectrum, entries: Sequence[Mapping[str, Any]], bins: int) -> dict[str, Any]:
     plain = mixed.to_dict()
     del plain["boundary"], plain["notes"]
-    limits, share = mixed.binned(bins)
-    width, factor = float(limits[1] - limits[0]), float(plain["MHz_per_T"])
     signals = [entry["polarization"] for entry in entries]
     signal = None
     if signals[0] is not None:
@@ -61,14 +60,20 @@ def _entry(mixed: MixedSpectrum, entries: Sequence[Mapping[str, Any]], bins: int
         **plain,
         "weights": mixed.weights.tolist(),
         "nuclear_width_per_us": float(np.sqrt(mixed.weights @ nuclear**2)),
-        "histogram": {
-            "field_limits_T": limits.tolist(),
-            "frequency_limits_MHz": (limits * factor).tolist(),
-            "share": share.tolist(),
-            "density_per_T": (share / width).tolist(),
-            "density_per_MHz": (share / (width * factor)).tolist(),
-        },
+        "histogram": histogram(*mixed.binned(bins), float(plain["MHz_per_T"])),
         "polarization": signal,
+    }
+
+
+def histogram(limits: FloatArray, share: FloatArray, MHz_per_T: float) -> dict[str, Any]:
+    """A histogram of a spectrum document, in field and frequency; limits (bins + 1,) in T and share (bins,)."""
+    width = float(limits[1] - limits[0])
+    return {
+        "field_limits_T": limits.tolist(),
+        "frequency_limits_MHz": (limits * MHz_per_T).tolist(),
+        "share": share.tolist(),
+        "density_per_T": (share / width).tolist(),
+        "density_per_MHz": (share / (width * MHz_per_T)).tolist(),
     }
 
 

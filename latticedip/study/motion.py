@@ -7,6 +7,7 @@ from typing import Any
 from latticedip.crystal.displace import Displaced
 from latticedip.crystal.model import Crystal
 from latticedip.crystal.spread import as_spread, covariance_from_Uij
+from latticedip.crystal.uncertain import LARGEST_SU
 from latticedip.study.keys import Key
 
 SPREAD_KEYS = ("spread_A", "covariance_A2", "Uij")
@@ -29,9 +30,9 @@ def read_motion(item: Key, table: dict[str, Key], crystal: Crystal) -> dict[str,
         key = table["position_su"]
         if "site" in table:
             raise key.refuse("goes with `position`; a probe on a site has the uncertainty of that site. Leave it out.")
-        what = "three standard uncertainties of the fractional coordinates, each at least 0"
+        what = f"three standard uncertainties of the fractional coordinates, each from 0 to {LARGEST_SU:g}"
         arguments["position_su"] = key.numbers(3, what)
-        if min(arguments["position_su"]) < 0:
+        if min(arguments["position_su"]) < 0 or max(arguments["position_su"]) > LARGEST_SU:
             raise key.expected(what)
     if "displaced" in table:
         terms = table["displaced"].items("a list of neighbours that move, such as [{ shell = 1, factor = 1.05 }]")

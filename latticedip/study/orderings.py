@@ -17,7 +17,7 @@ import numpy as np
 
 from latticedip.checks import ComplexArray, FloatArray, as_floats
 from latticedip.crystal.model import Crystal, site_order
-from latticedip.ordering.model import Ordering, SizeUncertainty
+from latticedip.ordering.model import LARGEST_MOMENT_MUB, Ordering, SizeUncertainty
 from latticedip.ordering.patterns import (
     VANISHING_FRACTION,
     Setting,
@@ -26,6 +26,7 @@ from latticedip.ordering.patterns import (
     triple,
     unit_direction,
 )
+from latticedip.ordering.phases import close_fraction
 from latticedip.ordering.uncertain import AmplitudeUncertainty
 from latticedip.study.frames import place_in_frame
 from latticedip.study.keys import Key
@@ -41,6 +42,7 @@ MOMENT_KEYS = ("size", "su")
 AMPLITUDES = {"cosine": 1.0, "sine": 1j}
 
 _SIZE = "a size in Bohr magnetons, at least 0"
+_SU = f"a number from 0 to {LARGEST_MOMENT_MUB:g}"
 _DIRECTION = "a direction in crystal axes a, b, c, such as [0, 0, 1]"
 _K = 'three reduced coordinates, such as [0, 0, 0.5] or [0, 0, "1/3"]'
 
@@ -108,7 +110,8 @@ def _size(key: Key) -> tuple[float, float | None]:
     size = table["size"].number(_SIZE, low=0.0)
     if "su" not in table:
         return size, None
-    su = table["su"].number("the standard uncertainty of the size in Bohr magnetons, at least 0", low=0.0)
+    what = f"the standard uncertainty of the size in Bohr magnetons, from 0 to {LARGEST_MOMENT_MUB:g}"
+    su = table["su"].number(what, low=0.0, high=LARGEST_MOMENT_MUB)
     if su > 0 and size == 0:
         raise table["su"].refuse("goes with a size above 0: the uncertainty is one of the size, along its direction.")
     return size, su
@@ -215,16 +218,18 @@ def _from_pattern(item: Key, table: dict[str, Key], crystal: Crystal, sizes: Siz
     components = _sign_components(table, setting, sizes) if signs else _wave_components(table, setting)
     with item.located():
         ordering = setting.finish(components, notes=_k_notes(setting.k))
-    return sizes.uncertainties(ordering) if signs else _with_amplitude_su(ordering, table, setting)
+    if not signs:
+        return _with_amplitude_su(ordering, table, setting)
+    with item.located():
+        return sizes.uncertainties(ordering)
 
 
 def _k_notes(k: FloatArray) -> list[str]:
     """A remark on a coordinate that looks like a third or a sixth cut short, which is another vector."""
     for x in k:
-        nearest = round(6 * x) / 6
         # Two digits, as in 0.33, leave more than three or four.
         rough = 5e-3 if abs(100 * x - round(100 * x)) < 1e-9 else 1e-3
-        if 1e-9 < abs(x - nearest) < rough:
+        if close_fraction(float(x), (6,), rough) is not None:
             return [
                 f"k = ({', '.join(f'{float(y):.10g}' for y in k)}) is taken as written; a third or a sixth is given "
                 'exactly by a string such as "1/3"'
@@ -342,6 +347,11 @@ def _with_amplitude_su(ordering: Ordering, table: dict[str, Key], setting: Setti
             sites = setting.crystal.find(who)
             for entries in _su_entries(child, stated[who], setting.counts(sites)[0]):
                 steps = _carried(table, setting, name, sites, entries)
+                if name == "sine" and setting.self_conjugate and _has_no_real_part(steps):
+                    raise child.refuse(
+                        f"at k = {triple(setting.k)}, where k and −k are the same vector, a sine amplitude has no "
+                        "effect on these atoms, nor has its uncertainty. Leave it out, or give that of the cosine."
+                    )
                 if setting.self_conjugate:
                     # As of the components, only the real part has a meaning; an ion that is left without a moment has
                     # no uncertain one.
@@ -356,18 +366,18 @@ def _su_entries(key: Key, stated: Key, primitive: int) -> list[FloatArray]:
     of_triple = "three standard uncertainties in µB, each at least 0"
     if not isinstance(stated.value[0], list):
         su = [
-            item.number("a number of at least 0", low=0.0)
+            item.number(_SU, low=0.0, high=LARGEST_MOMENT_MUB)
             for item in _exactly(key, 3, f"{of_triple}, as `{stated.path}` has one triple")
         ]
         return [np.tile(np.eye(3)[axis] * su[axis], (primitive, 1)) for axis in range(3) if su[axis]]
     n = len(stated.value)
     changes = []
     for row, item in enumerate(
-        _exactly(key, n, f"{n} triples of standard uncertainties in µB, as `{stated.path}` has {n}")
+        _exactly(key, n, f"{n} triple{'s' * (n > 1)} of standard uncertainties in µB, as `{stated.path}` has {n}")
     ):
         for axis, number in enumerate(_exactly(item, 3, of_triple)):
             entries = np.zeros((n, 3))
-            entries[row, axis] = number.number("a number of at least 0", low=0.0)
+            entries[row, axis] = number.number(_SU, low=0.0, high=LARGEST_MOMENT_MUB)
             if entries[row, axis]:
                 changes.append(entries)
     return changes

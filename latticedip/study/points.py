@@ -15,7 +15,7 @@ from latticedip.crystal.spread import carried_spreads
 from latticedip.crystal.symmetry import operations_of
 from latticedip.crystal.uncertain import carried_su
 from latticedip.observables.orbits import equivalent_probes
-from latticedip.physics.contact import carried_contacts
+from latticedip.physics.contact import contacts_of_site
 from latticedip.probe import Contact, Probe
 
 
@@ -70,7 +70,7 @@ def points_of(crystal: Crystal, probes: Iterable[Probe], *, all_equivalent: bool
             sites = crystal.find(probe.site)
             places = crystal.positions[list(sites)]
             spreads = carried_spreads(crystal, sites, probe.spread, probe.name)
-            contacts = carried_contacts(crystal, places[0], places, probe.contact, probe.name)
+            contacts = contacts_of_site(crystal, places, probe.contact, probe.name)
             points += [
                 Point(probe, position, len(sites), spread, contact=contact)
                 for position, spread, contact in zip(places, spreads, contacts, strict=True)

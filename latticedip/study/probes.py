@@ -84,6 +84,8 @@ def _weighted(item: Key, table: dict[str, Key], crystal: Crystal) -> tuple[Weigh
     places = table["positions"].items(_POSITIONS)
     if not places:
         raise table["positions"].expected(_POSITIONS)
+    if not any(isinstance(place.value, list) for place in places):
+        raise table["positions"].expected(_POSITIONS, " One position, too, stands in brackets of its own.")
     if "weights" not in table:
         raise item.missing("weights", "one number of at least 0 for each of `positions`")
     shares = [share.number("a number of at least 0", low=0.0) for share in table["weights"].items(_WEIGHTS)]

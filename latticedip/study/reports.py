@@ -8,7 +8,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from latticedip.errors import InputError, LatticedipError
+from latticedip.errors import LatticedipError
 from latticedip.study import tasks
 from latticedip.study.describe import describe_study, show_table
 from latticedip.study.directions import direction_of
@@ -31,9 +31,6 @@ MOST_SPECTRA, MOST_IONS = 60, 8
 #: long (µs). Frequencies below a part of the largest one do not count.
 SLOW_TURNS, FAST_TURNS, LONGEST_US, NO_FREQUENCY = 4.0, 30.0, 10.0, 1e-3
 
-#: Why there is no P(t) in an applied field without a direction.
-APPLIED = "the study applies a field, so P(t) needs the direction that the spin starts along"
-
 _log = logging.getLogger(__name__)
 
 
@@ -44,8 +41,8 @@ class ReportOptions:
     orderings, probes: names of those that count; none: all. rotate: turn each pattern to its lowest energy, too.
     view: the crystal direction that drawings are seen from; None: that of `drawings`. spectra: spectra and P(t).
     time_us: the last moment of P(t); None: a few turns of the precessions. initial: the direction in the crystal that
-    the spin starts along and is seen along; None: P(t) is that of a powder. modes: the dipolar modes; None: for up to 8
-    magnetic ions. tol: bound of the lattice sums.
+    the spin starts along and is seen along; None: P(t) is that of a powder, in an applied field along it. modes: the
+    dipolar modes; None: for up to 8 magnetic ions. tol: bound of the lattice sums.
     """
 
     orderings: tuple[str, ...] = ()
@@ -67,13 +64,11 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
     the sizes of moments; what does not apply, and modes, a spectrum, a shift or a linewidth that is refused, is listed
     with the reason.
 
-    Raises InputError for an unknown name, for a view or an initial direction that is none, and for a time in an applied
-    field without an initial direction; and what `show`, `rank` and `field` raise.
+    Raises InputError for an unknown name, and for a view or an initial direction that is none; and what `show`, `rank`
+    and `field` raise.
     """
     if options.initial is not None:
         direction_of(study.crystal, options.initial, "--initial")
-    elif options.time_us is not None and study.sample.applied_T.any():
-        raise InputError(f"--time: {APPLIED} (--initial c, for example).")
     study = tasks.choose(study, orderings=options.orderings, probes=options.probes)
     sections: dict[str, Any] = {"show": describe_study(study)}
     left_out: list[dict[str, str]] = []
@@ -81,6 +76,12 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
     def skip(section: str, reason: str) -> None:
         _log.info("report without %s: %s", section, reason)
         left_out.append({"section": section, "reason": reason})
+
+    def skip_spectra(reason: str) -> None:
+        skip("spectrum", reason)
+        if asked := [name for name in ("time_us", "initial") if getattr(options, name) is not None]:
+            named = " and ".join("--" + name.removesuffix("_us") for name in asked)
+            skip("polarization", f"{named} {'has' if len(asked) == 1 else 'have'} no effect: {reason}")
 
     def attempt(section: str, make: Callable[[], dict[str, Any]]) -> None:
         try:
@@ -101,16 +102,14 @@ def report_document(study: Study, options: ReportOptions) -> dict[str, Any]:
     if study.orderings and study.probes:
         sections["field"] = tasks.field(study, tol=options.tol)
         if (reason := _without_spectra(study, options)) is not None:
-            skip("spectrum", reason)
+            skip_spectra(reason)
         else:
-            wanted = _spectrum_options(study, options, sections["field"])
+            wanted = _spectrum_options(options, sections["field"])
             attempt("spectrum", lambda: tasks.spectrum(study, wanted))
-            if wanted.time_us is None:
-                skip("polarization", f"{APPLIED} (--initial)")
     else:
         reason = "the study has no probe" if study.orderings else "the study has no ordering"
         skip("field", reason)
-        skip("spectrum", reason)
+        skip_spectra(reason)
     if study.probes and study.susceptibility:
         attempt("shift", lambda: tasks.shift(study, tol=options.tol))
     else:
@@ -172,16 +171,14 @@ def _without_spectra(study: Study, options: ReportOptions) -> str | None:
     return None
 
 
-def _spectrum_options(study: Study, options: ReportOptions, fields: Mapping[str, Any]) -> SpectrumOptions:
-    """Spectra with P(t): of a powder in zero field or, where a direction is given or a field applied, of a crystal.
-
-    Without a direction there is no P(t) in an applied field.
-    """
-    powder = options.initial is None and not study.sample.applied_T.any()
-    time = None
-    if powder or options.initial is not None:
-        time = options.time_us or shown_time(fields)
-    return SpectrumOptions(powder=powder, time_us=time, initial=options.initial, tol=options.tol)
+def _spectrum_options(options: ReportOptions, fields: Mapping[str, Any]) -> SpectrumOptions:
+    """Spectra with P(t): of a powder or, where a direction is given, of a crystal."""
+    return SpectrumOptions(
+        powder=options.initial is None,
+        time_us=options.time_us or shown_time(fields),
+        initial=options.initial,
+        tol=options.tol,
+    )
 
 
 def shown_time(fields: Mapping[str, Any]) -> float:

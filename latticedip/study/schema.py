@@ -23,7 +23,7 @@ from latticedip.ordering.model import Ordering
 from latticedip.probe import Probe
 from latticedip.sample import Sample
 from latticedip.study.keys import Key
-from latticedip.study.magnetism import read_abundances, read_moment_spread, read_susceptibility
+from latticedip.study.magnetism import magnetic_sites, read_abundances, read_moment_spread, read_susceptibility
 from latticedip.study.orderings import existing_file, read_block, read_moments, read_orderings
 from latticedip.study.probes import WeightedProbe, read_probes, read_sample
 from latticedip.study.search import Search, read_search
@@ -125,6 +125,8 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
     orderings = read_orderings(table.get("ordering"), crystal, sizes, path.parent, files, others)
     probes, weighted = read_probes(table.get("probe"), crystal)
     sample = read_sample(table.get("sample"), crystal)
+    susceptibility = read_susceptibility(table.get("susceptibility"), crystal)
+    magnetic = magnetic_sites(crystal, sizes.by_name, susceptibility, orderings)
     return Study(
         title,
         path,
@@ -135,12 +137,12 @@ def assemble(table: Mapping[str, Key], crystal: Crystal, *, title: str, path: Pa
         sizes.by_name,
         files,
         crystal.notes,
-        susceptibility=read_susceptibility(table.get("susceptibility"), crystal),
+        susceptibility=susceptibility,
         abundances=read_abundances(table.get("abundances"), crystal),
         other_energies_meV_per_ion=others,
         search=read_search(table.get("propose"), crystal, sizes),
         moments_su=sizes.su_by_name,
-        moment_spread=read_moment_spread(table.get("moment_spread"), crystal),
+        moment_spread=read_moment_spread(table.get("moment_spread"), crystal, magnetic),
         weighted=weighted,
     )
 

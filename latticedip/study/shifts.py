@@ -12,7 +12,7 @@ from latticedip.errors import InputError
 from latticedip.observables.coupling_tensor import CouplingTensor, averaged, site_couplings, summed
 from latticedip.observables.shift import Rotation, Shift, averaged_shift, shifts_at
 from latticedip.observables.tensor import PrincipalFrame
-from latticedip.physics.spread import moment_spread_words
+from latticedip.physics.spread import moment_spread_words, named_clouds
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import document
 from latticedip.study.fields import common_boundary
@@ -58,7 +58,7 @@ COUPLING_CAVEAT = (
     "Left out: moments on other sites, the spread of the moment over its ion, and the probe's own effect on the "
     "moments around it."
 )
-#: The same where the study states the spread of the moments.
+#: The same where the study states the spread of the moments of every magnetic ion.
 COUPLING_CAVEAT_EXTENDED = "Left out: moments on other sites, and the probe's own effect on the moments around it."
 MEANS_NOTE = (
     "Means over positions with weights are those of a probe that hops between them fast; one that stays at a position "
@@ -109,7 +109,7 @@ def shift_document(
             raise InputError("--powder and --rotate-about are of a powder and of a crystal. Leave one out.")
     rows: list[dict[str, Any]] = []
     kept: list[_Found] = []
-    extended = moment_spread_words(study.moment_spread)
+    extended = moment_spread_words(_counting_spread(study, groups))
     boundaries: list[str] = []
     notes: list[str] = []
     for point in points_of(study.crystal, study.probes, all_equivalent=all_equivalent):
@@ -162,14 +162,24 @@ def shift_document(
                 *extended,
                 *([MEANS_NOTE] if means else []),
                 *_su_notes(rows),
-                SHIFT_CAVEAT if shifted else _coupling_caveat(study),
+                SHIFT_CAVEAT if shifted else _coupling_caveat(study, groups),
             ],
         },
     )
 
 
-def _coupling_caveat(study: Study) -> str:
-    return COUPLING_CAVEAT_EXTENDED if study.moment_spread else COUPLING_CAVEAT
+def _counting_spread(study: Study, groups: Mapping[str, Sequence[int]]) -> dict[str, Any]:
+    """The spreads of moments that the study states of the ions in some groups; a label wins over its element."""
+    crystal, stated = study.crystal, study.moment_spread
+    sites = [site for group in groups.values() for site in group]
+    named = {crystal.labels[i] if crystal.labels[i] in stated else crystal.symbols[i] for i in sites}
+    return {name: value for name, value in stated.items() if name in named}
+
+
+def _coupling_caveat(study: Study, groups: Mapping[str, Sequence[int]]) -> str:
+    clouds = named_clouds(study.crystal, study.moment_spread)
+    extended = all(np.any(clouds[site]) for group in groups.values() for site in group)
+    return COUPLING_CAVEAT_EXTENDED if extended else COUPLING_CAVEAT
 
 
 def _mean_row(
@@ -192,7 +202,7 @@ def _mean_row(
 def _su_notes(rows: Sequence[Mapping[str, Any]]) -> list[str]:
     """Where the numbers in brackets come from, if there are any."""
     stated = any(
-        entry[key] is not None
+        entry[key] is not None and np.any(entry[key])
         for row in rows
         for entries, key in ((row["couplings"], "dipolar_su_T_per_muB"), (row["shifts"], "shift_su"))
         for entry in entries

@@ -20,7 +20,7 @@ from latticedip.ordering.domains import Domain, domains
 from latticedip.study.directions import direction_of
 from latticedip.study.documents import document, ordering_head
 from latticedip.study.fields import common_boundary
-from latticedip.study.mixtures import mixed_entries, mixture_notes
+from latticedip.study.mixtures import histogram, mixed_entries, mixture_notes
 
 if TYPE_CHECKING:
     from latticedip.ordering.model import Ordering
@@ -33,6 +33,8 @@ DomainChoice = Literal["given", "list", "average"]
 MOST_BINS, MOST_POINTS = 100_000, 100_000
 #: Moments in time where their number is not given: so many in a turn of the fastest precession, but at least.
 POINTS_PER_TURN, LEAST_POINTS = 12, 401
+#: With fewer moments than this in a turn of the fastest precession P(t) looks slower than it is.
+RESOLVING_POINTS = 4
 
 _log = logging.getLogger(__name__)
 
@@ -75,7 +77,9 @@ def spectrum_document(
     """
     _check(options)
     directions = _directions(study, options)
-    widths = {probe.name: _nuclear_width(study, probe, options) for probe in study.probes}
+    of_nuclei = {probe.name: _nuclear_width(study, probe, options) for probe in study.probes}
+    widths = {name: width for name, (width, _) in of_nuclei.items()}
+    moving = [f"{name}: nuclear moments: {note}" for name, (_, notes) in of_nuclei.items() for note in notes]
     found = [_spectra(study, ordering, options, widths) for ordering in study.orderings]
     time = _times(options, [result for results in found for _, result in results])
     entries = []
@@ -83,7 +87,9 @@ def spectrum_document(
         placed_by = "" if ordering.reference is None else ordering.reference.how
         turning = options.powder and time is not None and np.any(results[0][1].applied_T)
         of_results = [note for _, result in results for note in result.notes]
-        notes = dict.fromkeys([*mixture_notes(study), *of_results, *([TURNING] if turning else [])])
+        unresolved = _unresolved([result for _, result in results], time)
+        told = [*unresolved, *of_results, *moving, *([TURNING] if turning else [])]
+        notes = dict.fromkeys([*mixture_notes(study), *told])
         spectra = [
             _entry(result, domain, options, widths[result.probe.name], time, directions) for domain, result in results
         ]
@@ -145,6 +151,8 @@ def spectrum_table(doc: dict[str, Any]) -> list[dict[str, Any]]:
 def _directions(study: Study, options: SpectrumOptions) -> dict[str, FloatArray | None]:
     """Cartesian directions that the spin starts along and is seen along, where they are stated."""
     if options.angle_deg is not None:
+        if options.time_us is None:
+            raise InputError("--angle belongs to the polarization P(t): ask for one with --time, or leave it out.")
         applied = study.sample.applied_T if options.applied_T is None else np.array(options.applied_T)
         if not options.powder or not np.any(applied):
             raise InputError("--angle is that between an applied field and the spin in a powder; leave it out here.")
@@ -192,6 +200,21 @@ def _times(options: SpectrumOptions, found: Sequence[Spectrum]) -> FloatArray | 
     return np.linspace(0.0, options.time_us, points)
 
 
+def _unresolved(found: Sequence[Spectrum], time: FloatArray | None) -> list[str]:
+    """A remark where the moments in time are too few for the fastest precession."""
+    if time is None:
+        return []
+    fastest = max(part.edges[-1] * result.MHz_per_T for result in found for part in result.distribution.parts)
+    turns = fastest * float(time[-1])
+    if (len(time) - 1) >= RESOLVING_POINTS * turns:
+        return []
+    return [
+        f"P(t) is unresolved: {len(time)} moments for {turns:.6g} turns of the fastest precession ({fastest:.6g} MHz) "
+        f"are fewer than {RESOLVING_POINTS} in a turn, and what lies between them is not shown. Ask for a shorter time"
+        + ("" if len(time) >= MOST_POINTS else " or more points")
+    ]
+
+
 def _entry(
     result: Spectrum,
     domain: Domain | None,
@@ -200,9 +223,6 @@ def _entry(
     time: FloatArray | None,
     directions: Mapping[str, FloatArray | None],
 ) -> dict[str, Any]:
-    limits, share = result.binned(options.bins)
-    width = float(limits[1] - limits[0])
-    factor = result.MHz_per_T
     placed = None
     if domain is not None:
         placed = {
@@ -228,21 +248,15 @@ def _entry(
         **plain,
         "nuclear_width_per_us": nuclear_per_us,
         "domain": placed,
-        "histogram": {
-            "field_limits_T": limits.tolist(),
-            "frequency_limits_MHz": (limits * factor).tolist(),
-            "share": share.tolist(),
-            "density_per_T": (share / width).tolist(),
-            "density_per_MHz": (share / (width * factor)).tolist(),
-        },
+        "histogram": histogram(*result.binned(options.bins), result.MHz_per_T),
         "polarization": signal,
     }
 
 
-def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> float:
-    """Δ of the nuclear moments round a probe in 1/µs."""
+def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> tuple[float, tuple[str, ...]]:
+    """Δ of the nuclear moments round a probe in 1/µs, and what it takes for granted of the motion of the probe."""
     if options.nuclear_per_us != "auto":
-        return options.nuclear_per_us
+        return options.nuclear_per_us, ()
     if probe.particle != "muon":
         raise InputError(
             f"{probe.name}: the static width of nuclear moments is worked out for muons only, and the probe is "
@@ -252,10 +266,15 @@ def _nuclear_width(study: Study, probe: Probe, options: SpectrumOptions) -> floa
     if probe.site is not None:
         position = study.crystal.positions[study.crystal.find(probe.site)[0]]
     found = linewidth(
-        study.crystal, position, particle="muon", displaced=probe.displaced, spread=probe.spread
-    ).zero_field_width_per_us
-    assert found is not None
-    return found
+        study.crystal,
+        position,
+        particle="muon",
+        abundances=study.abundances,
+        displaced=probe.displaced,
+        spread=probe.spread,
+    )
+    assert found.zero_field_width_per_us is not None
+    return found.zero_field_width_per_us, found.motion_notes
 
 
 def _check(options: SpectrumOptions) -> None:
@@ -264,7 +283,7 @@ def _check(options: SpectrumOptions) -> None:
             raise InputError(f"{name} must lie between 2 and {most}, got {value}.")
     if options.time_us is not None and not (math.isfinite(options.time_us) and options.time_us > 0):
         raise InputError(f"the time must be a finite number of µs above 0, got {options.time_us}.")
-    stated = (options.initial, options.detector, options.angle_deg)
+    stated = (options.initial, options.detector)
     if options.time_us is None and any(value is not None for value in stated):
         raise InputError("an initial direction or a detector belongs to a polarization: ask for one with a time.")
     if options.powder and (options.initial is not None or options.detector is not None):
