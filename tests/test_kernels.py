@@ -133,6 +133,17 @@ def test_an_error_in_a_block_of_rows_is_told_and_ends_the_work(monkeypatch):
     assert len(done) <= 2
 
 
+def test_a_kernel_is_compiled_once_its_code_is_on_disk(tmp_path):
+    code = (
+        "import latticedip as ld\nfrom latticedip.kernels.jit import is_compiled\n"
+        "from latticedip.kernels.real import real_tensors\nfound = [is_compiled(real_tensors)]\n"
+        "ld.dipole_tensor([[4, 0, 0], [0, 4, 0], [0, 0, 4]], [[1, 0, 0]], tol=1e-6)\n"
+        "print([*found, is_compiled(real_tensors)])"
+    )
+    assert run(code, NUMBA_CACHE_DIR=str(tmp_path / "cache")).strip() == "[False, True]"
+    assert run(code, NUMBA_DISABLE_JIT="1").strip() == "[True, True]"
+
+
 @pytest.mark.slow
 def test_caches_below_a_file_and_in_a_new_directory(compiled, tmp_path):
     below_a_file = tmp_path / "file"

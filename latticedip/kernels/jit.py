@@ -56,6 +56,17 @@ def _cache_is_usable() -> bool:
     return True
 
 
+def is_compiled(kernel: Any) -> bool:
+    """True where a kernel's machine code is on disk, newer than its source, or cannot be kept there at all."""
+    folder = getattr(kernel, "_cache", None) and kernel._cache.cache_path
+    if not folder:
+        return True
+    written = os.path.getmtime(kernel.py_func.__code__.co_filename)
+    name = f".{kernel.py_func.__name__}-"
+    found = [entry for entry in os.scandir(folder) if name in entry.name and entry.name.endswith(".nbi")]
+    return any(entry.stat().st_mtime >= written for entry in found)
+
+
 _in_this_thread = threading.local()
 
 

@@ -11,6 +11,7 @@ import contextlib
 import json
 import os
 import signal
+import subprocess
 import sys
 from collections.abc import Iterator
 from typing import Any, BinaryIO
@@ -38,6 +39,11 @@ READY = b"ready\n"
 START = (
     "import json, sys; sys.path[:] = json.loads(sys.argv[1]); "
     "from latticedip.study.batch_worker import main; main(int(sys.argv[2]))"
+)
+#: The program text that compiles kernels in a process of its own.
+COMPILE = (
+    "import json, sys; sys.path[:] = json.loads(sys.argv[1]); "
+    "from latticedip.study.batch_worker import use_kernels; use_kernels()"
 )
 _PR_SET_PDEATHSIG = 1
 
@@ -75,25 +81,40 @@ def serve(setup: dict[str, Any], jobs: BinaryIO, outcomes: BinaryIO) -> None:
 def warm_up() -> None:
     """Load the libraries and the compiled kernels that almost every structure needs.
 
-    One worker at a time: two that compile the same kernel may differ in the order of its additions, and so in the last
-    digit of a result. The first compiles and the others load what it wrote.
+    One worker at a time, and what is not on disk is compiled by a process of its own: machine code that was just
+    compiled and the same loaded from disk may differ in the order of additions, and so in the last digit of a result.
     """
+    from latticedip.files import read
+    from latticedip.kernels.fields import real_fields
+    from latticedip.kernels.jit import is_compiled
+    from latticedip.kernels.real import real_gradients, real_tensors
+    from latticedip.kernels.reciprocal import reciprocal_fields, reciprocal_tensors
+    from latticedip.study import fields, rankings
+
+    assert read and fields and rankings
+    kernels = (real_tensors, real_fields, real_gradients, reciprocal_tensors, reciprocal_fields)
+    with _one_at_a_time():
+        if not all(is_compiled(kernel) for kernel in kernels):
+            command = [sys.executable, "-c", COMPILE, json.dumps(sys.path)]
+            # Where that fails this process compiles for itself, or says why it cannot.
+            subprocess.run(command, check=False, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL)
+        use_kernels()
+
+
+def use_kernels() -> None:
+    """Run once what most structures need, so that its kernels are loaded, or compiled and written to disk."""
     import numpy as np
 
     from latticedip.analysis.rank import rank
     from latticedip.crystal.model import Crystal
     from latticedip.crystal.symmetry import operations_of
-    from latticedip.files import read
     from latticedip.ordering.model import Ordering
     from latticedip.probe import Probe
-    from latticedip.study import fields, rankings
 
     crystal = Crystal(np.eye(3) * 4.0, np.array([[0.0, 0, 0], [0.5, 0.5, 0.5]]), ("Mn", "O"))
     operations_of(crystal)
     orderings = [Ordering(crystal, [[0, 0, 1.0], [0, 0, 0]], k) for k in ((0, 0, 0), (0, 0, 0.5), (0, 0, 0.3))]
-    with _one_at_a_time():
-        rows = rank(orderings, probes=[Probe([0.5, 0, 0])]).to_dict()["rows"]
-    assert len(rows) == 3 and read and fields and rankings
+    assert len(rank(orderings, probes=[Probe([0.5, 0, 0])]).to_dict()["rows"]) == 3
 
 
 @contextlib.contextmanager
